@@ -1,0 +1,1 @@
+"""The loop: linear model, gains and margins, estimator, control law, guard."""

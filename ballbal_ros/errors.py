@@ -1,0 +1,43 @@
+"""The errors of this package: one base class that carries the evidence and what would do instead."""
+
+from __future__ import annotations
+
+import difflib
+from collections.abc import Iterable
+
+
+class BallbalError(Exception):
+    """Something given to the program is wrong, or can't be done.
+
+    ``where`` names the file, topic or object; ``what`` the key and what was found; ``remedy`` what would do.
+    ``str()`` is one line: *where: what; remedy*.
+    """
+
+    def __init__(self, where: str, what: str, remedy: str = "") -> None:
+        self.where, self.what, self.remedy = where, what, remedy
+        super().__init__(" ".join(f"{where}: {what}{'; ' + remedy if remedy else ''}".split()))
+
+
+class ParameterError(BallbalError):
+    """A parameter is unknown, missing, of the wrong type or out of its range."""
+
+
+class ModelError(BallbalError):
+    """A robot description (URDF, masses, geometry) is impossible or incomplete."""
+
+
+class PlanError(BallbalError):
+    """A plan can't be read, or is not possible for this robot."""
+
+
+class PlanRefused(PlanError):
+    """A plan is well formed, but would take the robot beyond its limits, or can't be followed now."""
+
+
+def nearest(name: str, known: Iterable[str]) -> str:
+    """Say which known name is meant, or list those there are: the ``remedy`` for an unknown name."""
+    names = sorted(known)
+    close = difflib.get_close_matches(name, names, n=1, cutoff=0.6)
+    if close:
+        return f"did you mean {close[0]}?"
+    return f"known: {', '.join(names)}" if names else "none is known here"

@@ -1,0 +1,259 @@
+"""From a planned arm motion to the lean that keeps the ball where it is (or where it is meant to be)."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import attrs
+import numpy as np
+
+from ballbal_ros.motion.differences import Differences
+from ballbal_ros.motion.lean_plan import LeanPlan, Prediction, predicted_uses
+from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, equilibrium_lean, solve_lean
+from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.relief import ReliefLimits, ball_relief
+from ballbal_ros.motion.spline import JointPath
+from ballbal_ros.robot.arrays import Array, apply
+from ballbal_ros.robot.attitude import rotation_lean
+from ballbal_ros.robot.balance_rows import GRAVITY, OutsideMotion, UpperBodyTerms
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.whole_body import WholeBody
+
+_SETTLED_RATE = 1e-5
+_RELIEF_ROUNDS = 3
+
+
+@attrs.frozen(eq=False)
+class StartState:
+    """Where a plan begins: lean and its rate [2], rad; ball relative to the station and its rate [2], m, in the plan's axes."""
+
+    lean: Array
+    lean_rate: Array
+    ball: Array
+    ball_rate: Array
+
+
+@attrs.frozen(eq=False)
+class HandWrench:
+    """What the world is planned to exert on one hand: force and moment [N, 3] at times [N], ``base_footprint`` axes, held outside."""
+
+    hand: str
+    times: Array
+    force: Array
+    moment: Array
+
+
+@attrs.frozen(eq=False)
+class BallMotion:
+    """A planned ball motion: [N, 3] (x, y in plan axes, m; heading, rad) with rates and accelerations at times [N], held outside."""
+
+    times: Array
+    position: Array
+    rate: Array
+    acceleration: Array
+
+
+@attrs.frozen(eq=False)
+class PlanRequest:
+    """What is to happen. ``arms`` is what the arms will really do (servo lag included), from ``lead_in`` s after the plan's start.
+
+    ``loads`` are changes (time from the plan's start, load); ``start`` None means at rest in equilibrium.
+    """
+
+    arms: JointPath
+    lead_in: float
+    loads: Sequence[tuple[float, Load]] = ()
+    ball: BallMotion | None = None
+    wrenches: Sequence[HandWrench] = ()
+    start: StartState | None = None
+
+
+def terms_along(body: WholeBody, request: PlanRequest, times: Array, step: float) -> UpperBodyTerms:
+    """The upper body's terms along a request [N]; a load that changes within a node's share of time is blended by time."""
+    position, rate, acceleration = request.arms.sample(times - request.lead_in)
+    hands = tuple(w.hand for w in request.wrenches)
+    terms = body.terms(position, rate, acceleration, hands)
+    later = WholeBody(body.description, body.loads.values())
+    for when, load in sorted(request.loads, key=lambda change: change[0]):
+        later.set_load(load, "plan")
+        share = np.clip((times - when) / step + 0.5, 0.0, 1.0)
+        affected = np.flatnonzero(share > 0.0)
+        if len(affected) == 0:
+            continue
+        k = int(affected[0])
+        after = later.terms(position[k:], rate[k:], acceleration[k:], hands)
+        before = attrs.evolve(terms, **{f.name: getattr(terms, f.name)[k:] for f in _arrays()})
+        mixed = before.blend(after, share[k:])
+        for field in _arrays():
+            getattr(terms, field.name)[k:] = getattr(mixed, field.name)
+    return terms
+
+
+def _arrays() -> list[attrs.Attribute[object]]:
+    return [f for f in attrs.fields(UpperBodyTerms) if f.name != "hands"]
+
+
+def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationParameters) -> LeanPlan:
+    """Plan the lean for a request; the plan's ``uses`` say what it needs against the limits (it is not refused here for them).
+
+    Raises :class:`~ballbal_ros.errors.PlanError` where no bounded lean exists or no ball motion can begin it in time.
+    """
+    description, settings = body.description, parameters.planner
+    length = request.lead_in + request.arms.duration + settings.tail
+    for when, _ in request.loads:
+        length = max(length, when + settings.tail)
+    if request.ball is not None:
+        length = max(length, float(request.ball.times[-1]) + settings.tail)
+    for wrench in request.wrenches:
+        length = max(length, float(wrench.times[-1]) + settings.tail)
+    nodes = int(np.ceil(length / settings.step - 1e-9)) + 1
+    times = np.arange(nodes) * settings.step
+    terms = terms_along(body, request, times, settings.step)
+    motion = _ball_motion(request.ball, times)
+    first = _first_ball(request.start, times)
+    turn = _turns(motion[0][:, 2] - motion[0][0, 2])
+    force, moment = _wrenches(request.wrenches, times)
+    given = OutsideMotion(
+        apply2(turn, motion[2][:, :2] + first[2]), motion[1][:, 2], motion[2][:, 2], force, moment
+    )
+    problem = LeanProblem(
+        terms,
+        given,
+        Differences.on(nodes, settings.step),
+        description.parameters.ball.radius,
+        description.ball_apparent_mass,
+    )
+    solution, ball = _solve(problem, request, first, turn, _relief_limits(description, parameters, terms))
+    return _plan(description, parameters, request, times, solution, ball, motion)
+
+
+def apply2(turn: Array, vectors: Array) -> Array:
+    """``turn`` [N, 2, 2] on vectors [N, 2]."""
+    return np.asarray((turn @ vectors[..., None])[..., 0])
+
+
+def _solve(
+    problem: LeanProblem, request: PlanRequest, first: list[Array], turn: Array, limits: ReliefLimits
+) -> tuple[tuple[LeanProblem, LeanSolution], list[Array]]:
+    static = problem.terms.static_lean()
+    end = equilibrium_lean(problem, len(problem.terms) - 1, static[-1])
+    start = equilibrium_lean(problem, 0, static[0]) if request.start is None else request.start.lean
+    start_rate = np.zeros(2) if request.start is None else request.start.lean_rate
+    solution = solve_lean(problem, start, end)
+    ball = [array.copy() for array in first]
+    window = max(request.lead_in + 1.0, 1.2)
+    for _ in range(_RELIEF_ROUNDS):
+        at_start = problem.differences.start_rate(solution.lean) - start_rate
+        at_end = -problem.differences.start_rate(solution.lean[::-1])
+        if max(np.abs(at_start).max(), np.abs(at_end).max()) < _SETTLED_RATE:
+            break
+        relief = ball_relief(problem, solution, turn, at_start, at_end, window, limits, ball[0])
+        for array, added in zip(ball, (relief.position, relief.rate, relief.acceleration)):
+            array += added
+        moved = problem.outside.ball_acceleration + apply2(turn, relief.acceleration)
+        problem = attrs.evolve(problem, outside=attrs.evolve(problem.outside, ball_acceleration=moved))
+        solution = solve_lean(problem, start, end, solution.lean)
+    return (problem, solution), ball
+
+
+def _relief_limits(description: RobotDescription, parameters: CompensationParameters, terms: UpperBodyTerms) -> ReliefLimits:
+    use, limits = parameters.acceptance, description.parameters.limits
+    weight = (float(terms.mass.min()) + description.parameters.ball.mass) * GRAVITY
+    return ReliefLimits(
+        torque=0.95 * use.torque_use * limits.drive_torque,
+        grip=0.9 * use.friction_use * description.parameters.floor.friction * weight,
+    )
+
+
+def _ball_motion(ball: BallMotion | None, times: Array) -> list[Array]:
+    if ball is None:
+        return [np.zeros((len(times), 3)) for _ in range(3)]
+    columns = range(3)
+    inside = ((times >= ball.times[0]) & (times <= ball.times[-1]))[:, None]
+    values = [
+        np.stack([np.interp(times, ball.times, array[:, c]) for c in columns], axis=1)
+        for array in (ball.position, ball.rate, ball.acceleration)
+    ]
+    return [values[0], values[1] * inside, values[2] * inside]
+
+
+def _first_ball(start: StartState | None, times: Array) -> list[Array]:
+    """The ball on its way from the start's place and rate back to the station, as a quintic over 1.2 s; at rest there without one."""
+    out = [np.zeros((len(times), 2)) for _ in range(3)]
+    if start is None or (not np.any(start.ball) and not np.any(start.ball_rate)):
+        return out
+    span = min(1.2, float(times[-1]))
+    s = np.minimum(times / span, 1.0)[:, None]
+    p, v = start.ball[None, :], start.ball_rate[None, :] * span
+    out[0] = p * (1 - 10 * s**3 + 15 * s**4 - 6 * s**5) + v * (s - 6 * s**3 + 8 * s**4 - 3 * s**5)
+    out[1] = (p * (-30 * s**2 + 60 * s**3 - 30 * s**4) + v * (1 - 18 * s**2 + 32 * s**3 - 15 * s**4)) / span
+    out[2] = (p * (-60 * s + 180 * s**2 - 120 * s**3) + v * (-36 * s + 96 * s**2 - 60 * s**3)) / span**2
+    inside = times[:, None] <= span
+    return [out[0] * inside, out[1] * inside, out[2] * inside]
+
+
+def _turns(heading: Array) -> Array:
+    """[N, 2, 2] from plan axes into ``base_footprint`` axes turned by these headings."""
+    sin, cos = np.sin(heading), np.cos(heading)
+    return np.stack((np.stack((cos, sin), axis=-1), np.stack((-sin, cos), axis=-1)), axis=-2)
+
+
+def _wrenches(wrenches: Sequence[HandWrench], times: Array) -> tuple[Array, Array]:
+    force, moment = np.zeros((len(times), len(wrenches), 3)), np.zeros((len(times), len(wrenches), 3))
+    for index, wrench in enumerate(wrenches):
+        for c in range(3):
+            force[:, index, c] = np.interp(times, wrench.times, wrench.force[:, c])
+            moment[:, index, c] = np.interp(times, wrench.times, wrench.moment[:, c])
+    return force, moment
+
+
+def _plan(
+    description: RobotDescription,
+    parameters: CompensationParameters,
+    request: PlanRequest,
+    times: Array,
+    solved: tuple[LeanProblem, LeanSolution],
+    ball: list[Array],
+    motion: list[Array],
+) -> LeanPlan:
+    problem, solution = solved
+    rows, outside = solution.rows, problem.outside
+    torque = rows.torque + _rotor_torque(description, problem, solution)
+    total = [given[:, :2] + added for given, added in zip(motion, ball)]
+    prediction = Prediction(torque, rows.force, outside.ball_acceleration, solution.lean, ball[0], total[1])
+    rate, acceleration = solution.lean_rate.copy(), solution.lean_acceleration.copy()
+    rate[0] = problem.differences.start_rate(solution.lean)
+    acceleration[0], acceleration[-1] = acceleration[1], 0.0
+    torque[0], torque[-1] = torque[1], torque[-2]
+    return LeanPlan(
+        times=times,
+        lead_in=request.lead_in,
+        lean=solution.lean,
+        lean_rate=rate,
+        lean_acceleration=acceleration,
+        ball=total[0],
+        ball_rate=total[1],
+        ball_acceleration=total[2],
+        heading=motion[0][:, 2],
+        heading_rate=motion[1][:, 2],
+        heading_acceleration=motion[2][:, 2],
+        torque=torque,
+        uses=predicted_uses(prediction, description, parameters.acceptance),
+    )
+
+
+def _rotor_torque(description: RobotDescription, problem: LeanProblem, solution: LeanSolution) -> Array:
+    """Torque on the body [N, 3] that the drive must give besides, to turn its own rotors with the ball, ``base_footprint`` axes.
+
+    Rotors resist the relative acceleration of ball and body: τ_drive = τ - R J Rᵀ (ω'_ball - ω'_body).
+    """
+    rotation = rotation_lean(solution.lean)
+    a = problem.outside.ball_acceleration / problem.ball_radius
+    ball = np.stack((-a[:, 1], a[:, 0], np.zeros(len(a))), axis=-1)
+    pitch = solution.lean[:, 1]
+    roll_acceleration, pitch_acceleration = solution.lean_acceleration.T
+    turning = problem.outside.heading_acceleration - roll_acceleration * np.sin(pitch)
+    body = np.stack((roll_acceleration * np.cos(pitch), pitch_acceleration, turning), axis=-1)
+    inertia = rotation @ description.drive.reflected_inertia @ rotation.transpose(0, 2, 1)
+    return -apply(inertia, ball - body)

@@ -1,0 +1,1 @@
+"""Tables, figures and files made for a person to read."""
