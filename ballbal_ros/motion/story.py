@@ -1,0 +1,306 @@
+"""Plan files: a list of steps, each one verb, read into a timeline of arm motion, loads, pushes and ball moves."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any, TypeVar
+
+import attrs
+import cattrs
+import numpy as np
+from attrs import validators
+from cattrs.v import format_exception
+
+from ballbal_ros.declaration import read_yaml
+from ballbal_ros.errors import BallbalError, PlanError, nearest
+from ballbal_ros.motion.lean_planner import BallMotion
+from ballbal_ros.motion.spline import ArmPath, check_path
+from ballbal_ros.robot.arrays import Array, read_only
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.loads import Load
+
+T = TypeVar("T")
+_ROLL_SPEED = 0.5
+_SHORTEST_ROLL = 2.0
+
+
+def _finite(_: object, attribute: attrs.Attribute[Any], value: object) -> None:
+    numbers = value.values() if isinstance(value, Mapping) else np.atleast_1d(np.asarray(value, float))
+    if not all(np.isfinite(number) for number in numbers):
+        raise ValueError(f"{attribute.name} is {value!r}; it takes finite numbers")
+
+
+_POSITIVE = [_finite, validators.gt(0.0)]
+_VECTOR = [_finite, validators.min_len(3), validators.max_len(3)]
+
+
+@attrs.frozen
+class Wait:
+    """Nothing happens for ``wait`` s."""
+
+    wait: float = attrs.field(validator=[_finite, validators.ge(0.0)])
+
+
+@attrs.frozen
+class Move:
+    """The named joints go from rest to rest together, rad or m, in ``during`` s."""
+
+    move: dict[str, float] = attrs.field(validator=_finite)
+    during: float = attrs.field(validator=_POSITIVE)
+
+
+@attrs.frozen
+class LoadStep:
+    """A hand's load becomes this one, at once; mass 0 takes it away. ``announced``: the robot is told."""
+
+    hand: str
+    mass: float = attrs.field(validator=[_finite, validators.ge(0.0)])
+    center: list[float] = attrs.field(factory=lambda: [0.0, 0.0, 0.0], validator=_VECTOR)
+    announced: bool = True
+
+
+@attrs.frozen
+class PushStep:
+    """Somebody pushes: ``force`` [3] N in odom axes at ``at`` [3] m of a link, for ``during`` s."""
+
+    link: str
+    at: list[float] = attrs.field(validator=_VECTOR)
+    force: list[float] = attrs.field(validator=_VECTOR)
+    during: float = attrs.field(validator=_POSITIVE)
+
+
+@attrs.frozen
+class RollStep:
+    """The ball rolls from rest to rest to x, y (m) and heading (rad) from where the plan began, in ``during`` s."""
+
+    x: float = attrs.field(default=0.0, validator=_finite)
+    y: float = attrs.field(default=0.0, validator=_finite)
+    heading: float = attrs.field(default=0.0, validator=_finite)
+    during: float | None = attrs.field(default=None, validator=validators.optional(_POSITIVE))
+
+
+@attrs.frozen
+class Start:
+    """Where the plan begins: joints not named are at 0; what the hands hold."""
+
+    posture: dict[str, float] = attrs.field(factory=dict, validator=_finite)
+    loads: list[LoadStep] = attrs.field(factory=list)
+
+
+@attrs.frozen
+class LoadChange:
+    """At ``time`` s the named hand's load becomes ``load``."""
+
+    time: float
+    load: Load
+    announced: bool
+
+
+@attrs.frozen
+class Push:
+    """From ``time`` on, for ``during`` s, a force [3] N in odom axes at a point [3] m of a link."""
+
+    time: float
+    during: float
+    link: str
+    at: tuple[float, float, float]
+    force: tuple[float, float, float]
+
+
+@attrs.frozen(eq=False)
+class Story:
+    """A plan file on a timeline, s from its beginning. ``arms`` begins at ``arms_start``, the first thing that is to be planned for."""
+
+    name: str
+    posture: Array
+    start_loads: tuple[Load, ...]
+    arms: ArmPath
+    arms_start: float
+    load_changes: tuple[LoadChange, ...]
+    pushes: tuple[Push, ...]
+    ball: BallMotion | None
+    duration: float
+
+    @property
+    def planned(self) -> bool:
+        """Whether there is anything to plan for (a move, an announced load, a ball move)."""
+        return self.arms_start < self.duration
+
+    @property
+    def announced(self) -> tuple[tuple[float, Load], ...]:
+        """The load changes that the robot is told of, timed from ``arms_start``."""
+        return tuple((c.time - self.arms_start, c.load) for c in self.load_changes if c.announced)
+
+
+def _strict(kind: type[T]) -> Callable[[Any, Any], T]:
+    def hook(value: Any, _: Any) -> T:
+        wanted: tuple[type, ...] = (int, float) if kind is float else (kind,)
+        if isinstance(value, bool) != (kind is bool) or not isinstance(value, wanted):
+            raise ValueError(f"{value!r} is no {'number' if kind is float else kind.__name__}")
+        return kind(value)  # type: ignore[call-arg]
+
+    return hook
+
+
+_CONVERTER = cattrs.Converter(forbid_extra_keys=True, detailed_validation=True)
+for _kind in (float, str, bool):
+    _CONVERTER.register_structure_hook(_kind, _strict(_kind))
+_VERBS: dict[str, type] = {"wait": Wait, "move": Move, "load": LoadStep, "push": PushStep, "roll": RollStep}
+
+
+def _reason(error: BaseException, kind: type | None) -> str:
+    said = type(error) is ValueError and str(error)
+    return said or format_exception(error, kind)
+
+
+def _structure(value: Any, cls: type[T], where: str, what: str) -> T:
+    try:
+        return _CONVERTER.structure(value, cls)
+    except Exception as error:  # noqa: BLE001 - cattrs raises groups of whatever went wrong
+        reason = "; ".join(cattrs.transform_error(error, path=what, format_exception=_reason))
+        known = ", ".join(f.name for f in attrs.fields(cls))  # type: ignore[arg-type]
+        raise PlanError(where, reason or f"{what} is {value!r}", f"{what} takes {known}") from error
+
+
+def read_story(path: Path, description: RobotDescription) -> Story:
+    """Read a plan file for a robot; raises :class:`PlanError` in one line that names file, step and key."""
+    where = str(path)
+    document = read_yaml(Path(path))
+    if not isinstance(document, Mapping):
+        raise PlanError(where, "is no plan", "a plan has name, start and steps")
+    for key in document:
+        if key not in ("name", "start", "steps"):
+            raise PlanError(where, f"unknown key {key}", nearest(str(key), ("name", "start", "steps")))
+    steps = document.get("steps")
+    if not isinstance(steps, list) or not steps:
+        raise PlanError(where, f"steps is {steps!r}", "it takes a list of steps, each one verb")
+    start = _structure(document.get("start") or {}, Start, where, "start")
+    builder = _Builder(description, where, start)
+    for number, step in enumerate(steps, start=1):
+        builder.add(_step(step, where, f"step {number}"), f"{where} step {number}")
+    return builder.story(str(document.get("name", Path(path).stem)))
+
+
+def _step(step: Any, where: str, what: str) -> object:
+    if not isinstance(step, Mapping):
+        raise PlanError(where, f"{what} is {step!r}", f"each step is one verb: {', '.join(_VERBS)}")
+    verbs = [key for key in step if key in _VERBS]
+    if len(verbs) != 1:
+        unknown = next((str(key) for key in step if key not in _VERBS), "")
+        raise PlanError(where, f"{what} has the verbs {', '.join(verbs) or 'none'}", nearest(unknown, _VERBS))
+    verb, inner = verbs[0], step[verbs[0]]
+    if verb in ("wait", "move") or not isinstance(inner, Mapping):
+        return _structure(dict(step), _VERBS[verb], where, what)
+    return _structure({**inner, **{k: v for k, v in step.items() if k != verb}}, _VERBS[verb], where, f"{what} ({verb})")
+
+
+class _Builder:
+    """Lays the steps on the timeline."""
+
+    def __init__(self, description: RobotDescription, where: str, start: Start) -> None:
+        self.description, self.where = description, where
+        self.now = 0.0
+        self.arm = np.zeros(description.joint_count)
+        for name, value in start.posture.items():
+            self.arm[description.joint_index(name, f"{where} start.posture")] = value
+        self.posture = self.arm.copy()
+        self.start_loads = tuple(self._load(step, f"{where} start.loads") for step in start.loads)
+        self.knots: list[tuple[float, Array]] = []
+        self.changes: list[LoadChange] = []
+        self.pushes: list[Push] = []
+        self.rolls: list[tuple[float, float, RollStep]] = []
+
+    def _load(self, step: LoadStep, where: str) -> Load:
+        hands = self.description.parameters.hands
+        if step.hand not in hands.links:
+            raise PlanError(where, f"unknown hand {step.hand}", nearest(step.hand, hands.links))
+        load = Load(step.hand, step.mass, step.center)
+        try:
+            load.check(where, hands.load_limit)
+        except BallbalError as error:
+            raise PlanError(error.where, error.what, error.remedy) from error
+        return load
+
+    def add(self, step: object, where: str) -> None:
+        """Put one step at the present end of the timeline."""
+        if isinstance(step, Wait):
+            self.now += step.wait
+        elif isinstance(step, Move):
+            self.knots.append((self.now, self.arm.copy()))
+            for name, value in step.move.items():
+                self.arm[self.description.joint_index(name, where)] = value
+            self.now += step.during
+            self.knots.append((self.now, self.arm.copy()))
+        elif isinstance(step, LoadStep):
+            self.changes.append(LoadChange(self.now, self._load(step, where), step.announced))
+        elif isinstance(step, PushStep):
+            self._check_link(step.link, where)
+            x, y, z = step.at
+            self.pushes.append(Push(self.now, step.during, step.link, (x, y, z), (step.force[0], step.force[1], step.force[2])))
+            self.now += step.during
+        elif isinstance(step, RollStep):
+            before = self.rolls[-1][2] if self.rolls else RollStep()
+            far = float(np.hypot(step.x - before.x, step.y - before.y)) + 0.3 * abs(step.heading - before.heading)
+            during = step.during or max(_SHORTEST_ROLL, 1.875 * far / _ROLL_SPEED)
+            self.rolls.append((self.now, self.now + during, step))
+            self.now += during
+
+    def _check_link(self, link: str, where: str) -> None:
+        model = self.description.model
+        if not model.existBodyName(link):
+            names = [frame.name for frame in model.frames if model.existBodyName(frame.name)]
+            raise PlanError(where, f"unknown link {link}", nearest(link, names))
+
+    def story(self, name: str) -> Story:
+        """The timeline as a whole, its arm motion checked against the joints' limits."""
+        begins = [time for time, _ in self.knots] + [c.time for c in self.changes if c.announced] + [roll[0] for roll in self.rolls]
+        first = min(begins, default=self.now)
+        arms = self._arms(first)
+        outside = (self.posture < self.description.position_low - 1e-9) | (self.posture > self.description.position_high + 1e-9)
+        if outside.any():
+            joint = int(np.argmax(outside))
+            raise PlanError(
+                f"{self.where} start.posture",
+                f"{self.description.joint_names[joint]} is {self.posture[joint]:g} rad",
+                f"its limits are {self.description.position_low[joint]:g} to {self.description.position_high[joint]:g}",
+            )
+        check_path(arms, self.description, self.where)
+        return Story(
+            name=name,
+            posture=read_only(self.posture.copy()),
+            start_loads=self.start_loads,
+            arms=arms,
+            arms_start=first,
+            load_changes=tuple(self.changes),
+            pushes=tuple(self.pushes),
+            ball=self._ball(first),
+            duration=self.now,
+        )
+
+    def _arms(self, first: float) -> ArmPath:
+        if not self.knots:
+            return ArmPath.still(self.posture)
+        times, points = [0.0], [self.posture]
+        for time, point in self.knots:
+            if time - first > times[-1] + 1e-9:
+                times.append(time - first)
+                points.append(point)
+        both = np.array(points)
+        return ArmPath.through(np.array(times), both, 0.0 * both, 0.0 * both)
+
+    def _ball(self, first: float) -> BallMotion | None:
+        if not self.rolls:
+            return None
+        times = np.arange(0.0, self.now - first + 0.01, 0.01)
+        position, rate, acceleration = (np.zeros((len(times), 3)) for _ in range(3))
+        place = np.zeros(3)
+        for begin, end, step in self.rolls:
+            goal = np.array([step.x, step.y, step.heading])
+            span = end - begin
+            s = np.clip((times + first - begin) / span, 0.0, 1.0)[:, None]
+            position += (goal - place) * s**3 * (10 - 15 * s + 6 * s**2)
+            rate += (goal - place) * 30 * s**2 * (1 - s) ** 2 / span
+            acceleration += (goal - place) * 60 * s * (1 - s) * (1 - 2 * s) / span**2
+            place = goal
+        return BallMotion(times, position, rate, acceleration)
