@@ -65,7 +65,10 @@ def parameter(
     choices: tuple[str, ...] = (),
     runtime: bool = False,
 ) -> Any:
-    """Declare one parameter as an attrs field. ``unit`` is SI, "-" where there is none; ``runtime``: may change while running."""
+    """Declare one parameter as an attrs field.
+
+    ``unit`` is SI, "-" where there is none; ``runtime``: may change while running.
+    """
     declared = Declaration("", kind, default, unit, meaning, low, high, length, choices, runtime)
     if kind not in KINDS:
         raise TypeError(f"unknown kind of parameter {kind}")
@@ -94,7 +97,8 @@ def declarations(cls: type, prefix: str = "", flat: Mapping[str, Any] | None = N
             yield from declarations(field.metadata["section"], f"{prefix}{field.name}.", flat)
         elif "sections" in field.metadata:
             listed = None if flat is None else flat.get(prefix + field.metadata["named_by"])
-            names = ["<name>"] if flat is None else [n for n in listed or [] if isinstance(n, str)]
+            known = [n for n in listed if isinstance(n, str)] if isinstance(listed, (list, tuple)) else []
+            names = ["<name>"] if flat is None else known
             for name in names:
                 yield from declarations(field.metadata["sections"], f"{prefix}{name}.", flat)
         else:
@@ -153,9 +157,14 @@ def _check_scalar(declared: Declaration, kind: str, value: Any, refuse: Callable
 def build(cls: type[T], flat: Mapping[str, Any], source: str) -> T:
     """Make the parameter object from a flat mapping of dotted names; every key known, every value checked.
 
-    Raises :class:`ParameterError` for an unknown, missing, mistyped or out-of-range parameter; ``source`` is named in it.
+    Raises :class:`ParameterError` for an unknown, missing, mistyped or out-of-range parameter; ``source`` is named in
+    it.
     """
     declared = {d.name: d for d in declarations(cls, flat=flat)}
+    for key in flat:
+        if key in declared and declared[key].kind == "string_array":
+            # It may name groups: what is wrong with the names comes before what is unknown because of them.
+            check_value(declared[key], flat[key], source)
     for key in flat:
         if key not in declared:
             raise ParameterError(source, f"unknown parameter {key}", nearest(key, declared))
@@ -227,7 +236,7 @@ def read_yaml(path: Path) -> Any:
         reason = error.strerror if isinstance(error, OSError) and error.strerror else "it is not UTF-8 text"
         raise ParameterError(str(path), f"can't be read: {reason}", "give the path of a YAML file") from error
     try:
-        return yaml.load(text, Loader=_Loader)  # noqa: S506 - derived from the safe loader
+        return yaml.load(text, Loader=_Loader)
     except (yaml.YAMLError, ValueError, RecursionError) as error:
         mark = getattr(error, "problem_mark", None)
         line = f"line {mark.line + 1}: " if mark is not None else ""
@@ -240,7 +249,9 @@ def read_parameter_file(path: Path) -> dict[str, Any]:
     document = read_yaml(path)
     remedy = "it takes '/**:' with 'ros__parameters:' below it, and nothing else"
     if not isinstance(document, Mapping) or list(document) != ["/**"]:
-        found = f"has the sections {', '.join(map(str, document))}" if isinstance(document, Mapping) else "is no mapping"
+        found = (
+            f"has the sections {', '.join(map(str, document))}" if isinstance(document, Mapping) else "is no mapping"
+        )
         raise ParameterError(str(path), found, remedy)
     inner = document["/**"]
     if not isinstance(inner, Mapping) or list(inner) != ["ros__parameters"]:

@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Protocol
+from typing import Any, Protocol
 
 import attrs
 import numpy as np
 from scipy.interpolate import BPoly, PPoly, make_interp_spline
-from scipy.signal import cont2discrete, dlsim
+from scipy.linalg import expm
 
 from ballbal_ros.errors import PlanError
 from ballbal_ros.robot.arrays import Array
@@ -68,18 +68,25 @@ def path_through_waypoints(
     rates: Sequence[Array | None] | None = None,
     accelerations: Sequence[Array | None] | None = None,
 ) -> ArmPath:
-    """A smooth path from rest to rest through waypoints [K, n] at increasing times [K], s.
+    """A smooth path through waypoints [K, n] at increasing times [K], s; it ends at rest.
 
     Rates and accelerations are honoured where they are given. Where they are not, they are those of the quintic spline
     through the positions, at rest at both ends and wherever two waypoints are the same (a dwell).
-    Raises :class:`PlanError` where the times don't increase or a number is not finite.
+    The first point may be moving: then the path takes over from a motion. Raises :class:`PlanError` where the times
+    don't increase, a number is not finite, there are fewer than two points, or the last one moves.
     """
     knots, points = np.asarray(times, float), np.asarray(positions, float)
     if not (np.all(np.isfinite(knots)) and np.all(np.isfinite(points))):
         raise PlanError("plan", "a time or position is not finite", "give finite numbers")
+    if len(knots) < 2:
+        raise PlanError("plan", f"has {len(knots)} points", "an arm motion takes a first and a last point at least")
     if np.any(np.diff(knots) <= 0.0):
         bad = int(np.argmax(np.diff(knots) <= 0.0))
-        raise PlanError("plan", f"time_from_start of point {bad + 1} is {knots[bad + 1]:g} s after {knots[bad]:g} s", "times must increase")
+        raise PlanError(
+            "plan",
+            f"time_from_start of point {bad + 1} is {knots[bad + 1]:g} s after {knots[bad]:g} s",
+            "times must increase",
+        )
     given_rate = [None] * len(knots) if rates is None else list(rates)
     given_acceleration = [None] * len(knots) if accelerations is None else list(accelerations)
     rate, acceleration = _smooth(knots, points)
@@ -93,6 +100,8 @@ def path_through_waypoints(
             acceleration[k] = value
     if not (np.all(np.isfinite(rate)) and np.all(np.isfinite(acceleration))):
         raise PlanError("plan", "a rate or acceleration is not finite", "give finite numbers, or leave them out")
+    if np.any(rate[-1]) or np.any(acceleration[-1]):
+        raise PlanError("plan", "its last point is still moving", "end at rest: velocity and acceleration 0")
     return ArmPath.through(knots, points, rate, acceleration)
 
 
@@ -101,8 +110,8 @@ def _smooth(knots: Array, points: Array) -> tuple[Array, Array]:
     rate, acceleration = np.zeros_like(points), np.zeros_like(points)
     dwell = np.all(np.diff(points, axis=0) == 0.0, axis=1)
     edges = [0, *(np.flatnonzero(dwell[1:] | dwell[:-1]) + 1).tolist(), len(knots) - 1]
-    rest = [(1, np.zeros(points.shape[1])), (2, np.zeros(points.shape[1]))]
-    for first, last in zip(edges[:-1], edges[1:]):
+    rest: Any = [(1, np.zeros(points.shape[1])), (2, np.zeros(points.shape[1]))]
+    for first, last in zip(edges[:-1], edges[1:], strict=True):
         if last - first >= 2:
             spline = make_interp_spline(knots[first : last + 1], points[first : last + 1], k=5, bc_type=(rest, rest))
             inner = slice(first + 1, last)
@@ -111,7 +120,9 @@ def _smooth(knots: Array, points: Array) -> tuple[Array, Array]:
 
 
 def _fitting_accelerations(knots: Array, points: Array, rate: Array) -> Array:
-    """Accelerations at the knots where rates are given: the mean of the cubics' on both sides; zero where the path rests."""
+    """Accelerations at the knots where rates are given: the mean of the cubics' on both sides; zero where the path
+    rests.
+    """
     step = np.diff(knots)[:, None]
     slope = np.diff(points, axis=0) / step
     leaving = (6.0 * slope - 4.0 * rate[:-1] - 2.0 * rate[1:]) / step
@@ -121,25 +132,39 @@ def _fitting_accelerations(knots: Array, points: Array, rate: Array) -> Array:
     ends = [(0, leaving[0]), (-1, arriving[-1])]
     for index, value in ends:
         acceleration[index] = np.where(rate[index] == 0.0, 0.0, value)
+    # A joint that dwells must not be drawn away from where it is.
+    dwell = (np.diff(points, axis=0) == 0.0) & (rate[:-1] == 0.0) & (rate[1:] == 0.0)
+    acceleration[:-1][dwell] = 0.0
+    acceleration[1:][dwell] = 0.0
     return acceleration
 
 
 def check_path(path: JointPath, description: RobotDescription, where: str) -> None:
-    """Raise :class:`PlanError` where a path leaves a joint's position or velocity limits; one line that names joint and time."""
+    """Raise :class:`PlanError` where a path leaves a joint's position or velocity limits; one line that names joint
+    and time.
+    """
     times = np.arange(0.0, path.duration + 0.005, 0.005)
     position, rate, _ = path.sample(times)
     for index, name in enumerate(description.joint_names):
-        low, high, fastest = description.position_low[index], description.position_high[index], description.velocity_limit[index]
+        low, high, fastest = (
+            description.position_low[index],
+            description.position_high[index],
+            description.velocity_limit[index],
+        )
         outside = (position[:, index] < low - 1e-6) | (position[:, index] > high + 1e-6)
         if outside.any():
             k = int(np.argmax(outside))
             raise PlanError(
-                where, f"{name} would be at {position[k, index]:.3f} rad after {times[k]:.2f} s", f"its limits are {low:g} to {high:g}"
+                where,
+                f"{name} would be at {position[k, index]:.3f} rad after {times[k]:.2f} s",
+                f"its limits are {low:g} to {high:g}",
             )
         k = int(np.argmax(np.abs(rate[:, index])))
         if abs(rate[k, index]) > fastest * (1.0 + 1e-6):
             raise PlanError(
-                where, f"{name} would move at {abs(rate[k, index]):.2f} rad/s after {times[k]:.2f} s", f"its limit is {fastest:g} rad/s"
+                where,
+                f"{name} would move at {abs(rate[k, index]):.2f} rad/s after {times[k]:.2f} s",
+                f"its limit is {fastest:g} rad/s",
             )
 
 
@@ -161,24 +186,15 @@ class FollowedPath:
         if servo == "ideal":
             return path
         duration = path.duration + 12.0 / bandwidth
-        times = np.arange(0.0, duration + _FINE, _FINE)
+        times: Array = _FINE * np.arange(int(np.ceil(duration / _FINE)) + 1, dtype=float)
         position, rate, _ = path.sample(times)
-        pulled = bandwidth**2 * position + (2.0 * bandwidth * rate if servo == "position_velocity" else 0.0)
-        system = (
-            np.array([[0.0, 1.0], [-(bandwidth**2), -2.0 * bandwidth]]),
-            np.array([[0.0], [1.0]]),
-            np.eye(2),
-            np.zeros((2, 1)),
-        )
-        discrete = cont2discrete(system, _FINE, method="foh")
-        states = []
-        for joint in range(position.shape[1]):
-            offset = position[0, joint]
-            _, y, _ = dlsim(discrete, pulled[:, joint] - bandwidth**2 * offset, t=times)
-            states.append(y + np.array([offset, 0.0]))
-        state = np.stack(states, axis=1)
-        acceleration = pulled - bandwidth**2 * state[..., 0] - 2.0 * bandwidth * state[..., 1]
-        return cls(duration, times, (state[..., 0], state[..., 1], acceleration))
+        offset = position[0]
+        pulled = bandwidth**2 * (position - offset)
+        if servo == "position_velocity":
+            pulled += 2.0 * bandwidth * rate
+        state = _critically_damped(pulled, bandwidth)
+        acceleration = pulled - bandwidth**2 * state[:, 0] - 2.0 * bandwidth * state[:, 1]
+        return cls(duration, times, (state[:, 0] + offset, state[:, 1], acceleration))
 
     def sample(self, times: Array) -> tuple[Array, Array, Array]:
         """Positions, rates and accelerations [N, n] at times [N], s from the command's start."""
@@ -187,3 +203,17 @@ class FollowedPath:
             out.append(np.stack([np.interp(times, self._times, value[:, j]) for j in range(value.shape[1])], axis=1))
         inside = ((times >= 0.0) & (times <= self.duration))[:, None]
         return out[0], out[1] * inside, out[2] * inside
+
+
+def _critically_damped(pulled: Array, bandwidth: float) -> Array:
+    """Positions and rates [N, 2, n] of x'' = -2w x' - w² x + pulled [N, n] from rest; exact for a linear pull."""
+    system: Array = np.zeros((4, 4))
+    system[0, 1], system[1, :3] = 1.0, (-(bandwidth**2), -2.0 * bandwidth, 1.0)
+    system[:2] *= _FINE
+    system[2, 3] = 1.0
+    step = expm(system)
+    push = step[:2, 2][:, None] * pulled[:-1, None] + step[:2, 3][:, None] * np.diff(pulled, axis=0)[:, None]
+    state = np.zeros((len(pulled), 2, pulled.shape[1]))
+    for k, forced in enumerate(push):
+        state[k + 1] = step[:2, :2] @ state[k] + forced
+    return state

@@ -1,7 +1,7 @@
 """Lean, heading and body rates (physics.md, *Frames*): ``R = Rz(heading) Ry(pitch) Rx(roll)``.
 
-``rotation_lean`` is ``base_link`` in ``base_footprint``; rates and accelerations are those of the body, in ``base_link`` axes.
-All functions work on stacks: leans [..., 2] as (roll, pitch), in rad.
+``rotation_lean`` is ``base_link`` in ``base_footprint``; rates and accelerations are those of the body, in
+``base_link`` axes. All functions work on stacks: leans [..., 2] as (roll, pitch), in rad.
 """
 
 from __future__ import annotations
@@ -37,7 +37,9 @@ def rotation_rpy(rpy: Array) -> Array:
 
 
 def lean_and_heading(rotation: Array) -> tuple[float, float, float]:
-    """(roll, pitch, heading) in rad of a rotation matrix [3, 3] of ``base_link`` in ``odom``; inverse of the product above."""
+    """(roll, pitch, heading) in rad of a rotation matrix [3, 3] of ``base_link`` in ``odom``; inverse of the product
+    above.
+    """
     return (
         math.atan2(rotation[2, 1], rotation[2, 2]),
         math.asin(min(1.0, max(-1.0, -rotation[2, 0]))),
@@ -94,8 +96,8 @@ def body_rates(
 ) -> BodyRates:
     """ω and α of the body in ``base_link`` from lean and heading, with derivatives.
 
-    ω = φ' e_x + θ' a(φ) + ψ' b(φ, θ) with roll φ, pitch θ, heading ψ, a = (0, cos φ, -sin φ) and b the third row of Ry Rx.
-    Leans [..., 2], headings [...]; rad, s.
+    ω = φ' e_x + θ' a(φ) + ψ' b(φ, θ) with roll φ, pitch θ, heading ψ, a = (0, cos φ, -sin φ) and b the third row of
+    Ry Rx. Leans [..., 2], headings [...]; rad, s.
     """
     sin, cos = np.sin(lean), np.cos(lean)
     s_r, s_p, c_r, c_p = sin[..., 0], sin[..., 1], cos[..., 0], cos[..., 1]
@@ -109,7 +111,11 @@ def body_rates(
     a, a_r = column(zero, c_r, -s_r), column(zero, -s_r, -c_r)
     b = column(-s_p, c_p * s_r, c_p * c_r)
     b_r, b_p = column(zero, c_p * c_r, -c_p * s_r), column(-c_p, -s_p * s_r, -s_p * c_r)
-    b_rr, b_rp, b_pp = column(zero, -c_p * s_r, -c_p * c_r), column(zero, -s_p * c_r, s_p * s_r), column(s_p, -c_p * s_r, -c_p * c_r)
+    b_rr, b_rp, b_pp = (
+        column(zero, -c_p * s_r, -c_p * c_r),
+        column(zero, -s_p * c_r, s_p * s_r),
+        column(s_p, -c_p * s_r, -c_p * c_r),
+    )
     v_r, v_p, v_h = v_r[..., None], v_p[..., None], np.asarray(heading_rate)[..., None]
     u_r, u_p = lean_acceleration[..., 0, None], lean_acceleration[..., 1, None]
     u_h = np.asarray(heading_acceleration)[..., None]

@@ -1,23 +1,25 @@
 """The two balance rows (physics.md): the moment about the contact point comes from gravity and outside forces alone.
 
-The arms' motion is given, so all that depends on it is computed once, in ``base_link``: mass moment μ = m c, inertia I about the
-ball's centre, momentum L of the moving arms, and their rates. With the body's rate ω and acceleration α, the ball's
-acceleration a, and R from ``base_link`` to ``base_footprint``:
+The arms' motion is given, so all that depends on it is computed once, in ``base_link``: mass moment μ = m c, inertia
+I about the ball's centre, momentum L of the moving arms, and their rates. With the body's rate ω and acceleration α,
+the ball's acceleration a, and R from ``base_link`` to ``base_footprint``:
 
     f = μ'' + 2 ω×μ' + α×μ + ω×(ω×μ)                  n = I α + I' ω + L' + ω×(I ω + L)
     F = m (a + g z) + R f - Σ f_h                      N = R n + (R μ)×(a + g z) - Σ ((R p_h)×f_h + m_h)
 
-F and N are what the ball must give to the body, as force and as moment about its centre; N is the drive torque τ. The rows are
+F and N are what the ball must give to the body, as force and as moment about its centre; N is the drive torque τ. The
+rows are
 
     roll:  N_x - r (F_y + M_b a_y) = 0                 pitch:  N_y + r (F_x + M_b a_x) = 0
 
-with M_b = m_b + I_b / r². This is the rigid-body dynamics of the tree, regrouped: it agrees with Pinocchio's full recursion and
-its derivatives to rounding (tested), and a whole motion is one array operation.
+with M_b = m_b + I_b / r². This is the rigid-body dynamics of the tree, regrouped: it agrees with Pinocchio's full
+recursion and its derivatives to rounding (tested), and a whole motion is one array operation.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import attrs
 import numpy as np
@@ -34,8 +36,8 @@ _E_Y = np.array([0.0, 1.0, 0.0])
 class UpperBodyTerms:
     """What the arms' motion alone decides, at N samples, in ``base_link`` and about the ball's centre.
 
-    ``mass`` [N]; ``moment`` = m c and its first and second rate [N, 3]; ``inertia`` and its rate [N, 3, 3]; ``angular`` momentum of the
-    arms' motion and its rate [N, 3]; ``hand_position`` [N, hands, 3] for the named hands.
+    ``mass`` [N]; ``moment`` = m c and its first and second rate [N, 3]; ``inertia`` and its rate [N, 3, 3];
+    ``angular`` momentum of the arms' motion and its rate [N, 3]; ``hand_position`` [N, hands, 3] for the named hands.
     """
 
     mass: Array
@@ -55,7 +57,15 @@ class UpperBodyTerms:
         vectors = [np.zeros((samples, 3)) for _ in range(5)]
         matrices = [np.zeros((samples, 3, 3)) for _ in range(2)]
         return cls(
-            np.full(samples, mass), tuple(hands), vectors[0], vectors[1], vectors[2], matrices[0], matrices[1], vectors[3], vectors[4],
+            np.full(samples, mass),
+            tuple(hands),
+            vectors[0],
+            vectors[1],
+            vectors[2],
+            matrices[0],
+            matrices[1],
+            vectors[3],
+            vectors[4],
             np.zeros((samples, len(hands), 3)),
         )
 
@@ -70,7 +80,8 @@ class UpperBodyTerms:
             return np.asarray(mine + weight * (theirs - mine))
 
         fields = [f.name for f in attrs.fields(UpperBodyTerms) if f.name not in ("hands", "hand_position")]
-        return attrs.evolve(self, **{name: mix(getattr(self, name), getattr(other, name)) for name in fields})
+        mixed: dict[str, Any] = {name: mix(getattr(self, name), getattr(other, name)) for name in fields}
+        return attrs.evolve(self, **mixed)
 
     def static_lean(self) -> Array:
         """Equilibrium lean [N, 2] with nothing moving and no outside force: the mass centre straight above the ball."""
@@ -82,8 +93,8 @@ class UpperBodyTerms:
 class OutsideMotion:
     """What is given besides the arms, at N samples, in ``base_footprint`` axes.
 
-    ``ball_acceleration`` [N, 2]; heading rate and acceleration [N]; ``hand_force`` and ``hand_moment`` [N, hands, 3], which
-    the world exerts on the hands of the terms.
+    ``ball_acceleration`` [N, 2]; heading rate and acceleration [N]; ``hand_force`` and ``hand_moment`` [N, hands, 3],
+    which the world exerts on the hands of the terms.
     """
 
     ball_acceleration: Array
@@ -96,8 +107,11 @@ class OutsideMotion:
     def at_rest(cls, samples: int, hands: int = 0) -> OutsideMotion:
         """Ball and heading at rest, nobody pulling."""
         return cls(
-            np.zeros((samples, 2)), np.zeros(samples), np.zeros(samples),
-            np.zeros((samples, hands, 3)), np.zeros((samples, hands, 3)),
+            np.zeros((samples, 2)),
+            np.zeros(samples),
+            np.zeros(samples),
+            np.zeros((samples, hands, 3)),
+            np.zeros((samples, hands, 3)),
         )
 
 
@@ -105,9 +119,10 @@ class OutsideMotion:
 class BalanceRows:
     """The rows and the wrench behind them, at N samples, in ``base_footprint`` axes.
 
-    ``residual`` [N, 2] as (roll, pitch), N m; ``by_lean`` [N, 2, 6], columns as in :class:`~ballbal_ros.robot.attitude.BodyRates`;
-    ``by_ball_acceleration`` [N, 2, 2]; ``force`` [N, 3] and ``torque`` [N, 3] on the body at the ball's centre (the torque is the
-    drive torque); ``wrench_by_lean`` [N, 6, 6] their derivatives.
+    ``residual`` [N, 2] as (roll, pitch), N m; ``by_lean`` [N, 2, 6], columns as in
+    :class:`~ballbal_ros.robot.attitude.BodyRates`; ``by_ball_acceleration`` [N, 2, 2]; ``force`` [N, 3] and
+    ``torque`` [N, 3] on the body at the ball's centre (the torque is the drive torque); ``wrench_by_lean`` [N, 6, 6]
+    their derivatives.
     """
 
     residual: Array

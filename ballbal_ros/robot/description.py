@@ -23,7 +23,10 @@ MOVING = ("revolute", "prismatic", "continuous")
 
 @attrs.frozen(eq=False)
 class RobotDescription:
-    """What the robot is; everything in it has been checked. Joint arrays are in ``joint_names``' order (the model's, depth first)."""
+    """What the robot is; everything in it has been checked.
+
+    Joint arrays are in ``joint_names``' order (the model's, depth first).
+    """
 
     parameters: RobotParameters
     urdf_path: str
@@ -68,7 +71,9 @@ class RobotDescription:
         try:
             text = urdf.read_text(encoding="utf-8")
         except (OSError, UnicodeDecodeError) as error:
-            raise ModelError(str(file), f"urdf is {parameters.urdf}, which can't be read", f"put the URDF at {urdf}") from error
+            raise ModelError(
+                str(file), f"urdf is {parameters.urdf}, which can't be read", f"put the URDF at {urdf}"
+            ) from error
         return cls.from_urdf(parameters, text, str(urdf), str(file))
 
     @classmethod
@@ -77,7 +82,7 @@ class RobotDescription:
         text = checked_urdf(urdf_text, urdf)
         try:
             model = pin.buildModelFromXML(text, pin.JointModelFreeFlyer())
-        except Exception as error:  # noqa: BLE001 - Pinocchio raises what its parser gives
+        except Exception as error:
             raise ModelError(urdf, f"is no URDF that makes a robot: {error}", "mend the URDF") from error
         model.gravity.linear = np.array([0.0, 0.0, -GRAVITY])
         _check_links(parameters, model, urdf, file)
@@ -85,14 +90,16 @@ class RobotDescription:
         if ball.inertia > 2.0 / 3.0 * ball.mass * ball.radius**2 * 1.001:
             most = 2.0 / 3.0 * ball.mass * ball.radius**2
             raise ModelError(
-                file, f"ball.inertia is {ball.inertia:g} kg m²", f"a ball of this mass has at most {most:.4g} (a thin shell)"
+                file,
+                f"ball.inertia is {ball.inertia:g} kg m²",
+                f"a ball of this mass has at most {most:.4g} (a thin shell)",
             )
         return cls(
             parameters=parameters,
             urdf_path=urdf,
             urdf_text=text,
             model=model,
-            drive=Drive.from_parameters(parameters.drive, parameters.ball.radius),
+            drive=Drive.from_parameters(parameters.drive, parameters.ball.radius, file),
             joint_names=tuple(model.names)[2:],
             position_low=read_only(np.array(model.lowerPositionLimit[7:], float)),
             position_high=read_only(np.array(model.upperPositionLimit[7:], float)),
@@ -110,9 +117,11 @@ class RobotDescription:
 
 
 def checked_urdf(text: str, urdf: str) -> str:
-    """Check a URDF's joints, masses and inertias link by link, and return it with continuous joints as unlimited revolute ones.
+    """Check a URDF's joints, masses and inertias link by link, and return it with continuous joints as unlimited
+    revolute ones.
 
-    Raises :class:`ModelError` that names the link or joint. (A continuous joint would be a pair of numbers in Pinocchio.)
+    Raises :class:`ModelError` that names the link or joint. (A continuous joint would be a pair of numbers in
+    Pinocchio.)
     """
     try:
         root = ElementTree.fromstring(text)
@@ -120,10 +129,10 @@ def checked_urdf(text: str, urdf: str) -> str:
         raise ModelError(urdf, f"is no XML: {error}", "mend the URDF") from error
     if root.tag != "robot":
         raise ModelError(urdf, f"has the root element <{root.tag}>", "a URDF's root element is <robot>")
-    links = {link.get("name", "") for link in root.iter("link")}
+    links = {link.get("name", "") for link in root.findall("link")}
     if "base_link" not in links:
         raise ModelError(urdf, "has no link base_link", "name the link whose origin is the ball's centre base_link")
-    for link in root.iter("link"):
+    for link in root.findall("link"):
         _check_link(link, urdf)
     for joint in root.findall("joint"):
         _check_joint(joint, links, urdf)
@@ -163,7 +172,9 @@ def _check_joint(joint: ElementTree.Element, links: set[str], urdf: str) -> None
     if kind != "fixed" and kind not in MOVING:
         raise ModelError(urdf, f"joint {name} has the type {kind}", f"it takes fixed, {', '.join(MOVING)}")
     if joint.find("mimic") is not None:
-        raise ModelError(urdf, f"joint {name} mimics another", "this program takes independent joints only: fix it in the URDF")
+        raise ModelError(
+            urdf, f"joint {name} mimics another", "this program takes independent joints only: fix it in the URDF"
+        )
     for role in ("parent", "child"):
         element = joint.find(role)
         link = "" if element is None else element.get("link", "")
@@ -181,8 +192,12 @@ def _check_joint(joint: ElementTree.Element, links: set[str], urdf: str) -> None
         joint.set("type", "revolute")
         limit.set("lower", "-1e6")
         limit.set("upper", "1e6")
-    elif _numbers(limit, "lower", urdf, f"joint {name}: limit") >= _numbers(limit, "upper", urdf, f"joint {name}: limit"):
-        raise ModelError(urdf, f"joint {name}: lower {limit.get('lower')} ≥ upper {limit.get('upper')}", "give lower < upper")
+    elif _numbers(limit, "lower", urdf, f"joint {name}: limit") >= _numbers(
+        limit, "upper", urdf, f"joint {name}: limit"
+    ):
+        raise ModelError(
+            urdf, f"joint {name}: lower {limit.get('lower')} ≥ upper {limit.get('upper')}", "give lower < upper"
+        )
 
 
 def _check_links(parameters: RobotParameters, model: pin.Model, urdf: str, file: str) -> None:

@@ -30,11 +30,11 @@ class Drive:
     encoder_step: Array
 
     @classmethod
-    def from_parameters(cls, parameters: DriveParameters, ball_radius: float) -> Drive:
-        """Make the maps from the contacts; raises :class:`ModelError` where the contacts can't drive the ball.
+    def from_parameters(cls, parameters: DriveParameters, ball_radius: float, where: str = "robot.yaml") -> Drive:
+        """Make the maps from the contacts; raises :class:`ModelError`, which names ``where``, if they can't drive it.
 
-        ``torque_map`` [3, n]: effort → torque on the body. ``effort_map`` [n, 3]: torque on the body → least-norm effort.
-        ``spin_map`` [3, n]: actuator rates → rate of the ball relative to the body (least squares).
+        ``torque_map`` [3, n]: effort → torque on the body. ``effort_map`` [n, 3]: torque on the body → least-norm
+        effort. ``spin_map`` [3, n]: actuator rates → rate of the ball relative to the body (least squares).
         """
         rows = []
         for name in parameters.contacts:
@@ -43,22 +43,23 @@ class Drive:
             for label, vector in (("point", point), ("push", push)):
                 if abs(np.linalg.norm(vector) - 1.0) > 1e-3:
                     raise ModelError(
-                        "robot.yaml",
+                        where,
                         f"drive.{name}.{label} has length {np.linalg.norm(vector):.4f}",
                         "it takes a unit vector (to 0.001)",
                     )
             point, push = point / np.linalg.norm(point), push / np.linalg.norm(push)
             if abs(point @ push) > 2e-3:
                 raise ModelError(
-                    "robot.yaml",
+                    where,
                     f"drive.{name}.push is {np.degrees(np.arccos(abs(point @ push))):.1f}° from drive.{name}.point",
                     "a contact pushes along the ball's surface: 90°",
                 )
             rows.append(ball_radius / contact.effective_radius * np.cross(point, push))
-        rate_map = np.array(rows).reshape(-1, 3)
+        rate_map: Array = np.array(rows, float).reshape(-1, 3)
         if len(rows) < 3 or np.linalg.svd(rate_map, compute_uv=False)[-1] < 1e-6 * np.abs(rate_map).max():
             raise ModelError(
-                "robot.yaml", f"drive.contacts has {len(rows)} contacts that can't turn the ball about all three axes",
+                where,
+                f"drive.contacts has {len(rows)} contacts that can't turn the ball about all three axes",
                 "give three or more whose n × d span space",
             )
         members = [parameters.contact[name] for name in parameters.contacts]
@@ -67,8 +68,8 @@ class Drive:
             names=tuple(parameters.contacts),
             rate_map=read_only(rate_map),
             torque_map=read_only(-rate_map.T.copy()),
-            effort_map=read_only(-np.linalg.pinv(rate_map.T)),
-            spin_map=read_only(np.linalg.pinv(rate_map)),
+            effort_map=read_only(np.asarray(-np.linalg.pinv(rate_map.T))),
+            spin_map=read_only(np.asarray(np.linalg.pinv(rate_map))),
             effort_limit=read_only(np.array([m.effort_limit for m in members])),
             rate_limit=read_only(np.array([m.rate_limit for m in members])),
             reflected_inertia=read_only(rate_map.T @ rotor @ rate_map),
@@ -85,6 +86,6 @@ class Drive:
         return np.asarray(self.torque_map @ effort)
 
     def torque_limit(self, axis: Array) -> float:
-        """Greatest torque about a unit axis of ``base_link`` within every actuator's limit, N m (least-norm efforts)."""
+        """Greatest torque, N m, about a unit axis of ``base_link`` within all actuators' limits, least-norm efforts."""
         share = np.abs(self.effort_map @ axis)
         return float(np.min(self.effort_limit[share > 1e-12] / share[share > 1e-12]))

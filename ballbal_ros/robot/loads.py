@@ -15,7 +15,9 @@ def _vector(value: object) -> Array:
 
 @attrs.frozen(eq=False)
 class Load:
-    """A load in a hand: mass in kg, mass centre [3] in m in the hand link's frame, inertia [3, 3] in kg m² about it, same axes."""
+    """A load in a hand: mass in kg, mass centre [3] in m in the hand link's frame, inertia [3, 3] in kg m² about it,
+    same axes.
+    """
 
     hand: str
     mass: float
@@ -23,16 +25,21 @@ class Load:
     inertia: Array = attrs.field(factory=lambda: np.zeros((3, 3)), converter=_vector)
 
     def check(self, where: str, limit: float = np.inf) -> None:
-        """Raise :class:`ModelError` unless mass, centre and inertia are physically possible and within the hand's limit."""
+        """Raise :class:`ModelError` unless mass, centre and inertia are physically possible and within the hand's
+        limit.
+        """
         if not (np.isfinite(self.mass) and 0.0 <= self.mass <= limit):
             raise ModelError(where, f"mass in {self.hand} is {self.mass} kg", f"it takes 0 to {limit:g} kg")
         if self.center.shape != (3,) or not np.all(np.isfinite(self.center)) or np.abs(self.center).max() > 2.0:
-            raise ModelError(where, f"center in {self.hand} is {self.center.tolist()} m", "it takes three numbers within 2 m")
+            raise ModelError(
+                where, f"center in {self.hand} is {self.center.tolist()} m", "it takes three numbers within 2 m"
+            )
         check_inertia(self.inertia, where, f"inertia in {self.hand}", point_allowed=True)
 
 
 def check_inertia(inertia: Array, where: str, what: str, *, point_allowed: bool = False) -> None:
-    """Raise :class:`ModelError` unless a 3x3 inertia is possible: positive definite, and each principal value ≤ the sum of the others.
+    """Raise :class:`ModelError` unless a 3x3 inertia is possible: positive definite, and each principal value ≤ the
+    sum of the others.
 
     ``point_allowed`` lets the zero inertia of a point mass pass.
     """
@@ -43,7 +50,9 @@ def check_inertia(inertia: Array, where: str, what: str, *, point_allowed: bool 
     if point_allowed and principal[0] >= -1e-12 and principal[-1] <= principal[0] + principal[1] + slack:
         return
     if principal[0] <= 0.0:
-        raise ModelError(where, f"{what} has the principal value {principal[0]:.3g} kg m²", "all three must be positive")
+        raise ModelError(
+            where, f"{what} has the principal value {principal[0]:.3g} kg m²", "all three must be positive"
+        )
     if principal[-1] > principal[0] + principal[1] + slack:
         raise ModelError(
             where,

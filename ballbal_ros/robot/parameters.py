@@ -13,16 +13,25 @@ class BallParameters:
 
     radius: float = parameter("double", unit="m", low=0.02, high=2.0, meaning="radius of the ball")
     mass: float = parameter("double", unit="kg", low=0.01, high=200.0, meaning="mass of the ball")
-    inertia: float = parameter("double", unit="kg m²", low=1e-6, high=100.0, meaning="inertia of the ball about any axis")
+    inertia: float = parameter(
+        "double", unit="kg m²", low=1e-6, high=100.0, meaning="inertia of the ball about any axis"
+    )
 
 
 @attrs.frozen(kw_only=True)
 class FloorParameters:
     """What the floor under the ball gives; planning uses these."""
 
-    friction: float = parameter("double", 0.7, unit="-", low=0.01, high=3.0, meaning="friction of the ball on the floor")
+    friction: float = parameter(
+        "double", 0.7, unit="-", low=0.01, high=3.0, meaning="friction of the ball on the floor"
+    )
     torsion: float = parameter(
-        "double", 0.004, unit="m", low=0.0, high=0.5, meaning="greatest spin moment of the floor on the ball, per newton of load"
+        "double",
+        0.004,
+        unit="m",
+        low=0.0,
+        high=0.5,
+        meaning="greatest spin moment of the floor on the ball, per newton of load",
     )
 
 
@@ -34,7 +43,10 @@ class ContactParameters:
         "double_array", unit="-", length=3, meaning="unit direction from the ball's centre to the contact, in base_link"
     )
     push: list[float] = parameter(
-        "double_array", unit="-", length=3, meaning="unit direction in which it pushes the ball when its rate is positive, in base_link"
+        "double_array",
+        unit="-",
+        length=3,
+        meaning="unit direction in which it pushes the ball when its rate is positive, in base_link",
     )
     effective_radius: float = parameter(
         "double", unit="m", low=1e-3, high=1.0, meaning="radius of the wheel over its gear ratio"
@@ -54,7 +66,9 @@ class ContactParameters:
 class DriveParameters:
     """The drive: a list of contacts."""
 
-    contacts: list[str] = parameter("string_array", unit="-", meaning="names of the actuators, in the order of drive_effort")
+    contacts: list[str] = parameter(
+        "string_array", unit="-", meaning="names of the actuators, in the order of drive_effort"
+    )
     contact: dict[str, ContactParameters] = sections(ContactParameters, named_by="contacts")
 
 
@@ -65,7 +79,11 @@ class ImuParameters:
     frame: str = parameter("string", "imu_link", unit="-", meaning="frame_id that its messages carry")
     position: list[float] = parameter("double_array", unit="m", length=3, meaning="where it is, in base_link")
     rpy: list[float] = parameter(
-        "double_array", [0.0, 0.0, 0.0], unit="rad", length=3, meaning="its rotation in base_link, fixed-axis roll, pitch, yaw"
+        "double_array",
+        [0.0, 0.0, 0.0],
+        unit="rad",
+        length=3,
+        meaning="its rotation in base_link, fixed-axis roll, pitch, yaw",
     )
 
 
@@ -98,7 +116,9 @@ class LimitParameters:
     """What the machine may be asked for."""
 
     lean: float = parameter("double", 0.35, unit="rad", low=0.01, high=1.2, meaning="greatest planned lean")
-    drive_torque: float = parameter("double", 40.0, unit="N m", low=0.1, high=1e3, meaning="greatest drive torque about any axis")
+    drive_torque: float = parameter(
+        "double", 40.0, unit="N m", low=0.1, high=1e3, meaning="greatest drive torque about any axis"
+    )
     ball_speed: float = parameter("double", 1.5, unit="m/s", low=0.01, high=10.0, meaning="greatest speed of the ball")
 
 

@@ -47,7 +47,7 @@ class WholeBody:
 
     def __init__(self, description: RobotDescription, loads: Iterable[Load] = ()) -> None:
         self.description = description
-        self._model = pin.Model(description.model)
+        self._model = description.model.copy()
         self._data = self._model.createData()
         self._bare = {hand: pin.Inertia(self._model.inertias[self._hand_joint(hand)]) for hand in self.hands}
         self._loads: dict[str, Load] = {}
@@ -84,7 +84,10 @@ class WholeBody:
         return int(frame.parentJoint if hasattr(frame, "parentJoint") else frame.parent)
 
     def set_load(self, load: Load, where: str = "load") -> None:
-        """Replace what one hand holds; mass 0 takes it away. Raises :class:`ModelError` for an unknown hand or impossible load."""
+        """Replace what one hand holds; mass 0 takes it away.
+
+        Raises :class:`ModelError` for an unknown hand or impossible load.
+        """
         if load.hand not in self._bare:
             raise ModelError(where, f"unknown hand {load.hand}", nearest(load.hand, self._bare))
         load.check(where, self.description.parameters.hands.load_limit)
@@ -122,7 +125,9 @@ class WholeBody:
         return np.array(pin.jacobianCenterOfMass(self._model, self._data, self._q)[:, 6:])
 
     def momentum(self, arm_position: Array, arm_rate: Array) -> tuple[Array, Array]:
-        """Linear [3] (N s) and angular momentum [3] (N m s, about the ball's centre) of the moving arms, body at rest, ``base_link``."""
+        """Linear [3] (N s) and angular momentum [3] (N m s, about the ball's centre) of the moving arms, body at
+        rest, ``base_link``.
+        """
         self._arm[:] = arm_position
         rate = np.concatenate((np.zeros(6), arm_rate))
         matrix = np.array(pin.crba(self._model, self._data, self._q)[:6])
