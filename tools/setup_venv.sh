@@ -38,12 +38,14 @@ found=$("$python" -c 'import sys; print(sys.version_info[0], sys.version_info[1]
 read -r major minor base <<END
 $found
 END
+version=${found#*"
+"}
 if [ "$major" != 3 ] || [ "$minor" -lt 10 ] || [ "$minor" -gt $newest ]; then
     fail "'$python' is Python $major.$minor, but the $set set needs 3.10 to 3.$newest; name such a one: make PYTHON=python3.$newest"
 fi
 
 stamp() { # what is installed is told by these files, this place, this interpreter
-    { echo "$found" "$PWD" "$1" && cat setup.py setup.cfg pyproject.toml "constraints/$set.txt"; } | cksum
+    { echo "$version" "$PWD" "$1" && cat setup.py setup.cfg pyproject.toml "constraints/$set.txt"; } | cksum
 }
 is_ready() { # `test` holds all that `run` needs
     [ -x $venv/bin/python ] || return 1
@@ -75,16 +77,20 @@ PIP_USER=0 PIP_DISABLE_PIP_VERSION_CHECK=1 PIP_RETRIES=${PIP_RETRIES:-2}
 export PIP_USER PIP_DISABLE_PIP_VERSION_CHECK PIP_RETRIES
 
 log=$venv.log
-rm -f "$venv/set-up-run" "$venv/set-up-test"
+for have in run test; do # a stamp of other files must not come true again after a half-done install
+    is_ready $have || rm -f "$venv/set-up-$have"
+done
 made=$("$venv/bin/python" -c 'import sys; print(sys.version)' 2>/dev/null)
-if [ "$(printf '%s\n' "$found" | tail -n +2)" != "$made" ] || ! "$venv/bin/python" -m pip --version >/dev/null 2>&1; then
+if [ "$version" != "$made" ] || ! "$venv/bin/python" -m pip --version >/dev/null 2>&1; then
     "$base" -m venv --clear "$venv" >"$log" 2>&1 || fail "'$base -m venv $venv' failed: $(tail -n 1 "$log") (see $log)"
 fi
 
 echo "set-up: installing the $set set into $venv, about 1 GB; this takes a minute or two (see $log)"
 if ! "$venv/bin/python" -m pip install -c "constraints/$set.txt" -e ".[$extras]" >"$log" 2>&1; then
-    if grep -qiE 'NewConnectionError|ConnectTimeout|ReadTimeout|NameResolution|ProxyError|SSLError|Max retries|Connection (refused|reset|aborted|broken)|Network is unreachable|timed out' "$log"; then
-        fail "the package index can't be reached: check the network, or set PIP_INDEX_URL or HTTPS_PROXY, then call make again (see $log)"
+    lacking=$(sed -n 's/.*satisfies the requirement \([^ ]*\) .*(from versions: none).*/\1/p' "$log" | head -n 1)
+    if [ -n "$lacking" ] ||
+        grep -qiE 'ConnectionError|ConnectTimeout|ReadTimeout|NameResolution|ProxyError|SSLError|Max retries' "$log"; then
+        fail "the package index can't be reached${lacking:+ (or lacks $lacking)}: check the network, or set PIP_INDEX_URL or HTTPS_PROXY, then call make again (see $log)"
     fi
     fail "pip failed: $(grep -m 1 '^ERROR' "$log" || tail -n 1 "$log") (see $log)"
 fi
