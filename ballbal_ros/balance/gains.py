@@ -1,0 +1,191 @@
+"""From weights and noise figures to gains: one regulator for lean and ball, one for the heading."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from ballbal_ros.balance.discrete import SampledPlant, discrete_lqr, kalman_gain, sampled, sampled_noise
+from ballbal_ros.balance.linear_model import BALL, LinearModel, linear_model
+from ballbal_ros.balance.margins import Margins, loop_margins
+from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.balance.regulator import Regulator, steady_trim
+from ballbal_ros.errors import BallbalError
+from ballbal_ros.robot.arrays import Array, read_only
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.whole_body import Posture
+
+
+@attrs.frozen(eq=False)
+class Gains:
+    """What the loop runs with, at one posture.
+
+    ``station`` regulates x = [roll, pitch, roll_rate, pitch_rate, x, y, vx, vy] by [τ_x, τ_y] from [roll, pitch,
+    roll_rate, pitch_rate, x, y], lean counted from the equilibrium, with the moment about the contact as disturbance
+    [2]; ``heading`` regulates [heading, heading_rate] by τ_z from both, with the moment about z [1]. SI, rad.
+    """
+
+    parameters: BalanceParameters
+    model: LinearModel
+    station: Regulator
+    heading: Regulator
+
+
+@attrs.frozen
+class Pole:
+    """One closed-loop pole, or a pair: equivalent continuous ``frequency`` in rad/s, ``damping`` (1 for a real one)."""
+
+    frequency: float
+    damping: float
+
+
+@attrs.frozen
+class Requirement:
+    """One margin and what is asked of it; ``at_least`` is False where less is better. ``unit`` "-" for none."""
+
+    name: str
+    value: float
+    limit: float
+    unit: str
+    at_least: bool = True
+
+    @property
+    def ok(self) -> bool:
+        """Whether the margin is what it must be."""
+        return self.value >= self.limit if self.at_least else self.value <= self.limit
+
+
+def design(posture: Posture, description: RobotDescription, parameters: BalanceParameters) -> Gains:
+    """Gains for a posture; margins are measured apart, by :func:`margins`.
+
+    Raises :class:`BallbalError` in one line where weights and noise figures have no solution.
+    """
+    model = linear_model(posture, description)
+    return Gains(parameters, model, _station(model, parameters), _heading(model, parameters))
+
+
+def margins(gains: Gains, plant: SampledPlant | None = None) -> tuple[Margins, Margins]:
+    """Margins of (lean and ball, heading), each loop as sampled; ``plant`` is another than the one designed for."""
+    return loop_margins(gains.station, ("x", "y"), plant), loop_margins(gains.heading, ("z",))
+
+
+def checked_design(
+    posture: Posture, description: RobotDescription, parameters: BalanceParameters
+) -> tuple[Gains, tuple[Margins, Margins]]:
+    """Gains and margins; raises :class:`BallbalError` where a margin is below what ``margins.*`` asks for."""
+    gains = design(posture, description, parameters)
+    found = margins(gains)
+    for requirement in requirements(found, parameters):
+        if not requirement.ok:
+            least = "at least" if requirement.at_least else "at most"
+            unit = "" if requirement.unit == "-" else f" {requirement.unit}"
+            raise BallbalError(
+                "balance.yaml",
+                f"the weights leave {requirement.name} {requirement.value:.3g}{unit}",
+                f"it takes {least} {requirement.limit:g}{unit}: change weights.* or estimator.*, or margins.*",
+            )
+    return gains, found
+
+
+def requirements(found: tuple[Margins, Margins], parameters: BalanceParameters) -> list[Requirement]:
+    """Each measured margin beside what ``margins.*`` asks for."""
+    asked = parameters.margins
+    rows: list[Requirement] = []
+    for loop, which in zip(found, ("lean and ball", "heading"), strict=True):
+        for axis in loop.axes:
+            rows.append(Requirement(f"gain margin up, {axis.axis}", axis.gain_up, asked.gain_up, "-"))
+            rows.append(
+                Requirement(f"gain margin down, {axis.axis}", axis.gain_down, asked.gain_down, "-", at_least=False)
+            )
+            rows.append(Requirement(f"phase margin, {axis.axis}", axis.phase, asked.phase, "deg"))
+            rows.append(Requirement(f"delay margin, {axis.axis}", axis.delay, asked.delay, "s"))
+        rows.append(Requirement(f"disk margin, {which}", loop.disk, asked.disk, "-"))
+        rows.append(Requirement(f"delay it can bear, {which}", loop.delay_limit, asked.delay, "s"))
+    return rows
+
+
+def poles(regulator: Regulator) -> list[Pole]:
+    """Closed-loop poles, slowest first, pairs once; those of the delay, which die within a sample, left out."""
+    found = []
+    for z in np.linalg.eigvals(regulator.closed_loop()):
+        if abs(z) > 1e-3 and z.imag >= -1e-12:
+            s = np.log(complex(z)) / regulator.plant.period
+            found.append(Pole(float(abs(s)), float(-s.real / abs(s))))
+    return sorted(found, key=lambda pole: pole.frequency)
+
+
+def _bryson(*deviations: float) -> Array:
+    """diag(1 / deviation²), each deviation for both axes."""
+    return np.diag([1.0 / d**2 for d in deviations for _ in range(2)])
+
+
+def _station(model: LinearModel, parameters: BalanceParameters) -> Regulator:
+    weights, noise, loop = parameters.weights, parameters.estimator, parameters.loop
+    a, b, e, c = model.state_matrix, model.torque_matrix, model.moment_matrix, model.measurement_matrix
+    plant = sampled(a, b, e, c, loop.period, loop.delay)
+    q = _bryson(weights.lean, weights.lean_rate, weights.ball_position, weights.ball_velocity)
+    measured = station_measurement_noise(noise.lean_noise, noise.rate_noise, noise.drive_noise, model.ball_radius)
+    process = (b @ b.T) * noise.torque_noise**2 + (e @ e.T) * noise.moment_noise**2
+    return _regulator(
+        plant, (a, b, e), q, _bryson(weights.torque), (process, noise.moment_walk, measured), BALL, parameters.trim
+    )
+
+
+def _heading(model: LinearModel, parameters: BalanceParameters) -> Regulator:
+    weights, noise, loop = parameters.weights, parameters.estimator, parameters.loop
+    a, b, e = model.heading_matrices
+    plant = sampled(a, b, e, np.eye(2), loop.period, loop.delay)
+    q = np.diag([weights.heading**-2, weights.heading_rate**-2])
+    measured = np.diag([noise.heading_noise**2, noise.rate_noise**2])
+    process = (b @ b.T) * noise.yaw_torque_noise**2
+    return _regulator(
+        plant,
+        (a, b, e),
+        q,
+        np.array([[weights.heading_torque**-2]]),
+        (process, noise.yaw_moment_walk, measured),
+        slice(0, 1),
+        parameters.trim,
+    )
+
+
+def station_measurement_noise(lean: float, rate: float, drive: float, radius: float) -> Array:
+    """Covariance [6, 6] of [roll, pitch, roll_rate, pitch_rate, x, y].
+
+    The ball's position comes from the encoders, which see it relative to the body, and the lean: x = r (relative +
+    pitch), y = -r (relative + roll). So its error is that of the lean over again. Arguments: rad, rad/s, rad, m.
+    """
+    source = np.zeros((6, 6))
+    source[:4, :4] = np.diag([lean, lean, rate, rate])
+    source[4, 1], source[5, 0] = radius * lean, -radius * lean
+    source[4, 4] = source[5, 5] = radius * drive
+    return np.asarray(source @ source.T)
+
+
+def _regulator(
+    plant: SampledPlant,
+    matrices: tuple[Array, Array, Array],
+    q: Array,
+    r: Array,
+    noise: tuple[Array, float, Array],
+    held: slice,
+    trim: bool,
+) -> Regulator:
+    """Feedback with past torques, filter with a disturbance that walks, trim that holds the states ``held`` at zero."""
+    a, b, e = matrices
+    n, m, k = *b.shape, e.shape[1]
+    process, walk, measured = noise
+    past = plant.history * m
+    augmented_a, augmented_b = plant.augmented()
+    weight = np.zeros((n + past, n + past))
+    weight[:n, :n] = q
+    feedback = discrete_lqr(augmented_a, augmented_b, weight, r)
+    wandering, density = np.zeros((n + k, n + k)), np.zeros((n + k, n + k))
+    wandering[:n, :n], wandering[:n, n:] = a, e
+    density[:n, :n], density[n:, n:] = process, walk**2 * np.eye(k)
+    predict = np.eye(n + k)
+    predict[:n, :n], predict[:n, n:] = plant.transition, plant.disturbance
+    output = np.hstack((plant.output, np.zeros((len(plant.output), k))))
+    gain = kalman_gain(predict, output, sampled_noise(wandering, density, plant.period), measured)
+    state, torque = steady_trim(a, b, e, held) if trim else (np.zeros((n, k)), np.zeros((m, k)))
+    return Regulator(plant, read_only(feedback), read_only(gain), state, torque)
