@@ -1,4 +1,4 @@
-"""Finite differences on a uniform grid, as stencils: fourth order inside, second order next to the ends."""
+"""Finite differences on a uniform grid, as stencils: fourth order inside, exact for cubics next to the ends."""
 
 from __future__ import annotations
 
@@ -10,14 +10,15 @@ from ballbal_ros.robot.arrays import Array
 REACH = 2
 _FIRST = np.array([1.0, -8.0, 0.0, 8.0, -1.0]) / 12.0
 _SECOND = np.array([-1.0, 16.0, -30.0, 16.0, -1.0]) / 12.0
-_FIRST_EDGE = np.array([0.0, -0.5, 0.0, 0.5, 0.0])
+_FIRST_EDGE = np.array([0.0, -2.0, -3.0, 6.0, -1.0]) / 6.0
 _SECOND_EDGE = np.array([0.0, 1.0, -2.0, 1.0, 0.0])
 _ONE_SIDED = np.array([-25.0, 48.0, -36.0, 16.0, -3.0]) / 12.0
 
 
 @attrs.frozen(eq=False)
 class Differences:
-    """First and second time derivatives on N nodes a step h apart; ``first`` and ``second`` [N, 5] weigh nodes k-2 … k+2.
+    """First and second time derivatives on N nodes a step h apart; ``first`` and ``second`` [N, 5] weigh nodes k-2 …
+    k+2.
 
     The end nodes take no derivative here (their rows are zero): what holds there is a boundary condition.
     """
@@ -30,8 +31,8 @@ class Differences:
     def on(cls, nodes: int, step: float) -> Differences:
         """The stencils for this many nodes (at least 6) and this step, s."""
         first, second = np.tile(_FIRST, (nodes, 1)), np.tile(_SECOND, (nodes, 1))
-        for k in (1, nodes - 2):
-            first[k], second[k] = _FIRST_EDGE, _SECOND_EDGE
+        first[1], first[nodes - 2] = _FIRST_EDGE, -_FIRST_EDGE[::-1]
+        second[1] = second[nodes - 2] = _SECOND_EDGE
         for k in (0, nodes - 1):
             first[k] = second[k] = 0.0
         return cls(step, first / step, second / step**2)
@@ -49,6 +50,12 @@ class Differences:
     def rate(self, values: Array) -> Array:
         """First derivative at the inner nodes."""
         return self.apply(self.first, values)
+
+    def whole_rate(self, values: Array) -> Array:
+        """First derivative at all nodes."""
+        rate = self.rate(values)
+        rate[0], rate[-1] = self.start_rate(values), -self.start_rate(values[::-1])
+        return rate
 
     def acceleration(self, values: Array) -> Array:
         """Second derivative at the inner nodes."""

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 import attrs
 import numpy as np
 
-from ballbal_ros.motion.differences import Differences
+from ballbal_ros.errors import PlanError
 from ballbal_ros.motion.lean_plan import LeanPlan, Prediction, predicted_uses
 from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, equilibrium_lean, solve_lean
 from ballbal_ros.motion.parameters import CompensationParameters
@@ -26,7 +26,9 @@ _RELIEF_ROUNDS = 3
 
 @attrs.frozen(eq=False)
 class StartState:
-    """Where a plan begins: lean and its rate [2], rad; ball relative to the station and its rate [2], m, in the plan's axes."""
+    """Where a plan begins: lean and its rate [2], rad; ball relative to the station and its rate [2], m, in the
+    plan's axes.
+    """
 
     lean: Array
     lean_rate: Array
@@ -36,7 +38,9 @@ class StartState:
 
 @attrs.frozen(eq=False)
 class HandWrench:
-    """What the world is planned to exert on one hand: force and moment [N, 3] at times [N], ``base_footprint`` axes, held outside."""
+    """What the world is planned to exert on one hand: force and moment [N, 3] at times [N], ``base_footprint`` axes,
+    held outside.
+    """
 
     hand: str
     times: Array
@@ -46,7 +50,9 @@ class HandWrench:
 
 @attrs.frozen(eq=False)
 class BallMotion:
-    """A planned ball motion: [N, 3] (x, y in plan axes, m; heading, rad) with rates and accelerations at times [N], held outside."""
+    """A planned ball motion: [N, 3] (x, y in plan axes, m; heading, rad) with rates and accelerations at times [N],
+    held outside.
+    """
 
     times: Array
     position: Array
@@ -56,7 +62,8 @@ class BallMotion:
 
 @attrs.frozen(eq=False)
 class PlanRequest:
-    """What is to happen. ``arms`` is what the arms will really do (servo lag included), from ``lead_in`` s after the plan's start.
+    """What is to happen. ``arms`` is what the arms will really do (servo lag included), from ``lead_in`` s after the
+    plan's start.
 
     ``loads`` are changes (time from the plan's start, load); ``start`` None means at rest in equilibrium.
     """
@@ -70,7 +77,9 @@ class PlanRequest:
 
 
 def terms_along(body: WholeBody, request: PlanRequest, times: Array, step: float) -> UpperBodyTerms:
-    """The upper body's terms along a request [N]; a load that changes within a node's share of time is blended by time."""
+    """The upper body's terms along a request [N]; a load that changes within a node's share of time is blended by
+    time.
+    """
     position, rate, acceleration = request.arms.sample(times - request.lead_in)
     hands = tuple(w.hand for w in request.wrenches)
     terms = body.terms(position, rate, acceleration, hands)
@@ -95,7 +104,8 @@ def _arrays() -> list[attrs.Attribute[object]]:
 
 
 def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationParameters) -> LeanPlan:
-    """Plan the lean for a request; the plan's ``uses`` say what it needs against the limits (it is not refused here for them).
+    """Plan the lean for a request; the plan's ``uses`` say what it needs against the limits (it is not refused here
+    for them).
 
     Raises :class:`~ballbal_ros.errors.PlanError` where no bounded lean exists or no ball motion can begin it in time.
     """
@@ -108,29 +118,17 @@ def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationPar
     for wrench in request.wrenches:
         length = max(length, float(wrench.times[-1]) + settings.tail)
     nodes = int(np.ceil(length / settings.step - 1e-9)) + 1
-    times = np.arange(nodes) * settings.step
+    times: Array = settings.step * np.arange(nodes, dtype=float)
     terms = terms_along(body, request, times, settings.step)
     motion = _ball_motion(request.ball, times)
     first = _first_ball(request.start, times)
     turn = _turns(motion[0][:, 2] - motion[0][0, 2])
     force, moment = _wrenches(request.wrenches, times)
-    given = OutsideMotion(
-        apply2(turn, motion[2][:, :2] + first[2]), motion[1][:, 2], motion[2][:, 2], force, moment
-    )
-    problem = LeanProblem(
-        terms,
-        given,
-        Differences.on(nodes, settings.step),
-        description.parameters.ball.radius,
-        description.ball_apparent_mass,
-    )
+    given = OutsideMotion(apply(turn, motion[2][:, :2]), motion[1][:, 2], motion[2][:, 2], force, moment)
+    radius, apparent_mass = description.parameters.ball.radius, description.ball_apparent_mass
+    problem = LeanProblem.of(terms, given, settings.step, radius, apparent_mass).with_ball(turn, *first)
     solution, ball = _solve(problem, request, first, turn, _relief_limits(description, parameters, terms))
     return _plan(description, parameters, request, times, solution, ball, motion)
-
-
-def apply2(turn: Array, vectors: Array) -> Array:
-    """``turn`` [N, 2, 2] on vectors [N, 2]."""
-    return np.asarray((turn @ vectors[..., None])[..., 0])
 
 
 def _solve(
@@ -144,20 +142,21 @@ def _solve(
     ball = [array.copy() for array in first]
     window = max(request.lead_in + 1.0, 1.2)
     for _ in range(_RELIEF_ROUNDS):
-        at_start = problem.differences.start_rate(solution.lean) - start_rate
-        at_end = -problem.differences.start_rate(solution.lean[::-1])
+        at_start, at_end = solution.lean_rate[0] - start_rate, solution.lean_rate[-1]
         if max(np.abs(at_start).max(), np.abs(at_end).max()) < _SETTLED_RATE:
-            break
+            return (problem, solution), ball
         relief = ball_relief(problem, solution, turn, at_start, at_end, window, limits, ball[0])
-        for array, added in zip(ball, (relief.position, relief.rate, relief.acceleration)):
-            array += added
-        moved = problem.outside.ball_acceleration + apply2(turn, relief.acceleration)
-        problem = attrs.evolve(problem, outside=attrs.evolve(problem.outside, ball_acceleration=moved))
+        added = relief.position, relief.rate, relief.acceleration
+        for array, more in zip(ball, added, strict=True):
+            array += more
+        problem = problem.with_ball(turn, *added)
         solution = solve_lean(problem, start, end, solution.lean)
-    return (problem, solution), ball
+    raise PlanError("plan", "no ball motion is found that begins where the robot is", "give it more lead-in")
 
 
-def _relief_limits(description: RobotDescription, parameters: CompensationParameters, terms: UpperBodyTerms) -> ReliefLimits:
+def _relief_limits(
+    description: RobotDescription, parameters: CompensationParameters, terms: UpperBodyTerms
+) -> ReliefLimits:
     use, limits = parameters.acceptance, description.parameters.limits
     weight = (float(terms.mass.min()) + description.parameters.ball.mass) * GRAVITY
     return ReliefLimits(
@@ -179,7 +178,9 @@ def _ball_motion(ball: BallMotion | None, times: Array) -> list[Array]:
 
 
 def _first_ball(start: StartState | None, times: Array) -> list[Array]:
-    """The ball on its way from the start's place and rate back to the station, as a quintic over 1.2 s; at rest there without one."""
+    """The ball on its way from the start's place and rate back to the station, as a quintic over 1.2 s; at rest there
+    without one.
+    """
     out = [np.zeros((len(times), 2)) for _ in range(3)]
     if start is None or (not np.any(start.ball) and not np.any(start.ball_rate)):
         return out
@@ -218,20 +219,16 @@ def _plan(
     motion: list[Array],
 ) -> LeanPlan:
     problem, solution = solved
-    rows, outside = solution.rows, problem.outside
+    rows = solution.rows
     torque = rows.torque + _rotor_torque(description, problem, solution)
-    total = [given[:, :2] + added for given, added in zip(motion, ball)]
-    prediction = Prediction(torque, rows.force, outside.ball_acceleration, solution.lean, ball[0], total[1])
-    rate, acceleration = solution.lean_rate.copy(), solution.lean_acceleration.copy()
-    rate[0] = problem.differences.start_rate(solution.lean)
-    acceleration[0], acceleration[-1] = acceleration[1], 0.0
-    torque[0], torque[-1] = torque[1], torque[-2]
+    total = [given[:, :2] + added for given, added in zip(motion, ball, strict=True)]
+    prediction = Prediction(torque, rows.force, problem.ball_acceleration, solution.lean, ball[0], total[1])
     return LeanPlan(
         times=times,
         lead_in=request.lead_in,
         lean=solution.lean,
-        lean_rate=rate,
-        lean_acceleration=acceleration,
+        lean_rate=solution.lean_rate,
+        lean_acceleration=solution.lean_acceleration,
         ball=total[0],
         ball_rate=total[1],
         ball_acceleration=total[2],
@@ -244,12 +241,13 @@ def _plan(
 
 
 def _rotor_torque(description: RobotDescription, problem: LeanProblem, solution: LeanSolution) -> Array:
-    """Torque on the body [N, 3] that the drive must give besides, to turn its own rotors with the ball, ``base_footprint`` axes.
+    """Torque on the body [N, 3] that the drive must give besides, to turn its own rotors with the ball,
+    ``base_footprint`` axes.
 
     Rotors resist the relative acceleration of ball and body: τ_drive = τ - R J Rᵀ (ω'_ball - ω'_body).
     """
     rotation = rotation_lean(solution.lean)
-    a = problem.outside.ball_acceleration / problem.ball_radius
+    a = problem.ball_acceleration / problem.ball_radius
     ball = np.stack((-a[:, 1], a[:, 0], np.zeros(len(a))), axis=-1)
     pitch = solution.lean[:, 1]
     roll_acceleration, pitch_acceleration = solution.lean_acceleration.T

@@ -11,18 +11,44 @@ from ballbal_ros.declaration import parameter, section
 class PlannerParameters:
     """How the lean planner works."""
 
-    step: float = parameter("double", 0.01, unit="s", low=0.001, high=0.05, meaning="step of the planner's grid", runtime=True)
+    step: float = parameter(
+        "double", 0.01, unit="s", low=0.001, high=0.05, meaning="step of the planner's grid", runtime=True
+    )
     lead_in: float = parameter(
-        "double", 1.6, unit="s", low=0.0, high=5.0, meaning="time between the start of the lean and the start of the arms", runtime=True
+        "double",
+        1.6,
+        unit="s",
+        low=0.0,
+        high=5.0,
+        meaning="time between the start of the lean and the start of the arms",
+        runtime=True,
     )
     tail: float = parameter(
-        "double", 1.6, unit="s", low=0.5, high=5.0, meaning="time that the plan goes on after the arms have come to rest", runtime=True
+        "double",
+        1.6,
+        unit="s",
+        low=0.5,
+        high=5.0,
+        meaning="time that the plan goes on after the arms have come to rest",
+        runtime=True,
     )
     allowance: float = parameter(
-        "double", 0.3, unit="s", low=0.0, high=5.0, meaning="time from a request to the start of its lean, for planning and for the bus", runtime=True
+        "double",
+        0.3,
+        unit="s",
+        low=0.0,
+        high=5.0,
+        meaning="time from a request to the start of its lean, for planning and for the bus",
+        runtime=True,
     )
     stop_time: float = parameter(
-        "double", 0.8, unit="s", low=0.1, high=5.0, meaning="time in which a cancelled or stopped arm motion comes to rest", runtime=True
+        "double",
+        0.8,
+        unit="s",
+        low=0.1,
+        high=5.0,
+        meaning="time in which a cancelled or stopped arm motion comes to rest",
+        runtime=True,
     )
 
 
@@ -31,7 +57,13 @@ class AcceptanceParameters:
     """What a plan may use of what there is; beyond it the plan is refused."""
 
     torque_use: float = parameter(
-        "double", 0.8, unit="-", low=0.05, high=1.0, meaning="greatest share of limits.drive_torque and of every actuator's effort_limit", runtime=True
+        "double",
+        0.8,
+        unit="-",
+        low=0.05,
+        high=1.0,
+        meaning="greatest share of limits.drive_torque and of every actuator's effort_limit",
+        runtime=True,
     )
     friction_use: float = parameter(
         "double", 0.75, unit="-", low=0.05, high=1.0, meaning="greatest share of the floor's friction", runtime=True
@@ -40,7 +72,13 @@ class AcceptanceParameters:
         "double", 0.9, unit="-", low=0.05, high=1.0, meaning="greatest share of the floor's spin moment", runtime=True
     )
     ball_travel: float = parameter(
-        "double", 0.3, unit="m", low=0.0, high=10.0, meaning="greatest planned travel of the ball besides its own plan", runtime=True
+        "double",
+        0.3,
+        unit="m",
+        low=0.0,
+        high=10.0,
+        meaning="greatest planned travel of the ball besides its own plan",
+        runtime=True,
     )
 
 
@@ -57,7 +95,13 @@ class CompensationParameters:
         runtime=True,
     )
     answer_timeout: float = parameter(
-        "double", 2.0, unit="s", low=0.1, high=60.0, meaning="wall time to wait for the balance node's acknowledgement", runtime=True
+        "double",
+        2.0,
+        unit="s",
+        low=0.1,
+        high=60.0,
+        meaning="wall time to wait for the balance node's acknowledgement",
+        runtime=True,
     )
     planner: PlannerParameters = section(PlannerParameters)
     acceptance: AcceptanceParameters = section(AcceptanceParameters)

@@ -1,10 +1,11 @@
 """The ball motion of least excursion that lets a lean plan begin (and end) where the robot is.
 
-The bounded lean begins long before the arms move. With less lead-in, or from a state that is not at rest, its first rate is not the
-robot's. Then the ball has to move a little: among all ball motions within a window that carry the robot from its
-state onto the bounded lean, and bring the ball back, this finds the one with the least largest travel, within the drive's torque and
-the floor's friction. Everything is linear about the present solution, so the lean's answer to the ball comes from the
-planner's own Newton matrix. Small mismatches are met by the least-square acceleration, larger ones by linear programming (HiGHS).
+The bounded lean begins long before the arms move. With less lead-in, or from a state that is not at rest, its first
+rate is not the robot's. Then the ball has to move a little: among all ball motions within a window that carry the
+robot from its state onto the bounded lean, and bring the ball back, this finds the one with the least largest travel,
+within the drive's torque and the floor's friction. Everything is linear about the present solution, so the lean's
+answer to the ball comes from the planner's own Newton matrix. Small mismatches are met by least squares, larger ones by
+linear programming (HiGHS).
 """
 
 from __future__ import annotations
@@ -13,17 +14,24 @@ from typing import NamedTuple
 
 import attrs
 import numpy as np
+from numpy.typing import NDArray
 from scipy.interpolate import BSpline
 from scipy.optimize import linprog
-from scipy.sparse import csr_matrix
 
 from ballbal_ros.errors import PlanRefused
-from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, solve_bands
+from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, answer_to_ball, solve_bands
 from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.balance_rows import BalanceRows
 
 _KNOT = 0.04
+_FEW_PIECES, _MOST_PIECES = 8, 32
+_DEGREE = 5
 _END_WINDOW = 0.8
-_SMALL = 1e-3
+_SMALL = 3e-4
+# Least squares weigh an acceleration like the travel that goes with it at this rate, rad/s.
+_RATE = 8.0
+# What the linear program gives in travel, mm, to save the whole torque limit.
+_TORQUE_PRICE = 1.0
 
 
 class ReliefLimits(NamedTuple):
@@ -35,29 +43,46 @@ class ReliefLimits(NamedTuple):
 
 @attrs.frozen(eq=False)
 class BallBasis:
-    """Ball motions on the grid [N, m] for one axis, zero outside the windows: position, rate, acceleration."""
+    """Ball motions on the grid [N, m] for one axis, zero outside a window: position, rate, acceleration.
+
+    Quintic B-splines with a knot at every ``stride``-th node: the torque that they ask for is smooth.
+    """
 
     position: Array
     rate: Array
     acceleration: Array
+    stride: int
 
     @classmethod
-    def on(cls, times: Array, start_window: float, end_window: float) -> BallBasis:
-        """Cubic B-splines that begin at rest at 0 and end at rest, without acceleration, after the window; likewise before the end."""
-        parts = []
-        for low, high, drop_first, drop_last in (
-            (0.0, start_window, 2, 3),
-            (times[-1] - end_window, times[-1], 3, 3),
-        ):
-            pieces = int(round((high - low) / _KNOT))
-            inner = np.linspace(low, high, pieces + 1)
-            knots = np.concatenate(([low] * 3, inner, [high] * 3))
-            count = len(knots) - 4
-            spline = BSpline(knots, np.eye(count)[:, drop_first : count - drop_last], 3)
-            inside = ((times >= low) & (times <= high))[:, None]
-            clipped = np.clip(times, low, high)
-            parts.append([spline.derivative(k)(clipped) * inside if k else spline(clipped) * inside for k in range(3)])
-        return cls(*(np.concatenate([part[k] for part in parts], axis=1) for k in range(3)))
+    def on(cls, step: float, nodes: int, window: float, knot: float, *, at_end: bool = False) -> BallBasis:
+        """Splines with a knot about every ``knot`` s of a window, s, that begins at the first node or ends at the last.
+
+        They are at rest at both ends of it; ``step`` is that of the grid, s.
+        """
+        stride = max(4, min(round(knot / step), (nodes - 1) // 6))
+        pieces = max(6, min(round(window / (stride * step)), (nodes - 1) // stride))
+        # In grid steps from the window's first node.
+        inner = stride * np.arange(pieces + 1, dtype=float)
+        knots = np.concatenate((inner[[0] * _DEGREE], inner, inner[[-1] * _DEGREE]))
+        # Without the first and last three there is no position, rate or acceleration at the ends.
+        used = np.eye(pieces + _DEGREE)[:, 3:-3]
+        spline = BSpline(knots, used, _DEGREE)
+        first = nodes - 1 - stride * pieces if at_end else 0
+        values = np.zeros((3, nodes, used.shape[1]))
+        at = np.arange(stride * pieces + 1, dtype=float)
+        for order in range(3):
+            derivative = spline.derivative(order) if order else spline
+            values[order, first : first + len(at)] = derivative(at) / step**order
+        return cls(values[0], values[1], values[2], stride)
+
+    @property
+    def count(self) -> int:
+        """How many motions there are."""
+        return int(self.position.shape[1])
+
+    def moving(self) -> NDArray[np.int64]:
+        """The nodes of the window."""
+        return np.flatnonzero(np.any(self.position != 0.0, axis=1))
 
 
 @attrs.frozen(eq=False)
@@ -67,6 +92,60 @@ class BallRelief:
     position: Array
     rate: Array
     acceleration: Array
+
+
+@attrs.frozen(eq=False)
+class _Response:
+    """What a basis' motions along both axes do: lean and lean rate [N, 2, 2m]."""
+
+    basis: BallBasis
+    lean: Array
+    rate: Array
+
+    @classmethod
+    def of(cls, basis: BallBasis, problem: LeanProblem, solution: LeanSolution, turn: Array) -> _Response:
+        """Response about the present solution; ``turn`` [N, 2, 2] from plan axes into ``base_footprint`` axes."""
+        differences, rows = problem.differences, solution.rows
+        seen = rows.by_ball_acceleration @ _along_both_axes(turn, differences.acceleration(basis.position))
+        seen[[0, -1]] = 0.0
+        lean = solve_bands(solution.bands, -seen.reshape(len(turn) * 2, -1)).reshape(seen.shape)
+        unseen = _along_both_axes(turn, differences.whole_rate(basis.position) - basis.rate)
+        rate = differences.whole_rate(lean) - answer_to_ball(rows) @ unseen
+        return cls(basis, lean, rate)
+
+    @property
+    def end_rates(self) -> Array:
+        """The lean rates at start and end [4, 2m]."""
+        return np.concatenate((self.rate[0], self.rate[-1]))
+
+    def torque(self, problem: LeanProblem, rows: BalanceRows, turn: Array) -> Array:
+        """The drive torque [N, 2, 2m] about x and y."""
+        push = _along_both_axes(turn, self.basis.acceleration)
+        lean = np.concatenate((self.lean, self.rate), axis=1)
+        forced = rows.by_ball_acceleration @ push + rows.by_lean[:, :, :4] @ lean
+        acceleration = -np.linalg.solve(rows.by_lean[..., 4:6], forced)
+        torque = rows.wrench_by_lean[:, 3:5] @ np.concatenate((lean, acceleration), axis=1)
+        whole = problem.ball_radius * (problem.terms.mass + problem.ball_apparent_mass)
+        lever = rows.by_ball_acceleration[:, 1, 0] - whole
+        torque[:, 0] -= lever[:, None] * push[:, 1]
+        torque[:, 1] += lever[:, None] * push[:, 0]
+        return np.asarray(torque)
+
+    def least_squares(self, wanted: Array, rows: slice) -> Array:
+        """The weights [2m] of least travel and acceleration, in the mean, that give these lean rates."""
+        measure = np.concatenate((self.basis.acceleration / _RATE**2, self.basis.position))
+        root = np.kron(np.eye(2), np.linalg.cholesky(measure.T @ measure).T)
+        scaled = np.linalg.solve(root.T, self.end_rates[rows].T).T
+        best, *_ = np.linalg.lstsq(scaled, wanted, rcond=None)
+        return np.asarray(np.linalg.solve(root, best))
+
+    def motion(self, weights: Array) -> BallRelief:
+        """The ball motion of these weights [2m]."""
+        x, y = weights.reshape(2, -1)
+        basis = self.basis
+        return BallRelief(
+            *(np.stack((part @ x, part @ y), axis=-1) for part in (basis.position, basis.rate, basis.acceleration))
+        )
 
 
 def ball_relief(
@@ -81,91 +160,74 @@ def ball_relief(
 ) -> BallRelief:
     """The ball motion that takes these lean-rate mismatches [2] (rad/s) at the plan's start and end away.
 
-    ``turn`` [N, 2, 2] turns plan axes into ``base_footprint`` axes; ``present`` [N, 2] is the ball motion that the solution
-    already has beyond the given one, m. Raises :class:`PlanRefused` where no ball motion within the limits does it.
+    ``turn`` [N, 2, 2] turns plan axes into ``base_footprint`` axes; ``present`` [N, 2] is the ball motion that the
+    solution already has beyond the given one, m. Raises :class:`PlanRefused` where no ball motion within the limits
+    does it.
     """
-    step = problem.differences.step
-    times = np.arange(len(problem.terms)) * step
-    start_window = min(start_window, float(times[-1]))
-    basis = BallBasis.on(times, start_window, min(_END_WINDOW, float(times[-1])))
-    count = basis.position.shape[1]
-    pushed = np.zeros((len(times), 2, 2 * count))
-    pushed[:, 0, :count] = pushed[:, 1, count:] = basis.acceleration
-    in_footprint = turn @ pushed
-    rows = solution.rows.by_ball_acceleration @ in_footprint
-    rows[[0, -1]] = 0.0
-    answer = solve_bands(solution.bands, -rows.reshape(-1, 2 * count)).reshape(-1, 2, 2 * count)
-    rate_map = np.concatenate(
-        (problem.differences.start_rate(answer), -problem.differences.start_rate(answer[::-1])), axis=0
-    )
-    wanted = -np.concatenate((mismatch_start, mismatch_end))
-    weights, *_ = np.linalg.lstsq(rate_map, wanted, rcond=None)
-    if np.abs(basis.position @ weights.reshape(2, -1).T).max() > _SMALL:
-        moving = np.flatnonzero(np.any(basis.acceleration != 0.0, axis=1))
-        moving = moving[(moving > 0) & (moving < len(times) - 1)]
-        torque, grip = _demands(problem, solution, answer, in_footprint, moving)
-        weights = _least_travel(basis, present, rate_map, wanted, torque, grip, limits, moving)
-    x, y = weights[:count], weights[count:]
-    return BallRelief(*(np.stack((m @ x, m @ y), axis=-1) for m in (basis.position, basis.rate, basis.acceleration)))
+    step, nodes = problem.differences.step, len(problem.terms)
+
+    def response(window: float, knot: float, at_end: bool) -> _Response:
+        return _Response.of(BallBasis.on(step, nodes, window, knot, at_end=at_end), problem, solution, turn)
+
+    first = response(start_window, start_window / _FEW_PIECES, at_end=False)
+    weights = first.least_squares(-mismatch_start, slice(0, 2))
+    begin = first.motion(weights)
+    if np.hypot(*begin.position.T).max() > _SMALL:
+        first = response(start_window, max(_KNOT, start_window / _MOST_PIECES), at_end=False)
+        bound = min(limits.torque, problem.ball_radius * limits.grip)
+        torque = first.torque(problem, solution.rows, turn) / bound, solution.rows.torque[:, :2] / bound
+        weights = _least_travel(first, present, -mismatch_start, torque)
+        begin = first.motion(weights)
+    last = response(_END_WINDOW, _END_WINDOW / _FEW_PIECES, at_end=True)
+    end = last.motion(last.least_squares(-mismatch_end - first.end_rates[2:] @ weights, slice(2, 4)))
+    return BallRelief(begin.position + end.position, begin.rate + end.rate, begin.acceleration + end.acceleration)
 
 
-def _demands(
-    problem: LeanProblem, solution: LeanSolution, answer: Array, push: Array, used: Array
-) -> tuple[tuple[Array, Array], tuple[Array, Array]]:
-    """Drive torque about x, y, and grip on the floor along x, y, at the used nodes: present values [K, 2] and maps [K, 2, m]."""
-    rows, differences = solution.rows, problem.differences
-    stacked = np.concatenate((answer, differences.rate(answer), differences.acceleration(answer)), axis=1)[used]
-    torque = rows.wrench_by_lean[used, 3:5] @ stacked
-    lever = problem.terms.moment[used, 2]
-    torque[:, 0] -= lever[:, None] * push[used, 1]
-    torque[:, 1] += lever[:, None] * push[used, 0]
-    r = problem.ball_radius
-    now = rows.torque[used, :2]
-    grip_now = np.stack((-now[:, 1] / r, now[:, 0] / r), axis=-1)
-    grip = np.stack((-torque[:, 1] / r, torque[:, 0] / r), axis=1)
-    return (now, torque), (grip_now, grip)
+def _along_both_axes(turn: Array, motion: Array) -> Array:
+    """One-axis motions [N, m] as motions [N, 2, 2m] along both plan axes, turned into ``base_footprint`` axes."""
+    return np.concatenate((turn[:, :, :1] * motion[:, None], turn[:, :, 1:] * motion[:, None]), axis=2)
 
 
-def _least_travel(
-    basis: BallBasis,
-    present: Array,
-    rate_map: Array,
-    wanted: Array,
-    torque: tuple[Array, Array],
-    grip: tuple[Array, Array],
-    limits: ReliefLimits,
-    used: Array,
-) -> Array:
-    """The weights [m] of least largest travel, by linear programming; a little of the drive's effort is in the cost too.
+def _least_travel(response: _Response, present: Array, wanted: Array, torque: tuple[Array, Array]) -> Array:
+    """The weights [2m] of least largest travel with these lean rates [2] at the start, by linear programming.
 
-    In mm, mrad/s and shares of the limits, so that the program is well scaled.
+    ``torque``: shares of its bound that the motions [N, 2, 2m] and the present solution [N, 2] take (what the ball
+    gives to the floor is the same, by its radius). It stays within the bound, and a little of it is in the cost too.
+    In mm, mrad/s and shares, so that the program is well scaled.
     """
-    count = basis.position.shape[1]
-    m, ones, none = 2 * count, np.ones((len(used), 1)), np.zeros((len(used), 1))
+    basis = response.basis
+    moving = basis.moving()
+    # The travel is smoother than the torque.
+    travelled, driven = moving[:: basis.stride // 2], moving
+    count = basis.count
     left: list[Array] = []
     right: list[Array] = []
     for axis in range(2):
-        travel = np.zeros((len(used), m))
-        travel[:, axis * count : (axis + 1) * count] = basis.position[used]
-        share = [(1e-3 * response[:, axis] / limit, now[:, axis] / limit) for (now, response), limit in zip((torque, grip), limits)]
-        bounds = [(travel, 1e3 * present[used, axis], axis)] + [(each, at, 2 + axis) for each, at in share]
-        for response, at, bound in bounds:
+        travel = np.zeros((len(travelled), 2 * count))
+        travel[:, axis * count : (axis + 1) * count] = basis.position[travelled]
+        share = 1e-3 * torque[0][driven, axis]
+        for rows, now, slack in (
+            (travel, 1e3 * present[travelled, axis], axis),
+            (share, torque[1][driven, axis], 2 + axis),
+        ):
+            slacks = np.zeros((len(rows), 4))
+            slacks[:, slack] = -1.0
             for sign in (1.0, -1.0):
-                slack = [none] * 4
-                slack[bound] = -ones
-                left.append(np.hstack((sign * response, *slack)))
-                right.append(-sign * at)
+                left.append(np.hstack((sign * rows, slacks)))
+                right.append(-sign * now)
     result = linprog(
-        np.concatenate((np.zeros(m), [1.0, 1.0, 0.05, 0.05])),
-        A_ub=csr_matrix(np.vstack(left)),
+        np.concatenate((np.zeros(2 * count), [1.0, 1.0, _TORQUE_PRICE, _TORQUE_PRICE])),
+        A_ub=np.vstack(left),
         b_ub=np.concatenate(right),
-        A_eq=np.hstack((rate_map, np.zeros((4, 4)))),
+        A_eq=np.hstack((response.rate[0], np.zeros((2, 4)))),
         b_eq=1e3 * wanted,
-        bounds=[(None, None)] * m + [(0.0, None)] * 2 + [(0.0, 1.0)] * 2,
+        bounds=[(None, None)] * (2 * count) + [(0.0, None)] * 2 + [(0.0, 1.0)] * 2,
         method="highs",
     )
-    if result.status != 0:
+    if result.status != 0 or result.x is None:
         raise PlanRefused(
-            "plan", "no ball motion within the drive's torque and the floor's friction lets it begin this soon", "give it more lead-in"
+            "plan",
+            "no ball motion within the drive's torque and the floor's friction lets it begin this soon",
+            "give it more lead-in",
         )
-    return np.asarray(1e-3 * result.x[:m])
+    return np.asarray(1e-3 * result.x[: 2 * count])

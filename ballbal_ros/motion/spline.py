@@ -100,8 +100,8 @@ def path_through_waypoints(
             acceleration[k] = value
     if not (np.all(np.isfinite(rate)) and np.all(np.isfinite(acceleration))):
         raise PlanError("plan", "a rate or acceleration is not finite", "give finite numbers, or leave them out")
-    if np.any(rate[-1]) or np.any(acceleration[-1]):
-        raise PlanError("plan", "its last point is still moving", "end at rest: velocity and acceleration 0")
+    if np.any(rate[-1]):
+        raise PlanError("plan", "its last point is still moving", "end at rest: velocity 0")
     return ArmPath.through(knots, points, rate, acceleration)
 
 
