@@ -9,8 +9,8 @@ from pathlib import Path
 
 import pytest
 
-# An interpreter that plays a machine's Python: it answers what set-up asks, makes a folder where an environment is asked
-# for, and writes down each call of pip instead of installing.
+# An interpreter that plays a machine's Python: it answers what set-up asks, makes a folder where an environment is
+# asked for, and writes down each call of pip instead of installing.
 STAND_IN = """#!/bin/sh
 here=$(cd "$(dirname "$0")" && pwd)
 case "$*" in
@@ -20,7 +20,8 @@ case "$*" in
     *"-m venv"*) mkdir -p "$4/bin" && cp "{folder}/python3" "$4/bin/python" && echo venv >> {folder}/calls ;;
     *"-m pip --version"*) echo "pip 24" ;;
     *"-m pip install"*)
-        echo "pip $* user=$PIP_USER target=${{PIP_TARGET-none}}" >> {folder}/calls; echo "{pip_says}"; exit {pip_fails} ;;
+        echo "pip $* user=$PIP_USER target=${{PIP_TARGET-none}}" >> {folder}/calls
+        echo "{pip_says}"; exit {pip_fails} ;;
     *) echo "not expected: $*" >&2; exit 99 ;;
 esac
 """
