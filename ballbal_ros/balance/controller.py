@@ -1,0 +1,116 @@
+"""The regulators of lean, ball and heading as one tick: three small matrix products."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+from scipy.linalg import block_diag
+
+from ballbal_ros.balance.gains import Gains
+from ballbal_ros.balance.regulator import Regulator
+from ballbal_ros.robot.arrays import Array
+
+STATES = 10
+MEASURED = 8
+INPUTS = 3
+MOMENTS = 3
+
+
+@attrs.frozen(eq=False)
+class ControllerMatrices:
+    """One tick as matrices: estimate += ``correct`` (measured - ``output`` prior); torque = ``act`` [estimate; past torques];
+    prior = ``predict`` [estimate; torque; past torques]. ``history``: how many past torques still act."""
+
+    correct: Array
+    output: Array
+    act: Array
+    predict: Array
+    history: int
+
+
+def controller_matrices(gains: Gains) -> ControllerMatrices:
+    """Both regulators of a design as one; see :mod:`ballbal_ros.balance.regulator` for the equations."""
+    pair = (gains.station, gains.heading)
+    history = gains.station.plant.history
+    known = STATES + MOMENTS
+    correct = np.zeros((known, MEASURED))
+    correct[:STATES] = block_diag(*(r.filter_gain[: r.sizes[0]] for r in pair))
+    correct[STATES:] = block_diag(*(r.filter_gain[r.sizes[0] :] for r in pair))
+    output = np.hstack((block_diag(*(r.plant.output for r in pair)), np.zeros((MEASURED, MOMENTS))))
+    feedback = block_diag(*(r.feedback[:, : r.sizes[0]] for r in pair))
+    past = [block_diag(*(_past(r, j) for r in pair)) for j in range(history)]
+    trim_state, trim_input = (block_diag(*m) for m in zip(*((r.trim_state, r.trim_input) for r in pair)))
+    on_moment = trim_input + feedback @ trim_state + sum(block @ trim_input for block in past)
+    predict = np.zeros((known, known + INPUTS * (history + 1)))
+    predict[:STATES, :STATES] = block_diag(*(r.plant.transition for r in pair))
+    predict[:STATES, STATES:known] = block_diag(*(r.plant.disturbance for r in pair))
+    predict[STATES:, STATES:known] = np.eye(MOMENTS)
+    for j in range(history + 1):
+        columns = slice(known + j * INPUTS, known + (j + 1) * INPUTS)
+        predict[:STATES, columns] = block_diag(*(r.plant.inputs[j] for r in pair))
+    act = np.hstack((-feedback, on_moment, *(-block for block in past)))
+    return ControllerMatrices(correct, output, act, predict, history)
+
+
+class Controller:
+    """Kalman filter and feedback on *deviations* from a reference.
+
+    Deviations: state [roll, pitch, roll rate, pitch rate, x, y, vx, vy, heading, heading rate]; measured [roll, pitch, roll rate,
+    pitch rate, x, y, heading, heading rate]; torque [x, y, z] on the body; outside moment [roll, pitch, yaw]. SI, rad,
+    ``base_footprint`` axes. As the reference carries the planned motion, the linear model sees small numbers only.
+    """
+
+    def __init__(self, matrices: ControllerMatrices) -> None:
+        known, past = STATES + MOMENTS, INPUTS * matrices.history
+        self.prior = np.zeros(known)
+        self.estimate = np.zeros(known)
+        self._past = np.zeros(past)
+        self._stack = np.zeros(known + INPUTS + past)
+        self._seen = np.zeros(known + past)
+        self.change(matrices)
+
+    def change(self, matrices: ControllerMatrices) -> None:
+        """Take other matrices of the same history; the estimate stays."""
+        self._correct, self._output = matrices.correct, matrices.output
+        self._act, self._predict = matrices.act, matrices.predict
+
+    def reset(self) -> None:
+        """Forget everything: at the reference, no moment, no torque before."""
+        self.prior[:] = 0.0
+        self.estimate[:] = 0.0
+        self._past[:] = 0.0
+
+    def forget_moment(self) -> None:
+        """Take the outside moment for zero (while a stand holds the robot)."""
+        self.prior[STATES:] = 0.0
+
+    def correct(self, measured: Array | None) -> None:
+        """Take the measured deviations [8] in; None where there are none, and the model's prediction stands."""
+        if measured is None:
+            self.estimate[:] = self.prior
+        else:
+            np.dot(self._correct, measured - self._output @ self.prior, out=self.estimate)
+            self.estimate += self.prior
+
+    def torque(self) -> Array:
+        """Torque [3] to add to the reference's, from the present estimate."""
+        known = STATES + MOMENTS
+        self._seen[:known] = self.estimate
+        self._seen[known:] = self._past
+        return np.asarray(self._act @ self._seen)
+
+    def predict(self, torque: Array) -> None:
+        """Go on to the next tick, with the torque [3] beyond the reference's that was really commanded."""
+        known = STATES + MOMENTS
+        self._stack[:known] = self.estimate
+        self._stack[known : known + INPUTS] = torque
+        self._stack[known + INPUTS :] = self._past
+        np.dot(self._predict, self._stack, out=self.prior)
+        if len(self._past):
+            self._past[INPUTS:] = self._past[:-INPUTS].copy()
+            self._past[:INPUTS] = torque
+
+
+def _past(regulator: Regulator, j: int) -> Array:
+    n, m, _ = regulator.sizes
+    return regulator.feedback[:, n + j * m : n + (j + 1) * m]

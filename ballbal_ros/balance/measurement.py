@@ -1,0 +1,35 @@
+"""What one tick of the loop measures."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from ballbal_ros.robot.arrays import Array
+
+
+@attrs.define(eq=False)
+class Measurement:
+    """One tick's input; made once and filled anew each tick, as the loop is fast.
+
+    ``stamp`` in s; ``imu_quat_xyzw`` the IMU's orientation in ``odom`` or None; ``imu_rate`` [3] rad/s and ``imu_acceleration``
+    [3] m/s² in IMU axes (REP-145: at rest with z up it reads +g) or None; ``drive_angle`` [n] rad, relative to the body;
+    ``arm_position`` [joints].
+    """
+
+    stamp: float
+    imu_quat_xyzw: tuple[float, float, float, float] | None
+    imu_rate: Array
+    imu_acceleration: Array | None
+    drive_angle: Array
+    arm_position: Array
+
+    @property
+    def finite(self) -> bool:
+        """Whether every number in it is finite."""
+        total = self.stamp + self.imu_rate.sum() + self.drive_angle.sum() + self.arm_position.sum()
+        if self.imu_quat_xyzw is not None:
+            total += sum(self.imu_quat_xyzw)
+        if self.imu_acceleration is not None:
+            total += self.imu_acceleration.sum()
+        return bool(np.isfinite(total))

@@ -1,0 +1,172 @@
+"""A rehearsal: a story run in-process through the very same planner, estimator and loop as the nodes, against the simulated robot."""
+
+from __future__ import annotations
+
+import math
+import time
+
+import attrs
+import numpy as np
+
+from ballbal_ros.balance.guard import BALANCING
+from ballbal_ros.balance.loop import BalanceLoop
+from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
+from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.spline import FollowedPath
+from ballbal_ros.motion.story import Story
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.whole_body import WholeBody
+from ballbal_ros.simulation.parameters import SimulationParameters
+from ballbal_ros.simulation.robot import SimulatedRobot
+from ballbal_ros.simulation.run_result import RunResult
+from ballbal_ros.simulation.timeline import RUN_START, Timeline
+from ballbal_ros.simulation.truth import Truth
+
+
+@attrs.frozen(kw_only=True)
+class RobotFiles:
+    """The four files of a robot's folder, read and checked."""
+
+    description: RobotDescription
+    balance: BalanceParameters
+    compensation: CompensationParameters
+    simulation: SimulationParameters
+
+
+@attrs.frozen(eq=False)
+class Trace:
+    """What a run looked like, a row every tick from the run's start: time (s), true ball x, y and heading-frame lean, torque, arm positions."""
+
+    time: Array
+    ball: Array
+    lean: Array
+    torque: Array
+    arms: Array
+    friction: Array
+
+
+def plan_story(files: RobotFiles, story: Story, timeline: Timeline) -> LeanPlan:
+    """The lean plan for a story, servo lag and announced loads included; refused where it goes beyond the limits."""
+    arm = files.description.parameters.arm
+    body = WholeBody(files.description, story.start_loads)
+    lead_in = timeline.lead_in
+    ball = story.ball
+    if ball is not None:
+        ball = attrs.evolve(ball, times=ball.times + lead_in)
+    request = PlanRequest(
+        arms=FollowedPath.of(story.arms, arm.servo, arm.servo_bandwidth),
+        lead_in=lead_in,
+        loads=[(when + lead_in, load) for when, load in story.announced],
+        ball=ball,
+    )
+    plan = plan_lean(body, request, files.compensation)
+    plan.refuse_beyond_limits(story.name)
+    return plan
+
+
+class Rehearsal:
+    """One run of a story. ``kind`` is one of :data:`~ballbal_ros.simulation.run_result.KINDS`; ``plan`` is needed for ``planned``."""
+
+    def __init__(
+        self,
+        files: RobotFiles,
+        story: Story,
+        kind: str,
+        timeline: Timeline,
+        plan: LeanPlan | None = None,
+        seed: int = 0,
+        truth: Truth | None = None,
+    ) -> None:
+        self.kind, self.seed, self.timeline, self.story = kind, seed, timeline, story
+        self.robot = SimulatedRobot(files.description, files.simulation, story.posture, story.start_loads, seed, truth)
+        way = kind if kind in ("quasi_static", "none") else "planned"
+        self.loop = BalanceLoop(
+            files.description, attrs.evolve(files.balance, compensation=way), story.posture, story.start_loads
+        )
+        self.loop.supported = True
+        self._plan = plan if kind == "planned" else None
+        self._meant: Array | None = None
+        if self._plan is not None:
+            self.loop.add_plan(timeline.lean, self._plan)
+            self._meant = self._plan.table(self.loop.period)[:, 4:6] if story.ball is not None else None
+        self._truly: list[tuple[float, Load]] = []
+        if kind != "still":
+            self.robot.command_arms(story.arms, timeline.arms)
+            self._truly = [(c.time + timeline.story, c.load) for c in story.load_changes]
+            for change in story.load_changes:
+                if change.announced:
+                    self.loop.set_load(change.load, change.time + timeline.story)
+        self._pushes = [] if kind == "still" else sorted(story.pushes, key=lambda push: push.time)
+        self._pushing: float | None = None
+
+    def _happen(self, now: float) -> None:
+        """Loads and pushes whose time has come."""
+        while self._truly and self._truly[0][0] <= now + 1e-9:
+            self.robot.set_load(self._truly.pop(0)[1])
+        if self._pushing is not None and now >= self._pushing - 1e-9:
+            self.robot.release_push()
+            self._pushing = None
+        while self._pushes and self._pushes[0].time + self.timeline.story <= now + 1e-9:
+            push = self._pushes.pop(0)
+            self.robot.push(push.link, push.at, push.force)
+            self._pushing = push.time + push.during + self.timeline.story
+
+    def run(self, trace: bool = False) -> tuple[RunResult, Trace | None]:
+        """Run to the end, or until it falls; with ``trace`` keep what it looked like."""
+        robot, loop = self.robot, self.loop
+        ticks = int(round(self.timeline.end / loop.period))
+        first = int(round(RUN_START / loop.period))
+        states = np.zeros((max(ticks - first, 1), 6))
+        rows: list[tuple[Array, ...]] = []
+        began = time.perf_counter()
+        count = 0
+        for tick in range(ticks):
+            self._happen(robot.time)
+            effort = loop.tick(robot.measurement())
+            if robot.support and loop.guard.state == BALANCING:
+                robot.support = loop.supported = False
+            if tick >= first:
+                roll, pitch = loop.lean
+                x, y, _ = robot.ball_position.tolist()
+                states[count] = x, y, roll, pitch, math.hypot(*loop.torque[:2].tolist()), robot.friction_use
+                count += 1
+                if trace:
+                    rows.append((np.array(robot.lean), loop.torque.copy(), robot.arm_position))
+            robot.step(effort)
+            if robot.fell:
+                break
+        elapsed = time.perf_counter() - began
+        result = self._result(states[:count], robot.time / max(elapsed, 1e-9))
+        return result, self._trace(states[:count], rows) if trace else None
+
+    def _result(self, states: Array, real_time_factor: float) -> RunResult:
+        if not len(states):
+            states = np.full((1, 6), np.nan)
+        away = states[:, :2] - states[0, :2]
+        if self._meant is not None:
+            begin = int(round((self.timeline.lean - RUN_START) / self.loop.period))
+            index = np.clip(np.arange(len(away)) - begin, 0, len(self._meant) - 1)
+            away = away - self._meant[index]
+        travel = 1e3 * np.hypot(*away.T)
+        return RunResult(
+            compensation=self.kind,
+            seed=self.seed,
+            fell=self.robot.fell,
+            ball_travel_peak_mm=float(travel.max()),
+            ball_travel_end_mm=float(travel[-1]),
+            lean_peak_deg=float(np.degrees(np.hypot(states[:, 2], states[:, 3]).max())),
+            drive_torque_peak_nm=float(states[:, 4].max()),
+            friction_use_peak=float(states[:, 5].max()),
+            duration_s=float(self.robot.time),
+            real_time_factor=float(real_time_factor),
+        )
+
+    def _trace(self, states: Array, rows: list[tuple[Array, ...]]) -> Trace:
+        lean, torque, arms = (np.array(column) for column in zip(*rows))
+        return Trace(
+            RUN_START + self.loop.period * np.arange(len(states)), states[:, :2], lean, torque, arms, states[:, 5]
+        )
