@@ -62,6 +62,14 @@ class Reference:
         self._tables = [entry for entry in self._tables if entry[0] < stamp - 1e-9]
         self._tables.append((stamp, plan.table(self._period, self._ahead)))
 
+    def lean_at(self, stamp: float) -> tuple[float, float]:
+        """(roll, pitch) that is planned for a time to come, s; the present one where no plan reaches it, rad."""
+        for start, table in reversed(self._tables):
+            if start <= stamp + 1e-9:
+                row = table[min(int((stamp - start) / self._period + 0.5), len(table) - 1)]
+                return float(row[0]), float(row[1])
+        return float(self.row[0]), float(self.row[1])
+
     def cancel_plans(self, arm_position: Array) -> None:
         """Forget all plans; the lean goes on from where it is, without a jump."""
         if self._tables:
