@@ -20,6 +20,7 @@ from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
+_FRICTION_RATE = 0.05
 _SETTLED_RATE = 1e-5
 _RELIEF_ROUNDS = 3
 
@@ -220,8 +221,9 @@ def _plan(
 ) -> LeanPlan:
     problem, solution = solved
     rows = solution.rows
-    torque = rows.torque + _rotor_torque(description, problem, solution)
     total = [given[:, :2] + added for given, added in zip(motion, ball, strict=True)]
+    ball_rate = apply(_turns(motion[0][:, 2] - motion[0][0, 2]), total[1])
+    torque = rows.torque + _drive_torque(description, problem, solution, ball_rate)
     prediction = Prediction(torque, rows.force, problem.ball_acceleration, solution.lean, ball[0], total[1])
     return LeanPlan(
         times=times,
@@ -240,18 +242,26 @@ def _plan(
     )
 
 
-def _rotor_torque(description: RobotDescription, problem: LeanProblem, solution: LeanSolution) -> Array:
-    """Torque on the body [N, 3] that the drive must give besides, to turn its own rotors with the ball,
-    ``base_footprint`` axes.
+def _drive_torque(
+    description: RobotDescription, problem: LeanProblem, solution: LeanSolution, ball_rate: Array
+) -> Array:
+    """Torque on the body [N, 3] that the drive must give besides, for its own rotors and friction, ``base_footprint``
+    axes; ``ball_rate`` [N, 2], m/s, likewise.
 
-    Rotors resist the relative acceleration of ball and body: τ_drive = τ - R J Rᵀ (ω'_ball - ω'_body).
+    Rotors resist the relative acceleration of ball and body, τ_drive = τ - R J Rᵀ (ω'_ball - ω'_body); dry friction
+    resists the relative rate of each actuator, smoothly about zero.
     """
-    rotation = rotation_lean(solution.lean)
-    a = problem.ball_acceleration / problem.ball_radius
-    ball = np.stack((-a[:, 1], a[:, 0], np.zeros(len(a))), axis=-1)
-    pitch = solution.lean[:, 1]
-    roll_acceleration, pitch_acceleration = solution.lean_acceleration.T
-    turning = problem.outside.heading_acceleration - roll_acceleration * np.sin(pitch)
-    body = np.stack((roll_acceleration * np.cos(pitch), pitch_acceleration, turning), axis=-1)
-    inertia = rotation @ description.drive.reflected_inertia @ rotation.transpose(0, 2, 1)
-    return -apply(inertia, ball - body)
+    rotation, pitch = rotation_lean(solution.lean), solution.lean[:, 1]
+    back = rotation.transpose(0, 2, 1)
+
+    def relative(ball: Array, lean: Array, heading: Array) -> Array:
+        """The ball's turning less the body's [N, 3], ``base_link`` axes, from horizontal motion, lean and heading."""
+        x, y = ball.T / problem.ball_radius
+        roll, tilt = lean.T
+        return apply(back, np.stack((-y - roll * np.cos(pitch), x - tilt, -(heading - roll * np.sin(pitch))), axis=-1))
+
+    outside, drive = problem.outside, description.drive
+    turning = relative(ball_rate, solution.lean_rate, outside.heading_rate)
+    speeding = relative(problem.ball_acceleration, solution.lean_acceleration, outside.heading_acceleration)
+    friction = drive.stiction * np.tanh(turning @ drive.rate_map.T / _FRICTION_RATE)
+    return apply(rotation, friction @ drive.torque_map.T - speeding @ drive.reflected_inertia.T)
