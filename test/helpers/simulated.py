@@ -9,21 +9,26 @@ from typing import Any
 import attrs
 import mujoco
 import numpy as np
-from helpers.robots import CONFIG, reach, shelver
 
 from ballbal_ros.declaration import build, flatten, load
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw, quat_xyzw
+from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.truth import Truth
 from ballbal_ros.simulation.world import World
+from helpers.robots import CONFIG, reach, shelver
 
 NO_EFFORT = np.zeros(3)
 NO_LOSS = {"floor.rolling_resistance": 0.0, "floor.torsion": 0.0}
 NO_NOISE = {
-    "imu.gyro_noise": 0.0, "imu.gyro_walk": 0.0, "imu.gyro_bias": 0.0, "imu.accelerometer_noise": 0.0, "imu.attitude_noise": 0.0
+    "imu.gyro_noise": 0.0,
+    "imu.gyro_walk": 0.0,
+    "imu.gyro_bias": 0.0,
+    "imu.accelerometer_noise": 0.0,
+    "imu.attitude_noise": 0.0,
 }
 
 
@@ -43,14 +48,15 @@ def robot(
     loads: Sequence[Load] | None = None,
     seed: int = 0,
     truth: Truth | None = None,
+    description: RobotDescription | None = None,
 ) -> SimulatedRobot:
     """The simulated demo robot; posture and loads are those of `reach` unless others are given."""
     first = reach().first if posture is None else posture
     held = reach().loads if loads is None else loads
-    return SimulatedRobot(shelver(), simulation(changes), first, held, seed, truth)
+    return SimulatedRobot(description or shelver(), simulation(changes), first, held, seed, truth)
 
 
-def without_stiction() -> Any:
+def without_stiction() -> RobotDescription:
     """The demo robot with drives that have no dry friction."""
     drive = attrs.evolve(shelver().drive, stiction=np.zeros(3))
     return attrs.evolve(shelver(), drive=drive)
@@ -58,7 +64,7 @@ def without_stiction() -> Any:
 
 @attrs.frozen
 class Moment:
-    """A state of the bare world and the accelerations in it, taken before the step: qpos, qvel, qacc as MuJoCo has them."""
+    """A state of the bare world and the accelerations in it: qpos, qvel, qacc as MuJoCo has them before a step."""
 
     qpos: Array
     qvel: Array
@@ -68,7 +74,7 @@ class Moment:
 def moving(
     world: World, generator: np.random.Generator, steps: int, arm_torque: Array, ball_torque: Array
 ) -> Iterator[Moment]:
-    """The world from a random moving state without slip on (heading about 0.8), arms and ball under constant torques."""
+    """The world on from a random moving state without slip, heading 0.8; arms and ball under constant torques."""
     model, data = world.model, mujoco.MjData(world.model)
     radius = shelver().parameters.ball.radius
     roll, pitch = generator.uniform(-0.25, 0.25, 2)

@@ -1,0 +1,119 @@
+"""The simulated arm servos: computed torque that makes each joint follow its command as such servos do."""
+
+from __future__ import annotations
+
+import mujoco
+import numpy as np
+from scipy.linalg.lapack import dposv
+
+from ballbal_ros.errors import ParameterError
+from ballbal_ros.motion.spline import JointPath
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.simulation.parameters import SimulationParameters
+from ballbal_ros.simulation.world import World
+
+_OLD_MUJOCO = int(mujoco.__version__.split(".")[0]) < 4
+
+def _full_mass_matrix(model: mujoco.MjModel, data: mujoco.MjData, matrix: Array) -> None:
+    """The mass matrix [nv, nv] of now. MuJoCo 4 takes it from the data itself; before, one passed it."""
+    if _OLD_MUJOCO:
+        mujoco.mj_fullM(model, matrix, data.qM)
+    else:
+        mujoco.mj_fullM(model, data, matrix)
+
+
+class ArmServo:
+    """Joint servos with a critically damped bandwidth w, updated once a tick; the torque is held until the next.
+
+    Wanted acceleration: ``ideal`` q'' = a + 2w (v_ref - v) + w² (q_ref - q); ``position_velocity`` without a;
+    ``position`` q'' = -2w v + w² (q_ref - q), which lags by 2/w. The torque that gives it is worked out from the
+    whole mass matrix: how base and ball answer to the arms' own motion is solved for, not taken from the last step,
+    as that would run away once the arms are heavy against the base. What the contact gives is that of the last step.
+    URDF effort limits hold.
+    """
+
+    def __init__(
+        self, description: RobotDescription, parameters: SimulationParameters, world: World, data: mujoco.MjData
+    ) -> None:
+        arm = description.parameters.arm
+        self._servo = arm.servo if parameters.arm_servo == "as_described" else parameters.arm_servo
+        self.bandwidth = parameters.arm_servo_bandwidth or arm.servo_bandwidth
+        self._period = 1.0 / parameters.loop_rate
+        if self.bandwidth * self._period > 0.5:
+            raise ParameterError(
+                "simulation.yaml",
+                f"arm_servo_bandwidth is {self.bandwidth:g} rad/s at a loop_rate of {parameters.loop_rate:g} Hz",
+                f"it takes at most {0.5 / self._period:g} rad/s",
+            )
+        self._model, self._data = world.model, data
+        # The world's own order of the arm joints, in which they are neighbours: slices are faster than index lists.
+        self._order = np.argsort(world.arm_rate)
+        first, first_at, count = int(world.arm_rate.min()), int(world.arm_position.min()), len(self._order)
+        self._high = description.effort_limit[self._order]
+        self._low = -self._high
+        self._position = data.qpos[first_at : first_at + count]
+        self._rate = data.qvel[first : first + count]
+        self._applied = data.qfrc_applied[first : first + count]
+        self._bias = data.qfrc_bias[first : first + count]
+        size = world.model.nv
+        self._free = np.array([i for i in range(size) if not first <= i < first + count])
+        self._free_block = self._free[:, None] * size + self._free
+        self._mass_matrix, self._wanted, self._forces = np.zeros((size, size)), np.zeros(size), np.zeros(size)
+        self._wanted_arm, self._force = self._wanted[first : first + count], self._forces[first : first + count]
+        self._outside = np.zeros(size)
+        self._all_applied, self._contact, self._all_bias = data.qfrc_applied, data.qfrc_constraint, data.qfrc_bias
+        self._set_gains(parameters.physics_step)
+        self._commands: list[tuple[int, Array]] = [(0, (self._gain * self._position)[None])]
+
+    def _set_gains(self, step: float) -> None:
+        """The law holds in the tick's middle: its q and v there are those of now, carried on with the q'' sought.
+
+        MuJoCo's rates are half a step old, as its integrator's positions and rates are staggered.
+        """
+        w, period = self.bandwidth, self._period
+        ahead, further = 0.5 * (period + step), 0.25 * period * (step + 0.5 * period)
+        self._share = 1.0 / (1.0 + 2.0 * w * ahead + w * w * further)
+        self._gain = w * w * self._share
+        self._rate_gain = (2.0 * w + 0.5 * period * w * w) * self._share
+
+    def command(self, path: JointPath, start: float, tick: int) -> None:
+        """Follow a path from time ``start`` (s) on in place of what was commanded; hold its end. Now is ``tick``."""
+        first = max(tick, int(np.ceil(start / self._period - 1e-6)))
+        last = max(first, int(np.ceil((start + path.duration) / self._period)))
+        times = (np.arange(first, last + 1) + 0.5) * self._period - start
+        w = self.bandwidth
+        position, rate, acceleration = path.sample(np.asarray(times, dtype=np.float64))
+        pull = w * w * position
+        if self._servo != "position":
+            pull += 2.0 * w * rate
+        if self._servo == "ideal":
+            pull += acceleration
+        pull = np.ascontiguousarray(pull[:, self._order] * self._share)
+        self._commands = [(at, table) for at, table in self._commands if at < first]
+        self._commands.append((first, pull))
+
+    def act(self, tick: int) -> None:
+        """Set the arm joints' torques for this tick. Kinematics, mass matrix and bias must be those of now."""
+        commands = self._commands
+        while len(commands) > 1 and commands[1][0] <= tick:
+            del commands[0]
+        first, table = commands[0]
+        wanted, force, outside, free = self._wanted_arm, self._force, self._outside, self._free
+        model, data = self._model, self._data
+        np.multiply(self._rate, -self._rate_gain, out=wanted)
+        wanted += table[min(tick - first, len(table) - 1)]
+        wanted -= self._gain * self._position
+        # M_ff a_f = (applied + contact - bias)_f - M_fa a_a gives the accelerations of base and ball, a_f.
+        self._wanted[free] = 0.0
+        mujoco.mj_mulM(model, data, self._forces, self._wanted)
+        np.add(self._all_applied, self._contact, out=outside)
+        outside -= self._all_bias
+        outside -= self._forces
+        _full_mass_matrix(model, data, self._mass_matrix)
+        _, free_acceleration, _ = dposv(self._mass_matrix.take(self._free_block), outside[free])
+        self._wanted[free] = free_acceleration
+        mujoco.mj_mulM(model, data, self._forces, self._wanted)
+        force += self._bias
+        np.minimum(force, self._high, out=force)
+        np.maximum(force, self._low, out=self._applied)
