@@ -1,4 +1,4 @@
-"""One declaration feeds the file check; what is wrong in a file is said in one line that names file, key, find and remedy."""
+"""What is wrong in a parameter file is said in one line that names file, key, what was found and what would do."""
 
 from pathlib import Path
 
@@ -114,7 +114,7 @@ def test_nothing_of_a_wrong_mapping_is_kept():
 
 
 def test_every_declaration_says_unit_and_meaning():
-    """Each robot parameter has a unit and a meaning, groups are spelled once as <name>, and defaults pass their own check."""
+    """Each robot parameter has a unit and a meaning, groups are spelled as <name>, defaults pass their check."""
     names = [d.name for d in declarations(RobotParameters)]
     assert len(names) == len(set(names))
     assert "drive.<name>.point" in names

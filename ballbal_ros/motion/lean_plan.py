@@ -7,11 +7,14 @@ import numpy as np
 
 from ballbal_ros.errors import PlanRefused
 from ballbal_ros.motion.parameters import AcceptanceParameters
-from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.arrays import Array, apply
+from ballbal_ros.robot.attitude import rotation_lean
+from ballbal_ros.robot.balance_rows import GRAVITY
 from ballbal_ros.robot.description import RobotDescription
 
-REFERENCE_WIDTH = 15
-"""Columns of a reference row: lean (2), lean rate (2), ball (2), ball rate (2), heading, heading rate, torque (3), ball acceleration (2)."""
+REFERENCE_WIDTH = 17
+"""Columns of a reference row: lean (2), lean rate (2), ball (2), ball rate (2), heading, heading rate, torque (3), lean
+acceleration (2), ball acceleration (2)."""
 
 
 @attrs.frozen
@@ -33,9 +36,10 @@ class Use:
 class LeanPlan:
     """A planned motion of the body on a uniform grid ``times`` [N], s from the plan's start.
 
-    ``lean`` and its rates [N, 2] in ``base_footprint``; ``ball`` and its rates [N, 2], relative to the station at the start, in
-    ``odom`` axes turned by the heading at the start; ``heading`` and its rates [N]; ``torque`` [N, 3], the drive torque feedforward
-    about the axes of ``base_footprint``, N m (the rotors' inertia is in it); ``lead_in``: time at which the arms start, s.
+    ``lean`` and its rates [N, 2] in ``base_footprint``; ``ball`` and its rates [N, 2], relative to the station at the
+    start, in ``odom`` axes turned by the heading at the start; ``heading`` and its rates [N]; ``torque`` [N, 3], the
+    drive torque feedforward about the axes of ``base_footprint``, N m (the rotors' inertia is in it); ``lead_in``:
+    time at which the arms start, s.
     """
 
     times: Array
@@ -65,11 +69,15 @@ class LeanPlan:
             raise PlanRefused(
                 where,
                 f"would need {worst.name} {worst.value:.3g} {worst.unit}".rstrip(),
-                f"its limit is {worst.limit:.3g} {worst.unit}: make the motion slower or smaller, or give it more lead-in",
+                f"its limit is {worst.limit:.3g} {worst.unit}: a slower or smaller motion, or more lead-in",
             )
 
-    def table(self, period: float) -> Array:
-        """References [M, 15] at 0, period, 2 period … to the end: quintic between the grid's points, torque linear."""
+    def table(self, period: float, torque_ahead: float = 0.0) -> Array:
+        """References [M, 17] at 0, period, 2 period … to the end: quintic between the grid's points, torque linear.
+
+        ``torque_ahead``: how much later than the rest the torque is read, s; it acts after the loop's delay, held over
+        a period.
+        """
         count = int(np.floor(self.duration / period + 1e-9)) + 1
         times = np.minimum(np.arange(count) * period, self.duration)
         step = float(self.times[1] - self.times[0])
@@ -80,14 +88,19 @@ class LeanPlan:
         table[:, 4:6], table[:, 6:8] = _quintic(self.ball, self.ball_rate, self.ball_acceleration, index, s, step)
         heading = [a[:, None] for a in (self.heading, self.heading_rate, self.heading_acceleration)]
         table[:, 8:9], table[:, 9:10] = _quintic(heading[0], heading[1], heading[2], index, s, step)
-        weight = s[:, None]
-        table[:, 10:13] = (1.0 - weight) * self.torque[index] + weight * self.torque[index + 1]
-        table[:, 13:15] = (1.0 - weight) * self.ball_acceleration[index] + weight * self.ball_acceleration[index + 1]
+        for columns, values, at in (
+            (slice(10, 13), self.torque, times + torque_ahead),
+            (slice(13, 15), self.lean_acceleration, times),
+            (slice(15, 17), self.ball_acceleration, times),
+        ):
+            table[:, columns] = np.stack([np.interp(at, self.times, column) for column in values.T], axis=1)
         return table
 
 
 def _quintic(value: Array, rate: Array, acceleration: Array, index: Array, s: Array, h: float) -> tuple[Array, Array]:
-    """Position and rate of the quintic through the grid's values, rates and accelerations, at fraction s of interval ``index``."""
+    """Position and rate of the quintic through the grid's values, rates and accelerations, at fraction s of interval
+    ``index``.
+    """
     s = s[:, None]
     x0, x1 = value[index], value[index + 1]
     v0, v1 = rate[index] * h, rate[index + 1] * h
@@ -113,17 +126,21 @@ class Prediction:
     ball_rate: Array
 
 
-def predicted_uses(prediction: Prediction, description: RobotDescription, acceptance: AcceptanceParameters) -> tuple[Use, ...]:
-    """Peaks of lean, drive torque, actuator effort, floor friction and torsion, and ball travel and speed, with their limits."""
+def predicted_uses(
+    prediction: Prediction, description: RobotDescription, acceptance: AcceptanceParameters
+) -> tuple[Use, ...]:
+    """Peaks of lean, drive torque, actuator effort, floor friction and torsion, and ball travel and speed, with their
+    limits.
+    """
     parameters = description.parameters
-    r, ball = parameters.ball.radius, parameters.ball
-    torque, force, acceleration = prediction.torque, prediction.force, prediction.ball_acceleration
-    normal = force[:, 2] + ball.mass * 9.80665
-    grip_x = -torque[:, 1] / r - ball.inertia / r**2 * acceleration[:, 0]
-    grip_y = torque[:, 0] / r - ball.inertia / r**2 * acceleration[:, 1]
-    friction = np.hypot(grip_x, grip_y) / (parameters.floor.friction * np.maximum(normal, 1e-6))
+    mass, torque, force = parameters.ball.mass, prediction.torque, prediction.force
+    normal = force[:, 2] + mass * GRAVITY
+    # What the floor gives to the ball moves the ball and, through it, the body.
+    grip = np.hypot(*(force[:, :2] + mass * prediction.ball_acceleration).T)
+    friction = grip / (parameters.floor.friction * np.maximum(normal, 1e-6))
     torsion = np.abs(torque[:, 2]) / np.maximum(parameters.floor.torsion * normal, 1e-9)
-    effort = np.abs(torque @ description.drive.effort_map.T) / description.drive.effort_limit
+    torque_in_base = apply(rotation_lean(prediction.lean).transpose(0, 2, 1), torque)
+    effort = np.abs(torque_in_base @ description.drive.effort_map.T) / description.drive.effort_limit
     limits = parameters.limits
     horizontal = np.abs(torque[:, :2]).max()
     return (

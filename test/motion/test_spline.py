@@ -99,7 +99,9 @@ def test_a_dwell_is_a_dwell(with_rates: bool):
         ([0.0], POINTS[:1], None, ("has 1 points",)),
     ],
 )
-def test_an_impossible_path_is_refused(times: list[float], points: np.ndarray, rates: list | None, words: tuple[str, ...]):
+def test_an_impossible_path_is_refused(
+    times: list[float], points: np.ndarray, rates: list | None, words: tuple[str, ...]
+):
     """Times that don't increase, numbers that are none, and a path that never ends are refused in one line."""
     with pytest.raises(PlanError) as caught:
         path_through_waypoints(times, points, rates)
@@ -116,7 +118,9 @@ def test_a_path_beyond_a_limit_is_refused_by_joint_and_time():
     beyond = reach().last.copy()
     beyond[index] = low - 0.2
     path = path_through_waypoints([0.0, 2.0], np.stack((reach().first, beyond)))
-    with pytest.raises(PlanError, match=rf"^story: right_elbow_pitch would be at .* rad after .* s; its limits are {low:g}"):
+    with pytest.raises(
+        PlanError, match=rf"^story: right_elbow_pitch would be at .* rad after .* s; its limits are {low:g}"
+    ):
         check_path(path, shelver(), "story")
     hasty = path_through_waypoints([0.0, 0.1], np.stack((reach().first, reach().last)))
     with pytest.raises(PlanError, match=r"_pitch would move at .* rad/s after .* s; its limit is"):
@@ -139,7 +143,7 @@ def ramp(slope: float, duration: float) -> ArmPath:
 
 @pytest.mark.parametrize("bandwidth", [20.0, 60.0])
 def test_a_servo_on_position_alone_lags_by_two_over_its_bandwidth(bandwidth: float):
-    """On a steady ramp a critically damped servo on position lags by 2/w; one on position and rate does not lag (textbook)."""
+    """On a steady ramp a critically damped servo on position lags by 2/w, one on rate too does not (textbook)."""
     path, at = ramp(0.5, 3.0), np.array([1.8, 2.0, 2.2])
     lagging = FollowedPath.of(path, "position", bandwidth).sample(at)[0]
     np.testing.assert_allclose(lagging, path.sample(at - 2.0 / bandwidth)[0], atol=1e-6)

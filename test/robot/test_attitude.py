@@ -1,4 +1,4 @@
-"""Lean, heading and body rates against Pinocchio's and SciPy's rotations, and finite differences for every derivative."""
+"""Lean, heading and body rates against Pinocchio's and SciPy's rotations and finite differences."""
 
 import numpy as np
 import pinocchio as pin

@@ -1,4 +1,4 @@
-"""The balance rows against Pinocchio's full recursion and its analytic derivatives, and against statics and momentum."""
+"""The balance rows against Pinocchio's full recursion and its analytic derivatives, and against statics."""
 
 import attrs
 import numpy as np
@@ -56,7 +56,9 @@ class Moment:
         rates = body_rates(*self.lean, self.outside.heading_rate[0], self.outside.heading_acceleration[0])
         velocity = rotation.T @ turn @ np.append(self.ball_velocity, 0.0)
         # Pinocchio's is the spatial acceleration of the moving frame.
-        acceleration = rotation.T @ turn @ np.append(self.outside.ball_acceleration[0], 0.0) - np.cross(rates.rate, velocity)
+        acceleration = rotation.T @ turn @ np.append(self.outside.ball_acceleration[0], 0.0) - np.cross(
+            rates.rate, velocity
+        )
         place = np.concatenate(([0.4, -1.3, 0.115], pin.Quaternion(rotation).coeffs()))
         return (
             model,
@@ -75,7 +77,7 @@ def rows(terms: UpperBodyTerms, outside: OutsideMotion, lean: np.ndarray) -> Bal
 
 @pytest.mark.parametrize("seed", range(6))
 def test_force_and_torque_are_pinocchios(seed: int):
-    """Force and torque on the body are Pinocchio's local rows, rotated by the lean, less the hands' wrenches; at any heading.
+    """Force and torque on the body are Pinocchio's local rows, rotated, less the hands' wrenches, at any heading.
 
     (physics.md, *Equations of motion*: Euler-angle rows are something else.)
     """
@@ -102,7 +104,7 @@ def test_force_and_torque_are_pinocchios(seed: int):
 
 @pytest.mark.parametrize("seed", range(6))
 def test_derivatives_are_pinocchios_chained_to_roll_and_pitch(seed: int):
-    """The derivatives of force and torque by lean, rate and acceleration are computeRNEADerivatives', chained by hand."""
+    """The derivatives by lean, rate and acceleration are computeRNEADerivatives', chained by hand."""
     moment = attrs.evolve(Moment.random(seed), ball_velocity=np.zeros(2))
     none = np.zeros((1, 2, 3))
     moment = attrs.evolve(moment, outside=attrs.evolve(moment.outside, hand_force=none, hand_moment=none))
@@ -139,7 +141,9 @@ def test_all_derivatives_are_finite_differences(seed: int):
             now.by_lean[..., column], (after.residual - before.residual) / (2 * h), atol=5e-7, rtol=1e-7
         )
         wrench = [np.concatenate((each.force, each.torque), axis=1) for each in (after, before)]
-        np.testing.assert_allclose(now.wrench_by_lean[..., column], (wrench[0] - wrench[1]) / (2 * h), atol=5e-7, rtol=1e-7)
+        np.testing.assert_allclose(
+            now.wrench_by_lean[..., column], (wrench[0] - wrench[1]) / (2 * h), atol=5e-7, rtol=1e-7
+        )
     for axis in range(2):
         step = np.eye(2)[axis]
         moved = attrs.evolve(moment.outside, ball_acceleration=moment.outside.ball_acceleration + step)
@@ -148,7 +152,7 @@ def test_all_derivatives_are_finite_differences(seed: int):
 
 
 def test_at_rest_the_rows_are_the_moment_of_gravity_about_the_contact():
-    """With nothing moving, the residual is minus the moment of gravity and hand forces about the contact point (statics)."""
+    """With nothing moving, the residual is minus the moment of gravity and hands about the contact (statics)."""
     moment = Moment.random(3)
     body, none = WholeBody(shelver()), np.zeros((1, shelver().joint_count))
     terms = body.terms(moment.arm[0][None], none, none, HANDS)
@@ -165,14 +169,16 @@ def test_at_rest_the_rows_are_the_moment_of_gravity_about_the_contact():
 
 
 def test_a_blend_is_between_its_two_ends_in_every_term():
-    """Blending two loads by shares gives, in every row, the same shares of the rows: all terms are linear in the masses."""
+    """Blending two loads by shares gives the same shares of the rows: all terms are linear in the masses."""
     arm = np.random.default_rng(8).normal(size=(3, 5, shelver().joint_count)) * 0.6
     light = WholeBody(shelver()).terms(*arm, HANDS)
     heavy = WholeBody(shelver(), [Load("right_hand", 2.0, [0.0, 0.0, -0.1])]).terms(*arm, HANDS)
     half = WholeBody(shelver(), [Load("right_hand", 1.0, [0.0, 0.0, -0.1])]).terms(*arm, HANDS)
     share = np.linspace(0.0, 1.0, 5)
     moment = Moment.random(9)
-    outside = OutsideMotion(*(np.repeat(getattr(moment.outside, f.name), 5, axis=0) for f in attrs.fields(OutsideMotion)))
+    outside = OutsideMotion(
+        *(np.repeat(getattr(moment.outside, f.name), 5, axis=0) for f in attrs.fields(OutsideMotion))
+    )
     lean = np.repeat(moment.lean[None], 5, axis=0)
     mixed, none, whole = (rows(terms, outside, lean) for terms in (light.blend(heavy, share), light, heavy))
     for name in ("residual", "force", "torque"):

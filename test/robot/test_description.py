@@ -144,7 +144,7 @@ def test_two_joints_of_one_name_are_refused():
     ],
 )
 def test_impossible_parameters_are_refused_by_key(parameters: dict[str, object], words: tuple[str, ...]):
-    """Hands that are not there, a ball that can't be, and contacts that don't push along the ball are refused by key."""
+    """Hands that are not there, balls that can't be and contacts that don't push along it are refused by key."""
     line = refusal(**parameters)
     for word in words:
         assert word in line

@@ -20,7 +20,10 @@ def ring(count: int, slope: float = 0.8, twist: float = 0.0) -> DriveParameters:
     members = {}
     for k in range(count):
         heading = 2.0 * np.pi * k / count + 0.3
-        out, side = np.array([np.cos(heading), np.sin(heading), 0.0]), np.array([-np.sin(heading), np.cos(heading), 0.0])
+        out, side = (
+            np.array([np.cos(heading), np.sin(heading), 0.0]),
+            np.array([-np.sin(heading), np.cos(heading), 0.0]),
+        )
         point = np.sin(slope) * out + np.cos(slope) * np.array([0.0, 0.0, 1.0])
         push = np.cos(twist) * side + np.sin(twist) * np.cross(point, side)
         members[f"wheel_{k}"] = contact(point, push, 0.04 + 0.01 * k, rotor_inertia=0.001 * (k + 1))
@@ -43,7 +46,7 @@ def test_power_is_the_same_on_both_sides(parameters: DriveParameters):
 
 
 def test_rates_and_torques_are_those_of_wheels_on_a_sphere(parameters: DriveParameters):
-    """A wheel's rim has the ball's surface speed along its push, and presses with effort / effective radius at the contact."""
+    """A rim has the ball's surface speed along its push, and pushes with effort / effective radius."""
     drive, rng = Drive.from_parameters(parameters, RADIUS), np.random.default_rng(2)
     spin, effort = rng.normal(size=3), rng.normal(size=len(drive.names))
     torque_on_ball = np.zeros(3)
@@ -94,7 +97,10 @@ def test_the_torque_limit_is_where_the_first_actuator_meets_its_own(parameters: 
     "contacts",
     [
         {},
-        {"a": contact(np.array([1.0, 0, 0]), np.array([0, 1.0, 0])), "b": contact(np.array([0, 1.0, 0]), np.array([0, 0, 1.0]))},
+        {
+            "a": contact(np.array([1.0, 0, 0]), np.array([0, 1.0, 0])),
+            "b": contact(np.array([0, 1.0, 0]), np.array([0, 0, 1.0])),
+        },
         # Three round the equator that push sideways only spin the ball about the vertical.
         ring(3, slope=np.pi / 2).contact,
         # Three along one meridian, pushing along it, turn the ball about one axis.

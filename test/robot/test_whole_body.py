@@ -1,4 +1,4 @@
-"""Mass centre, momentum and inertia of the whole body against Pinocchio and MuJoCo, and loads against a URDF that has them."""
+"""Mass centre, momentum and inertia against Pinocchio and MuJoCo, loads against a URDF that has them."""
 
 import xml.etree.ElementTree as ElementTree
 
@@ -67,7 +67,7 @@ def mujoco_posture(description: RobotDescription, position: np.ndarray) -> tuple
 
 @pytest.mark.parametrize("position", positions(4))
 def test_mass_mass_centre_and_inertia_are_mujocos(position: np.ndarray):
-    """A body with loads has the mass, mass centre and inertia that MuJoCo sums from the URDF with the loads written in."""
+    """A body with loads has the mass, mass centre and inertia that MuJoCo sums from a URDF with the loads."""
     posture = WholeBody(shelver(), LOADS).posture(position)
     mass, center, inertia = mujoco_posture(with_loads_written_in(), position)
     assert posture.mass == pytest.approx(mass, abs=1e-9)
@@ -111,7 +111,7 @@ def test_mass_centre_and_its_rate_are_pinocchios(position: np.ndarray):
 
 @pytest.mark.parametrize("position", positions(3))
 def test_momentum_is_pinocchios_and_terms_hold_it(position: np.ndarray):
-    """Linear momentum is mass times the centre's velocity; angular momentum, moved to the ball's centre, is Pinocchio's."""
+    """Linear momentum is mass times the centre's velocity, angular momentum is Pinocchio's, moved to the ball."""
     body, rate = WholeBody(shelver(), LOADS), RNG.normal(size=len(position))
     description = with_loads_written_in()
     data = description.model.createData()
