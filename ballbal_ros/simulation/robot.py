@@ -20,13 +20,13 @@ from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 from ballbal_ros.simulation.arms import ArmServo
 from ballbal_ros.simulation.drive import SimulatedDrive, whole_steps
+from ballbal_ros.simulation.floor import FloorMoments
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.sensors import Sample, SimulatedSensors
 from ballbal_ros.simulation.truth import Truth
 from ballbal_ros.simulation.world import World
 
 _UPRIGHT = math.cos(math.radians(45.0))
-_CRAWL = 1e-3
 _TURNED_BACK = read_only(np.array([1.0, 0.0, 0.0, 0.0]))
 
 
@@ -65,6 +65,9 @@ class SimulatedRobot:
         self._find_views()
         self._set_start(WholeBody(description, held), np.asarray(posture, float))
         self._drive = SimulatedDrive(description, self.parameters, self.world.rotation_drive_in_base)
+        self._floor = FloorMoments(
+            self.parameters, self._radius, description.parameters.ball.inertia, self.world.mass * GRAVITY
+        )
         self._servo = ArmServo(description, self.parameters, self.world, self.data)
         self._tick, self._fell = 0, False
         self._push: tuple[int, Array, Array] | None = None
@@ -80,17 +83,17 @@ class SimulatedRobot:
         data, world = self.data, self.world
         self._applied_to_ball = data.qfrc_applied[world.rolling]
         self._ball_rate = data.qvel[world.rolling]
-        self._ball_velocity = data.qvel[0:2]
-        self._moment_on_ball = data.xfrc_applied[world.ball, 3:5]
+        self._base_velocity = data.qvel[:6]
+        self._moment_on_ball = data.xfrc_applied[world.ball, 3:6]
+        self._drive_axes = world.rotation_drive_in_base.tolist()
         self._radius = self.description.parameters.ball.radius
-        self._resistance = self.parameters.floor.rolling_resistance * self._radius
         at = world.arm_position
         in_order = np.array_equal(at, np.arange(at[0], at[0] + len(at)))
         self._arm_at: slice | Array = slice(int(at[0]), int(at[0]) + len(at)) if in_order else at
         self._ball_quat = data.qpos[world.ball_quat]
         self._sensed, self._specific_force = data.sensordata, data.sensordata[3:6]
         self._qpos, self._qvel, self._qfrc_constraint = data.qpos, data.qvel, data.qfrc_constraint
-        self._base_axes = data.xmat[world.base]
+        self._base_axes, self._base_up = data.xmat[world.base], data.xmat[world.base][6:9]
         self._turning = data.qacc[3:6]
         self._half_step_to_imu = 0.5 * self._model.opt.timestep * self.description.rotation_imu_in_base.T
 
@@ -156,8 +159,7 @@ class SimulatedRobot:
             self._apply_push(self._push)
         for step in range(self._steps):
             self._applied_to_ball[:] = drive.torque(step)
-            if self._resistance > 0.0:
-                self._resist_rolling()
+            self._feel_floor()
             mujoco.mj_step2(model, data)
             x, y, z = self._specific_force.tolist()
             felt[0] += x
@@ -172,11 +174,15 @@ class SimulatedRobot:
         standing = self._base_axes.item(8) > _UPRIGHT and abs(self._qpos.item(2) - self._radius) < self._radius
         self._fell = not standing
 
-    def _resist_rolling(self) -> None:
-        """The floor's moment on the ball against its rolling: C N r, and in proportion to speed below a crawl."""
-        vx, vy = self._ball_velocity.tolist()
-        share = self._resistance * self._qfrc_constraint.item(2) / math.sqrt(vx * vx + vy * vy + _CRAWL**2)
-        self._moment_on_ball[:] = share * vy, -share * vx
+    def _feel_floor(self) -> None:
+        """Give the ball the floor's moments against its rolling and spinning."""
+        vx, vy, _, wx, wy, wz = self._base_velocity.tolist()
+        rx, ry, rz = self._ball_rate.tolist()
+        (xx, xy, xz), (yx, yy, yz), (zx, zy, zz) = self._drive_axes
+        ux, uy, uz = self._base_up.tolist()
+        spin = ux * (wx + xx * rx + xy * ry + xz * rz) + uy * (wy + yx * rx + yy * ry + yz * rz)
+        spin += uz * (wz + zx * rx + zy * ry + zz * rz)
+        self._moment_on_ball[:] = self._floor.on_ball(self._qfrc_constraint.item(2), vx, vy, spin)
 
     def _apply_push(self, push: tuple[int, Array, Array]) -> None:
         body, at, force = push

@@ -4,6 +4,10 @@
 floor. The ball is a uniform sphere, so that its own orientation means nothing: the simulation sets it back to the
 drive's axes after each step (see :class:`World`). Joint torques and rates of the ball joint are then in axes fixed in
 the body, where the rotors' reflected inertia is constant, and so exact as the joint's armature.
+
+The contact bears the robot and has friction; what else the floor does is in :mod:`~ballbal_ros.simulation.floor`. While
+the ball rolls the contact is exact to microns; once it slips the ball bounces by microns, so that the floor's force is
+right on average only.
 """
 
 from __future__ import annotations
@@ -51,8 +55,8 @@ def make_ball(spec: mujoco.MjSpec, body: mujoco.MjsBody, ball: BallParameters, f
     plane = spec.worldbody.add_geom(name=_FLOOR, type=mujoco.mjtGeom.mjGEOM_PLANE, size=[0.0, 0.0, 1.0])
     sphere = body.add_geom(name=_BALL, type=mujoco.mjtGeom.mjGEOM_SPHERE, size=[ball.radius, 0.0, 0.0], mass=0.0)
     for geom in (plane, sphere):
-        geom.condim = 4
-        geom.friction = [floor.friction, floor.torsion, 0.0]
+        geom.condim = 3
+        geom.friction = [floor.friction, 0.0, 0.0]
         geom.solref, geom.solimp = _SOLREF, _SOLIMP
 
 
