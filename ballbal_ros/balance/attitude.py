@@ -12,6 +12,7 @@ from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.balance_rows import GRAVITY
 
 _SETTLING = 1.0
+_FAR = 0.02
 _FIRST_BIAS = 3e-3
 _FIRST_ANGLE = 0.1
 
@@ -145,8 +146,9 @@ class Attitude:
         self.pitch += half * (old[1] + self.rates[1])
         self.heading += half * (old[2] + self.rates[2])
         if 0.5 * GRAVITY < math.sqrt(gx * gx + gy * gy + gz * gz) < 1.5 * GRAVITY:
-            off_roll = math.atan2(gy, gz) - self.roll
-            off_pitch = math.atan2(-gx, math.hypot(gy, gz)) - self.pitch
+            # A push is an acceleration that nobody knows of: it may pull the estimate a little, not away.
+            off_roll = max(-_FAR, min(_FAR, math.atan2(gy, gz) - self.roll))
+            off_pitch = max(-_FAR, min(_FAR, math.atan2(-gx, math.hypot(gy, gz)) - self.pitch))
             self.roll += trust.on_angle * off_roll
             self.pitch += trust.on_angle * off_pitch
             self._bias_roll += trust.on_bias * off_roll

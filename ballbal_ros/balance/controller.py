@@ -60,7 +60,9 @@ class Controller:
     ``base_footprint`` axes. As the reference carries the planned motion, the linear model sees small numbers only.
     """
 
-    def __init__(self, matrices: ControllerMatrices) -> None:
+    def __init__(self, matrices: ControllerMatrices, moment_step: float = np.inf, moment_limit: float = np.inf) -> None:
+        """``moment_step`` and ``moment_limit``, N m: how much the estimated moment may change in a tick, and be at most."""
+        self._moment_step, self._moment_limit = moment_step, moment_limit
         known, past = STATES + MOMENTS, INPUTS * matrices.history
         self.prior = np.zeros(known)
         self.estimate = np.zeros(known)
@@ -90,7 +92,11 @@ class Controller:
             self.estimate[:] = self.prior
         else:
             np.dot(self._correct, measured - self._output @ self.prior, out=self.estimate)
+            # A push is no moment that lasts: what the estimate of the lasting moment may follow is bounded.
+            moment = self.estimate[STATES:]
+            np.clip(moment, -self._moment_step, self._moment_step, out=moment)
             self.estimate += self.prior
+            np.clip(moment, -self._moment_limit, self._moment_limit, out=moment)
 
     def torque(self) -> Array:
         """Torque [3] to add to the reference's, from the present estimate."""

@@ -50,7 +50,9 @@ class BalanceLoop:
         self.guard = Guard(parameters)
         posture = self.body.posture(arm_position)
         self._schedule = GainSchedule(description, parameters, posture)
-        self.controller = Controller(self._schedule.at(posture))
+        self.controller = Controller(
+            self._schedule.at(posture), parameters.limits.trim_rate * self.period, parameters.limits.trim_moment
+        )
         self._ticks = 0
         ahead = parameters.loop.delay + 0.5 * self.period
         self.reference = Reference(self.body, self.period, ahead, parameters.compensation != "none")

@@ -85,7 +85,7 @@ class Drive:
         """Torque on the body [3], N m, in ``base_link``, of these actuator efforts [n], N m."""
         return np.asarray(self.torque_map @ effort)
 
-    def torque_limit(self, axis: Array) -> float:
+    def torque_limit(self, axis: Array | tuple[float, float, float]) -> float:
         """Greatest torque, N m, about a unit axis of ``base_link`` within all actuators' limits, least-norm efforts."""
-        share = np.abs(self.effort_map @ axis)
+        share = np.abs(self.effort_map @ np.asarray(axis, float))
         return float(np.min(self.effort_limit[share > 1e-12] / share[share > 1e-12]))

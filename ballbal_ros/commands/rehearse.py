@@ -1,0 +1,86 @@
+"""``ballbal rehearse``: what a plan will do, known before the robot runs it; in-process, without ROS."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Annotated
+
+import typer
+from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
+
+from ballbal_ros.commands.files import read_robot, write_json
+from ballbal_ros.commands.limits import planned_limits
+from ballbal_ros.errors import BallbalError, nearest
+from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.story import read_story
+from ballbal_ros.report.run_table import print_runs
+from ballbal_ros.simulation.rehearsal import Rehearsal, plan_story
+from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet
+from ballbal_ros.simulation.timeline import Timeline
+from ballbal_ros.simulation.truth import parse_truth
+
+
+def asked_kinds(asked: Sequence[str] | None) -> tuple[str, ...]:
+    """The kinds of compensation asked for, all without any; raises :class:`BallbalError` for an unknown one."""
+    for kind in asked or ():
+        if kind not in KINDS:
+            raise BallbalError("--compensation", f"unknown kind {kind}", nearest(kind, KINDS))
+    return tuple(kind for kind in KINDS if kind in asked) if asked else KINDS
+
+
+def rehearse(
+    plan: Path,
+    robot: Path,
+    kinds: Sequence[str] = KINDS,
+    seeds: Sequence[int] = (0,),
+    truth: Sequence[str] = (),
+    lead_in: float | None = None,
+    console: Console | None = None,
+) -> RunSet:
+    """Run a plan file through planner, loop and simulated robot; raises :class:`BallbalError` for wrong input or a refused plan."""
+    files = read_robot(robot)
+    story = read_story(plan, files.description)
+    differences = parse_truth(truth, files.description)
+    timeline = Timeline.of(story, files.compensation, lead_in)
+    lean_plan: LeanPlan | None = None
+    if "planned" in kinds and story.planned:
+        lean_plan = plan_story(files, story, timeline)
+    results: list[RunResult] = []
+    columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.completed}/{task.total} runs"), TimeRemainingColumn())
+    with Progress(*columns, console=console, transient=True) as progress:
+        task = progress.add_task(story.name, total=len(kinds) * len(seeds))
+        for kind in kinds:
+            for seed in seeds:
+                progress.update(task, description=f"{story.name}: {kind}")
+                run, _ = Rehearsal(files, story, kind, timeline, lean_plan, seed, differences).run()
+                results.append(run)
+                progress.advance(task)
+    limits = planned_limits(results, files, lean_plan)
+    return RunSet(files.description.name, story.name, "in-process", tuple(results), limits)
+
+
+def rehearse_command(
+    plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/reach.yaml.")],
+    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
+    compensation: Annotated[
+        list[str] | None, typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it.")
+    ] = None,
+    seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
+    repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
+    truth: Annotated[
+        list[str] | None, typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable.")
+    ] = None,
+    lead_in: Annotated[float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")] = None,
+    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+) -> None:
+    """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan."""
+    console = Console()
+    runs = rehearse(
+        plan, robot, asked_kinds(compensation), range(seed, seed + repeat), tuple(truth or ()), lead_in, console
+    )
+    print_runs(runs, console)
+    if json_file is not None:
+        write_json(json_file, runs.as_json())
+    raise typer.Exit(0 if runs.ok else 1)

@@ -1,0 +1,60 @@
+"""The table of runs: what each kind of compensation cost, for a person to read."""
+
+from __future__ import annotations
+
+from rich import box
+from rich.console import Console
+from rich.table import Table
+
+from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet, median
+
+MEANING = {
+    "planned": "lean ahead of the arms, by plan",
+    "quasi_static": "lean that balances the measured arms",
+    "none": "arms not reckoned with",
+    "still": "nothing moves: the noise floor",
+}
+
+
+def print_runs(runs: RunSet, console: Console) -> None:
+    """Print one row for each kind of compensation (the median where there are several seeds), then the planned runs' limits."""
+    count = max((sum(1 for r in runs.runs if r.compensation == kind) for kind in KINDS), default=0)
+    seeds = "" if count <= 1 else f", median (worst) of {count} seeds"
+    console.print(f"[bold]{runs.robot}[/bold], plan {runs.plan}, {runs.clock}{seeds}", highlight=False)
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
+    table.add_column("compensation")
+    for heading in ("ball peak\nmm", "ball end\nmm", "lean\ndeg", "torque\nN m", "friction\nuse", "× real\ntime"):
+        table.add_column(heading, justify="right")
+    for kind in KINDS:
+        chosen = [run for run in runs.runs if run.compensation == kind]
+        if chosen:
+            table.add_row(_name(chosen, kind), *_cells(chosen))
+    console.print(table)
+    for kind in dict.fromkeys(run.compensation for run in runs.runs):
+        console.print(f"[dim]{kind:12s} {MEANING[kind]}[/dim]", highlight=False)
+    for limit in runs.limits:
+        verdict = "[green]ok[/green]    " if limit.ok else "[bold red]beyond[/bold red]"
+        value = f"{limit.value:.3g} {limit.unit}".strip()
+        console.print(f"{verdict} {limit.name} {value}, at most {limit.limit:.3g}", highlight=False)
+
+
+def _cells(runs: list[RunResult]) -> list[str]:
+    def cell(values: list[float], digits: int) -> str:
+        text = f"{median(values):.{digits}f}"
+        return text if len(values) == 1 else f"{text} ({max(values):.{digits}f})"
+
+    return [
+        cell([r.ball_travel_peak_mm for r in runs], 2),
+        cell([r.ball_travel_end_mm for r in runs], 2),
+        cell([r.lean_peak_deg for r in runs], 1),
+        cell([r.drive_torque_peak_nm for r in runs], 1),
+        cell([r.friction_use_peak for r in runs], 2),
+        f"{median([r.real_time_factor for r in runs]):.1f}",
+    ]
+
+
+def _name(runs: list[RunResult], kind: str) -> str:
+    fallen = sum(run.fell for run in runs)
+    if not fallen:
+        return kind
+    return f"{kind} [bold red]fell[/bold red]" if len(runs) == 1 else f"{kind} [bold red]{fallen} fell[/bold red]"
