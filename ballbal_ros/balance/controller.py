@@ -94,9 +94,9 @@ class Controller:
             np.dot(self._correct, measured - self._output @ self.prior, out=self.estimate)
             # A push is no moment that lasts: what the estimate of the lasting moment may follow is bounded.
             moment = self.estimate[STATES:]
-            np.clip(moment, -self._moment_step, self._moment_step, out=moment)
+            _bound(moment, self._moment_step)
             self.estimate += self.prior
-            np.clip(moment, -self._moment_limit, self._moment_limit, out=moment)
+            _bound(moment, self._moment_limit)
 
     def torque(self) -> Array:
         """Torque [3] to add to the reference's, from the present estimate."""
@@ -115,6 +115,12 @@ class Controller:
         if len(self._past):
             self._past[INPUTS:] = self._past[:-INPUTS].copy()
             self._past[:INPUTS] = torque
+
+
+def _bound(vector: Array, limit: float) -> None:
+    """Clip a vector in place to ±limit."""
+    np.minimum(vector, limit, out=vector)
+    np.maximum(vector, -limit, out=vector)
 
 
 def _past(regulator: Regulator, j: int) -> Array:

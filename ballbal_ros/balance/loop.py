@@ -71,7 +71,7 @@ class BalanceLoop:
         self._radius = description.parameters.ball.radius
         self._spin_map = np.ascontiguousarray(drive.spin_map)
         self._effort_map = np.ascontiguousarray(drive.effort_map)
-        self._effort_limit = drive.effort_limit
+        self._effort_limits = tuple(drive.effort_limit.tolist())
         self._torque_limit = min(parameters.limits.drive_torque, description.parameters.limits.drive_torque)
         self._zero = np.zeros(len(drive.names))
         self._deviation = np.zeros(MEASURED)
@@ -224,8 +224,8 @@ class BalanceLoop:
         if size > limit:
             tx, ty = tx * limit / size, ty * limit / size
         tz = max(-limit, min(limit, tz))
-        effort, sent = self._shared_out(tx, ty, tz)
-        if not math.isfinite(effort.sum()):
+        effort, sent, over = self._shared_out(tx, ty, tz)
+        if not math.isfinite(over):
             self.guard.trip("the torque it worked out is not a number")
             self.torque[:] = 0.0
             return self._zero.copy()
@@ -233,16 +233,22 @@ class BalanceLoop:
         self.controller.predict(np.array((sent[0] - ahead[0], sent[1] - ahead[1], sent[2] - ahead[2])))
         return effort
 
-    def _shared_out(self, tx: float, ty: float, tz: float) -> tuple[Array, tuple[float, float, float]]:
-        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit: the heading gives way first."""
+    def _shared_out(self, tx: float, ty: float, tz: float) -> tuple[Array, tuple[float, float, float], float]:
+        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit: the heading gives way first.
+
+        Also the torque that they give, and the greatest share of a limit that was wanted (not finite where the torque is not).
+        """
         roll, pitch = self._last_lean
         sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
         base = self._in_base
         base[:] = cp * tx - sp * tz, sp * sr * tx + cr * ty + cp * sr * tz, sp * cr * tx - sr * ty + cp * cr * tz
         effort = self._effort_map @ base
-        over = float((np.abs(effort) / self._effort_limit).max())
+        values = effort.tolist()
+        if not math.isfinite(sum(values)):
+            return effort, (tx, ty, tz), math.nan
+        over = max(abs(e) / limit for e, limit in zip(values, self._effort_limits))
         if over <= 1.0:
-            return effort, (tx, ty, tz)
+            return effort, (tx, ty, tz), over
         if tz != 0.0:
             return self._shared_out(tx, ty, 0.0)
-        return effort / over, (tx / over, ty / over, 0.0)
+        return effort / over, (tx / over, ty / over, 0.0), over

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import math
+
 import attrs
-import numpy as np
 
 from ballbal_ros.robot.arrays import Array
 
@@ -26,10 +27,11 @@ class Measurement:
 
     @property
     def finite(self) -> bool:
-        """Whether every number in it is finite."""
-        total = self.stamp + self.imu_rate.sum() + self.drive_angle.sum() + self.arm_position.sum()
+        """Whether every number in it is finite (and none so large that its square is not)."""
+        rate, angle, arm, acceleration = self.imu_rate, self.drive_angle, self.arm_position, self.imu_acceleration
+        total = self.stamp + float(rate @ rate) + float(angle @ angle) + float(arm @ arm)
         if self.imu_quat_xyzw is not None:
             total += sum(self.imu_quat_xyzw)
-        if self.imu_acceleration is not None:
-            total += self.imu_acceleration.sum()
-        return bool(np.isfinite(total))
+        if acceleration is not None:
+            total += float(acceleration @ acceleration)
+        return math.isfinite(total)
