@@ -220,35 +220,29 @@ class BalanceLoop:
         limit = self._torque_limit
         ahead = reference[10:13]
         tx, ty, tz = (share * (a + b) for a, b in zip(ahead, wanted.tolist()))
+        if not math.isfinite(tx + ty + tz):
+            self.guard.trip("the torque it worked out is not a number")
+            self.torque[:] = 0.0
+            return self._zero.copy()
         size = math.hypot(tx, ty)
         if size > limit:
             tx, ty = tx * limit / size, ty * limit / size
         tz = max(-limit, min(limit, tz))
-        effort, sent, over = self._shared_out(tx, ty, tz)
-        if not math.isfinite(over):
-            self.guard.trip("the torque it worked out is not a number")
-            self.torque[:] = 0.0
-            return self._zero.copy()
+        effort, sent = self._shared_out(tx, ty, tz)
         self.torque[:] = sent
         self.controller.predict(np.array((sent[0] - ahead[0], sent[1] - ahead[1], sent[2] - ahead[2])))
         return effort
 
-    def _shared_out(self, tx: float, ty: float, tz: float) -> tuple[Array, tuple[float, float, float], float]:
-        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit: the heading gives way first.
-
-        Also the torque that they give, and the greatest share of a limit that was wanted (not finite where the torque is not).
-        """
+    def _shared_out(self, tx: float, ty: float, tz: float) -> tuple[Array, tuple[float, float, float]]:
+        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit (the heading gives way first), and what they give."""
         roll, pitch = self._last_lean
         sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
         base = self._in_base
         base[:] = cp * tx - sp * tz, sp * sr * tx + cr * ty + cp * sr * tz, sp * cr * tx - sr * ty + cp * cr * tz
         effort = self._effort_map @ base
-        values = effort.tolist()
-        if not math.isfinite(sum(values)):
-            return effort, (tx, ty, tz), math.nan
-        over = max(abs(e) / limit for e, limit in zip(values, self._effort_limits))
+        over = max(abs(e) / limit for e, limit in zip(effort.tolist(), self._effort_limits))
         if over <= 1.0:
-            return effort, (tx, ty, tz), over
+            return effort, (tx, ty, tz)
         if tz != 0.0:
             return self._shared_out(tx, ty, 0.0)
-        return effort / over, (tx / over, ty / over, 0.0), over
+        return effort / over, (tx / over, ty / over, 0.0)
