@@ -121,15 +121,21 @@ def continuous_lqr(a: Array, b: Array, q: Array, r: Array, what: str = "the loop
     return np.asarray(np.linalg.solve(r, b.T @ cost))
 
 
-def kalman_gain(a: Array, c: Array, q: Array, r: Array, what: str = "the estimator") -> Array:
+def kalman_gain(
+    a: Array, c: Array, q: Array, r: Array, cross: Array | None = None, what: str = "the estimator"
+) -> Array:
     """L [n, p] of the steady-state filter x̂ = x̄ + L (y - C x̄), x̄[k+1] = A x̂[k] + …; raises :class:`BallbalError`.
 
-    q [n, n] is the covariance of the noise on x[k+1], r [p, p] that of y.
+    q [n, n] is the covariance of the noise w[k] on x[k+1], r [p, p] that of the noise v[k] on y[k], ``cross`` [n, p]
+    that between w[k] and v[k]. A must be invertible: with ``cross``, L = A⁻¹ (A P Cᵀ + S) (C P Cᵀ + r)⁻¹, the gain
+    whose *prediction* x̄ is best (without it, the usual filter, whose x̂ is best too).
     """
+    s = np.zeros((len(a), len(c))) if cross is None else cross
     try:
-        prior = solve_discrete_are(a.T, c.T, q, r)
+        prior = solve_discrete_are(a.T, c.T, q, r, s=s)
     except (LinAlgError, ValueError) as error:
         raise BallbalError(
             what, f"its Kalman filter has no steady state ({error})", "change the noise figures"
         ) from error
-    return np.asarray(np.linalg.solve(c @ prior @ c.T + r, c @ prior).T)
+    corrected = prior @ c.T + np.linalg.solve(a, s)
+    return np.asarray(np.linalg.solve(c @ prior @ c.T + r, corrected.T).T)

@@ -5,9 +5,10 @@ from __future__ import annotations
 import attrs
 import numpy as np
 
-from ballbal_ros.balance.discrete import SampledPlant, discrete_lqr, kalman_gain, sampled, sampled_noise
+from ballbal_ros.balance.discrete import SampledPlant, discrete_lqr, sampled
 from ballbal_ros.balance.linear_model import BALL, LinearModel, linear_model
 from ballbal_ros.balance.margins import Margins, loop_margins
+from ballbal_ros.balance.noise import estimator_gain, heading_noise, station_noise
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.regulator import Regulator, steady_trim
 from ballbal_ros.errors import BallbalError
@@ -120,72 +121,31 @@ def _bryson(*deviations: float) -> Array:
 
 
 def _station(model: LinearModel, parameters: BalanceParameters) -> Regulator:
-    weights, noise, loop = parameters.weights, parameters.estimator, parameters.loop
-    a, b, e, c = model.state_matrix, model.torque_matrix, model.moment_matrix, model.measurement_matrix
-    plant = sampled(a, b, e, c, loop.period, loop.delay)
+    weights, loop = parameters.weights, parameters.loop
+    matrices = model.state_matrix, model.torque_matrix, model.moment_matrix
+    plant = sampled(*matrices, model.measurement_matrix, loop.period, loop.delay)
     q = _bryson(weights.lean, weights.lean_rate, weights.ball_position, weights.ball_velocity)
-    measured = station_measurement_noise(noise.lean_noise, noise.rate_noise, noise.drive_noise, model.ball_radius)
-    process = (b @ b.T) * noise.torque_noise**2 + (e @ e.T) * noise.moment_noise**2
-    return _regulator(
-        plant, (a, b, e), q, _bryson(weights.torque), (process, noise.moment_walk, measured), BALL, parameters.trim
-    )
+    estimator = estimator_gain(plant, station_noise(model, parameters))
+    return _regulator(plant, q, _bryson(weights.torque), estimator, BALL if parameters.trim else None)
 
 
 def _heading(model: LinearModel, parameters: BalanceParameters) -> Regulator:
-    weights, noise, loop = parameters.weights, parameters.estimator, parameters.loop
-    a, b, e = model.heading_matrices
-    plant = sampled(a, b, e, np.eye(2), loop.period, loop.delay)
+    weights, loop = parameters.weights, parameters.loop
+    plant = sampled(*model.heading_matrices, np.eye(2), loop.period, loop.delay)
     q = np.diag([weights.heading**-2, weights.heading_rate**-2])
-    measured = np.diag([noise.heading_noise**2, noise.rate_noise**2])
-    process = (b @ b.T) * noise.yaw_torque_noise**2
-    return _regulator(
-        plant,
-        (a, b, e),
-        q,
-        np.array([[weights.heading_torque**-2]]),
-        (process, noise.yaw_moment_walk, measured),
-        slice(0, 1),
-        parameters.trim,
-    )
+    estimator = estimator_gain(plant, heading_noise(model, parameters))
+    held = slice(0, 1) if parameters.trim else None
+    return _regulator(plant, q, np.array([[weights.heading_torque**-2]]), estimator, held)
 
 
-def station_measurement_noise(lean: float, rate: float, drive: float, radius: float) -> Array:
-    """Covariance [6, 6] of [roll, pitch, roll_rate, pitch_rate, x, y].
-
-    The ball's position comes from the encoders, which see it relative to the body, and the lean: x = r (relative +
-    pitch), y = -r (relative + roll). So its error is that of the lean over again. Arguments: rad, rad/s, rad, m.
-    """
-    source = np.zeros((6, 6))
-    source[:4, :4] = np.diag([lean, lean, rate, rate])
-    source[4, 1], source[5, 0] = radius * lean, -radius * lean
-    source[4, 4] = source[5, 5] = radius * drive
-    return np.asarray(source @ source.T)
-
-
-def _regulator(
-    plant: SampledPlant,
-    matrices: tuple[Array, Array, Array],
-    q: Array,
-    r: Array,
-    noise: tuple[Array, float, Array],
-    held: slice,
-    trim: bool,
-) -> Regulator:
-    """Feedback with past torques, filter with a disturbance that walks, trim that holds the states ``held`` at zero."""
-    a, b, e = matrices
-    n, m, k = *b.shape, e.shape[1]
-    process, walk, measured = noise
-    past = plant.history * m
+def _regulator(plant: SampledPlant, q: Array, r: Array, estimator: Array, held: slice | None) -> Regulator:
+    """Feedback that reckons with past torques, and the trim that holds the states ``held`` at zero."""
+    n, m, k = *plant.continuous[1].shape, plant.disturbance.shape[1]
     augmented_a, augmented_b = plant.augmented()
-    weight = np.zeros((n + past, n + past))
+    weight = np.zeros(augmented_a.shape)
     weight[:n, :n] = q
     feedback = discrete_lqr(augmented_a, augmented_b, weight, r)
-    wandering, density = np.zeros((n + k, n + k)), np.zeros((n + k, n + k))
-    wandering[:n, :n], wandering[:n, n:] = a, e
-    density[:n, :n], density[n:, n:] = process, walk**2 * np.eye(k)
-    predict = np.eye(n + k)
-    predict[:n, :n], predict[:n, n:] = plant.transition, plant.disturbance
-    output = np.hstack((plant.output, np.zeros((len(plant.output), k))))
-    gain = kalman_gain(predict, output, sampled_noise(wandering, density, plant.period), measured)
-    state, torque = steady_trim(a, b, e, held) if trim else (np.zeros((n, k)), np.zeros((m, k)))
-    return Regulator(plant, read_only(feedback), read_only(gain), state, torque)
+    trim_state, trim_input = np.zeros((n, k)), np.zeros((m, k))
+    if held is not None:
+        trim_state, trim_input = steady_trim(*plant.continuous, held)
+    return Regulator(plant, read_only(feedback), read_only(estimator), trim_state, trim_input)

@@ -176,10 +176,22 @@ class GuardParameters:
         meaning="distance from the equilibrium lean past which it can't come back, and torque goes off at once",
     )
     trim_moment: float = parameter(
-        "double", 25.0, unit="N m", low=0.1, high=1e3, runtime=True, meaning="greatest outside moment that the trim leans against"
+        "double",
+        25.0,
+        unit="N m",
+        low=0.1,
+        high=1e3,
+        runtime=True,
+        meaning="greatest outside moment that the trim leans against",
     )
     trim_rate: float = parameter(
-        "double", 25.0, unit="N m/s", low=0.1, high=1e5, runtime=True, meaning="how fast the trim may follow an outside moment; a push is faster"
+        "double",
+        25.0,
+        unit="N m/s",
+        low=0.1,
+        high=1e5,
+        runtime=True,
+        meaning="how fast the trim may follow an outside moment; a push is faster",
     )
     drive_torque: float = parameter(
         "double",

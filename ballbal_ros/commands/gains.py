@@ -124,8 +124,8 @@ def print_report(report: GainsReport, console: Console) -> None:
         console.print(
             f"{name}: bears {_number(1e3 * (loop.delay + measured.delay_limit))} ms of delay in all "
             f"({1e3 * loop.delay:g} ms reckoned with); peak sensitivity {measured.sensitivity_peak:.2f}, "
-            f"complementary {measured.complementary_peak:.2f} "
-            f"(no loop with this pole and delay gets below {measured.complementary_floor:.3f})"
+            f"complementary {measured.complementary_peak:.2f} (at least {measured.complementary_floor:.3f} "
+            "with this pole and delay, whatever the gains)"
         )
 
 
