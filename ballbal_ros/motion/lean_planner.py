@@ -144,15 +144,22 @@ def _solve(
     window = max(request.lead_in + 1.0, 1.2)
     for _ in range(_RELIEF_ROUNDS):
         at_start, at_end = solution.lean_rate[0] - start_rate, solution.lean_rate[-1]
-        if max(np.abs(at_start).max(), np.abs(at_end).max()) < _SETTLED_RATE:
-            return (problem, solution), ball
+        if _settled(at_start, at_end):
+            break
         relief = ball_relief(problem, solution, turn, at_start, at_end, window, limits, ball[0])
         added = relief.position, relief.rate, relief.acceleration
         for array, more in zip(ball, added, strict=True):
             array += more
         problem = problem.with_ball(turn, *added)
         solution = solve_lean(problem, start, end, solution.lean)
-    raise PlanError("plan", "no ball motion is found that begins where the robot is", "give it more lead-in")
+    if not _settled(solution.lean_rate[0] - start_rate, solution.lean_rate[-1]):
+        raise PlanError("plan", "no ball motion is found that begins where the robot is", "give it more lead-in")
+    return (problem, solution), ball
+
+
+def _settled(at_start: Array, at_end: Array) -> bool:
+    """Whether the lean rates [2] at a plan's ends are near enough to what they must be."""
+    return bool(np.abs(at_start).max() < _SETTLED_RATE and np.abs(at_end).max() < _SETTLED_RATE)
 
 
 def _relief_limits(

@@ -160,11 +160,14 @@ def _check_link(link: ElementTree.Element, urdf: str) -> None:
         return
     owner = f"link {link.get('name')}"
     mass = _numbers(inertial.find("mass"), "value", urdf, f"{owner}: mass")
-    if mass <= 0.0:
-        raise ModelError(urdf, f"{owner}: mass is {mass:g} kg", "a link with an inertial part has a positive mass")
     keys = ("ixx", "ixy", "ixz", "iyy", "iyz", "izz")
     xx, xy, xz, yy, yz, zz = (_numbers(inertial.find("inertia"), key, urdf, f"{owner}: inertia") for key in keys)
-    check_inertia(np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]]), urdf, f"{owner}: inertia")
+    inertia = np.array([[xx, xy, xz], [xy, yy, yz], [xz, yz, zz]])
+    # Without any inertia it is a point, or without mass a mere frame: many URDFs have them.
+    point = not inertia.any()
+    if mass < 0.0 or (mass == 0.0 and not point):
+        raise ModelError(urdf, f"{owner}: mass is {mass:g} kg", "a link with an inertial part has a positive mass")
+    check_inertia(inertia, urdf, f"{owner}: inertia", point_allowed=point)
 
 
 def _check_joint(joint: ElementTree.Element, links: set[str], urdf: str) -> None:

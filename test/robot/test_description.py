@@ -190,6 +190,24 @@ def test_links_inside_extensions_are_no_links():
     assert describe(add(".", extension)).joint_names == shelver().joint_names
 
 
+def test_frames_without_mass_and_point_masses_are_allowed():
+    """A link without mass and inertia is a frame, one with mass alone a point: both weigh what they say."""
+    inertia = "<inertia ixx='0' ixy='0' ixz='0' iyy='0' iyz='0' izz='0'/>"
+
+    def tagged(mass: float) -> RobotDescription:
+        def change(root: Element) -> None:
+            link = f"<link name='tag'><inertial><mass value='{mass}'/>{inertia}</inertial></link>"
+            root.append(ElementTree.fromstring(link))
+            joint = "<joint name='tag_joint' type='fixed'><parent link='left_hand'/><child link='tag'/></joint>"
+            root.append(ElementTree.fromstring(joint))
+
+        return describe(change)
+
+    bare = WholeBody(shelver()).mass
+    assert WholeBody(tagged(0.0)).mass == pytest.approx(bare, abs=1e-12)
+    assert WholeBody(tagged(0.2)).mass == pytest.approx(bare + 0.2, abs=1e-12)
+
+
 def test_a_description_can_not_be_changed():
     """The description's arrays are read-only."""
     for array in (shelver().position_low, shelver().drive.rate_map, shelver().rotation_imu_in_base):
