@@ -27,10 +27,11 @@ class ArmServo:
     """Joint servos with a critically damped bandwidth w, updated once a tick; the torque is held until the next.
 
     Wanted acceleration: ``ideal`` q'' = a + 2w (v_ref - v) + w² (q_ref - q); ``position_velocity`` without a;
-    ``position`` q'' = -2w v + w² (q_ref - q), which lags by 2/w. The torque that gives it is worked out from the
-    whole mass matrix: how base and ball answer to the arms' own motion is solved for, not taken from the last step,
-    as that would run away once the arms are heavy against the base. What the contact gives is that of the last step.
-    URDF effort limits hold.
+    ``position`` q'' = -2w v + w² (q_ref - q), which lags by 2/w. URDF effort limits hold.
+
+    With the arms' wanted acceleration a_a and all else free (f: base and ball), M_ff a_f = (applied + contact - bias)_f
+    - M_fa a_a gives what base and ball do, and M_aa a_a + M_af a_f + bias_a the arms' torque. (To take a_f from the
+    last step instead runs away once the arms are heavy against the base.) The contact's part is that of the last step.
     """
 
     def __init__(
@@ -57,11 +58,11 @@ class ArmServo:
         self._applied = data.qfrc_applied[first : first + count]
         self._bias = data.qfrc_bias[first : first + count]
         size = world.model.nv
-        self._free = np.array([i for i in range(size) if not first <= i < first + count])
+        self._free = np.setdiff1d(np.arange(size), np.arange(first, first + count))
         self._free_block = self._free[:, None] * size + self._free
-        self._mass_matrix, self._wanted, self._forces = np.zeros((size, size)), np.zeros(size), np.zeros(size)
+        self._mass_matrix = np.zeros((size, size))
+        self._wanted, self._forces, self._outside = np.zeros(size), np.zeros(size), np.zeros(size)
         self._wanted_arm, self._force = self._wanted[first : first + count], self._forces[first : first + count]
-        self._outside = np.zeros(size)
         self._all_applied, self._contact, self._all_bias = data.qfrc_applied, data.qfrc_constraint, data.qfrc_bias
         self._set_gains(parameters.physics_step)
         self._commands: list[tuple[int, Array]] = [(0, (self._gain * self._position)[None])]
@@ -99,21 +100,20 @@ class ArmServo:
         while len(commands) > 1 and commands[1][0] <= tick:
             del commands[0]
         first, table = commands[0]
-        wanted, force, outside, free = self._wanted_arm, self._force, self._outside, self._free
-        model, data = self._model, self._data
+        model, data, free = self._model, self._data, self._free
+        wanted, outside = self._wanted_arm, self._outside
         np.multiply(self._rate, -self._rate_gain, out=wanted)
         wanted += table[min(tick - first, len(table) - 1)]
         wanted -= self._gain * self._position
-        # M_ff a_f = (applied + contact - bias)_f - M_fa a_a gives the accelerations of base and ball, a_f.
-        self._wanted[free] = 0.0
         mujoco.mj_mulM(model, data, self._forces, self._wanted)
         np.add(self._all_applied, self._contact, out=outside)
         outside -= self._all_bias
         outside -= self._forces
         _full_mass_matrix(model, data, self._mass_matrix)
-        _, free_acceleration, _ = dposv(self._mass_matrix.take(self._free_block), outside[free])
-        self._wanted[free] = free_acceleration
+        self._wanted[free] = dposv(self._mass_matrix.take(self._free_block), outside[free])[1]
         mujoco.mj_mulM(model, data, self._forces, self._wanted)
+        self._wanted[free] = 0.0
+        force = self._force
         force += self._bias
         np.minimum(force, self._high, out=force)
         np.maximum(force, self._low, out=self._applied)

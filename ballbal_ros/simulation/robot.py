@@ -95,7 +95,8 @@ class SimulatedRobot:
         self._qpos, self._qvel, self._qfrc_constraint = data.qpos, data.qvel, data.qfrc_constraint
         self._base_axes, self._base_up = data.xmat[world.base], data.xmat[world.base][6:9]
         self._turning = data.qacc[3:6]
-        self._half_step_to_imu = 0.5 * self._model.opt.timestep * self.description.rotation_imu_in_base.T
+        half_step = 0.5 * self._model.opt.timestep
+        self._half_step_to_imu = (half_step * self.description.rotation_imu_in_base.T).tolist()
 
     def _set_start(self, model_body: WholeBody, posture: Array) -> None:
         """Stand at the model's equilibrium lean, sunk into the floor just so far that it carries all."""
@@ -131,8 +132,9 @@ class SimulatedRobot:
         imu[3:6] = [value / self._steps for value in self._felt]
         self._felt[:] = 0.0, 0.0, 0.0
         # The integrator's rates are half a step older than its positions: a gyro's are not.
-        for axis, gain in enumerate((self._half_step_to_imu @ self._turning).tolist()):
-            imu[axis] += gain
+        x, y, z = self._turning.tolist()
+        for axis, (ix, iy, iz) in enumerate(self._half_step_to_imu):
+            imu[axis] += ix * x + iy * y + iz * z
         return Sample(imu, self._drive.angle[:], self.arm_position)
 
     def measurement(self) -> Measurement:
@@ -155,10 +157,11 @@ class SimulatedRobot:
 
     def _move(self) -> None:
         model, data, drive, felt = self._model, self.data, self._drive, self._felt
+        torque = self._applied_to_ball
         if self._push is not None:
             self._apply_push(self._push)
         for step in range(self._steps):
-            self._applied_to_ball[:] = drive.torque(step)
+            torque[0], torque[1], torque[2] = drive.torque(step)
             self._feel_floor()
             mujoco.mj_step2(model, data)
             x, y, z = self._specific_force.tolist()
@@ -182,7 +185,8 @@ class SimulatedRobot:
         ux, uy, uz = self._base_up.tolist()
         spin = ux * (wx + xx * rx + xy * ry + xz * rz) + uy * (wy + yx * rx + yy * ry + yz * rz)
         spin += uz * (wz + zx * rx + zy * ry + zz * rz)
-        self._moment_on_ball[:] = self._floor.on_ball(self._qfrc_constraint.item(2), vx, vy, spin)
+        moment = self._moment_on_ball
+        moment[0], moment[1], moment[2] = self._floor.on_ball(self._qfrc_constraint.item(2), vx, vy, spin)
 
     def _apply_push(self, push: tuple[int, Array, Array]) -> None:
         body, at, force = push

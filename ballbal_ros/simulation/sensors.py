@@ -115,6 +115,7 @@ class SimulatedSensors:
             self._filter = AttitudeFilter((w, x, y, z), imu.attitude_time, 1.0 / self._rate)
         self._counts = [(max(step, 1e-12), 1.0 / max(step, 1e-12)) for step in description.drive.encoder_step.tolist()]
         self._arm_step = max(parameters.arm_encoder_step, 1e-12)
+        self._arm_counts = 1.0 / self._arm_step
         self._last_angle = self._angle = self._counted(start.drive_angle)
 
     def _counted(self, angle: list[float]) -> Array:
@@ -130,7 +131,7 @@ class SimulatedSensors:
             w, x, y, z = self._filter.update(gx - bx, gy - by, gz - bz, ax, ay, az)
         w, x, y, z = _turned(w, x, y, z, hx, hy, hz)
         self._last_angle, self._angle = self._angle, self._counted(sample.drive_angle)
-        arm = np.rint(sample.arm_position / self._arm_step)
+        arm = np.rint(sample.arm_position * self._arm_counts)
         arm *= self._arm_step
         imu = np.array((gx, gy, gz, ax, ay, az))
         return Measurement(stamp, (x, y, z, w), imu[:3], imu[3:], self._angle, arm)
