@@ -1,0 +1,48 @@
+"""Whether the loop can follow a lean plan that it is offered: the checks before it is acknowledged."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from ballbal_ros.balance.guard import BALANCING, ENGAGING, STOPPING
+from ballbal_ros.balance.loop import BalanceLoop
+from ballbal_ros.errors import PlanRefused
+from ballbal_ros.motion.lean_plan import LeanPlan
+
+_TOPIC = "lean_plan"
+
+
+def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> None:
+    """Raise :class:`PlanRefused` in one line unless the loop can follow the plan from ``start`` (s) on; ``now`` is its last tick.
+
+    Refused: while it does not balance, a start that is past, a lean beyond ``limits.lean``, a torque beyond what it may command, and
+    a lean that begins elsewhere than where the reference will be.
+    """
+    guard, limits = loop.guard, loop.description.parameters.limits
+    if guard.state not in (ENGAGING, BALANCING, STOPPING):
+        raise PlanRefused(
+            _TOPIC, f"came while the balance is {guard.state}", "send it once balance_state says balancing"
+        )
+    if start < now - 1e-9:
+        raise PlanRefused(
+            _TOPIC, f"starts at {start:.3f} s, and it is {now:.3f} s", "give it a start that is still to come"
+        )
+    lean = float(np.hypot(*plan.lean.T).max())
+    if lean > limits.lean:
+        raise PlanRefused(_TOPIC, f"leans {lean:.3f} rad", f"limits.lean is {limits.lean:g} rad")
+    torque = float(np.abs(plan.torque).max())
+    if torque > limits.drive_torque:
+        raise PlanRefused(
+            _TOPIC, f"has a torque of {torque:.3g} N m", f"limits.drive_torque is {limits.drive_torque:g} N m"
+        )
+    roll, pitch = loop.reference.lean_at(start)
+    jump = math.hypot(float(plan.lean[0, 0]) - roll, float(plan.lean[0, 1]) - pitch)
+    most = loop.parameters.limits.engage_lean
+    if jump > most:
+        raise PlanRefused(
+            _TOPIC,
+            f"begins {jump:.3f} rad from where the lean will be",
+            f"it takes at most {most:g} rad: plan from where it is",
+        )

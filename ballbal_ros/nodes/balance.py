@@ -1,0 +1,179 @@
+"""Node ``balance`` (lifecycle): one tick of the balance loop for each measurement, as soon as it is complete."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from rclpy.lifecycle import LifecycleNode, TransitionCallbackReturn
+
+from ballbal_ros.balance.gains import checked_design
+from ballbal_ros.balance.loop import BalanceLoop
+from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.errors import BallbalError
+from ballbal_ros.nodes import process
+from ballbal_ros.nodes.balance_messages import BalanceMessages
+from ballbal_ros.nodes.balance_requests import BalanceRequests
+from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
+from ballbal_ros.nodes.lock_step import is_looked_at
+from ballbal_ros.nodes.messages import BILLION
+from ballbal_ros.nodes.parameters import BalanceNodeParameters, NodeParameters
+from ballbal_ros.nodes.senses import Senses
+from ballbal_ros.nodes.topics import subscribe
+from ballbal_ros.robot.parameters import RobotParameters
+from ballbal_ros.robot.whole_body import WholeBody
+
+_STATE_EVERY = BILLION // 5
+_SUCCESS, _FAILURE = TransitionCallbackReturn.SUCCESS, TransitionCallbackReturn.FAILURE
+
+
+class BalanceNode(LifecycleNode):
+    """Keeps the robot on its ball while it is active. The tick runs in the callback of the message that completes it."""
+
+    def __init__(self) -> None:
+        super().__init__("balance", **process.NODE_OPTIONS)
+        parameters = NodeParameters(
+            self, {"robot.yaml": RobotParameters, "balance.yaml": BalanceParameters, "node": BalanceNodeParameters}
+        )
+        own: BalanceNodeParameters = parameters["node"]
+        self.parameters: BalanceParameters = parameters["balance.yaml"]
+        self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
+        parameters.declare()
+        self.loop: BalanceLoop | None = None
+        self.active = False
+        self.ns = -1
+        self._period_ns = round(self.parameters.loop.period * BILLION)
+        self._odom_every = max(1, round(self.parameters.loop.rate / own.odom_rate))
+        self._ticks, self._ticks_before = 0, 0
+        self._answer = np.zeros(len(self.description.drive.names))
+        self._said, self._said_at = "", 0
+        self._messages = BalanceMessages(self, self.description, None if own.lock_step else own.command_lifespan)
+        self.diagnostics = Diagnostics(self, self.description.name, self._report)
+        self.requests = BalanceRequests(self)
+        self._senses = Senses(self.description, self.parameters, own.lock_step, self._tick, self.diagnostics)
+        subscribe(self, "joint_states", self._senses.on_arms, raw=True)
+        subscribe(self, "drive_states", self._senses.on_drive, every=own.lock_step, raw=True)
+        subscribe(self, own.imu_topic, self._senses.on_imu, every=own.lock_step, raw=True)
+
+    def _tick(self, ns: int) -> None:
+        """Answer the measurement of ``ns``; one that came before is answered as before."""
+        loop = self.loop
+        if loop is None or not self.active:
+            return
+        if ns <= self.ns:
+            if ns == self.ns:
+                self._messages.command(ns, self._answer)
+            return
+        self.ns = ns
+        self._answer = loop.tick(self._senses.measurement)
+        self._messages.command(ns, self._answer)
+        self._ticks += 1
+        if self._ticks % self._odom_every == 0:
+            self.requests.go_on(ns)
+            self._messages.odometry(ns, loop)
+        state = loop.guard.state
+        due = state != self._said or ns - self._said_at >= _STATE_EVERY
+        if due or (state in ("standby", "engaging") and is_looked_at(ns, self._period_ns)):
+            self.say_state()
+
+    def say_state(self) -> None:
+        """Publish ``balance_state`` now."""
+        self._said = "inactive" if self.loop is None or not self.active else self.loop.guard.state
+        self._said_at = self.ns
+        self._messages.state(self.ns, self.loop, self.active, self.requests.notes)
+
+    def _make_loop(self) -> BalanceLoop:
+        arms = self._senses.arms
+        if not arms.complete:
+            raise BallbalError(
+                "joint_states", f"has not told of {', '.join(arms.missing())}", "publish the arms' joint states first"
+            )
+        loads, to_come = self.requests.loads_at(arms.stamp)
+        posture = WholeBody(self.description, loads).posture(arms.position)
+        checked_design(posture, self.description, self.parameters)
+        loop = BalanceLoop(self.description, self.parameters, arms.position.copy(), loads)
+        for stamp, load in to_come:
+            loop.set_load(load, stamp)
+        loop.supported = self.requests.supported
+        return loop
+
+    def on_configure(self, state: Any) -> TransitionCallbackReturn:
+        """Make the loop for the posture and loads of now; refused where the gains don't keep their margins there."""
+        return self._try("configure", self._configure)
+
+    def _configure(self) -> None:
+        self.loop = self._make_loop()
+        self.ns = -1
+        process.settle_memory()
+
+    def on_activate(self, state: Any) -> TransitionCallbackReturn:
+        """From the next measurement on the guard may let torque out."""
+        return self._try("activate", self._activate)
+
+    def _activate(self) -> None:
+        if self.ns >= 0:
+            self.loop = self._make_loop()
+        self.active = True
+        self.requests.begin()
+
+    def on_deactivate(self, state: Any) -> TransitionCallbackReturn:
+        """Torque off."""
+        return self._try("deactivate", self._let_go)
+
+    def on_cleanup(self, state: Any) -> TransitionCallbackReturn:
+        """Forget the loop."""
+        return self._try("cleanup", self._forget)
+
+    def on_shutdown(self, state: Any) -> TransitionCallbackReturn:
+        """Torque off, and forget the loop."""
+        return self._try("shutdown", self._forget)
+
+    def _let_go(self) -> None:
+        was_active, self.active = self.active, False
+        if was_active and self.ns >= 0:
+            self._answer = np.zeros_like(self._answer)
+            self._messages.command(self.ns, self._answer)
+
+    def _forget(self) -> None:
+        self._let_go()
+        self.loop = None
+
+    def _try(self, what: str, step: Any) -> TransitionCallbackReturn:
+        try:
+            step()
+        except BallbalError as error:
+            self.diagnostics.refuse(what, str(error))
+            self.get_logger().error(f"{what}: {error}")
+            return _FAILURE
+        self.diagnostics.accept(what)
+        self.say_state()
+        return _SUCCESS
+
+    def leave(self) -> None:
+        """Torque off before the process ends."""
+        self._let_go()
+
+    def _report(self) -> tuple[bytes, str, Mapping[str, object]]:
+        ticks, self._ticks_before = self._ticks - self._ticks_before, self._ticks
+        values: dict[str, object] = {
+            "ticks in the last second": ticks,
+            "tf": "yes" if self._messages.has_tf else "no tf2_msgs here",
+        }
+        loop = self.loop
+        if loop is None or not self.active:
+            return OK, "inactive", values
+        state = loop.guard.state
+        values.update({"reason": loop.guard.reason, "last tick": max(self.ns, 0) / BILLION})
+        if state == "tripped":
+            return ERROR, state, values
+        return (WARN if ticks == 0 or state in ("stopping", "released") else OK), state, values
+
+
+def main() -> None:
+    """Run the node."""
+    process.main(BalanceNode)
+
+
+if __name__ == "__main__":
+    main()

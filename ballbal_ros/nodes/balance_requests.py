@@ -1,0 +1,175 @@
+"""What the balance node is asked for: lean plans, loads, velocities, goals, stops, a reset."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+from std_srvs.srv import Trigger
+
+from ballbal_ros.balance.acceptance import check_plan
+from ballbal_ros.balance.goal import Goal
+from ballbal_ros.balance.guard import BALANCING
+from ballbal_ros.balance.loop import BalanceLoop
+from ballbal_ros.errors import BallbalError, PlanRefused
+from ballbal_ros.nodes.messages import BILLION, load_of, seconds, stamp_text
+from ballbal_ros.nodes.topics import subscribe
+from ballbal_ros.nodes.trajectories import lean_plan_of
+from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
+from ballbal_ros.robot.loads import Load
+
+if TYPE_CHECKING:
+    from ballbal_ros.nodes.balance import BalanceNode
+
+_VELOCITY_LASTS = BILLION // 2
+
+
+class BalanceRequests:
+    """Takes requests in, checks them, and hands them to the loop. What is refused is told in ``/diagnostics``."""
+
+    def __init__(self, node: BalanceNode) -> None:
+        self._node = node
+        self.supported = False
+        self.notes: dict[str, str] = {}
+        self._emergency = False
+        self._loads: list[tuple[float, Load]] = []
+        self._goal: Goal | None = None
+        self._velocity_until = -1
+        subscribe(node, "hand_load", self._on_load)
+        subscribe(node, "lean_plan", self._on_lean_plan)
+        subscribe(node, "cmd_vel", self._on_velocity)
+        subscribe(node, "goal_pose", self._on_goal)
+        subscribe(node, "emergency_stop", self._on_emergency_stop)
+        subscribe(node, "support", self._on_support)
+        node.create_service(Trigger, "~/reset", self._on_reset)
+
+    def begin(self) -> None:
+        """The loop starts anew: nothing asked before holds, but an emergency stop does."""
+        self.notes.clear()
+        self._goal, self._velocity_until = None, -1
+        if self._emergency:
+            self._stop()
+
+    def loads_at(self, now: int) -> tuple[list[Load], list[tuple[float, Load]]]:
+        """What the hands hold at ``now``, in ns, and the changes to come."""
+        held = {load.hand: load for stamp, load in self._loads if stamp <= now / BILLION + 1e-9}
+        return list(held.values()), [(stamp, load) for stamp, load in self._loads if stamp > now / BILLION + 1e-9]
+
+    def go_on(self, now: int) -> None:
+        """Follow the goal, or the commanded velocity until it is too old; ``now`` in ns."""
+        loop = self._node.loop
+        if loop is None:
+            return
+        if self._goal is not None and loop.guard.state == BALANCING:
+            reference = loop.reference
+            wanted = self._goal.velocity((reference.station[0], reference.station[1]), reference.frame_heading)
+            reference.set_velocity(*wanted)
+            if wanted == (0.0, 0.0, 0.0):
+                self._goal = None
+        elif 0 <= self._velocity_until < now:
+            self._velocity_until = -1
+            loop.reference.set_velocity(0.0, 0.0, 0.0)
+
+    def _refuse(self, topic: str, error: BallbalError) -> None:
+        self._node.diagnostics.refuse(topic, str(error))
+
+    def _on_load(self, message: Any) -> None:
+        try:
+            stamp, load = load_of(message, self._node.description)
+        except BallbalError as error:
+            self._refuse("hand_load", error)
+            return
+        self._node.diagnostics.accept("hand_load")
+        self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
+        if self._node.loop is not None:
+            self._node.loop.set_load(load, stamp)
+
+    def _on_lean_plan(self, message: Any) -> None:
+        """Take a plan, and acknowledge it by its stamp in ``balance_state``; or say there why not."""
+        node, start = self._node, stamp_text(message.header.stamp)
+        try:
+            if node.loop is None or not node.active:
+                raise PlanRefused("lean_plan", "came while balance is not active", "activate it first")
+            plan = lean_plan_of(message)
+            check_plan(plan, seconds(message.header.stamp), max(node.ns, 0) / BILLION, node.loop)
+            node.loop.add_plan(seconds(message.header.stamp), plan)
+        except BallbalError as error:
+            self._refuse("lean_plan", error)
+            self.notes.update({"refused plan": start, "refusal": str(error)})
+        else:
+            node.diagnostics.accept("lean_plan")
+            self.notes = {"plan": start}
+            self._goal = None
+        node.say_state()
+
+    def _loop_that_balances(self, topic: str) -> BalanceLoop | None:
+        loop = self._node.loop
+        if loop is not None and self._node.active and loop.guard.state == BALANCING:
+            return loop
+        self._refuse(
+            topic, BallbalError(topic, "came while it does not balance", "wait for balance_state to say balancing")
+        )
+        return None
+
+    def _on_velocity(self, message: Any) -> None:
+        twist, frame = message.twist, message.header.frame_id
+        wanted = (twist.linear.x, twist.linear.y, twist.angular.z)
+        fastest = self._node.description.parameters.limits.ball_speed
+        loop = self._loop_that_balances("cmd_vel")
+        if loop is None:
+            return
+        if (
+            frame not in ("", "base_footprint")
+            or not math.hypot(wanted[0], wanted[1]) <= fastest
+            or not math.isfinite(wanted[2])
+        ):
+            what = f"is {wanted} in frame {frame!r}"
+            self._refuse(
+                "cmd_vel", BallbalError("cmd_vel", what, f"it takes base_footprint and at most {fastest:g} m/s")
+            )
+            return
+        self._node.diagnostics.accept("cmd_vel")
+        self._goal, self._velocity_until = None, self._node.ns + _VELOCITY_LASTS
+        loop.reference.set_velocity(*wanted)
+
+    def _on_goal(self, message: Any) -> None:
+        place, turn, frame = message.pose.position, message.pose.orientation, message.header.frame_id
+        values = (place.x, place.y, turn.x, turn.y, turn.z, turn.w)
+        if self._loop_that_balances("goal_pose") is None:
+            return
+        if frame != "odom" or not all(map(math.isfinite, values)) or abs(sum(v * v for v in values[2:]) - 1.0) > 1e-2:
+            what = f"is {values} in frame {frame!r}"
+            self._refuse(
+                "goal_pose", BallbalError("goal_pose", what, "it takes a finite place and a unit quaternion in odom")
+            )
+            return
+        self._node.diagnostics.accept("goal_pose")
+        self._goal = Goal(place.x, place.y, lean_and_heading_from_quat_xyzw(turn.x, turn.y, turn.z, turn.w)[2])
+
+    def _on_support(self, message: Any) -> None:
+        self.supported = bool(message.data)
+        if self._node.loop is not None:
+            self._node.loop.supported = self.supported
+
+    def _on_emergency_stop(self, message: Any) -> None:
+        """Latched: false alone does not end it, a person's reset does."""
+        self._emergency = bool(message.data)
+        if self._emergency:
+            self._stop()
+            self._node.say_state()
+
+    def _stop(self) -> None:
+        self._goal, self._velocity_until = None, -1
+        if self._node.loop is not None:
+            self._node.loop.stop("emergency stop")
+
+    def _on_reset(self, _: Any, response: Any) -> Any:
+        loop = self._node.loop
+        if loop is None or self._emergency:
+            response.success = False
+            response.message = "emergency_stop is still true: release it first" if self._emergency else "not configured"
+            return response
+        loop.guard.reset()
+        self._node.say_state()
+        response.success, response.message = True, "it engages once it is upright and still"
+        return response

@@ -1,0 +1,74 @@
+"""What each node says of itself on ``/diagnostics``, once a second and at once when it refuses something."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+
+from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
+from rclpy.clock import Clock, ClockType
+from rclpy.duration import Duration
+from rclpy.node import Node
+
+from ballbal_ros.nodes.topics import publisher
+
+OK, WARN, ERROR = DiagnosticStatus.OK, DiagnosticStatus.WARN, DiagnosticStatus.ERROR
+
+
+def key_values(values: Mapping[str, object]) -> list[KeyValue]:
+    """Names and values as a diagnostic message carries them; numbers with six digits."""
+    return [KeyValue(key=k, value=f"{v:.6g}" if isinstance(v, float) else str(v)) for k, v in values.items()]
+
+
+def values_of(status: DiagnosticStatus) -> dict[str, str]:
+    """The values of a status by their name."""
+    return {pair.key: pair.value for pair in status.values}
+
+
+class Diagnostics:
+    """One node's status. ``report`` gives (level, message, values); it is asked once a second of wall time (a steady clock).
+
+    ``hardware`` is the robot's name.
+    """
+
+    def __init__(
+        self, node: Node, hardware: str, report: Callable[[], tuple[bytes, str, Mapping[str, object]]]
+    ) -> None:
+        self._node, self._report = node, report
+        self._publisher = publisher(node, "/diagnostics")
+        self._status = DiagnosticStatus(name=node.get_fully_qualified_name(), hardware_id=hardware)
+        self._refusals: dict[str, str] = {}
+        self.refused = 0
+        self._timer = node.create_timer(1.0, self.publish, clock=Clock(clock_type=ClockType.STEADY_TIME))
+
+    def refuse(self, topic: str, reason: str) -> None:
+        """Say, at once and from now on, that what came on a topic was refused, and why; the same reason is said at once only once."""
+        self.refused += 1
+        if self._refusals.get(topic) != reason:
+            self._refusals[topic] = reason
+            self.publish()
+
+    def accept(self, topic: str) -> None:
+        """Forget what was refused on a topic, as what came now is in order."""
+        self._refusals.pop(topic, None)
+
+    @property
+    def refusals(self) -> dict[str, str]:
+        """The last refusal of each topic whose last message was refused."""
+        return dict(self._refusals)
+
+    def publish(self) -> None:
+        """Publish the status now."""
+        level, message, values = self._report()
+        reasons = {f"refused {topic}": reason for topic, reason in self._refusals.items()}
+        status = self._status
+        status.level = max(level, WARN) if reasons else level
+        status.message = message
+        status.values = key_values({**values, **reasons})
+        array = DiagnosticArray(status=[status])
+        array.header.stamp = self._node.get_clock().now().to_msg()
+        self._publisher.publish(array)
+
+    def publish_and_wait(self, timeout: float = 0.5) -> None:
+        """Publish the status now, and wait up to ``timeout`` s until whoever listens has it."""
+        self.publish()
+        self._publisher.wait_for_all_acked(Duration(nanoseconds=int(timeout * 1e9)))

@@ -1,0 +1,91 @@
+"""What the simulated robot waits for, besides the drive command, before it leaves an instant."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from rclpy.node import Node
+
+from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY
+from ballbal_ros.nodes.diagnostics import values_of
+from ballbal_ros.nodes.messages import BILLION
+
+_LOOK_AGAIN = 20_000_000
+
+
+def is_looked_at(ns: int, period_ns: int) -> bool:
+    """Whether the tick ``ns`` is one at which ``balance`` says its state while it does not balance yet, and the stand looks at it.
+
+    That is the first tick of each 20 ms.
+    """
+    return ns % _LOOK_AGAIN < period_ns
+
+
+def text_nanoseconds(text: str) -> int:
+    """A stamp written ``sec.nanosec`` in ns; -1 for what is none."""
+    sec, dot, nanosec = text.partition(".")
+    return int(sec) * BILLION + int(nanosec) if dot and sec.isdigit() and nanosec.isdigit() else -1
+
+
+class LockStep:
+    """Keeps a run independent of when messages come: an instant ends only when all that belongs to it is here.
+
+    That is, besides the drive command: an answer to each arm plan and the arm command it announces; while the stand holds the robot
+    and at certain instants, the guard's state of that very instant (without a balance node that tells it, the stand stays).
+    """
+
+    def __init__(self, node: Node, period_ns: int, wait_for_plan: bool) -> None:
+        self._node, self._period = node, period_ns
+        self._plans = self._reports = 0
+        self._wanted = 1 if wait_for_plan else 0
+        self._commands: set[int] = set()
+        self._announced: set[int] = set()
+        self._state, self._state_stamp = "", -1
+        self._on_the_way = True
+
+    def arm_plan_came(self) -> None:
+        """Somebody wants an arm motion: time waits for the answer."""
+        self._plans += 1
+
+    def plan_report_came(self, message: Any) -> None:
+        """An answer to an arm plan; it may announce an arm command by its stamp."""
+        for status in message.status:
+            self._reports += status.name == "arm_plan"
+            announced = text_nanoseconds(values_of(status).get("arm_command", ""))
+            if announced >= 0 and announced not in self._commands:
+                self._announced.add(announced)
+
+    def arm_command_came(self, stamp: int) -> None:
+        """An arm command, by its stamp in ns."""
+        self._commands.add(stamp)
+        self._announced.discard(stamp)
+
+    def balance_state_came(self, state: str, values: Mapping[str, str]) -> None:
+        """What the balance node says of itself."""
+        self._state, self._state_stamp = state, text_nanoseconds(values.get("stamp", ""))
+        # A stand put under a robot that balances stays until the robot has engaged anew.
+        self._on_the_way = self._on_the_way or state in (STANDBY, ENGAGING)
+
+    def lets_go(self, now: int, lock_step: bool) -> bool:
+        """Whether the stand may let go at ``now``, in ns: the guard balances, and it has engaged while the stand held."""
+        if self._state != BALANCING or not self._on_the_way or (lock_step and not is_looked_at(now, self._period)):
+            return False
+        self._on_the_way = False
+        return True
+
+    def silent(self, now: int, support: bool) -> str:
+        """What is still missing at ``now``, in ns, and who should say it; empty when nothing is."""
+        if self._reports < max(self._plans, self._wanted):
+            wanted = "arm_plan" if self._plans < self._wanted else "plan_report"
+            return f"{wanted}: {'nobody has sent the plan it waits for' if wanted == 'arm_plan' else 'arm_compensation is silent'}"
+        if self._announced:
+            return "the arm_command that plan_report announced: arm_compensation is silent"
+        if support and self._on_the_way and is_looked_at(now, self._period) and self._state_is_old(now):
+            return "balance_state of this instant: balance is silent"
+        return ""
+
+    def _state_is_old(self, now: int) -> bool:
+        if self._state not in (STANDBY, ENGAGING):
+            return not self._state and self._node.count_publishers("balance_state") > 0
+        return self._state_stamp < now

@@ -1,0 +1,132 @@
+"""How a node lives as a process: start, spin, leave; and where it takes the robot's URDF from."""
+
+from __future__ import annotations
+
+import contextlib
+import gc
+import sys
+import time
+from collections.abc import Callable
+from typing import Any
+
+import rclpy
+from rclpy.exceptions import ParameterException
+from rclpy.executors import ExternalShutdownException, SingleThreadedExecutor
+from rclpy.node import Node
+from rclpy.wait_for_message import wait_for_message
+
+from ballbal_ros.errors import BallbalError, ModelError
+from ballbal_ros.nodes.parameters import robot_file
+from ballbal_ros.nodes.topics import TOPICS, _profile
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.parameters import RobotParameters
+
+try:
+    from rclpy.experimental import EventsExecutor as QuickExecutor
+except ImportError:
+    QuickExecutor = SingleThreadedExecutor
+
+NODE_OPTIONS: dict[str, Any] = {"automatically_declare_parameters_from_overrides": True}
+_DESCRIPTION_TIMEOUT = 5.0
+
+
+def executor() -> Any:
+    """The executor that answers a message soonest with this rclpy."""
+    return QuickExecutor()
+
+
+def settle_memory() -> None:
+    """Collect what set-up left behind and take the rest out of later collections, which would stop a loop for 30 ms."""
+    gc.collect()
+    gc.freeze()
+
+
+def run(make: Callable[[], Node]) -> int:
+    """Make a node, spin it until it is told to leave or its ``exit_status`` is set, and return the process's exit status.
+
+    2 where what it was given is wrong: then one line on standard error says so, and nothing was published.
+    """
+    try:
+        rclpy.init(args=sys.argv)
+    except Exception as error:
+        return _wrong(f"--ros-args: {_one_line(error)}")
+    node: Node | None = None
+    status, spinner = 0, None
+    try:
+        node = make()
+        settle_memory()
+        spinner = executor()
+        spinner.add_node(node)
+        while rclpy.ok() and getattr(node, "exit_status", None) is None:
+            spinner.spin_once(timeout_sec=0.5)
+        status = getattr(node, "exit_status", None) or 0
+    except (KeyboardInterrupt, ExternalShutdownException):
+        status = 0
+    except BallbalError as error:
+        status = _wrong(str(error)) if node is None else _failed(str(error))
+    except (ParameterException, rclpy.exceptions.InvalidParameterTypeException) as error:
+        status = _wrong(f"parameters: {_one_line(error)}")
+    finally:
+        _leave(node, spinner)
+    return status
+
+
+def _leave(node: Node | None, spinner: Any) -> None:
+    """Take everything down in order, so that the middleware leaves no shared memory behind."""
+    with contextlib.suppress(KeyboardInterrupt, Exception):
+        if node is not None and hasattr(node, "leave"):
+            node.leave()
+    for step in (getattr(spinner, "shutdown", None), getattr(node, "destroy_node", None), rclpy.try_shutdown):
+        with contextlib.suppress(KeyboardInterrupt, Exception):
+            if step is not None:
+                step()
+
+
+def _one_line(error: BaseException) -> str:
+    return " ".join(str(error).split())[:300]
+
+
+def _wrong(line: str) -> int:
+    print(line, file=sys.stderr, flush=True)
+    return 2
+
+
+def _failed(line: str) -> int:
+    print(line, file=sys.stderr, flush=True)
+    return 1
+
+
+def main(make: Callable[[], Node]) -> None:
+    """Run a node as this process's whole job."""
+    sys.exit(run(make))
+
+
+def describe(node: Node, parameters: RobotParameters, wait: float) -> RobotDescription:
+    """The robot's description: its URDF from ``robot_description`` where that is published within ``wait`` s, else from the file.
+
+    Raises :class:`BallbalError` in one line.
+    """
+    until = time.monotonic() + wait
+    while wait > 0.0:
+        if node.count_publishers("robot_description") > 0:
+            return RobotDescription.from_urdf(parameters, _published(node), "robot_description", str(robot_file()))
+        if time.monotonic() >= until:
+            break
+        time.sleep(0.02)
+    return RobotDescription.from_parameters(parameters, robot_file())
+
+
+def _published(node: Node) -> str:
+    message, kind = TOPICS["robot_description"]
+    came, found = wait_for_message(
+        message,
+        node,
+        "robot_description",
+        qos_profile=_profile(kind.depth, kept=True),
+        time_to_wait=_DESCRIPTION_TIMEOUT,
+    )
+    if not came or found is None:
+        raise ModelError(
+            "robot_description", "is published, but nothing came", "check its quality of service: transient local"
+        )
+    return str(found.data)
