@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import math
 from pathlib import Path
 from typing import Annotated, Any
@@ -16,9 +15,9 @@ from ballbal_ros.balance.gains import Gains, Requirement, design, margins, poles
 from ballbal_ros.balance.linear_model import STATES, LinearModel
 from ballbal_ros.balance.margins import Margins
 from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.commands.files import write_json
 from ballbal_ros.commands.posture import AskedPosture, asked_posture
 from ballbal_ros.declaration import declarations, flatten, load
-from ballbal_ros.errors import BallbalError
 from ballbal_ros.robot.description import RobotDescription
 
 
@@ -193,12 +192,7 @@ def run_gains(
     report = gains_report(robot, plan, joints, loads)
     print_report(report, console or Console())
     if json_file is not None:
-        try:
-            json_file.write_text(json.dumps(report_as_data(report), indent=2, allow_nan=False) + "\n", encoding="utf-8")
-        except OSError as error:
-            raise BallbalError(
-                str(json_file), f"can't be written: {error.strerror}", "give the path of a file to write"
-            ) from error
+        write_json(json_file, report_as_data(report))
     return 0 if report.ok else 1
 
 
@@ -214,9 +208,4 @@ def gains_command(
     json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
     """Weights to gains, closed-loop poles, margins, and what delay the loop can bear."""
-    try:
-        status = run_gains(robot, posture, tuple(joint or ()), tuple(load or ()), json_file)
-    except BallbalError as error:
-        typer.echo(str(error), err=True)
-        raise typer.Exit(2) from error
-    raise typer.Exit(status)
+    raise typer.Exit(run_gains(robot, posture, tuple(joint or ()), tuple(load or ()), json_file))
