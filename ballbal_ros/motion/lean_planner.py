@@ -23,6 +23,8 @@ from ballbal_ros.robot.whole_body import WholeBody
 _FRICTION_RATE = 0.05
 _SETTLED_RATE = 1e-5
 _RELIEF_ROUNDS = 3
+# Of each limit; the rest is for the rotors and for what is not linear, of which the spin moment has most.
+_RESERVE, _SPIN_RESERVE = 0.93, 0.85
 
 
 @attrs.frozen(eq=False)
@@ -165,11 +167,14 @@ def _settled(at_start: Array, at_end: Array) -> bool:
 def _relief_limits(
     description: RobotDescription, parameters: CompensationParameters, terms: UpperBodyTerms
 ) -> ReliefLimits:
-    use, limits = parameters.acceptance, description.parameters.limits
-    weight = (float(terms.mass.min()) + description.parameters.ball.mass) * GRAVITY
-    return ReliefLimits(
-        torque=0.95 * use.torque_use * limits.drive_torque,
-        grip=0.9 * use.friction_use * description.parameters.floor.friction * weight,
+    use, floor = parameters.acceptance, description.parameters.floor
+    ball, drive = description.parameters.ball, description.drive
+    weight = (float(terms.mass.min()) + ball.mass) * GRAVITY
+    return ReliefLimits.of(
+        torque=_RESERVE * use.torque_use * description.parameters.limits.drive_torque,
+        grip=_RESERVE * use.friction_use * floor.friction * weight * ball.radius,
+        torsion=_SPIN_RESERVE * use.torsion_use * floor.torsion * weight,
+        efforts=drive.effort_map / (_RESERVE * use.torque_use * drive.effort_limit)[:, None],
     )
 
 

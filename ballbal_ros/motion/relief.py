@@ -10,8 +10,6 @@ linear programming (HiGHS).
 
 from __future__ import annotations
 
-from typing import NamedTuple
-
 import attrs
 import numpy as np
 from numpy.typing import NDArray
@@ -20,8 +18,8 @@ from scipy.optimize import linprog
 
 from ballbal_ros.errors import PlanRefused
 from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, answer_to_ball, solve_bands
-from ballbal_ros.robot.arrays import Array
-from ballbal_ros.robot.balance_rows import BalanceRows
+from ballbal_ros.robot.arrays import Array, apply, skew
+from ballbal_ros.robot.attitude import rotation_lean
 
 _KNOT = 0.04
 _FEW_PIECES, _MOST_PIECES = 8, 32
@@ -32,13 +30,29 @@ _SMALL = 3e-4
 _RATE = 8.0
 # What the linear program gives in travel, mm, to save the whole torque limit.
 _TORQUE_PRICE = 1.0
+# Shares of a limit by which a motion may be beyond it before the program hears of it.
+_BEYOND = 0.01
 
 
-class ReliefLimits(NamedTuple):
-    """What the ball motion may use: drive torque about x and y, N m, and horizontal force on the floor, N."""
+@attrs.frozen(eq=False)
+class ReliefLimits:
+    """What the ball motion may ask of drive and floor.
 
-    torque: float
-    grip: float
+    ``demands`` [K, 3]: share of each limit that one newton metre of drive torque about x, y, z takes. The first two are
+    for the torque about x and y themselves.
+    """
+
+    demands: Array
+
+    @classmethod
+    def of(cls, torque: float, grip: float, torsion: float, efforts: Array) -> ReliefLimits:
+        """From the torque about x or y, the floor's horizontal force times the ball's radius, its spin moment, all N m,
+        and the share [n, 3] of each actuator's limit.
+        """
+        level, slant = np.eye(2, 3), np.array([[1.0, 1.0, 0.0], [1.0, -1.0, 0.0]]) / np.sqrt(2.0)
+        spin = np.array([[0.0, 0.0, 1.0 / max(torsion, 1e-3)]])
+        # The force is the torque by the ball's radius; an octagon stands for its circle.
+        return cls(np.concatenate((level / min(torque, grip), slant / grip, spin, efforts)))
 
 
 @attrs.frozen(eq=False)
@@ -118,17 +132,16 @@ class _Response:
         """The lean rates at start and end [4, 2m]."""
         return np.concatenate((self.rate[0], self.rate[-1]))
 
-    def torque(self, problem: LeanProblem, rows: BalanceRows, turn: Array) -> Array:
-        """The drive torque [N, 2, 2m] about x and y."""
+    def torque(self, problem: LeanProblem, solution: LeanSolution, turn: Array) -> Array:
+        """The drive torque [N, 3, 2m]."""
+        rows = solution.rows
         push = _along_both_axes(turn, self.basis.acceleration)
         lean = np.concatenate((self.lean, self.rate), axis=1)
         forced = rows.by_ball_acceleration @ push + rows.by_lean[:, :, :4] @ lean
         acceleration = -np.linalg.solve(rows.by_lean[..., 4:6], forced)
-        torque = rows.wrench_by_lean[:, 3:5] @ np.concatenate((lean, acceleration), axis=1)
-        whole = problem.ball_radius * (problem.terms.mass + problem.ball_apparent_mass)
-        lever = rows.by_ball_acceleration[:, 1, 0] - whole
-        torque[:, 0] -= lever[:, None] * push[:, 1]
-        torque[:, 1] += lever[:, None] * push[:, 0]
+        torque = rows.wrench_by_lean[:, 3:] @ np.concatenate((lean, acceleration), axis=1)
+        moment = apply(rotation_lean(solution.lean), problem.terms.moment)
+        torque += skew(moment)[:, :, :2] @ push
         return np.asarray(torque)
 
     def least_squares(self, wanted: Array, rows: slice) -> Array:
@@ -174,9 +187,8 @@ def ball_relief(
     begin = first.motion(weights)
     if np.hypot(*begin.position.T).max() > _SMALL:
         first = response(start_window, max(_KNOT, start_window / _MOST_PIECES), at_end=False)
-        bound = min(limits.torque, problem.ball_radius * limits.grip)
-        torque = first.torque(problem, solution.rows, turn) / bound, solution.rows.torque[:, :2] / bound
-        weights = _least_travel(first, present, -mismatch_start, torque)
+        torque = first.torque(problem, solution, turn), solution.rows.torque
+        weights = _least_travel(first, present, -mismatch_start, torque, limits.demands)
         begin = first.motion(weights)
     last = response(_END_WINDOW, _END_WINDOW / _FEW_PIECES, at_end=True)
     end = last.motion(last.least_squares(-mismatch_end - first.end_rates[2:] @ weights, slice(2, 4)))
@@ -188,40 +200,57 @@ def _along_both_axes(turn: Array, motion: Array) -> Array:
     return np.concatenate((turn[:, :, :1] * motion[:, None], turn[:, :, 1:] * motion[:, None]), axis=2)
 
 
-def _least_travel(response: _Response, present: Array, wanted: Array, torque: tuple[Array, Array]) -> Array:
+def _least_travel(
+    response: _Response, present: Array, wanted: Array, torque: tuple[Array, Array], demands: Array
+) -> Array:
     """The weights [2m] of least largest travel with these lean rates [2] at the start, by linear programming.
 
-    ``torque``: shares of its bound that the motions [N, 2, 2m] and the present solution [N, 2] take (what the ball
-    gives to the floor is the same, by its radius). It stays within the bound, and a little of it is in the cost too.
-    In mm, mrad/s and shares, so that the program is well scaled.
+    ``torque`` [N, 3, 2m] and [N, 3] of the motions and of the present solution, N m, within ``demands`` [K, 3]. Those
+    beyond the first two are seldom met: they are put into the program where a solution goes beyond them.
     """
-    basis = response.basis
-    moving = basis.moving()
+    moving = response.basis.moving()
+    taken, share = torque[1][moving] @ demands.T, demands @ torque[0][moving]
+    # What the given motion takes by itself is not the relief's to mend.
+    allowed = np.maximum(1.0, np.abs(taken))
+    used = np.zeros(taken.shape, bool)
+    used[:, :2] = True
+    while True:
+        shares = [(share[on, k], taken[on, k], allowed[on, k]) for k, on in enumerate(used.T) if on.any()]
+        weights = _least_travel_within(response, present, wanted, shares)
+        beyond = (np.abs(taken + share @ weights) > allowed + _BEYOND) & ~used
+        if not beyond.any():
+            return weights
+        used |= beyond
+        used[1:] |= beyond[:-1]
+        used[:-1] |= beyond[1:]
+
+
+def _least_travel_within(
+    response: _Response, present: Array, wanted: Array, shares: list[tuple[Array, Array, Array]]
+) -> Array:
+    """The weights [2m] of least largest travel with |taken + share @ weights| ≤ allowed for each of ``shares``.
+
+    A little of the first two, which are those of the drive torque about x and y, is in the cost too. In mm, mrad/s and
+    shares of the limits, so that the program is well scaled.
+    """
+    basis, m = response.basis, 2 * response.basis.count
     # The travel is smoother than the torque.
-    travelled, driven = moving[:: basis.stride // 2], moving
-    count = basis.count
-    left: list[Array] = []
-    right: list[Array] = []
-    for axis in range(2):
-        travel = np.zeros((len(travelled), 2 * count))
-        travel[:, axis * count : (axis + 1) * count] = basis.position[travelled]
-        share = 1e-3 * torque[0][driven, axis]
-        for rows, now, slack in (
-            (travel, 1e3 * present[travelled, axis], axis),
-            (share, torque[1][driven, axis], 2 + axis),
-        ):
-            slacks = np.zeros((len(rows), 4))
-            slacks[:, slack] = -1.0
-            for sign in (1.0, -1.0):
-                left.append(np.hstack((sign * rows, slacks)))
-                right.append(-sign * now)
+    seen = basis.moving()[:: basis.stride // 2]
+    axes, across = np.kron(np.eye(2), basis.position[seen]), np.repeat(np.eye(2, 4), len(seen), axis=0)
+    blocks = [(axes, 1e3 * present[seen].T.ravel(), across, np.zeros(2 * len(seen)))]
+    for k, (share, taken, allowed) in enumerate(shares):
+        slack = np.tile(np.eye(5, 4)[min(2 + k, 4)], (len(share), 1))
+        blocks.append((1e-3 * share, taken, slack, allowed if k > 1 else 0.0 * allowed))
+    signed = [(sign, *block) for block in blocks for sign in (1.0, -1.0)]
+    bounds: list[tuple[float | None, float | None]] = [(None, None)] * m + [(0.0, None)] * 2
+    bounds += [(0.0, float(allowed.max())) for _, _, allowed in shares[:2]]
     result = linprog(
-        np.concatenate((np.zeros(2 * count), [1.0, 1.0, _TORQUE_PRICE, _TORQUE_PRICE])),
-        A_ub=np.vstack(left),
-        b_ub=np.concatenate(right),
+        np.concatenate((np.zeros(m), [1.0, 1.0, _TORQUE_PRICE, _TORQUE_PRICE])),
+        A_ub=np.concatenate([np.hstack((sign * rows, -slack)) for sign, rows, _, slack, _ in signed]),
+        b_ub=np.concatenate([bound - sign * now for sign, _, now, _, bound in signed]),
         A_eq=np.hstack((response.rate[0], np.zeros((2, 4)))),
         b_eq=1e3 * wanted,
-        bounds=[(None, None)] * (2 * count) + [(0.0, None)] * 2 + [(0.0, 1.0)] * 2,
+        bounds=bounds,
         method="highs",
     )
     if result.status != 0 or result.x is None:
@@ -230,4 +259,4 @@ def _least_travel(response: _Response, present: Array, wanted: Array, torque: tu
             "no ball motion within the drive's torque and the floor's friction lets it begin this soon",
             "give it more lead-in",
         )
-    return np.asarray(1e-3 * result.x[: 2 * count])
+    return np.asarray(1e-3 * result.x[:m])

@@ -13,8 +13,8 @@ from ballbal_ros.robot.balance_rows import OutsideMotion
 from helpers.robots import reach, shelver
 
 STEP, NODES = 0.01, 301
-LIMITS = ReliefLimits(torque=30.0, grip=300.0)
 NONE = np.zeros(2)
+AMPLE = 1e3
 Array = NDArray[np.float64]
 
 
@@ -34,17 +34,22 @@ def turns(angle: float) -> Array:
     return np.tile(rotation_heading(angle)[:2, :2].T, (NODES, 1, 1))
 
 
+def limited(torque: float = 30.0, grip: float = AMPLE, torsion: float = AMPLE, effort: float = AMPLE) -> ReliefLimits:
+    """Limits of torque, grip, spin moment and actuator effort, N m."""
+    return ReliefLimits.of(torque, grip, torsion, shelver().drive.effort_map / effort)
+
+
 def relieve(
     standing: tuple[LeanProblem, LeanSolution],
     start: Array,
     end: Array = NONE,
-    limits: ReliefLimits = LIMITS,
+    limits: ReliefLimits | None = None,
     turn: float = 0.0,
 ) -> tuple[BallRelief, LeanSolution]:
     """The relief of these mismatches, and the solution with it."""
     problem, solution = standing
     present = np.zeros((NODES, 2))
-    relief = ball_relief(problem, solution, turns(turn), start, end, 1.4, limits, present)
+    relief = ball_relief(problem, solution, turns(turn), start, end, 1.4, limits or limited(), present)
     moved = problem.with_ball(turns(turn), relief.position, relief.rate, relief.acceleration)
     return relief, solve_lean(moved, solution.lean[0], solution.lean[-1])
 
@@ -65,24 +70,42 @@ def test_large_ones_keep_to_the_torque_limit(standing: tuple[LeanProblem, LeanSo
     """A large relief uses the drive torque that it may, no more, and travels further where it may use less."""
     travels = []
     for torque in (30.0, 15.0):
-        relief, solution = relieve(standing, np.array([0.0, 0.06]), limits=ReliefLimits(torque, 300.0))
+        relief, solution = relieve(standing, np.array([0.0, 0.06]), limits=limited(torque))
         travels.append(np.abs(relief.position).max())
         assert np.abs(solution.rows.torque[:, :2]).max() < 1.05 * torque
     assert travels[1] > 1.01 * travels[0]
 
 
-def test_the_floors_grip_is_a_torque_limit_by_the_balls_radius(standing: tuple[LeanProblem, LeanSolution]):
-    """A grip of torque / radius limits the motion as that torque does: the ball gives to the floor what it takes."""
-    radius = shelver().parameters.ball.radius
-    by_torque, _ = relieve(standing, np.array([0.0, 0.06]), limits=ReliefLimits(15.0, 300.0))
-    by_grip, _ = relieve(standing, np.array([0.0, 0.06]), limits=ReliefLimits(30.0, 15.0 / radius))
-    np.testing.assert_allclose(by_grip.position, by_torque.position, atol=1e-9)
+@pytest.mark.parametrize("axis", [0, 1])
+def test_the_floors_grip_limits_the_torque(standing: tuple[LeanProblem, LeanSolution], axis: int):
+    """What the floor's friction gives limits the torque as the drive does, in all directions."""
+    start = 0.06 * np.eye(2)[axis]
+    by_torque, _ = relieve(standing, start, limits=limited(15.0))
+    by_grip, _ = relieve(standing, start, limits=limited(grip=15.0))
+    np.testing.assert_allclose(by_grip.position, by_torque.position, atol=2e-5)
+    _, solution = relieve(standing, 0.07 * np.array([0.7, 0.7]), limits=limited(grip=15.0))
+    assert np.hypot(*solution.rows.torque[:, :2].T).max() < 1.12 * 15.0
+
+
+def test_the_floors_spin_moment_and_each_actuator_have_their_limits(standing: tuple[LeanProblem, LeanSolution]):
+    """Spin moment and actuator efforts of a quick roll stay within what is given, for more travel."""
+    start = np.array([0.06, 0.01])
+    free, loose = relieve(standing, start)
+    drive = shelver().drive
+    for limits, use in (
+        (limited(torsion=1.0), lambda torque: np.abs(torque[:, 2]).max() / 1.0),
+        (limited(effort=6.0), lambda torque: np.abs(torque @ drive.effort_map.T).max() / 6.0),
+    ):
+        relief, solution = relieve(standing, start, limits=limits)
+        assert use(loose.rows.torque) > 1.3
+        assert use(solution.rows.torque) < 1.1
+        assert np.abs(relief.position).max() > np.abs(free.position).max()
 
 
 def test_what_the_drive_can_not_do_is_refused(standing: tuple[LeanProblem, LeanSolution]):
     """A mismatch that no ball motion within the limits takes away is refused in one line."""
     with pytest.raises(PlanRefused, match="no ball motion within .* give it more lead-in") as caught:
-        relieve(standing, np.array([0.0, 1.5]), limits=ReliefLimits(5.0, 300.0))
+        relieve(standing, np.array([0.0, 1.5]), limits=limited(5.0))
     assert "\n" not in str(caught.value)
 
 
