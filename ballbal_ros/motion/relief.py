@@ -205,15 +205,15 @@ def _least_travel(
 ) -> Array:
     """The weights [2m] of least largest travel with these lean rates [2] at the start, by linear programming.
 
-    ``torque`` [N, 3, 2m] and [N, 3] of the motions and of the present solution, N m, within ``demands`` [K, 3]. Those
-    beyond the first two are seldom met: they are put into the program where a solution goes beyond them.
+    ``torque`` [N, 3, 2m] and [N, 3] of the motions and of the present solution, N m, within ``demands`` [K, 3]. Of these
+    the program first hears of the first two at every other node, and of what else a solution goes beyond.
     """
     moving = response.basis.moving()
     taken, share = torque[1][moving] @ demands.T, demands @ torque[0][moving]
     # What the given motion takes by itself is not the relief's to mend.
     allowed = np.maximum(1.0, np.abs(taken))
     used = np.zeros(taken.shape, bool)
-    used[:, :2] = True
+    used[::2, :2] = True
     while True:
         shares = [(share[on, k], taken[on, k], allowed[on, k]) for k, on in enumerate(used.T) if on.any()]
         weights = _least_travel_within(response, present, wanted, shares)
