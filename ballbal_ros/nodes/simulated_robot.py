@@ -24,7 +24,7 @@ from ballbal_ros.nodes.messages import BILLION, load_of, nanoseconds, seconds
 from ballbal_ros.nodes.parameters import NodeParameters, SimulatedRobotNodeParameters, robot_file
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.nodes.topics import publisher, subscribe
-from ballbal_ros.nodes.trajectories import arm_path_of
+from ballbal_ros.nodes.trajectories import ArmWaypoints
 from ballbal_ros.nodes.wire import JointStateReader
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.parameters import RobotParameters
@@ -192,12 +192,14 @@ class SimulatedRobotNode(Node):
 
     def _on_arm_command(self, message: Any) -> None:
         try:
-            start, path = arm_path_of(message, self.description, self._robot.arm_position, "arm_command")
+            command = ArmWaypoints.of(message, self.description, "arm_command")
+            still = np.zeros(self.description.joint_count)
+            path = command.path(self._robot.arm_position, still, still)
         except BallbalError as error:
             self._diagnostics.refuse("arm_command", str(error))
             return
         self._diagnostics.accept("arm_command")
-        self._robot.command_arms(path, start if start > 0.0 else self._robot.time)
+        self._robot.command_arms(path, command.start if command.start > 0.0 else self._robot.time)
         self._lock.arm_command_came(nanoseconds(message.header.stamp))
         self._go_on()
 

@@ -10,6 +10,7 @@ import array
 import math
 from collections.abc import Iterable, Sequence
 
+import attrs
 import numpy as np
 from builtin_interfaces.msg import Time
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
@@ -26,6 +27,8 @@ LEAN_JOINTS = ("lean_roll", "lean_pitch", "heading", "ball_x", "ball_y")
 BALL_JOINTS = ("ball_x", "ball_y", "heading")
 _WRENCH_PARTS = ("force/x", "force/y", "force/z", "torque/x", "torque/y", "torque/z")
 _BALL_STEP = 0.01
+_STILL = 1e-3
+_APART = 0.05
 
 
 def _column(values: Iterable[float]) -> array.array[float]:
@@ -220,31 +223,65 @@ def hand_wrenches_of(message: JointTrajectory, hands: Sequence[str]) -> list[Han
     return [HandWrench(hand, times, table[:, :3], table[:, 3:]) for hand, table in found.items()]
 
 
-def arm_path_of(
-    message: JointTrajectory, description: RobotDescription, present: Array, topic: str
-) -> tuple[float, ArmPath]:
-    """(start in s, path of all joints) of an ``arm_command`` or ``arm_plan``.
+@attrs.frozen(eq=False)
+class ArmWaypoints:
+    """The points of an ``arm_plan`` or ``arm_command`` for the joints that it names, checked; start in s."""
 
-    Joints that are not named stay at ``present`` [n]; where the first point comes later than 0, the path begins there too.
-    Raises :class:`PlanError` or :class:`~ballbal_ros.errors.ModelError` in one line.
-    """
-    points = Waypoints(message, topic)
-    columns = [description.joint_index(name, topic) for name in points.names]
-    if not len(points.times):
-        raise PlanError(topic, "has no points", "give at least one")
+    start: float
+    points: Waypoints
+    columns: tuple[int, ...]
 
-    def whole(row: Array, rest: Array) -> Array:
-        full = rest.copy()
-        full[columns] = row
-        return full
+    @classmethod
+    def of(cls, message: JointTrajectory, description: RobotDescription, topic: str) -> ArmWaypoints:
+        """Read a message; raises :class:`PlanError` or :class:`~ballbal_ros.errors.ModelError` in one line."""
+        points = Waypoints(message, topic)
+        columns = tuple(description.joint_index(name, topic) for name in points.names)
+        if not len(points.times) or not columns:
+            raise PlanError(
+                topic, f"has {len(points.times)} points for {len(columns)} joints", "give at least one of each"
+            )
+        return cls(seconds(message.header.stamp), points, columns)
 
-    none = np.zeros(description.joint_count)
-    times = points.times
-    positions = np.array([whole(row, present) for row in points.positions])
-    rates = [None if row is None else whole(row, none) for row in points.rates]
-    accelerations = [None if row is None else whole(row, none) for row in points.accelerations]
-    if times[0] > 0.0:
-        times, positions = np.append(0.0, times), np.vstack((present, positions))
-        rates, accelerations = [none, *rates], [none, *accelerations]
-    path = path_through_waypoints(times.tolist(), positions, rates, accelerations)
-    return seconds(message.header.stamp), path
+    @property
+    def duration(self) -> float:
+        """Time of the last point, s."""
+        return float(self.points.times[-1])
+
+    def path(self, position: Array, rate: Array, acceleration: Array) -> ArmPath:
+        """The path of all joints from a state [n]; joints that are not named stay where they are.
+
+        Where the first point comes later than 0, the path begins in that state. Raises :class:`PlanError`.
+        """
+        points, columns = self.points, list(self.columns)
+        times = points.times
+        positions = np.repeat(position[None], len(times), axis=0)
+        positions[:, columns] = points.positions
+        rates, accelerations = (
+            [_whole(row, columns, position) for row in rows] for rows in (points.rates, points.accelerations)
+        )
+        if times[0] > 0.0:
+            times, positions = np.append(0.0, times), np.vstack((position, positions))
+            rates, accelerations = [rate, *rates], [acceleration, *accelerations]
+        return path_through_waypoints(times.tolist(), positions, rates, accelerations)
+
+    def checked_path(self, position: Array, rate: Array, acceleration: Array) -> ArmPath:
+        """:meth:`path`; raises :class:`PlanError` where it would jump: it begins elsewhere, or leaves out a joint that moves."""
+        topic, points, columns = self.points.topic, self.points, list(self.columns)
+        others = np.ones(len(position), bool)
+        others[columns] = False
+        if np.abs(rate[others]).max(initial=0.0) > _STILL:
+            raise PlanError(topic, "leaves out joints that move at its start", "name them, or wait until they rest")
+        apart = np.abs(points.positions[0] - position[columns])
+        if points.times[0] <= 0.0 and apart.max() > _APART:
+            worst = int(np.argmax(apart))
+            there = f"{points.names[worst]} at {points.positions[0][worst]:.3f} rad, and it will be at {position[columns[worst]]:.3f}"
+            raise PlanError(topic, f"begins with {there}", "begin there, or later than 0")
+        return self.path(position, rate, acceleration)
+
+
+def _whole(row: Array | None, columns: list[int], like: Array) -> Array | None:
+    if row is None:
+        return None
+    full = np.zeros_like(like)
+    full[columns] = row
+    return full

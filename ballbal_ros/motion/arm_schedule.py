@@ -1,0 +1,197 @@
+"""What the arms do and will do, and the lean that goes with it: one motion after the other, each planned before it begins."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+
+import attrs
+import numpy as np
+
+from ballbal_ros.errors import BallbalError, PlanRefused
+from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.lean_planner import BallMotion, HandWrench, PlanRequest, plan_lean
+from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.spline import ArmPath, FollowedPath, JointPath, check_path
+from ballbal_ros.motion.stopping import Handover, Later, Spliced, stop_path
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.whole_body import WholeBody
+
+_TOPIC = "arm_plan"
+_SOON = 1e-9
+_ELSEWHERE = 0.05
+_STOPS = (1.0, 1.5, 2.0, 3.0)
+# Planning takes a time that grows with the motion: this much for each second of it, on a slow machine.
+_PLANNING_SHARE = 0.04
+
+
+@attrs.frozen(eq=False)
+class ArmState:
+    """Positions, rates and accelerations [n] of the arms at one time, as commanded."""
+
+    position: Array
+    rate: Array
+    acceleration: Array
+
+
+@attrs.frozen(eq=False)
+class Wanted:
+    """An arm motion that somebody wants. ``stamp``: when the arms should start, s; 0: as soon as possible.
+
+    ``path`` makes it from where the arms will be then; it takes ``duration`` s. The ball's motion and the outside forces
+    are timed from the arms' start.
+    """
+
+    stamp: float
+    duration: float
+    path: Callable[[ArmState], ArmPath]
+    ball: BallMotion | None = None
+    wrenches: Sequence[HandWrench] = ()
+
+
+@attrs.frozen(eq=False)
+class Proposal:
+    """A motion ready to go: the arms' path from ``arms_start``, s, on, and the lean plan from ``lean_start`` on (or none)."""
+
+    lean_start: float
+    arms_start: float
+    path: ArmPath
+    plan: LeanPlan | None
+    command: JointPath
+    command_start: float
+
+    @property
+    def end(self) -> float:
+        """When the arms come to rest, s."""
+        return self.arms_start + self.path.duration
+
+
+class ArmSchedule:
+    """Keeps account of the motion in force and plans the next. Pure: it is told what time it is, s.
+
+    A motion becomes the one in force by :meth:`accept` only; a refused one leaves all as it was.
+    """
+
+    def __init__(self, description: RobotDescription, parameters: CompensationParameters) -> None:
+        self.description, self.parameters = description, parameters
+        self._loads: list[tuple[float, Load]] = []
+        self._motion: Proposal | None = None
+
+    def set_load(self, stamp: float, load: Load) -> None:
+        """A hand's load from ``stamp``, s, on."""
+        self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
+
+    def busy_until(self, now: float) -> float | None:
+        """When the arms of the motion in force come to rest, s; None where they rest already."""
+        return self._motion.end if self._motion is not None and self._motion.end > now else None
+
+    def arms_at(self, time: float, measured: Array) -> ArmState:
+        """Where the arms are commanded to be at a time, s; where no motion says so, as measured [n] and at rest.
+
+        Arms that rest elsewhere than they were commanded to have been moved by somebody else: then the measurement holds.
+        """
+        still = np.zeros(self.description.joint_count)
+        if self._motion is None:
+            return ArmState(measured.copy(), still, still)
+        since = time - self._motion.command_start
+        position, rate, acceleration = (a[0] for a in self._motion.command.sample(np.array([since])))
+        rests = since >= self._motion.command.duration
+        if rests and np.abs(position - measured).max() > _ELSEWHERE:
+            return ArmState(measured.copy(), still, still)
+        return ArmState(position, rate, acceleration)
+
+    def plan(self, wanted: Wanted, now: float, measured: Array) -> Proposal:
+        """Plan a motion; raises :class:`BallbalError` in one line where it can't be done or would go beyond a limit."""
+        settings = self.parameters.planner
+        earliest = now + settings.allowance + _PLANNING_SHARE * wanted.duration
+        if wanted.stamp > 0.0:
+            lean_start = max(wanted.stamp - settings.lead_in, earliest)
+            arms_start = max(wanted.stamp, lean_start)
+        else:
+            lean_start, arms_start = earliest, earliest + settings.lead_in
+        path = wanted.path(self.arms_at(arms_start, measured))
+        check_path(path, self.description, _TOPIC)
+        return self._propose(lean_start, arms_start, path, wanted)
+
+    def stop(self, now: float) -> Proposal | None:
+        """Plan the arms' way to rest from the motion in force; None where there is nothing to stop.
+
+        It takes ``stop_time`` from ``allowance`` s ahead, or up to three times as long where the limits need that. Raises
+        :class:`PlanRefused` where none is possible: then the motion in force, which has been checked, should end as planned.
+        """
+        if self._motion is None or self._motion.end <= now + self.parameters.planner.allowance:
+            return None
+        start = now + self.parameters.planner.allowance
+        state = self.arms_at(start, np.zeros(self.description.joint_count))
+        reason: BallbalError | None = None
+        for factor in _STOPS:
+            time = factor * self.parameters.planner.stop_time
+            low, high = self.description.position_low, self.description.position_high
+            path = stop_path(state.position, state.rate, state.acceleration, time, low, high)
+            try:
+                check_path(path, self.description, "stop")
+                return self._propose(start, start, path, None)
+            except BallbalError as error:
+                reason = error
+        what = "can't be cut short within the limits" + (f" ({reason.what})" if reason else "")
+        raise PlanRefused("stop", what, f"the motion in force ends by itself at {self._motion.end:.3f} s")
+
+    def accept(self, proposal: Proposal) -> None:
+        """Take a proposal as the motion in force."""
+        self._motion = proposal
+
+    def _propose(self, lean_start: float, arms_start: float, path: ArmPath, wanted: Wanted | None) -> Proposal:
+        command: JointPath = path
+        command_start = arms_start
+        motion = self._motion
+        if motion is not None and motion.end > lean_start + _SOON:
+            command = Spliced(motion.command, path, arms_start - motion.command_start)
+            command_start = motion.command_start
+        plan = None
+        if self.parameters.compensation == "planned":
+            plan = self._lean(lean_start, arms_start, (command, command_start), wanted)
+        return Proposal(lean_start, arms_start, path, plan, command, command_start)
+
+    def _lean(
+        self, lean_start: float, arms_start: float, commanded: tuple[JointPath, float], wanted: Wanted | None
+    ) -> LeanPlan:
+        command, command_start = commanded
+        arm = self.description.parameters.arm
+        arms = FollowedPath.of(command, arm.servo, arm.servo_bandwidth)
+        lead_in = command_start - lean_start
+        if lead_in < 0.0:
+            arms, lead_in = Later(arms, -lead_in), 0.0
+        handover = self._handover(lean_start)
+        ball = self._ball(wanted, arms_start - lean_start, handover)
+        wrenches = () if wanted is None else wanted.wrenches
+        body = WholeBody(self.description, self._held_at(lean_start))
+        request = PlanRequest(
+            arms=arms,
+            lead_in=lead_in,
+            loads=[(stamp - lean_start, load) for stamp, load in self._loads if stamp > lean_start + _SOON],
+            ball=ball,
+            wrenches=[attrs.evolve(w, times=w.times + arms_start - lean_start) for w in wrenches],
+            start=None if handover is None else handover.start,
+        )
+        plan = plan_lean(body, request, self.parameters)
+        plan.refuse_beyond_limits(_TOPIC if wanted is not None else "stop")
+        return attrs.evolve(plan, ball=plan.ball - plan.ball[0], lead_in=arms_start - lean_start)
+
+    def _handover(self, time: float) -> Handover | None:
+        motion = self._motion
+        if motion is None or motion.plan is None or time < motion.lean_start + _SOON:
+            return None
+        return Handover.at(motion.plan, time - motion.lean_start, self.parameters.planner.stop_time)
+
+    def _ball(self, wanted: Wanted | None, lead_in: float, handover: Handover | None) -> BallMotion | None:
+        asked = None if wanted is None or wanted.ball is None else wanted.ball
+        rolling = None if handover is None else handover.ball
+        if asked is not None and rolling is not None:
+            raise PlanRefused(
+                "ball_plan", "begins while the ball still rolls by another plan", "let that one end first"
+            )
+        return rolling if asked is None else attrs.evolve(asked, times=asked.times + lead_in)
+
+    def _held_at(self, time: float) -> list[Load]:
+        return list({load.hand: load for stamp, load in self._loads if stamp <= time + _SOON}.values())

@@ -1,0 +1,259 @@
+"""Node ``arm_compensation``: what somebody wants the arms to do becomes a lean plan and, once that is taken up, an arm command."""
+
+from __future__ import annotations
+
+import time
+from collections import deque
+from collections.abc import Mapping
+from typing import Any
+
+import attrs
+import numpy as np
+from rclpy.clock import Clock as RosClock
+from rclpy.clock import ClockType
+from rclpy.node import Node
+
+from ballbal_ros.balance.guard import BALANCING, ENGAGING
+from ballbal_ros.errors import BallbalError, PlanRefused
+from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
+from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
+from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.spline import ArmPath
+from ballbal_ros.nodes import process
+from ballbal_ros.nodes.diagnostics import OK, Diagnostics, values_of
+from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
+from ballbal_ros.nodes.parameters import ArmCompensationNodeParameters, NodeParameters
+from ballbal_ros.nodes.plan_report import PlanReports
+from ballbal_ros.nodes.topics import publisher, subscribe
+from ballbal_ros.nodes.trajectories import (
+    ArmWaypoints,
+    ball_motion_of,
+    hand_wrenches_of,
+    lean_plan_message,
+    path_message,
+)
+from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
+from ballbal_ros.robot.parameters import RobotParameters
+
+_ATTEND = 0.05
+
+
+@attrs.frozen(eq=False)
+class _Asked:
+    """A proposal that waits for the balance node's acknowledgement; ``what`` asked for it, until ``deadline`` of the steady clock."""
+
+    proposal: Proposal
+    what: str
+    stamp: str
+    deadline: float
+
+
+class ArmCompensationNode(Node):
+    """Plans, asks the balance node, and only then lets the arms go. One plan after the other; an emergency stop goes first."""
+
+    def __init__(self) -> None:
+        super().__init__("arm_compensation", **process.NODE_OPTIONS)
+        parameters = NodeParameters(
+            self,
+            {
+                "robot.yaml": RobotParameters,
+                "compensation.yaml": CompensationParameters,
+                "node": ArmCompensationNodeParameters,
+            },
+        )
+        own: ArmCompensationNodeParameters = parameters["node"]
+        self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
+        self._schedule = ArmSchedule(self.description, parameters["compensation.yaml"])
+        parameters.declare(self._change)
+        self._arms = JointReader(self.description.joint_names, "joint_states")
+        self._place = (0.0, 0.0, 0.0)
+        self._state = ""
+        self._emergency = False
+        self._asked: _Asked | None = None
+        self._waiting: deque[Any] = deque()
+        self._ball_plan: Any = None
+        self._wrench_plan: Any = None
+        self._to_balance = publisher(self, "lean_plan")
+        self._to_arms = publisher(self, "arm_command")
+        self._reports = PlanReports(self, self.description.name)
+        self._diagnostics = Diagnostics(self, self.description.name, self._report)
+        self._listen()
+        steady = RosClock(clock_type=ClockType.STEADY_TIME)
+        self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
+
+    def _listen(self) -> None:
+        subscribe(self, "hand_load", self._on_load)
+        subscribe(self, "joint_states", self._on_joint_states, raw=True)
+        subscribe(self, "odom", self._on_odom)
+        subscribe(self, "balance_state", self._on_balance_state)
+        subscribe(self, "ball_plan", self._on_ball_plan)
+        subscribe(self, "hand_wrench_plan", self._on_wrench_plan)
+        subscribe(self, "emergency_stop", self._on_emergency_stop)
+        subscribe(self, "arm_plan", self._on_arm_plan)
+
+    def _change(self, parameters: NodeParameters) -> None:
+        self._schedule.parameters = parameters["compensation.yaml"]
+
+    @property
+    def _now(self) -> float:
+        return float(self.get_clock().now().nanoseconds) / BILLION
+
+    def _on_load(self, message: Any) -> None:
+        try:
+            stamp, load = load_of(message, self.description)
+        except BallbalError as error:
+            self._diagnostics.refuse("hand_load", str(error))
+            return
+        self._diagnostics.accept("hand_load")
+        self._schedule.set_load(stamp, load)
+
+    def _on_joint_states(self, raw: bytes) -> None:
+        try:
+            self._arms.read(raw)
+        except BallbalError as error:
+            self._diagnostics.refuse("joint_states", str(error))
+
+    def _on_odom(self, message: Any) -> None:
+        place, turn = message.pose.pose.position, message.pose.pose.orientation
+        self._place = (place.x, place.y, lean_and_heading_from_quat_xyzw(turn.x, turn.y, turn.z, turn.w)[2])
+
+    def _on_ball_plan(self, message: Any) -> None:
+        self._ball_plan = message if message.points else None
+
+    def _on_wrench_plan(self, message: Any) -> None:
+        self._wrench_plan = message if message.points else None
+
+    def _on_arm_plan(self, message: Any) -> None:
+        """Plan it now, or when the one before has been answered."""
+        self._waiting.append(message)
+        self._go_on()
+
+    def _go_on(self) -> None:
+        while self._waiting and self._asked is None:
+            message = self._waiting.popleft()
+            stamp = stamp_text(message.header.stamp)
+            try:
+                proposal = self._proposal(message)
+            except BallbalError as error:
+                self._reports.refuse("arm_plan", stamp, str(error))
+                continue
+            if proposal is None:
+                self._reports.accept("arm_plan", stamp, "nothing moves: nothing to cancel")
+            else:
+                self._ask(proposal, "arm_plan", stamp)
+
+    def _proposal(self, message: Any) -> Proposal | None:
+        if not message.points:
+            return self._schedule.stop(self._now)
+        self._check_ready()
+        waypoints = ArmWaypoints.of(message, self.description, "arm_plan")
+
+        def path(state: ArmState) -> ArmPath:
+            return waypoints.checked_path(state.position, state.rate, state.acceleration)
+
+        wanted = Wanted(waypoints.start, waypoints.duration, path, self._ball(), self._wrenches())
+        return self._schedule.plan(wanted, self._now, self._arms.position.copy())
+
+    def _check_ready(self) -> None:
+        if self._emergency:
+            raise PlanRefused("arm_plan", "came during an emergency stop", "end that first, and reset the balance")
+        if self._state not in (ENGAGING, BALANCING):
+            what = f"came while the balance is {self._state or 'not there'}"
+            raise PlanRefused("arm_plan", what, "send it once balance_state says balancing")
+        if not self._arms.complete:
+            raise PlanRefused(
+                "joint_states", f"has not told of {', '.join(self._arms.missing())}", "publish them first"
+            )
+
+    def _ball(self) -> BallMotion | None:
+        """The ball plan that goes with the next arm plan; it is used once."""
+        message, self._ball_plan = self._ball_plan, None
+        return None if message is None else ball_motion_of(message, self._place)
+
+    def _wrenches(self) -> list[HandWrench]:
+        message, self._wrench_plan = self._wrench_plan, None
+        return [] if message is None else hand_wrenches_of(message, self.description.parameters.hands.links)
+
+    def _ask(self, proposal: Proposal, what: str, stamp: str) -> None:
+        """Without a lean plan nobody has to be asked; otherwise the balance node takes it up first."""
+        timeout = self._schedule.parameters.answer_timeout
+        asked = _Asked(proposal, what, stamp, time.monotonic() + timeout)
+        if proposal.plan is None:
+            self._let_go(asked)
+            return
+        self._asked = asked
+        self._to_balance.publish(lean_plan_message(proposal.plan, to_time(proposal.lean_start)))
+
+    def _let_go(self, asked: _Asked) -> None:
+        proposal = asked.proposal
+        self._asked = None
+        self._schedule.accept(proposal)
+        start = to_time(proposal.arms_start)
+        self._to_arms.publish(path_message(proposal.path, self.description.joint_names, start))
+        self._reports.accept_proposal(asked.what, asked.stamp, proposal)
+        self._go_on()
+
+    def _on_balance_state(self, message: Any) -> None:
+        self._state = message.message
+        asked = self._asked
+        if asked is None:
+            return
+        values = values_of(message)
+        stamp = stamp_text(to_time(asked.proposal.lean_start))
+        if values.get("plan") == stamp:
+            self._let_go(asked)
+        elif values.get("refused plan") == stamp:
+            self._give_up(values.get("refusal", "refused by the balance node"))
+
+    def _give_up(self, reason: str) -> None:
+        asked, self._asked = self._asked, None
+        if asked is not None:
+            self._reports.refuse(asked.what, asked.stamp, reason)
+        self._go_on()
+
+    def _attend(self) -> None:
+        if self._asked is not None and time.monotonic() > self._asked.deadline:
+            timeout = self._schedule.parameters.answer_timeout
+            self._give_up(
+                f"lean_plan: no acknowledgement in balance_state within {timeout:g} s; nothing moves: is balance active?"
+            )
+
+    def _on_emergency_stop(self, message: Any) -> None:
+        """Bring the arms to rest by a planned stop; what waits is refused, and nothing new is taken until a reset."""
+        began = bool(message.data) and not self._emergency
+        self._emergency = bool(message.data)
+        if not began:
+            return
+        stamp = stamp_text(to_time(self._now))
+        if self._asked is not None:
+            self._give_up("arm_plan: overtaken by an emergency stop")
+        try:
+            proposal = self._schedule.stop(self._now)
+        except BallbalError as error:
+            self._reports.refuse("emergency_stop", stamp, str(error))
+            return
+        if proposal is None:
+            self._reports.accept("emergency_stop", stamp, "the arms rest")
+        else:
+            self._ask(proposal, "emergency_stop", stamp)
+
+    def _report(self) -> tuple[bytes, str, Mapping[str, object]]:
+        until = self._schedule.busy_until(self._now)
+        values: dict[str, object] = {
+            "compensation": self._schedule.parameters.compensation,
+            "balance": self._state or "not heard of",
+            "arms known": bool(np.isfinite(self._arms.position).all()),
+            "plans waiting": len(self._waiting) + (self._asked is not None),
+        }
+        if self._emergency:
+            return OK, "emergency stop: no plan is taken", values
+        return OK, "idle" if until is None else f"a motion is in force until {until:.3f} s", values
+
+
+def main() -> None:
+    """Run the node."""
+    process.main(ArmCompensationNode)
+
+
+if __name__ == "__main__":
+    main()
