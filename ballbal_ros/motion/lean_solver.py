@@ -129,10 +129,7 @@ def solve_bands(bands: Array, right: Array) -> Array:
 
 def equilibrium_lean(problem: LeanProblem, node: int, guess: Array) -> Array:
     """The lean [2] at which one node's rows vanish with nothing accelerating: where gravity and hand forces balance."""
-    at = attrs.evolve(
-        problem.terms,
-        **{f.name: getattr(problem.terms, f.name)[[node]] for f in attrs.fields(UpperBodyTerms) if f.name != "hands"},
-    )
+    at = problem.terms.at(np.array([node]))
     zero = np.zeros((1, 2))
     rest = attrs.evolve(
         OutsideMotion.at_rest(1),

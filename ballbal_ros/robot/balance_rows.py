@@ -23,6 +23,7 @@ from typing import Any
 
 import attrs
 import numpy as np
+from numpy.typing import NDArray
 
 from ballbal_ros.robot.arrays import Array, apply, cross, skew
 from ballbal_ros.robot.attitude import body_rates, rotation_lean
@@ -71,6 +72,12 @@ class UpperBodyTerms:
 
     def __len__(self) -> int:
         return len(self.moment)
+
+    def at(self, samples: NDArray[np.int64]) -> UpperBodyTerms:
+        """The terms at these samples [M] of them."""
+        fields = [f.name for f in attrs.fields(UpperBodyTerms) if f.name != "hands"]
+        chosen: dict[str, Any] = {name: getattr(self, name)[samples] for name in fields}
+        return attrs.evolve(self, **chosen)
 
     def blend(self, other: UpperBodyTerms, share: Array) -> UpperBodyTerms:
         """``(1 - share)`` of these terms and ``share`` [N] of the other ones: all of them are linear in the masses."""

@@ -7,6 +7,7 @@ from collections.abc import Iterable
 import attrs
 import numpy as np
 import pinocchio as pin
+from numpy.typing import NDArray
 
 from ballbal_ros.errors import ModelError, nearest
 from ballbal_ros.robot.arrays import Array, read_only
@@ -151,7 +152,8 @@ class WholeBody:
         frames = [self._hand_frame(name) for name in names]
         arm_q, arm_v, arm_a = q[7:], v[6:], a[6:]
         weight = self.mass * GRAVITY
-        for k in range(len(position)):
+        first_of_equals = _first_of_equals(position, rate, acceleration)
+        for k in np.unique(first_of_equals).tolist():
             arm_q[:], arm_v[:], arm_a[:] = position[k], rate[k], acceleration[k]
             matrix = pin.crba(model, data, q)
             upper = matrix[:6, 6:] @ arm_v
@@ -164,9 +166,17 @@ class WholeBody:
             terms.moment_acceleration[k], terms.angular_rate[k] = force[:3], force[3:6]
             for j, frame in enumerate(frames):
                 terms.hand_position[k, j] = pin.updateFramePlacement(model, data, frame).translation
+        terms = terms.at(first_of_equals)
         upper_triangle = np.triu(terms.inertia)
         terms.inertia[:] = upper_triangle + np.triu(terms.inertia, 1).transpose(0, 2, 1)
         terms.moment_acceleration[:, 2] -= weight
         terms.angular_rate[:, 0] -= terms.moment[:, 1] * GRAVITY
         terms.angular_rate[:, 1] += terms.moment[:, 0] * GRAVITY
         return terms
+
+
+def _first_of_equals(*motion: Array) -> NDArray[np.int64]:
+    """For each sample [N] of a motion, the first of the run of equal ones that it is in: arms rest for long times."""
+    moves = np.ones(len(motion[0]), bool)
+    moves[1:] = np.any([np.any(np.diff(each, axis=0) != 0.0, axis=1) for each in motion], axis=0)
+    return np.asarray(np.maximum.accumulate(np.where(moves, np.arange(len(moves)), 0)))

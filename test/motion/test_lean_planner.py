@@ -52,7 +52,7 @@ def smooth_step(times: NDArray[np.float64], duration: float) -> tuple[NDArray[np
 def test_the_bounded_lean_is_that_of_scipys_solver():
     """With ample lead-in the plan agrees with scipy.integrate.solve_bvp on the same equations to 0.01 degree."""
     ours = plan(3.0, planner(tail=3.0))
-    reference = bounded_lean(reach().body(), reach().path(), 3.0, ours.duration)(ours.times)
+    reference = bounded_lean(shelver(), reach().loads, reach().path(), 3.0, ours.duration)(ours.times)
     assert np.degrees(np.abs(reference[:2].T - ours.lean).max()) < 0.01
     assert np.degrees(np.abs(reference[2:].T - ours.lean_rate).max()) < 0.1
     assert np.degrees(np.abs(ours.lean[:, 1]).max()) > 5.0

@@ -146,6 +146,18 @@ def test_the_terms_rates_are_finite_differences_along_a_motion():
         np.testing.assert_allclose(getattr(now, rate), expected, atol=2e-6, err_msg=rate)
 
 
+def test_terms_of_a_motion_that_rests_are_those_of_each_sample():
+    """Samples that are equal, next to each other or not, have the terms that each has by itself."""
+    body, order = WholeBody(shelver(), LOADS), [0, 0, 0, 1, 2, 2, 0, 1, 1]
+    motion = RNG.normal(size=(3, 3, shelver().joint_count))[:, order] * 0.5
+    together = body.terms(*motion, hands=("left_hand",))
+    for k in range(len(order)):
+        alone = body.terms(*motion[:, [k]], hands=("left_hand",))
+        for name in ("moment", "inertia_rate", "angular_rate", "moment_acceleration", "hand_position"):
+            np.testing.assert_array_equal(getattr(together, name)[k], getattr(alone, name)[0])
+    assert len(body.terms(*motion[:, :0])) == 0
+
+
 @pytest.mark.parametrize("position", positions(4))
 def test_the_equilibrium_lean_puts_the_mass_centre_above_the_ball(position: np.ndarray):
     """Leant by it, the mass centre stands straight above the ball's centre (common practice, no source)."""
