@@ -205,8 +205,8 @@ def _least_travel(
 ) -> Array:
     """The weights [2m] of least largest travel with these lean rates [2] at the start, by linear programming.
 
-    ``torque`` [N, 3, 2m] and [N, 3] of the motions and of the present solution, N m, within ``demands`` [K, 3]. Of these
-    the program first hears of the first two at every other node, and of what else a solution goes beyond.
+    ``torque`` [N, 3, 2m] and [N, 3] of the motions and of the present solution, N m, within ``demands`` [K, 3]. Of
+    these the program first hears of the first two at every other node, and of what else a solution goes beyond.
     """
     moving = response.basis.moving()
     taken, share = torque[1][moving] @ demands.T, demands @ torque[0][moving]

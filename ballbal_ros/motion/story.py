@@ -32,7 +32,7 @@ def _finite(_: object, attribute: attrs.Attribute[Any], value: object) -> None:
 
 
 _POSITIVE = [_finite, validators.gt(0.0)]
-_VECTOR = [_finite, validators.min_len(3), validators.max_len(3)]
+_VECTOR: Any = [_finite, validators.min_len(3), validators.max_len(3)]
 
 
 @attrs.frozen
@@ -110,7 +110,10 @@ class Push:
 
 @attrs.frozen(eq=False)
 class Story:
-    """A plan file on a timeline, s from its beginning. ``arms`` begins at ``arms_start``, the first thing that is to be planned for."""
+    """A plan file on a timeline, s from its beginning.
+
+    ``arms`` begins at ``arms_start``, the first thing that is to be planned for.
+    """
 
     name: str
     posture: Array
@@ -157,7 +160,7 @@ def _reason(error: BaseException, kind: type | None) -> str:
 def _structure(value: Any, cls: type[T], where: str, what: str) -> T:
     try:
         return _CONVERTER.structure(value, cls)
-    except Exception as error:  # noqa: BLE001 - cattrs raises groups of whatever went wrong
+    except Exception as error:
         reason = "; ".join(cattrs.transform_error(error, path=what, format_exception=_reason))
         known = ", ".join(f.name for f in attrs.fields(cls))  # type: ignore[arg-type]
         raise PlanError(where, reason or f"{what} is {value!r}", f"{what} takes {known}") from error
@@ -192,7 +195,9 @@ def _step(step: Any, where: str, what: str) -> object:
     verb, inner = verbs[0], step[verbs[0]]
     if verb in ("wait", "move") or not isinstance(inner, Mapping):
         return _structure(dict(step), _VERBS[verb], where, what)
-    return _structure({**inner, **{k: v for k, v in step.items() if k != verb}}, _VERBS[verb], where, f"{what} ({verb})")
+    return _structure(
+        {**inner, **{k: v for k, v in step.items() if k != verb}}, _VERBS[verb], where, f"{what} ({verb})"
+    )
 
 
 class _Builder:
@@ -237,7 +242,9 @@ class _Builder:
         elif isinstance(step, PushStep):
             self._check_link(step.link, where)
             x, y, z = step.at
-            self.pushes.append(Push(self.now, step.during, step.link, (x, y, z), (step.force[0], step.force[1], step.force[2])))
+            self.pushes.append(
+                Push(self.now, step.during, step.link, (x, y, z), (step.force[0], step.force[1], step.force[2]))
+            )
             self.now += step.during
         elif isinstance(step, RollStep):
             before = self.rolls[-1][2] if self.rolls else RollStep()
@@ -254,10 +261,16 @@ class _Builder:
 
     def story(self, name: str) -> Story:
         """The timeline as a whole, its arm motion checked against the joints' limits."""
-        begins = [time for time, _ in self.knots] + [c.time for c in self.changes if c.announced] + [roll[0] for roll in self.rolls]
+        begins = (
+            [time for time, _ in self.knots]
+            + [c.time for c in self.changes if c.announced]
+            + [roll[0] for roll in self.rolls]
+        )
         first = min(begins, default=self.now)
         arms = self._arms(first)
-        outside = (self.posture < self.description.position_low - 1e-9) | (self.posture > self.description.position_high + 1e-9)
+        outside = (self.posture < self.description.position_low - 1e-9) | (
+            self.posture > self.description.position_high + 1e-9
+        )
         if outside.any():
             joint = int(np.argmax(outside))
             raise PlanError(
