@@ -18,10 +18,12 @@ _DIRECTIONS = 72
 
 @attrs.frozen(eq=False)
 class PullReserve:
-    """Horizontal pulls on one hand, the robot at rest and leaning against them, at ``direction`` [N] (rad, 0 forward, left positive).
+    """Horizontal pulls on one hand, the robot at rest and leaning against them, at ``direction`` [N] (rad, 0 forward,
+    left positive).
 
-    For each direction the force in N at which one limit is reached: ``lean`` (limits.lean), ``torque`` (limits.drive_torque),
-    ``friction`` (the ball slides), ``heading`` (the ball spins on the spot, as the floor's torsion gives way).
+    For each direction the force in N at which one limit is reached: ``lean`` (limits.lean), ``torque``
+    (limits.drive_torque), ``friction`` (the ball slides), ``heading`` (the ball spins on the spot, as the floor's
+    torsion gives way).
     """
 
     hand: str
@@ -32,18 +34,23 @@ class PullReserve:
     heading: Array
 
     def weakest(self) -> tuple[float, str, float]:
-        """(force in N, name of the limit, direction in rad) of the least pull that reaches a limit; the heading's set apart."""
+        """(force in N, name of the limit, direction in rad) of the least pull that reaches a limit; the heading's set
+        apart.
+        """
         forces = {"lean": self.lean, "drive torque": self.torque, "floor friction": self.friction}
         name = min(forces, key=lambda key: float(forces[key].min()))
         index = int(np.argmin(forces[name]))
         return float(forces[name][index]), name, float(self.direction[index])
 
 
-def pull_reserve(description: RobotDescription, posture: Posture, hand: str, position_hand_in_base: Array) -> PullReserve:
+def pull_reserve(
+    description: RobotDescription, posture: Posture, hand: str, position_hand_in_base: Array
+) -> PullReserve:
     """How hard ``hand``, at a place [3] in ``base_link``, can be pulled level with the floor before each limit.
 
-    At rest the moment about the contact point is that of gravity and the pull: (R p_h + r z) × f + (R m c) × (-g z) = 0 about x and y,
-    which is linear in f for a given lean. So the leans on the limit's circle give the pulls on the limit.
+    At rest the moment about the contact point is that of gravity and the pull: (R p_h + r z) × f + (R m c) × (-g z) =
+    0 about x and y, which is linear in f for a given lean. So the leans on the limit's circle give the pulls on the
+    limit.
     """
     limits, floor, ball = description.parameters.limits, description.parameters.floor, description.parameters.ball
     about = np.linspace(-np.pi, np.pi, _DIRECTIONS, endpoint=False)
@@ -70,5 +77,7 @@ def pull_reserve(description: RobotDescription, posture: Posture, hand: str, pos
 
 
 def fall_time(rate: float, from_lean: float, to_lean: float) -> float:
-    """Time in s in which a lean error grows from rest at ``from_lean`` to ``to_lean`` (rad) at a rate in rad/s: cosh(rate t)."""
+    """Time in s in which a lean error grows from rest at ``from_lean`` to ``to_lean`` (rad) at a rate in rad/s:
+    cosh(rate t).
+    """
     return math.acosh(to_lean / from_lean) / rate
