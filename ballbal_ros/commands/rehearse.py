@@ -14,12 +14,14 @@ from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
 from ballbal_ros.errors import BallbalError, nearest
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.story import read_story
+from ballbal_ros.motion.story import Story, read_story
 from ballbal_ros.report.run_table import print_runs
-from ballbal_ros.simulation.rehearsal import Rehearsal, plan_story
+from ballbal_ros.simulation.rehearsal import Rehearsal, RobotFiles, Trace, plan_story
 from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet
 from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import parse_truth
+
+_PICTURES = (".png", ".svg", ".pdf")
 
 
 def asked_kinds(asked: Sequence[str] | None) -> tuple[str, ...]:
@@ -38,8 +40,14 @@ def rehearse(
     truth: Sequence[str] = (),
     lead_in: float | None = None,
     console: Console | None = None,
+    figure: Path | None = None,
 ) -> RunSet:
-    """Run a plan file through planner, loop and simulated robot; raises :class:`BallbalError` for wrong input or a refused plan."""
+    """Run a plan file through planner, loop and simulated robot; with ``figure`` draw the first seed's runs into that file.
+
+    Raises :class:`BallbalError` for wrong input or a refused plan.
+    """
+    if figure is not None and figure.suffix.lower() not in _PICTURES:
+        raise BallbalError("--figure", f"{figure} is no picture's name", f"let it end in {', '.join(_PICTURES)}")
     files = read_robot(robot)
     story = read_story(plan, files.description)
     differences = parse_truth(truth, files.description)
@@ -48,17 +56,35 @@ def rehearse(
     if "planned" in kinds and story.planned:
         lean_plan = plan_story(files, story, timeline)
     results: list[RunResult] = []
+    traces: dict[str, Trace] = {}
     columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.completed}/{task.total} runs"), TimeRemainingColumn())
     with Progress(*columns, console=console, transient=True) as progress:
         task = progress.add_task(story.name, total=len(kinds) * len(seeds))
         for kind in kinds:
             for seed in seeds:
                 progress.update(task, description=f"{story.name}: {kind}")
-                run, _ = Rehearsal(files, story, kind, timeline, lean_plan, seed, differences).run()
+                keep = figure is not None and kind not in traces
+                run, trace = Rehearsal(files, story, kind, timeline, lean_plan, seed, differences).run(keep)
                 results.append(run)
+                if trace is not None:
+                    traces[kind] = trace
                 progress.advance(task)
+    if figure is not None:
+        _draw(files, story, timeline, traces, figure)
     limits = planned_limits(results, files, lean_plan)
     return RunSet(files.description.name, story.name, "in-process", tuple(results), limits)
+
+
+def _draw(files: RobotFiles, story: Story, timeline: Timeline, traces: dict[str, Trace], figure: Path) -> None:
+    try:
+        from ballbal_ros.report.lean_figure import draw_motion
+    except ImportError as error:
+        raise BallbalError("--figure", f"needs matplotlib, which is not there ({error})", "install the headless extra") from error
+    title = f"{files.description.name}, plan {story.name}, rehearsed: times from the start of the arms"
+    try:
+        draw_motion(files.description, story.start_loads, timeline, traces, figure, title)
+    except OSError as error:
+        raise BallbalError(str(figure), f"can't be written: {error.strerror}", "give the path of a file to write") from error
 
 
 def rehearse_command(
@@ -74,11 +100,12 @@ def rehearse_command(
     ] = None,
     lead_in: Annotated[float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")] = None,
     json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+    figure: Annotated[Path | None, typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")] = None,
 ) -> None:
     """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan."""
     console = Console()
     runs = rehearse(
-        plan, robot, asked_kinds(compensation), range(seed, seed + repeat), tuple(truth or ()), lead_in, console
+        plan, robot, asked_kinds(compensation), range(seed, seed + repeat), tuple(truth or ()), lead_in, console, figure
     )
     print_runs(runs, console)
     if json_file is not None:
