@@ -18,9 +18,11 @@ _FIRST_ANGLE = 0.1
 
 
 class _Trust:
-    """Gains of a Kalman filter for one angle and its gyro's bias, from knowing nothing on: the same for roll, pitch, heading.
+    """Gains of a Kalman filter for one angle and its gyro's bias, from knowing nothing on: the same for roll, pitch,
+    heading.
 
-    ``rate_density`` rad/s/√Hz is the gyro's white noise, ``rate_walk`` rad/s²/√Hz its bias walk; the angle measured beside it is
+    ``rate_density`` rad/s/√Hz is the gyro's white noise, ``rate_walk`` rad/s²/√Hz its bias walk; the angle measured
+    beside it is
     given the noise at which the filter's time constant, in the end, is ``time_constant`` s.
     """
 
@@ -54,9 +56,12 @@ class _Trust:
 class Attitude:
     """(roll, pitch, heading) and (roll, pitch, heading) rates of the body, tick by tick.
 
-    From the IMU's orientation where that is wanted. Otherwise the gyro is integrated, and drawn towards the vertical that the
-    accelerometer shows **after the acceleration that the loop itself knows of has been taken out**: an attitude filter that takes
-    apparent for true gravity leans with every acceleration. Gyro biases are found on the way; the heading's from the drive, as the
+    From the IMU's orientation where that is wanted. Otherwise the gyro is integrated, and drawn towards the vertical
+    that the
+    accelerometer shows **after the acceleration that the loop itself knows of has been taken out**: an attitude
+    filter that takes
+    apparent for true gravity leans with every acceleration. Gyro biases are found on the way; the heading's from the
+    drive, as the
     floor holds the ball's spin.
     """
 
@@ -97,7 +102,10 @@ class Attitude:
         x, y, z, w = quat_xyzw
         a, b, c, d = self._base_in_imu
         self.roll, self.pitch, self.heading = lean_and_heading_from_quat_xyzw(
-            w * a + x * d + y * c - z * b, w * b - x * c + y * d + z * a, w * c + x * b - y * a + z * d, w * d - x * a - y * b - z * c
+            w * a + x * d + y * c - z * b,
+            w * b - x * c + y * d + z * a,
+            w * c + x * b - y * a + z * d,
+            w * d - x * a - y * b - z * c,
         )
         self._set_rates(self._rotation @ imu_rate, 0.0, 0.0, 0.0)
         self._age = _SETTLING
@@ -122,7 +130,8 @@ class Attitude:
     ) -> None:
         """Our own estimate from rate [3] rad/s and acceleration [3] m/s² in IMU axes.
 
-        ``at_rest``: a stand holds the body still, so that what the gyro shows is its bias. ``known``: the (roll, pitch) acceleration, rad/s², and the ball's (x, y) acceleration, m/s², in ``base_footprint``, as the
+        ``at_rest``: a stand holds the body still, so that what the gyro shows is its bias. ``known``: the (roll,
+        pitch) acceleration, rad/s², and the ball's (x, y) acceleration, m/s², in ``base_footprint``, as the
         loop knows them. ``heading_from_drive``: minus the ball's spin relative to the body, summed up, rad.
         """
         old = self.rates
@@ -168,7 +177,13 @@ class Attitude:
         self._trust.know_bias(self._rested * self._period)
 
     def _motion(
-        self, known: tuple[float, float, float, float], rates: tuple[float, float, float], sr: float, cr: float, sp: float, cp: float
+        self,
+        known: tuple[float, float, float, float],
+        rates: tuple[float, float, float],
+        sr: float,
+        cr: float,
+        sp: float,
+        cp: float,
     ) -> tuple[float, float, float]:
         """Acceleration of the IMU in ``base_link`` from what the loop knows: the ball's, and α×p + ω×(ω×p)."""
         roll_acceleration, pitch_acceleration, ball_x, ball_y = known

@@ -18,8 +18,10 @@ MOMENTS = 3
 
 @attrs.frozen(eq=False)
 class ControllerMatrices:
-    """One tick as matrices: estimate += ``correct`` (measured - ``output`` prior); torque = ``act`` [estimate; past torques];
-    prior = ``predict`` [estimate; torque; past torques]. ``history``: how many past torques still act."""
+    """One tick as matrices: estimate += ``correct`` (measured - ``output`` prior); torque = ``act`` [estimate; past
+    torques];
+    prior = ``predict`` [estimate; torque; past torques]. ``history``: how many past torques still act.
+    """
 
     correct: Array
     output: Array
@@ -55,13 +57,16 @@ def controller_matrices(gains: Gains) -> ControllerMatrices:
 class Controller:
     """Kalman filter and feedback on *deviations* from a reference.
 
-    Deviations: state [roll, pitch, roll rate, pitch rate, x, y, vx, vy, heading, heading rate]; measured [roll, pitch, roll rate,
+    Deviations: state [roll, pitch, roll rate, pitch rate, x, y, vx, vy, heading, heading rate]; measured [roll,
+    pitch, roll rate,
     pitch rate, x, y, heading, heading rate]; torque [x, y, z] on the body; outside moment [roll, pitch, yaw]. SI, rad,
     ``base_footprint`` axes. As the reference carries the planned motion, the linear model sees small numbers only.
     """
 
     def __init__(self, matrices: ControllerMatrices, moment_step: float = np.inf, moment_limit: float = np.inf) -> None:
-        """``moment_step`` and ``moment_limit``, N m: how much the estimated moment may change in a tick, and be at most."""
+        """``moment_step`` and ``moment_limit``, N m: how much the estimated moment may change in a tick, and be at
+        most.
+        """
         self._moment_step, self._moment_limit = moment_step, moment_limit
         known, past = STATES + MOMENTS, INPUTS * matrices.history
         self.prior = np.zeros(known)

@@ -5,7 +5,8 @@ States, and the share of the loop's torque that each may send:
 - ``standby``: 0. Active, waiting to be upright, still and measured.
 - ``engaging``: 0 rising to 1 over ``ramp_time``.
 - ``balancing``: 1.
-- ``stopping``: 1. A controlled stop (IEC 60204-1 category 1): it stays balanced, takes no new motion, and lets go once held.
+- ``stopping``: 1. A controlled stop (IEC 60204-1 category 1): it stays balanced, takes no new motion, and lets go
+once held.
 - ``released``: 0. Held by a stand or gantry after a controlled stop; latched until reset.
 - ``tripped``: 0. Leaned too far to come back, or lost its senses; latched until reset.
 """
@@ -54,7 +55,8 @@ class Guard:
     def update(self, stamp: float, lean_error: float, lean_rate: float, measured: bool, supported: bool) -> float:
         """Go on one tick, and return the share of the loop's torque (0 to 1) that may be sent.
 
-        ``lean_error``: distance from the reference lean, rad; ``lean_rate``: its rate's magnitude, rad/s; ``measured``: whether this
+        ``lean_error``: distance from the reference lean, rad; ``lean_rate``: its rate's magnitude, rad/s;
+        ``measured``: whether this
         tick has IMU and drive data; ``supported``: whether a stand or gantry holds the robot.
         """
         limits = self._parameters.limits

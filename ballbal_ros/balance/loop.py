@@ -27,7 +27,9 @@ _TURN = 2.0 * math.pi
 
 @attrs.frozen
 class BallEstimate:
-    """Where the loop thinks the ball is: x, y (m), heading (rad) in ``odom``; vx, vy (m/s) in ``base_footprint``; heading rate (rad/s)."""
+    """Where the loop thinks the ball is: x, y (m), heading (rad) in ``odom``; vx, vy (m/s) in ``base_footprint``;
+    heading rate (rad/s).
+    """
 
     x: float
     y: float
@@ -43,7 +45,13 @@ class BalanceLoop:
     ``odom`` begins where it engages, with heading zero.
     """
 
-    def __init__(self, description: RobotDescription, parameters: BalanceParameters, arm_position: Array, loads: Iterable[Load] = ()):
+    def __init__(
+        self,
+        description: RobotDescription,
+        parameters: BalanceParameters,
+        arm_position: Array,
+        loads: Iterable[Load] = (),
+    ):
         self.description, self.parameters = description, parameters
         self.body = WholeBody(description, loads)
         self.period = parameters.loop.period
@@ -105,8 +113,12 @@ class BalanceLoop:
         """Estimate of ball and heading in ``odom``."""
         deviation, row = self.controller.estimate, self.reference.row
         return BallEstimate(
-            self._ball[0], self._ball[1], self.heading,
-            float(deviation[6] + row[6]), float(deviation[7] + row[7]), float(deviation[9] + row[9]),
+            self._ball[0],
+            self._ball[1],
+            self.heading,
+            float(deviation[6] + row[6]),
+            float(deviation[7] + row[7]),
+            float(deviation[9] + row[9]),
         )
 
     def add_plan(self, stamp: float, plan: LeanPlan) -> None:
@@ -123,7 +135,9 @@ class BalanceLoop:
         self.reference.set_velocity(0.0, 0.0, 0.0)
 
     def tick(self, measured: Measurement) -> Array:
-        """Actuator efforts [n], N m, that answer this measurement; zeros unless the guard lets torque out. Never NaN."""
+        """Actuator efforts [n], N m, that answer this measurement; zeros unless the guard lets torque out. Never
+        NaN.
+        """
         while self._load_changes and self._load_changes[0][0] <= measured.stamp + 1e-9:
             self.body.set_load(self._load_changes.pop(0)[1])
         fit = measured.finite
@@ -144,7 +158,11 @@ class BalanceLoop:
         x, y, z = (0.0, 0.0, 0.0) if last is None else (self._spin_map @ (angle - last)).tolist()
         roll, pitch = self._last_lean
         sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
-        turn_x, turn_y, turn_z = cp * x + sp * sr * y + sp * cr * z, cr * y - sr * z, -sp * x + cp * sr * y + cp * cr * z
+        turn_x, turn_y, turn_z = (
+            cp * x + sp * sr * y + sp * cr * z,
+            cr * y - sr * z,
+            -sp * x + cp * sr * y + cp * cr * z,
+        )
         self._drive_heading -= turn_z
         if self._own and measured.imu_acceleration is not None:
             at_rest = self.supported and self.guard.state == STANDBY
@@ -164,7 +182,9 @@ class BalanceLoop:
         self._ball[1] += sin * ahead + cos * aside
 
     def _known_acceleration(self) -> tuple[float, float, float, float]:
-        """(roll, pitch, ball x, ball y) acceleration at this tick, as reference and model have it; none while a stand may hold it."""
+        """(roll, pitch, ball x, ball y) acceleration at this tick, as reference and model have it; none while a stand
+        may hold it.
+        """
         if self.guard.state not in (BALANCING, STOPPING):
             return 0.0, 0.0, 0.0, 0.0
         controller, row = self.controller, self.reference.row
@@ -179,7 +199,9 @@ class BalanceLoop:
         off_roll, off_pitch = attitude.roll - reference[0], attitude.pitch - reference[1]
         off_rates = rates[0] - reference[2], rates[1] - reference[3]
         before = guard.state
-        share = guard.update(stamp, math.hypot(off_roll, off_pitch), math.hypot(*off_rates), fit and attitude.settled, self.supported)
+        share = guard.update(
+            stamp, math.hypot(off_roll, off_pitch), math.hypot(*off_rates), fit and attitude.settled, self.supported
+        )
         if guard.state == ENGAGING and before == STANDBY:
             self._engage()
             off_roll, off_pitch = attitude.roll - self.reference.row[0], attitude.pitch - self.reference.row[1]
@@ -191,7 +213,14 @@ class BalanceLoop:
             away_x, away_y = self._off_station(reference)
             off_heading = (self.heading - reference[8] + math.pi) % _TURN - math.pi
             self._deviation[:] = (
-                off_roll, off_pitch, off_rates[0], off_rates[1], away_x, away_y, off_heading, rates[2] - reference[9]
+                off_roll,
+                off_pitch,
+                off_rates[0],
+                off_rates[1],
+                away_x,
+                away_y,
+                off_heading,
+                rates[2] - reference[9],
             )
         if guard.state == ENGAGING:
             controller.forget_moment()
@@ -234,7 +263,9 @@ class BalanceLoop:
         return effort
 
     def _shared_out(self, tx: float, ty: float, tz: float) -> tuple[Array, tuple[float, float, float]]:
-        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit (the heading gives way first), and what they give."""
+        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit (the heading gives way
+        first), and what they give.
+        """
         roll, pitch = self._last_lean
         sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
         base = self._in_base

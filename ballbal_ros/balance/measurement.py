@@ -13,8 +13,10 @@ from ballbal_ros.robot.arrays import Array
 class Measurement:
     """One tick's input; made once and filled anew each tick, as the loop is fast.
 
-    ``stamp`` in s; ``imu_quat_xyzw`` the IMU's orientation in ``odom`` or None; ``imu_rate`` [3] rad/s and ``imu_acceleration``
-    [3] m/s² in IMU axes (REP-145: at rest with z up it reads +g) or None; ``drive_angle`` [n] rad, relative to the body;
+    ``stamp`` in s; ``imu_quat_xyzw`` the IMU's orientation in ``odom`` or None; ``imu_rate`` [3] rad/s and
+    ``imu_acceleration``
+    [3] m/s² in IMU axes (REP-145: at rest with z up it reads +g) or None; ``drive_angle`` [n] rad, relative to the
+    body;
     ``arm_position`` [joints].
     """
 

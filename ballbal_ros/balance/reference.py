@@ -15,10 +15,13 @@ _TURNING = 0.8
 
 
 class Reference:
-    """The reference of each tick, as ``row`` [17] (columns as in :data:`~ballbal_ros.motion.lean_plan.REFERENCE_WIDTH`).
+    """The reference of each tick, as ``row`` [17] (columns as in
+    :data:`~ballbal_ros.motion.lean_plan.REFERENCE_WIDTH`).
 
-    The ball's columns in ``row`` are relative to ``station`` (x, y in ``odom``), in the axes of ``frame_heading``. With no plan in
-    force the lean is that which balances the measured arms (compensation ``planned`` and ``quasi_static``), or that at engage
+    The ball's columns in ``row`` are relative to ``station`` (x, y in ``odom``), in the axes of ``frame_heading``.
+    With no plan in
+    force the lean is that which balances the measured arms (compensation ``planned`` and ``quasi_static``), or that
+    at engage
     (``none``); after a plan's end it goes on from the plan's last lean without a jump.
     """
 
@@ -77,7 +80,9 @@ class Reference:
         self._tables.clear()
 
     def set_velocity(self, x: float, y: float, turning: float) -> None:
-        """Commanded velocity of the ball (m/s, heading axes) and of the heading (rad/s); reached with a bounded acceleration."""
+        """Commanded velocity of the ball (m/s, heading axes) and of the heading (rad/s); reached with a bounded
+        acceleration.
+        """
         self._wanted = [x, y, turning]
 
     def update(self, stamp: float, arm_position: Array) -> Array:

@@ -1,8 +1,10 @@
 """Gains for every posture: designed on a grid when the loop is made, blended at run time.
 
-Reaching out changes the robot by a third of its inertia, and gains for hanging arms do not hold it then. For one axis the linear model
+Reaching out changes the robot by a third of its inertia, and gains for hanging arms do not hold it then. For one axis
+the linear model
 depends on mass moment and inertia of the upper body about its mass centre, for the heading on the inertia about the
-vertical. So a grid over what this robot's postures and loads can reach is enough, and no design is made while it stands.
+vertical. So a grid over what this robot's postures and loads can reach is enough, and no design is made while it
+stands.
 """
 
 from __future__ import annotations
@@ -27,7 +29,9 @@ _INPUT_AXIS = (0, 1, 2)
 
 @attrs.frozen
 class PostureRange:
-    """What postures and loads of a robot can reach: mass (mean), mass moment m h, inertia about x and y, and about z: least, most."""
+    """What postures and loads of a robot can reach: mass (mean), mass moment m h, inertia about x and y, and about z:
+    least, most.
+    """
 
     mass: float
     moment: tuple[float, float]
@@ -36,7 +40,9 @@ class PostureRange:
 
     @classmethod
     def of(cls, description: RobotDescription, present: Posture) -> PostureRange:
-        """Sample postures within the joint limits and loads within the hands', always the same ones; ``present`` is among them."""
+        """Sample postures within the joint limits and loads within the hands', always the same ones; ``present`` is
+        among them.
+        """
         random = np.random.default_rng(0)
         body = WholeBody(description)
         hands, limit = description.parameters.hands.links, description.parameters.hands.load_limit
@@ -116,4 +122,3 @@ def _place(grid: Array, value: float) -> tuple[int, float]:
     fraction = min(max(fraction, 0.0), len(grid) - 1.0)
     index = min(int(fraction), len(grid) - 2)
     return index, fraction - index
-

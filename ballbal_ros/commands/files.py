@@ -18,7 +18,9 @@ from ballbal_ros.simulation.rehearsal import RobotFiles
 def read_robot(folder: Path) -> RobotFiles:
     """Read the four parameter files and the URDF of a robot's folder; raises :class:`BallbalError` in one line."""
     if not folder.is_dir():
-        raise BallbalError("--robot", f"{folder} is no folder", "give the folder that holds robot.yaml, such as config/shelver")
+        raise BallbalError(
+            "--robot", f"{folder} is no folder", "give the folder that holds robot.yaml, such as config/shelver"
+        )
     return RobotFiles(
         description=RobotDescription.load(folder),
         balance=load(BalanceParameters, folder / "balance.yaml"),
@@ -32,4 +34,6 @@ def write_json(path: Path, document: Any) -> None:
     try:
         path.write_text(json.dumps(document, indent=2, allow_nan=False) + "\n", encoding="utf-8")
     except OSError as error:
-        raise BallbalError(str(path), f"can't be written: {error.strerror}", "give the path of a file to write") from error
+        raise BallbalError(
+            str(path), f"can't be written: {error.strerror}", "give the path of a file to write"
+        ) from error

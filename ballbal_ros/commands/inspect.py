@@ -35,11 +35,16 @@ class Inspection:
 
 
 def inspect_robot(robot: Path, plan: Path | None, joints: tuple[str, ...], loads: tuple[str, ...]) -> Inspection:
-    """Look at the robot of a folder in a posture; raises a :class:`~ballbal_ros.errors.BallbalError` for wrong input."""
+    """Look at the robot of a folder in a posture; raises a :class:`~ballbal_ros.errors.BallbalError` for wrong
+    input.
+    """
     description = RobotDescription.load(robot)
     asked = asked_posture(description, plan, joints, loads)
     hands = description.parameters.hands.links
-    pulls = tuple(pull_reserve(description, asked.posture, hand, asked.body.hand_position(hand, asked.arm_position)) for hand in hands)
+    pulls = tuple(
+        pull_reserve(description, asked.posture, hand, asked.body.hand_position(hand, asked.arm_position))
+        for hand in hands
+    )
     return Inspection(description, asked, linear_model(asked.posture, description), pulls)
 
 
@@ -66,8 +71,14 @@ def inspection_as_data(found: Inspection) -> dict[str, Any]:
             "ball_held": fall_time(max(found.model.ball_held_rate), _FROM, _TO),
             "ball_free": fall_time(max(found.model.open_loop_pole), _FROM, _TO),
         },
-        "lead_in_s": {"98_percent": 4.0 / min(found.model.ball_held_rate), "99_percent": math.log(100.0) / min(found.model.ball_held_rate)},
-        "gravity_moment_at_lean_limit_nm": posture.mass * GRAVITY * posture.center[2] * math.sin(parameters.limits.lean),
+        "lead_in_s": {
+            "98_percent": 4.0 / min(found.model.ball_held_rate),
+            "99_percent": math.log(100.0) / min(found.model.ball_held_rate),
+        },
+        "gravity_moment_at_lean_limit_nm": posture.mass
+        * GRAVITY
+        * posture.center[2]
+        * math.sin(parameters.limits.lean),
         "floor_friction_limit_n": parameters.floor.friction * weight,
         "floor_torsion_limit_nm": parameters.floor.torsion * weight,
         "pulls": [
@@ -131,7 +142,10 @@ def _rate_rows(model: LinearModel) -> list[tuple[str, str]]:
         ("rate, ball held", f"{held:.2f} rad/s; the planner's lead-in lives on it"),
         ("lead-in", f"4/rate = {4.0 / slowest:.2f} s; for 1 % left {math.log(100.0) / slowest:.2f} s"),
         ("open-loop pole", f"{free:.2f} rad/s, ball free; the delay margin lives on it"),
-        ("fall, 1° to 20°", f"{fall_time(held, _FROM, _TO):.2f} s ball held, {fall_time(free, _FROM, _TO):.2f} s ball free"),
+        (
+            "fall, 1° to 20°",
+            f"{fall_time(held, _FROM, _TO):.2f} s ball held, {fall_time(free, _FROM, _TO):.2f} s ball free",
+        ),
     ]
 
 
@@ -143,7 +157,11 @@ def _reserve_rows(found: Inspection) -> list[tuple[str, str]]:
     axes = [drive.torque_limit(axis) for axis in ((1.0, 0.0, 0.0), (0.0, 1.0, 0.0), (0.0, 0.0, 1.0))]
     return [
         ("reach of lean", f"{math.degrees(p.limits.lean):.1f}°: balances {moment:.0f} N m about the contact"),
-        ("drive torque", f"limit {p.limits.drive_torque:g} N m; actuators give {axes[0]:.0f}, {axes[1]:.0f}, {axes[2]:.0f} about x, y, z"),
+        (
+            "drive torque",
+            f"limit {p.limits.drive_torque:g} N m; actuators give "
+            f"{axes[0]:.0f}, {axes[1]:.0f}, {axes[2]:.0f} about x, y, z",
+        ),
         ("floor friction", f"{p.floor.friction * weight:.0f} N before the ball slides"),
         ("floor torsion", f"{p.floor.torsion * weight:.2f} N m before the ball spins on the spot"),
     ]
@@ -151,7 +169,9 @@ def _reserve_rows(found: Inspection) -> list[tuple[str, str]]:
 
 def inspect_command(
     robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
-    posture: Annotated[Path | None, typer.Option("--posture", help="Plan file whose start gives posture and loads.")] = None,
+    posture: Annotated[
+        Path | None, typer.Option("--posture", help="Plan file whose start gives posture and loads.")
+    ] = None,
     joint: Annotated[list[str] | None, typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
     load: Annotated[list[str] | None, typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
     json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,

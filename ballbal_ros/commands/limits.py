@@ -10,8 +10,12 @@ from ballbal_ros.simulation.run_result import LimitCheck, RunResult
 
 
 def planned_limits(runs: Sequence[RunResult], files: RobotFiles, plan: LeanPlan | None) -> tuple[LimitCheck, ...]:
-    """The worst of the planned runs against the limits of robot.yaml and compensation.yaml; with no planned run, of the still ones."""
-    held = [run for run in runs if run.compensation == "planned"] or [run for run in runs if run.compensation == "still"]
+    """The worst of the planned runs against the limits of robot.yaml and compensation.yaml; with no planned run, of
+    the still ones.
+    """
+    held = [run for run in runs if run.compensation == "planned"] or [
+        run for run in runs if run.compensation == "still"
+    ]
     if not held:
         return ()
     limits, use = files.description.parameters.limits, files.compensation.acceptance
@@ -23,5 +27,7 @@ def planned_limits(runs: Sequence[RunResult], files: RobotFiles, plan: LeanPlan 
         LimitCheck("friction use", max(run.friction_use_peak for run in held), 1.0, ""),
     ]
     if plan is not None:
-        checks += [LimitCheck(f"planned {u.name}", u.value, u.limit, u.unit) for u in plan.uses if u.name == "torsion use"]
+        checks += [
+            LimitCheck(f"planned {u.name}", u.value, u.limit, u.unit) for u in plan.uses if u.name == "torsion use"
+        ]
     return tuple(checks)

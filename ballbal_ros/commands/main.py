@@ -1,4 +1,6 @@
-"""``ballbal``: the one command. Exit status 0: done and within limits; 1: done but outside limits; 2: the input is wrong."""
+"""``ballbal``: the one command. Exit status 0: done and within limits; 1: done but outside limits; 2: the input is
+wrong.
+"""
 
 from __future__ import annotations
 

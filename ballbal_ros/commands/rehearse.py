@@ -42,7 +42,8 @@ def rehearse(
     console: Console | None = None,
     figure: Path | None = None,
 ) -> RunSet:
-    """Run a plan file through planner, loop and simulated robot; with ``figure`` draw the first seed's runs into that file.
+    """Run a plan file through planner, loop and simulated robot; with ``figure`` draw the first seed's runs into that
+    file.
 
     Raises :class:`BallbalError` for wrong input or a refused plan.
     """
@@ -57,7 +58,12 @@ def rehearse(
         lean_plan = plan_story(files, story, timeline)
     results: list[RunResult] = []
     traces: dict[str, Trace] = {}
-    columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.completed}/{task.total} runs"), TimeRemainingColumn())
+    columns = (
+        TextColumn("{task.description}"),
+        BarColumn(),
+        TextColumn("{task.completed}/{task.total} runs"),
+        TimeRemainingColumn(),
+    )
     with Progress(*columns, console=console, transient=True) as progress:
         task = progress.add_task(story.name, total=len(kinds) * len(seeds))
         for kind in kinds:
@@ -79,28 +85,38 @@ def _draw(files: RobotFiles, story: Story, timeline: Timeline, traces: dict[str,
     try:
         from ballbal_ros.report.lean_figure import draw_motion
     except ImportError as error:
-        raise BallbalError("--figure", f"needs matplotlib, which is not there ({error})", "install the headless extra") from error
+        raise BallbalError(
+            "--figure", f"needs matplotlib, which is not there ({error})", "install the headless extra"
+        ) from error
     title = f"{files.description.name}, plan {story.name}, rehearsed: times from the start of the arms"
     try:
         draw_motion(files.description, story.start_loads, timeline, traces, figure, title)
     except OSError as error:
-        raise BallbalError(str(figure), f"can't be written: {error.strerror}", "give the path of a file to write") from error
+        raise BallbalError(
+            str(figure), f"can't be written: {error.strerror}", "give the path of a file to write"
+        ) from error
 
 
 def rehearse_command(
     plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/reach.yaml.")],
     robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
     compensation: Annotated[
-        list[str] | None, typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it.")
+        list[str] | None,
+        typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it."),
     ] = None,
     seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
     repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
     truth: Annotated[
-        list[str] | None, typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable.")
+        list[str] | None,
+        typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
     ] = None,
-    lead_in: Annotated[float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")] = None,
+    lead_in: Annotated[
+        float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
+    ] = None,
     json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
-    figure: Annotated[Path | None, typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")] = None,
+    figure: Annotated[
+        Path | None, typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")
+    ] = None,
 ) -> None:
     """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan."""
     console = Console()

@@ -1,4 +1,6 @@
-"""What the arms do and will do, and the lean that goes with it: one motion after the other, each planned before it begins."""
+"""What the arms do and will do, and the lean that goes with it: one motion after the other, each planned before it
+begins.
+"""
 
 from __future__ import annotations
 
@@ -39,7 +41,8 @@ class ArmState:
 class Wanted:
     """An arm motion that somebody wants. ``stamp``: when the arms should start, s; 0: as soon as possible.
 
-    ``path`` makes it from where the arms will be then; it takes ``duration`` s. The ball's motion and the outside forces
+    ``path`` makes it from where the arms will be then; it takes ``duration`` s. The ball's motion and the outside
+    forces
     are timed from the arms' start.
     """
 
@@ -52,7 +55,9 @@ class Wanted:
 
 @attrs.frozen(eq=False)
 class Proposal:
-    """A motion ready to go: the arms' path from ``arms_start``, s, on, and the lean plan from ``lean_start`` on (or none)."""
+    """A motion ready to go: the arms' path from ``arms_start``, s, on, and the lean plan from ``lean_start`` on (or
+    none).
+    """
 
     lean_start: float
     arms_start: float
@@ -89,7 +94,8 @@ class ArmSchedule:
     def arms_at(self, time: float, measured: Array) -> ArmState:
         """Where the arms are commanded to be at a time, s; where no motion says so, as measured [n] and at rest.
 
-        Arms that rest elsewhere than they were commanded to have been moved by somebody else: then the measurement holds.
+        Arms that rest elsewhere than they were commanded to have been moved by somebody else: then the measurement
+        holds.
         """
         still = np.zeros(self.description.joint_count)
         if self._motion is None:
@@ -104,12 +110,13 @@ class ArmSchedule:
     def plan(self, wanted: Wanted, now: float, measured: Array) -> Proposal:
         """Plan a motion; raises :class:`BallbalError` in one line where it can't be done or would go beyond a limit."""
         settings = self.parameters.planner
-        earliest = now + settings.allowance + _PLANNING_SHARE * wanted.duration
+        earliest = now + settings.allowance
         if wanted.stamp > 0.0:
             lean_start = max(wanted.stamp - settings.lead_in, earliest)
             arms_start = max(wanted.stamp, lean_start)
         else:
-            lean_start, arms_start = earliest, earliest + settings.lead_in
+            lean_start = earliest + _PLANNING_SHARE * wanted.duration
+            arms_start = lean_start + settings.lead_in
         path = wanted.path(self.arms_at(arms_start, measured))
         check_path(path, self.description, _TOPIC)
         return self._propose(lean_start, arms_start, path, wanted)
@@ -117,8 +124,10 @@ class ArmSchedule:
     def stop(self, now: float) -> Proposal | None:
         """Plan the arms' way to rest from the motion in force; None where there is nothing to stop.
 
-        It takes ``stop_time`` from ``allowance`` s ahead, or up to three times as long where the limits need that. Raises
-        :class:`PlanRefused` where none is possible: then the motion in force, which has been checked, should end as planned.
+        It takes ``stop_time`` from ``allowance`` s ahead, or up to three times as long where the limits need that.
+        Raises
+        :class:`PlanRefused` where none is possible: then the motion in force, which has been checked, should end as
+        planned.
         """
         if self._motion is None or self._motion.end <= now + self.parameters.planner.allowance:
             return None

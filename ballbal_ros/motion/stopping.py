@@ -59,7 +59,8 @@ class Later:
 
 
 def stop_path(position: Array, rate: Array, acceleration: Array, time: float, low: Array, high: Array) -> ArmPath:
-    """From a moving state [n] to rest in ``time`` s: the rate falls as a cubic, where the joints' limits [n] leave room.
+    """From a moving state [n] to rest in ``time`` s: the rate falls as a cubic, where the joints' limits [n] leave
+    room.
 
     Rad or m, s.
     """

@@ -38,11 +38,14 @@ def draw_motion(
 ) -> None:
     """Write the picture of some runs of one plan (PNG, SVG or PDF by the file's ending).
 
-    Above the robot from its left side at five times of the planned run, below arms and lean, and the ball's travel of all.
+    Above the robot from its left side at five times of the planned run, below arms and lean, and the ball's travel of
+    all.
     """
     planned = traces.get("planned") or next(iter(traces.values()))
     figure = plt.figure(figsize=(10.0, 7.8), facecolor="white")
-    grid = figure.add_gridspec(3, 5, height_ratios=(1.9, 1.0, 1.0), hspace=0.38, wspace=0.05, left=0.08, right=0.93, top=0.9, bottom=0.07)
+    grid = figure.add_gridspec(
+        3, 5, height_ratios=(1.9, 1.0, 1.0), hspace=0.38, wspace=0.05, left=0.08, right=0.93, top=0.9, bottom=0.07
+    )
     figure.suptitle(title, x=0.08, ha="left", fontsize=13, color=_INK)
     moments = _moments(timeline, planned)
     body, solids = WholeBody(description, loads), shapes(description)
@@ -66,7 +69,13 @@ def _moments(timeline: Timeline, trace: Trace) -> list[float]:
 
 
 def _draw_robot(
-    axes: Any, description: RobotDescription, body: WholeBody, solids: list[Any], trace: Trace, moment: float, timeline: Timeline
+    axes: Any,
+    description: RobotDescription,
+    body: WholeBody,
+    solids: list[Any],
+    trace: Trace,
+    moment: float,
+    timeline: Timeline,
 ) -> None:
     k = min(int(np.searchsorted(trace.time, moment)), len(trace.time) - 1)
     lean, arms, ball_x = trace.lean[k], trace.arms[k], float(trace.ball[k, 0] - trace.ball[0, 0])
@@ -114,7 +123,9 @@ def _draw_travel(axes: Any, traces: Mapping[str, Trace], timeline: Timeline) -> 
         if kind in traces:
             trace = traces[kind]
             away = 1e3 * np.hypot(*(trace.ball - trace.ball[0]).T)
-            axes.plot(trace.time - timeline.arms, np.maximum(away, 1e-2), color=_COLORS[kind], label=kind, linewidth=1.2)
+            axes.plot(
+                trace.time - timeline.arms, np.maximum(away, 1e-2), color=_COLORS[kind], label=kind, linewidth=1.2
+            )
     axes.set_yscale("log")
     axes.set_ylim(0.03, None)
     axes.set_ylabel("ball travel, mm")

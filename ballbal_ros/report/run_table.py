@@ -17,7 +17,9 @@ MEANING = {
 
 
 def print_runs(runs: RunSet, console: Console) -> None:
-    """Print one row for each kind of compensation (the median where there are several seeds), then the planned runs' limits."""
+    """Print one row for each kind of compensation (the median where there are several seeds), then the planned runs'
+    limits.
+    """
     count = max((sum(1 for r in runs.runs if r.compensation == kind) for kind in KINDS), default=0)
     seeds = "" if count <= 1 else f", median (worst) of {count} seeds"
     console.print(f"[bold]{runs.robot}[/bold], plan {runs.plan}, {runs.clock}{seeds}", highlight=False)

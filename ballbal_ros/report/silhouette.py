@@ -28,7 +28,9 @@ class Shape:
 
 @attrs.frozen(eq=False)
 class Outline:
-    """A solid seen from the left: corners [N, 2] of its outline as (x, z), m, how far to the left it is, and its colour."""
+    """A solid seen from the left: corners [N, 2] of its outline as (x, z), m, how far to the left it is, and its
+    colour.
+    """
 
     corners: Array
     depth: float
@@ -79,14 +81,19 @@ def _points(geometry: ElementTree.Element | None) -> Array | None:
         return np.vstack([np.column_stack((circle, np.full(len(turn), z))) for z in (-half_length, half_length)])
     if solid.tag == "sphere":
         rings = [
-            np.column_stack((math.cos(a) * circle, np.full(len(turn), radius * math.sin(a)))) for a in np.linspace(-1.5, 1.5, 9)
+            np.column_stack((math.cos(a) * circle, np.full(len(turn), radius * math.sin(a))))
+            for a in np.linspace(-1.5, 1.5, 9)
         ]
         return np.vstack(rings)
     return None
 
 
-def outlines(description: RobotDescription, solids: list[Shape], arm_position: Array, lean: Array, ball_x: float) -> list[Outline]:
-    """The robot's outlines from the left, farthest first, at an arm position [n] and lean [2]; the floor is at z = 0."""
+def outlines(
+    description: RobotDescription, solids: list[Shape], arm_position: Array, lean: Array, ball_x: float
+) -> list[Outline]:
+    """The robot's outlines from the left, farthest first, at an arm position [n] and lean [2]; the floor is at z =
+    0.
+    """
     model = description.model
     data = model.createData()
     q = pin.neutral(model)

@@ -35,7 +35,9 @@ class Happenings:
         self._loads = sorted([*self._loads, (time, load)], key=lambda entry: entry[0])
 
     def add_push(self, time: float, during: float, link: str, at: Iterable[float], force: Iterable[float]) -> None:
-        """A force [3], N in ``odom``, at a point [3], m, of a link, from ``time`` for ``during`` s; it takes the place of one before."""
+        """A force [3], N in ``odom``, at a point [3], m, of a link, from ``time`` for ``during`` s; it takes the
+        place of one before.
+        """
         self._pushes = sorted(
             [*self._pushes, (time, during, link, tuple(at), tuple(force))], key=lambda entry: entry[0]
         )
@@ -43,9 +45,11 @@ class Happenings:
     def add_wrench(
         self, time: float, during: float, link: str, force: Iterable[float], torque: Iterable[float]
     ) -> None:
-        """A force and a torque about the link's origin [3], in ``odom`` axes, that one push makes: its line of action is found.
+        """A force and a torque about the link's origin [3], in ``odom`` axes, that one push makes: its line of action
+        is found.
 
-        Raises :class:`BallbalError` where a number is not finite, the link is unknown or the torque is none that the force makes.
+        Raises :class:`BallbalError` where a number is not finite, the link is unknown or the torque is none that the
+        force makes.
         """
         f, moment = np.array(tuple(force), float), np.array(tuple(torque), float)
         robot = self._robot

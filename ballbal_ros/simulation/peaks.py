@@ -28,5 +28,7 @@ class Peaks:
         self._friction = max(self._friction, robot.friction_use)
 
     def values(self) -> dict[str, float | bool]:
-        """Greatest commanded drive torque about a level axis, N m; greatest share of the floor's friction; whether it fell."""
+        """Greatest commanded drive torque about a level axis, N m; greatest share of the floor's friction; whether it
+        fell.
+        """
         return {"drive torque peak": self._torque, "friction use peak": self._friction, "fell": self._robot.fell}

@@ -1,4 +1,6 @@
-"""A rehearsal: a story run in-process through the very same planner, estimator and loop as the nodes, against the simulated robot."""
+"""A rehearsal: a story run in-process through the very same planner, estimator and loop as the nodes, against the
+simulated robot.
+"""
 
 from __future__ import annotations
 
@@ -39,7 +41,9 @@ class RobotFiles:
 
 @attrs.frozen(eq=False)
 class Trace:
-    """What a run looked like, a row every tick from the run's start: time (s), true ball x, y and heading-frame lean, torque, arm positions."""
+    """What a run looked like, a row every tick from the run's start: time (s), true ball x, y and heading-frame lean,
+    torque, arm positions.
+    """
 
     time: Array
     ball: Array
@@ -69,7 +73,9 @@ def plan_story(files: RobotFiles, story: Story, timeline: Timeline) -> LeanPlan:
 
 
 class Rehearsal:
-    """One run of a story. ``kind`` is one of :data:`~ballbal_ros.simulation.run_result.KINDS`; ``plan`` is needed for ``planned``."""
+    """One run of a story. ``kind`` is one of :data:`~ballbal_ros.simulation.run_result.KINDS`; ``plan`` is needed for
+    ``planned``.
+    """
 
     def __init__(
         self,
@@ -168,5 +174,10 @@ class Rehearsal:
     def _trace(self, states: Array, rows: list[tuple[Array, ...]]) -> Trace:
         lean, torque, arms = (np.array(column) for column in zip(*rows))
         return Trace(
-            RUN_START + self.loop.period * np.arange(len(states)), states[:, :2], lean, torque, arms, states[:, 5]
+            np.asarray(RUN_START + self.loop.period * np.arange(len(states)), float),
+            states[:, :2],
+            lean,
+            torque,
+            arms,
+            states[:, 5],
         )

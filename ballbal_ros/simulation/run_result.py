@@ -12,7 +12,9 @@ KINDS = ("planned", "quasi_static", "none", "still")
 
 @attrs.frozen
 class RunResult:
-    """One run. Ball travel is that of the true ball centre from where it was when the run began, or from where it was meant to be."""
+    """One run. Ball travel is that of the true ball centre from where it was when the run began, or from where it was
+    meant to be.
+    """
 
     compensation: str
     seed: int

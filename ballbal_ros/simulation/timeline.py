@@ -13,7 +13,9 @@ RUN_START = 2.5
 
 @attrs.frozen
 class Timeline:
-    """Times of a run, s: it begins on the stand at 0. ``story`` is time 0 of the plan file; arms begin at ``arms``, the lean at ``lean``."""
+    """Times of a run, s: it begins on the stand at 0. ``story`` is time 0 of the plan file; arms begin at ``arms``,
+    the lean at ``lean``.
+    """
 
     story: float
     lean: float
@@ -22,7 +24,9 @@ class Timeline:
 
     @classmethod
     def of(cls, story: Story, parameters: CompensationParameters, lead_in: float | None = None) -> Timeline:
-        """Lay a story on the run's time. ``lead_in`` replaces the parameter's; the plan file's first wait is prolonged to hold it."""
+        """Lay a story on the run's time. ``lead_in`` replaces the parameter's; the plan file's first wait is
+        prolonged to hold it.
+        """
         lead = parameters.planner.lead_in if lead_in is None else lead_in
         begin = RUN_START + max(0.0, lead - story.arms_start)
         arms = begin + story.arms_start

@@ -200,10 +200,14 @@ def standing_still(regulator: Regulator, gains: Gains) -> float:
     return float(np.sqrt(covariance[4, 4]))
 
 
-def test_noise_floor(gains: Gains) -> None:
-    """Standing still with a mid-range gyro (EuRoC data set's ADIS16448) the ball's standard deviation is 0.6 mm."""
-    assert gains.parameters.estimator.rate_noise == pytest.approx(1.7e-4 * np.sqrt(500.0), rel=0.01)
-    assert standing_still(gains.station, gains) < 0.6e-3
+@pytest.mark.parametrize(("density", "most"), [(1.7e-4, 0.6e-3), (5e-5, 0.25e-3)])
+def test_noise_floor(density: float, most: float) -> None:
+    """Standing still the ball's standard deviation is the gyro's affair: 0.6 mm with a mid-range one (EuRoC data set's
+    ADIS16448), 0.25 mm with the demo robot's.
+    """
+    noise = attrs.evolve(balance().estimator, rate_noise=density * np.sqrt(500.0))
+    gains = design(reach().body().posture(reach().first), shelver(), attrs.evolve(balance(), estimator=noise))
+    assert standing_still(gains.station, gains) < most
 
 
 def test_estimator_is_the_best_for_its_noise(gains: Gains) -> None:

@@ -1,4 +1,6 @@
-"""Rehearsals of the demo robot, as the closed-loop tests want them: in-process, so that they don't depend on the machine."""
+"""Rehearsals of the demo robot, as the closed-loop tests want them: in-process, so that they don't depend on the
+machine.
+"""
 
 from __future__ import annotations
 
@@ -26,7 +28,9 @@ def files() -> RobotFiles:
 
 
 def changed(**changes: dict[str, Any]) -> RobotFiles:
-    """The demo robot's files with parameters replaced: ``balance={"attitude": "imu"}``, likewise compensation, simulation."""
+    """The demo robot's files with parameters replaced: ``balance={"attitude": "imu"}``, likewise compensation,
+    simulation.
+    """
     new = {
         name: build(type(getattr(files(), name)), {**flatten(getattr(files(), name)), **values}, name)
         for name, values in changes.items()

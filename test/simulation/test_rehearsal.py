@@ -21,7 +21,10 @@ def peaks(runs: list) -> list[float]:
 
 def test_planned_reach_keeps_the_ball_within_its_noise_floor():
     """Both arms swing 4 kg forward in 0.8 s, and the ball moves hardly more than with nothing moving."""
-    planned, still = peaks(rehearsed(story("reach"), "planned", SEEDS)), peaks(rehearsed(story("reach"), "still", SEEDS))
+    planned, still = (
+        peaks(rehearsed(story("reach"), "planned", SEEDS)),
+        peaks(rehearsed(story("reach"), "still", SEEDS)),
+    )
     assert median(planned) <= 2.0
     assert median(planned) <= 3.0 * median(still)
 
@@ -39,7 +42,8 @@ def test_planned_reach_keeps_the_ball_within_its_noise_floor_over_twenty_seeds()
 
 def test_without_the_plan_the_same_motion_costs_thirty_times_as_much():
     """The motion is not tame: unplanned and quasi-static leans let the ball go far (common practice, no source: any arm
-    motion makes the base roll without compensation)."""
+    motion makes the base roll without compensation).
+    """
     planned = rehearsed(story("reach"), "planned")[0].ball_travel_peak_mm
     for kind in ("none", "quasi_static"):
         assert rehearsed(story("reach"), kind)[0].ball_travel_peak_mm >= 30.0 * planned
@@ -63,8 +67,12 @@ def test_a_push_is_survived_and_made_good():
 
 
 def test_a_long_push_moves_it_away_from_the_push(tmp_path: Path):
-    """A steady push of a few newtons moves a compliant machine of 60 to 75 kg, away from the push (common practice, no source)."""
-    text = "steps: [{wait: 1.0}, {push: {link: base_link, at: [0, 0, 0.9], force: [6, 0, 0], during: 1.0}}, {wait: 0.1}]"
+    """A steady push of a few newtons moves a compliant machine of 60 to 75 kg, away from the push (common practice,
+    no source).
+    """
+    text = (
+        "steps: [{wait: 1.0}, {push: {link: base_link, at: [0, 0, 0.9], force: [6, 0, 0], during: 1.0}}, {wait: 0.1}]"
+    )
     _, trace = one_run(story_of(text, tmp_path), "planned", trace=True)
     begin = np.searchsorted(trace.time, trace.time[-1] - 1.1)
     assert trace.ball[-1, 0] - trace.ball[begin, 0] > 1e-3
@@ -77,8 +85,10 @@ def test_a_load_said_to_be_lighter_than_it_is_is_trimmed_away():
 
 
 def test_our_attitude_bears_acceleration_that_an_attitude_filter_takes_for_tilt():
-    """imu/data's orientation tilts with every acceleration (our simulated filter does, as filters do); ours, which takes known
-    acceleration out, keeps the ball closer during a planned reach."""
+    """imu/data's orientation tilts with every acceleration (our simulated filter does, as filters do); ours, which
+    takes known
+    acceleration out, keeps the ball closer during a planned reach.
+    """
     seeds = range(3)
     own = peaks(rehearsed(story("reach"), "planned", seeds, changed(balance={"attitude": "own"})))
     imu = peaks(rehearsed(story("reach"), "planned", seeds, changed(balance={"attitude": "imu"})))
@@ -92,7 +102,9 @@ def test_a_slow_arm_servo_is_planned_with():
     arm = attrs.evolve(parameters.arm, servo="position", servo_bandwidth=40.0)
     aware = attrs.evolve(files().description, parameters=attrs.evolve(parameters, arm=arm))
     known = attrs.evolve(changed(simulation=slow), description=aware)
-    (planned,), (unaware,) = (peaks(rehearsed(story("reach"), "planned", robot=robot)) for robot in (known, changed(simulation=slow)))
+    (planned,), (unaware,) = (
+        peaks(rehearsed(story("reach"), "planned", robot=robot)) for robot in (known, changed(simulation=slow))
+    )
     assert planned <= 3.0
     assert unaware >= 3.0 * planned
 
