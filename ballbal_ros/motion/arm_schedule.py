@@ -87,6 +87,11 @@ class ArmSchedule:
         """A hand's load from ``stamp``, s, on."""
         self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
 
+    @property
+    def load_changes(self) -> int:
+        """How many load changes it has been told of."""
+        return len(self._loads)
+
     def busy_until(self, now: float) -> float | None:
         """When the arms of the motion in force come to rest, s; None where they rest already."""
         return self._motion.end if self._motion is not None and self._motion.end > now else None

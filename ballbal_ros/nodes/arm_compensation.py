@@ -13,7 +13,7 @@ from rclpy.clock import Clock as RosClock
 from rclpy.clock import ClockType
 from rclpy.node import Node
 
-from ballbal_ros.balance.guard import BALANCING, ENGAGING
+from ballbal_ros.balance.guard import BALANCING, ENGAGING, STOPPING
 from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
@@ -36,16 +36,21 @@ from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.parameters import RobotParameters
 
 _ATTEND = 0.05
+_FOLLOWING = (ENGAGING, BALANCING, STOPPING)
 
 
 @attrs.frozen(eq=False)
 class _Asked:
-    """A proposal that waits for the balance node's acknowledgement; ``what`` asked for it, until ``deadline`` of the steady clock."""
+    """A proposal that waits for the balance node's acknowledgement; ``what`` asked for it, until ``deadline`` of the steady clock.
+
+    ``answered``: how many plans the balance node had answered before.
+    """
 
     proposal: Proposal
     what: str
     stamp: str
     deadline: float
+    answered: str
 
 
 class ArmCompensationNode(Node):
@@ -67,7 +72,7 @@ class ArmCompensationNode(Node):
         parameters.declare(self._change)
         self._arms = JointReader(self.description.joint_names, "joint_states")
         self._place = (0.0, 0.0, 0.0)
-        self._state = ""
+        self._state, self._answered = "", ""
         self._emergency = False
         self._asked: _Asked | None = None
         self._waiting: deque[Any] = deque()
@@ -125,12 +130,16 @@ class ArmCompensationNode(Node):
 
     def _on_arm_plan(self, message: Any) -> None:
         """Plan it now, or when the one before has been answered."""
-        self._waiting.append(message)
+        self._waiting.append((message, time.monotonic() + self._schedule.parameters.answer_timeout))
         self._go_on()
 
     def _go_on(self) -> None:
         while self._waiting and self._asked is None:
-            message = self._waiting.popleft()
+            message, deadline = self._waiting[0]
+            if not self._state and time.monotonic() < deadline:
+                # The balance node has not been met yet: its state may be on its way.
+                return
+            self._waiting.popleft()
             stamp = stamp_text(message.header.stamp)
             try:
                 proposal = self._proposal(message)
@@ -177,8 +186,8 @@ class ArmCompensationNode(Node):
     def _ask(self, proposal: Proposal, what: str, stamp: str) -> None:
         """Without a lean plan nobody has to be asked; otherwise the balance node takes it up first."""
         timeout = self._schedule.parameters.answer_timeout
-        asked = _Asked(proposal, what, stamp, time.monotonic() + timeout)
-        if proposal.plan is None:
+        asked = _Asked(proposal, what, stamp, time.monotonic() + timeout, self._answered)
+        if proposal.plan is None or (what != "arm_plan" and self._state not in _FOLLOWING):
             self._let_go(asked)
             return
         self._asked = asked
@@ -190,15 +199,16 @@ class ArmCompensationNode(Node):
         self._schedule.accept(proposal)
         start = to_time(proposal.arms_start)
         self._to_arms.publish(path_message(proposal.path, self.description.joint_names, start))
-        self._reports.accept_proposal(asked.what, asked.stamp, proposal)
+        self._reports.accept_proposal(asked.what, asked.stamp, proposal, self._schedule.load_changes)
         self._go_on()
 
     def _on_balance_state(self, message: Any) -> None:
-        self._state = message.message
-        asked = self._asked
-        if asked is None:
-            return
         values = values_of(message)
+        self._state, self._answered = message.message, values.get("plans answered", "")
+        asked = self._asked
+        if asked is None or self._answered == asked.answered:
+            self._go_on()
+            return
         stamp = stamp_text(to_time(asked.proposal.lean_start))
         if values.get("plan") == stamp:
             self._let_go(asked)
@@ -214,9 +224,9 @@ class ArmCompensationNode(Node):
     def _attend(self) -> None:
         if self._asked is not None and time.monotonic() > self._asked.deadline:
             timeout = self._schedule.parameters.answer_timeout
-            self._give_up(
-                f"lean_plan: no acknowledgement in balance_state within {timeout:g} s; nothing moves: is balance active?"
-            )
+            what = f"lean_plan: no acknowledgement in balance_state within {timeout:g} s"
+            self._give_up(f"{what}; nothing moves: is balance active?")
+        self._go_on()
 
     def _on_emergency_stop(self, message: Any) -> None:
         """Bring the arms to rest by a planned stop; what waits is refused, and nothing new is taken until a reset."""

@@ -46,6 +46,7 @@ class BalanceNode(LifecycleNode):
         self._period_ns = round(self.parameters.loop.period * BILLION)
         self._odom_every = max(1, round(self.parameters.loop.rate / own.odom_rate))
         self._ticks, self._ticks_before = 0, 0
+        self._lock_step = own.lock_step
         self._answer = np.zeros(len(self.description.drive.names))
         self._said, self._said_at = "", 0
         self._messages = BalanceMessages(self, self.description, None if own.lock_step else own.command_lifespan)
@@ -89,13 +90,16 @@ class BalanceNode(LifecycleNode):
             raise BallbalError(
                 "joint_states", f"has not told of {', '.join(arms.missing())}", "publish the arms' joint states first"
             )
+        if self._lock_step and self.requests.supported is None:
+            # The first tick depends on it.
+            raise BallbalError("support", "has not been heard of", "start the simulated robot first")
         loads, to_come = self.requests.loads_at(arms.stamp)
         posture = WholeBody(self.description, loads).posture(arms.position)
         checked_design(posture, self.description, self.parameters)
         loop = BalanceLoop(self.description, self.parameters, arms.position.copy(), loads)
         for stamp, load in to_come:
             loop.set_load(load, stamp)
-        loop.supported = self.requests.supported
+        loop.supported = bool(self.requests.supported)
         return loop
 
     def on_configure(self, state: Any) -> TransitionCallbackReturn:

@@ -29,8 +29,9 @@ class BalanceRequests:
 
     def __init__(self, node: BalanceNode) -> None:
         self._node = node
-        self.supported = False
-        self.notes: dict[str, str] = {}
+        self.supported: bool | None = None
+        self._answers: dict[str, str] = {}
+        self._answered = 0
         self._emergency = False
         self._loads: list[tuple[float, Load]] = []
         self._goal: Goal | None = None
@@ -45,10 +46,16 @@ class BalanceRequests:
 
     def begin(self) -> None:
         """The loop starts anew: nothing asked before holds, but an emergency stop does."""
-        self.notes.clear()
+        self._answers.clear()
         self._goal, self._velocity_until = None, -1
         if self._emergency:
             self._stop()
+
+    @property
+    def notes(self) -> dict[str, str]:
+        """What ``balance_state`` tells of requests: the plan taken up last, or refused and why; how many were answered."""
+        counts = {"plans answered": str(self._answered), "load changes": str(len(self._loads))}
+        return {**self._answers, **counts}
 
     def loads_at(self, now: int) -> tuple[list[Load], list[tuple[float, Load]]]:
         """What the hands hold at ``now``, in ns, and the changes to come."""
@@ -83,6 +90,7 @@ class BalanceRequests:
         self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
         if self._node.loop is not None:
             self._node.loop.set_load(load, stamp)
+        self._node.say_state()
 
     def _on_lean_plan(self, message: Any) -> None:
         """Take a plan, and acknowledge it by its stamp in ``balance_state``; or say there why not."""
@@ -95,11 +103,12 @@ class BalanceRequests:
             node.loop.add_plan(seconds(message.header.stamp), plan)
         except BallbalError as error:
             self._refuse("lean_plan", error)
-            self.notes.update({"refused plan": start, "refusal": str(error)})
+            self._answers.update({"refused plan": start, "refusal": str(error)})
         else:
             node.diagnostics.accept("lean_plan")
-            self.notes = {"plan": start}
+            self._answers = {"plan": start}
             self._goal = None
+        self._answered += 1
         node.say_state()
 
     def _loop_that_balances(self, topic: str) -> BalanceLoop | None:
@@ -149,7 +158,7 @@ class BalanceRequests:
     def _on_support(self, message: Any) -> None:
         self.supported = bool(message.data)
         if self._node.loop is not None:
-            self._node.loop.supported = self.supported
+            self._node.loop.supported = bool(message.data)
 
     def _on_emergency_stop(self, message: Any) -> None:
         """Latched: false alone does not end it, a person's reset does."""

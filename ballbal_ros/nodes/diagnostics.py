@@ -6,7 +6,6 @@ from collections.abc import Callable, Mapping
 
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
 from rclpy.clock import Clock, ClockType
-from rclpy.duration import Duration
 from rclpy.node import Node
 
 from ballbal_ros.nodes.topics import publisher
@@ -67,8 +66,3 @@ class Diagnostics:
         array = DiagnosticArray(status=[status])
         array.header.stamp = self._node.get_clock().now().to_msg()
         self._publisher.publish(array)
-
-    def publish_and_wait(self, timeout: float = 0.5) -> None:
-        """Publish the status now, and wait up to ``timeout`` s until whoever listens has it."""
-        self.publish()
-        self._publisher.wait_for_all_acked(Duration(nanoseconds=int(timeout * 1e9)))

@@ -76,16 +76,24 @@ class LockStep:
 
     def silent(self, now: int, support: bool) -> str:
         """What is still missing at ``now``, in ns, and who should say it; empty when nothing is."""
-        if self._reports < max(self._plans, self._wanted):
-            wanted = "arm_plan" if self._plans < self._wanted else "plan_report"
-            return f"{wanted}: {'nobody has sent the plan it waits for' if wanted == 'arm_plan' else 'arm_compensation is silent'}"
+        if self._reports < self._plans:
+            return "plan_report: arm_compensation is silent"
         if self._announced:
             return "the arm_command that plan_report announced: arm_compensation is silent"
-        if support and self._on_the_way and is_looked_at(now, self._period) and self._state_is_old(now):
+        if not support or not self._on_the_way or not is_looked_at(now, self._period):
+            return ""
+        if self._state_is_old(now):
             return "balance_state of this instant: balance is silent"
+        if self._state == BALANCING and self._reports < self._wanted:
+            return "arm_plan: nobody has sent the plan it waits for"
         return ""
 
+    @property
+    def waits_for_plan(self) -> bool:
+        """Whether the plan that the run begins with is still to come."""
+        return self._reports < self._wanted
+
     def _state_is_old(self, now: int) -> bool:
-        if self._state not in (STANDBY, ENGAGING):
-            return not self._state and self._node.count_publishers("balance_state") > 0
-        return self._state_stamp < now
+        if self._state in (STANDBY, ENGAGING):
+            return self._state_stamp < now
+        return not self._state and self._node.count_publishers("balance_state") > 0

@@ -119,7 +119,10 @@ class SimulatedRobotNodeParameters:
         meaning="age of the newest drive command past which the drive lets go (real time)",
     )
     wait_for_plan: bool = parameter(
-        "bool", False, unit="-", meaning="stay at time 0 until an arm plan has been accepted or refused"
+        "bool",
+        False,
+        unit="-",
+        meaning="hold time, once the robot balances on its stand, until an arm plan has been accepted or refused",
     )
     imu_topic: str = parameter(
         "string",

@@ -28,7 +28,7 @@ class PlanReports:
         """A plan was accepted."""
         self._publish(OK, what, message, {"requested": stamp, "accepted": "yes", **(values or {})})
 
-    def accept_proposal(self, what: str, stamp: str, proposal: Proposal) -> None:
+    def accept_proposal(self, what: str, stamp: str, proposal: Proposal, load_changes: int) -> None:
         """A plan was accepted and goes ahead: when it starts, and what it will use of each limit."""
         plan = proposal.plan
         values: dict[str, object] = {
@@ -36,6 +36,7 @@ class PlanReports:
             "arm_command": stamp_text(to_time(proposal.arms_start)),
             "lead-in s": proposal.arms_start - proposal.lean_start,
             "duration s": proposal.path.duration,
+            "load changes": load_changes,
         }
         for use in () if plan is None else plan.uses:
             name = f"{use.name} {use.unit}".strip()

@@ -10,6 +10,7 @@ from collections.abc import Callable
 from typing import Any
 
 import rclpy
+from rclpy.context import Context
 from rclpy.exceptions import ParameterException
 from rclpy.executors import ExternalShutdownException, SingleThreadedExecutor
 from rclpy.node import Node
@@ -30,9 +31,9 @@ NODE_OPTIONS: dict[str, Any] = {"automatically_declare_parameters_from_overrides
 _DESCRIPTION_TIMEOUT = 5.0
 
 
-def executor() -> Any:
+def executor(context: Context | None = None) -> Any:
     """The executor that answers a message soonest with this rclpy."""
-    return QuickExecutor()
+    return QuickExecutor(context=context)
 
 
 def settle_memory() -> None:

@@ -51,14 +51,19 @@ class SimulatedMessages:
         self._drive.position = array.array("d", measured.drive_angle)
         self._drive.velocity = array.array("d", robot.drive_rate)
         self._fill_imu(measured)
-        clock, arms, drive, imu, truth = self._publishers
+        clock, arms, drive, imu, _ = self._publishers
         clock.publish(self._clock)
         arms.publish(self._arms)
         drive.publish(self._drive)
         imu.publish(self._imu)
-        # The answer is under way: what is for the record only costs no time now.
+        # The answer is under way: what is for the record only costs no time now. Time 0 may be said more than once.
+        if ns > 0:
+            self.record(robot)
+
+    def record(self, robot: SimulatedRobot) -> None:
+        """Publish what is true at the instant that was published last."""
         self._fill_truth(robot)
-        truth.publish(self._truth)
+        self._publishers[-1].publish(self._truth)
 
     def _fill_imu(self, measured: Any) -> None:
         imu = self._imu

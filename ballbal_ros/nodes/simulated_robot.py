@@ -36,6 +36,7 @@ from ballbal_ros.simulation.truth import parse_truth
 
 _ATTEND = 0.1
 _PUSH_LASTS = 0.1
+_LINGER = 0.2
 
 
 class SimulatedRobotNode(Node):
@@ -65,6 +66,7 @@ class SimulatedRobotNode(Node):
         self._period = 1.0 / self._rate
         self._real_time = self._own.clock == "real_time"
         self._ns = 0
+        self._ended: tuple[int, float] | None = None
         self._effort: Any = None
         self._commands = JointStateReader()
         self._nothing = np.zeros(len(self.description.drive.names))
@@ -118,11 +120,11 @@ class SimulatedRobotNode(Node):
 
     def _go_on(self) -> None:
         """Step if all that belongs to this instant is here."""
-        if self._effort is None or self._started is not None or self.exit_status is not None:
+        if self._effort is None or self._started is not None or self._ended is not None:
             return
         if self._lock.silent(self._ns, self._robot.support):
             return
-        if self._real_time:
+        if self._real_time and not self._lock.waits_for_plan:
             self._started = time.monotonic() - self._robot.time
             self._pacing.reset()
             return
@@ -131,10 +133,10 @@ class SimulatedRobotNode(Node):
 
     def _pace(self) -> None:
         """Real time: step until simulated time has come up with the wall clock."""
-        if self._started is None or self.exit_status is not None:
+        if self._started is None or self._ended is not None:
             return
         now = time.monotonic()
-        while self._robot.time + self._period <= now - self._started and self.exit_status is None:
+        while self._robot.time + self._period <= now - self._started and self._ended is None:
             stale = now - self._command_came > self._own.drive_watchdog
             self._step(self._nothing if stale or self._effort is None else self._effort)
 
@@ -142,6 +144,8 @@ class SimulatedRobotNode(Node):
         robot = self._robot
         if robot.support and self._lock.lets_go(self._ns, not self._real_time):
             self._hold(False)
+        if self._ns == 0:
+            self._messages.record(robot)
         self._happenings.come_to(robot.time)
         robot.step(effort)
         self._peaks.look(effort)
@@ -165,12 +169,16 @@ class SimulatedRobotNode(Node):
 
     def _attend(self) -> None:
         """By the wall clock: say t = 0 again until it is answered, and end if somebody stays silent."""
-        if self.exit_status is not None or self._started is not None:
+        if self._ended is not None:
+            if time.monotonic() - self._ended[1] > _LINGER:
+                self.exit_status = self._ended[0]
+            return
+        if self._started is not None:
             return
         if self._ns == 0 and self._effort is None:
             self._publish()
         self._go_on()
-        if self.exit_status is None and time.monotonic() - self._waiting_since > self._own.answer_timeout:
+        if self._ended is None and time.monotonic() - self._waiting_since > self._own.answer_timeout:
             self._end(1, self._who_is_silent())
 
     def _who_is_silent(self) -> str:
@@ -185,7 +193,8 @@ class SimulatedRobotNode(Node):
         return f"{where} a drive_command with this stamp: {cause}"
 
     def _end(self, status: int, line: str) -> None:
-        self.exit_status = status
+        """No further step; the process stays a moment longer, so that what was published last gets through."""
+        self._ended = (status, time.monotonic())
         if line:
             print(line, file=sys.stderr, flush=True)
         self._diagnostics.publish()
@@ -245,10 +254,6 @@ class SimulatedRobotNode(Node):
             **self._peaks.values(),
         }
         return (ERROR, "fell", values) if robot.fell else (OK, "on its stand" if robot.support else "free", values)
-
-    def leave(self) -> None:
-        """Say the last word on diagnostics, and see that it arrives."""
-        self._diagnostics.publish_and_wait()
 
 
 def main() -> None:

@@ -1,0 +1,157 @@
+"""``ballbal headless``: a plan run by the whole stack, nodes as processes over the bus, against the simulated robot."""
+
+from __future__ import annotations
+
+import contextlib
+import importlib.util
+import sys
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn
+
+from ballbal_ros.commands.domains import own_domain
+from ballbal_ros.commands.files import read_robot, write_json
+from ballbal_ros.commands.limits import planned_limits
+from ballbal_ros.commands.rehearse import asked_kinds
+from ballbal_ros.errors import BallbalError
+from ballbal_ros.motion.story import read_story
+from ballbal_ros.report.run_table import print_runs
+from ballbal_ros.simulation.rehearsal import plan_story
+from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet
+from ballbal_ros.simulation.timeline import Timeline
+from ballbal_ros.simulation.truth import parse_truth
+from ballbal_ros.stack import RobotFolder, checked_namespace
+
+_CLOCKS = {"lock-step": "lock_step", "real-time": "real_time"}
+_TIMEOUT = 30.0
+
+
+def headless(
+    plan: Path,
+    robot: Path,
+    kinds: Sequence[str] = KINDS,
+    seeds: Sequence[int] = (0,),
+    truth: Sequence[str] = (),
+    lead_in: float | None = None,
+    clock: str = "lock-step",
+    namespace: str = "",
+    domain: int | None = None,
+    console: Console | None = None,
+) -> RunSet:
+    """Run a plan file through the stack. Everything is checked, and planned once, before anything starts.
+
+    Raises :class:`BallbalError` for wrong input or a refused plan, :class:`~ballbal_ros.commands.processes.RunFailed` for a run that
+    did not come to its end.
+    """
+    if clock not in _CLOCKS:
+        raise BallbalError("--clock", f"is {clock!r}", f"it takes one of {', '.join(_CLOCKS)}")
+    if importlib.util.find_spec("rclpy") is None:
+        raise BallbalError(
+            "rclpy",
+            "is not there",
+            "source your ROS, or install the headless extra: pip install 'ballbal_ros[headless]'",
+        )
+    from ballbal_ros.commands.headless_run import HeadlessRun, HeadlessSetup
+    from ballbal_ros.commands.processes import ended_like_an_interrupt
+
+    files = read_robot(robot)
+    folder = RobotFolder.checked(robot, simulated=True)
+    story = read_story(plan, files.description)
+    parse_truth(truth, files.description)
+    timeline = Timeline.of(story, files.compensation, lead_in)
+    lean_plan = plan_story(files, story, timeline) if "planned" in kinds and story.planned else None
+    results: list[RunResult] = []
+    with own_domain(domain) as number, ended_like_an_interrupt(), _progress(console, timeline.end) as (progress, task):
+        setup = HeadlessSetup(
+            folder=folder,
+            description=files.description,
+            story=story,
+            story_file=plan,
+            timeline=timeline,
+            plan=lean_plan,
+            truth=tuple(truth),
+            clock=_CLOCKS[clock],
+            namespace=checked_namespace(namespace),
+            domain=number,
+            rate=files.balance.loop.rate,
+            timeout=_TIMEOUT,
+        )
+        for kind in kinds:
+            for seed in seeds:
+                progress.reset(task, description=f"{story.name}: {kind}", completed=0)
+
+                def show(now: Any) -> None:
+                    progress.update(task, completed=now.time, travel=now.travel, state=now.state)
+
+                results.append(HeadlessRun(setup, kind, seed).run(show))
+    limits = planned_limits(results, files, lean_plan)
+    return RunSet(files.description.name, story.name, clock, tuple(results), limits)
+
+
+@contextlib.contextmanager
+def _progress(console: Console | None, end: float) -> Iterator[tuple[Progress, Any]]:
+    """A line that lives: which run, simulated time, how far the ball is from where it should be, the guard's state."""
+    columns = (
+        TextColumn("{task.description:24s}"),
+        BarColumn(),
+        TextColumn(
+            "{task.completed:5.1f} of {task.total:.1f} s   ball {task.fields[travel]:7.2f} mm   {task.fields[state]}"
+        ),
+    )
+    with Progress(*columns, console=console, transient=True) as progress:
+        yield progress, progress.add_task("", total=end, travel=0.0, state="")
+
+
+def headless_command(
+    plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/shelve.yaml.")],
+    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
+    compensation: Annotated[
+        list[str] | None,
+        typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it."),
+    ] = None,
+    seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
+    repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
+    truth: Annotated[
+        list[str] | None,
+        typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
+    ] = None,
+    lead_in: Annotated[
+        float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
+    ] = None,
+    clock: Annotated[
+        str, typer.Option("--clock", help="lock-step: as fast as it goes, the same to the bit; real-time.")
+    ] = "lock-step",
+    namespace: Annotated[str, typer.Option("--namespace", help="ROS namespace of all nodes.")] = "",
+    domain: Annotated[
+        int | None, typer.Option("--domain", min=0, help="ROS domain; ROS_DOMAIN_ID, or one of its own, without it.")
+    ] = None,
+    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+) -> None:
+    """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this machine only."""
+    console = Console()
+    from ballbal_ros.commands.processes import RunFailed
+
+    try:
+        runs = headless(
+            plan,
+            robot,
+            asked_kinds(compensation),
+            range(seed, seed + repeat),
+            tuple(truth or ()),
+            lead_in,
+            clock,
+            namespace,
+            domain,
+            console,
+        )
+    except RunFailed as error:
+        print(f"ballbal headless: {error}", file=sys.stderr)
+        raise typer.Exit(1) from error
+    print_runs(runs, console)
+    if json_file is not None:
+        write_json(json_file, runs.as_json())
+    raise typer.Exit(0 if runs.ok else 1)

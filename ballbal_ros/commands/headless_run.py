@@ -1,0 +1,167 @@
+"""One run of a story by the whole stack: nodes as processes, over the bus."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable
+from pathlib import Path
+
+import attrs
+import numpy as np
+
+from ballbal_ros.commands.bus import Bus
+from ballbal_ros.commands.processes import Processes, RunFailed, environment
+from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.story import Story
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.simulation.run_result import RunResult
+from ballbal_ros.simulation.timeline import RUN_START, Timeline
+from ballbal_ros.stack import RobotFolder, headless_stack
+
+_SIMULATOR = "simulated_robot"
+_SHOW_EVERY = 0.2
+_KINEMATICS_RATE = 50.0
+_LAST_WORDS = 2.0
+
+
+@attrs.frozen(eq=False, kw_only=True)
+class HeadlessSetup:
+    """What all runs of one call share. ``rate``: of the loop, Hz; ``timeout``: wall time for which anybody may stay silent, s."""
+
+    folder: RobotFolder
+    description: RobotDescription
+    story: Story
+    story_file: Path
+    timeline: Timeline
+    plan: LeanPlan | None
+    truth: tuple[str, ...]
+    clock: str
+    namespace: str
+    domain: int
+    rate: float
+    timeout: float
+
+
+@attrs.frozen
+class Glimpse:
+    """What a run looks like now: simulated time (s), distance of the true ball from where it was meant to be (mm), the guard's state."""
+
+    time: float
+    travel: float
+    state: str
+
+
+class HeadlessRun:
+    """One run of a story with one kind of compensation and one seed."""
+
+    def __init__(self, setup: HeadlessSetup, kind: str, seed: int) -> None:
+        self.setup, self.kind, self.seed = setup, kind, seed
+        self.moves = kind != "still" and setup.story.planned
+        self._began: float | None = None
+        self._origin: tuple[float, float] | None = None
+
+    def run(self, show: Callable[[Glimpse], None]) -> RunResult:
+        """Start all, run to the end, end all; raises :class:`RunFailed` in one line."""
+        setup = self.setup
+        with Processes() as processes:
+            self._start(processes)
+            with Bus(setup.domain, setup.namespace, processes, setup.timeout) as bus:
+                show(Glimpse(0.0, 0.0, "starting"))
+                bus.wait_for_nodes()
+                bus.send_start(setup.story)
+                bus.bring_up()
+                if self.moves:
+                    bus.send_story(setup.story, setup.timeline, setup.description.joint_names)
+                    bus.wait_for_report()
+                self._began = time.monotonic()
+                self._follow(processes, bus, show)
+                took = time.monotonic() - self._began
+                return self._result(self._whole(bus), bus.peaks, took)
+
+    def _start(self, processes: Processes) -> None:
+        setup, timeline = self.setup, self.setup.timeline
+        way = self.kind if self.kind in ("quasi_static", "none") else "planned"
+        simulated = {
+            "seed": self.seed,
+            "duration": timeline.end,
+            "answer_timeout": setup.timeout,
+            "wait_for_plan": self.moves,
+            "plan": str(setup.story_file.resolve()),
+            "plan_start": timeline.story if self.kind != "still" else -1.0,
+            "count_from": RUN_START,
+        }
+        if setup.truth:
+            simulated["truth"] = list(setup.truth)
+        processes.may_end = _SIMULATOR
+        for node in headless_stack(setup.folder, setup.clock, setup.namespace, simulated):
+            if node.executable == "balance":
+                node = node.with_parameters(compensation=way)
+            elif node.executable == "arm_compensation":
+                node = node.with_parameters(compensation=way, planner__lead_in=timeline.lead_in)
+            elif node.executable == "whole_body_kinematics":
+                node = node.with_parameters(rate=_KINEMATICS_RATE)
+            processes.start(node.executable, node.command(setup.namespace), environment(setup.domain))
+
+    def _follow(self, processes: Processes, bus: Bus, show: Callable[[Glimpse], None]) -> None:
+        shown = 0.0
+        silent_since, heard = time.monotonic(), 0
+        while not processes.ended(_SIMULATOR):
+            bus.turn()
+            now = time.monotonic()
+            if len(bus.records) != heard:
+                silent_since, heard = now, len(bus.records)
+            elif now - silent_since > 2.0 * self.setup.timeout:
+                raise RunFailed(f"ground_truth: nothing for {now - silent_since:.0f} s")
+            if now - shown >= _SHOW_EVERY:
+                shown = now
+                at, x, y = bus.place()
+                show(Glimpse(at, self._travel(at, x, y), bus.state))
+        processes.check()
+
+    def _whole(self, bus: Bus) -> Array:
+        """The record once it is complete: every tick of the run."""
+        rate = self.setup.rate
+        wanted = round(self.setup.timeline.end * rate)
+        until = time.monotonic() + _LAST_WORDS
+        while time.monotonic() < until and (len(bus.records) < wanted or "drive torque peak" not in bus.peaks):
+            bus.turn()
+        truth = bus.truth()
+        if len(truth) < wanted or np.abs(np.diff(truth[:, 0]) * rate - 1.0).max() > 1e-3:
+            raise RunFailed(
+                f"ground_truth: {len(truth)} of {wanted + 1} instants came: the machine is too busy to record"
+            )
+        return truth
+
+    def _meant(self, times: Array) -> Array:
+        """Where the ball is meant to be [N, 2] from where it was at the run's start, m."""
+        plan = self.setup.plan
+        if self.kind != "planned" or plan is None or self.setup.story.ball is None:
+            return np.zeros((len(times), 2))
+        since = times - self.setup.timeline.lean
+        return np.stack([np.interp(since, plan.times, column) for column in plan.ball.T], axis=1)
+
+    def _travel(self, at: float, x: float, y: float) -> float:
+        if at < RUN_START:
+            return 0.0
+        if self._origin is None:
+            self._origin = x, y
+        meant = self._meant(np.array([at]))[0]
+        return 1e3 * float(np.hypot(x - self._origin[0] - meant[0], y - self._origin[1] - meant[1]))
+
+    def _result(self, truth: Array, peaks: dict[str, str], took: float) -> RunResult:
+        counted = truth[truth[:, 0] >= RUN_START - 1e-6]
+        away = counted[:, 1:3] - counted[0, 1:3] - self._meant(counted[:, 0])
+        travel = 1e3 * np.hypot(*away.T)
+        return RunResult(
+            compensation=self.kind,
+            seed=self.seed,
+            fell=peaks.get("fell") == "True",
+            ball_travel_peak_mm=float(travel.max()),
+            ball_travel_end_mm=float(travel[-1]),
+            lean_peak_deg=float(np.degrees(np.hypot(*counted[:, 3:5].T).max())),
+            drive_torque_peak_nm=float(peaks["drive torque peak"]),
+            friction_use_peak=float(peaks["friction use peak"]),
+            duration_s=float(truth[-1, 0]),
+            real_time_factor=float(truth[-1, 0] / max(took, 1e-9)),
+        )

@@ -1,0 +1,133 @@
+"""The nodes as processes: started together, watched, and ended together whatever happens."""
+
+from __future__ import annotations
+
+import contextlib
+import ctypes
+import os
+import signal
+import subprocess
+import tempfile
+import time
+from collections.abc import Iterator, Mapping, Sequence
+from typing import IO
+
+import attrs
+
+_PARENT_DEATH = 1  # PR_SET_PDEATHSIG
+_GRACE = 4.0
+_LIBC = ctypes.CDLL(None, use_errno=True)
+
+
+class RunFailed(Exception):
+    """A run could not be brought to its end; the one line says who failed and what its last words were."""
+
+
+@attrs.frozen(eq=False)
+class _Child:
+    name: str
+    process: subprocess.Popen[bytes]
+    words: IO[bytes]
+
+    def last_words(self) -> str:
+        """The last line that it wrote to standard error, without colours."""
+        self.words.seek(0)
+        lines = [line.strip() for line in self.words.read().decode(errors="replace").splitlines() if line.strip()]
+        return lines[-1] if lines else "it said nothing"
+
+
+def _die_with_parent() -> None:
+    """Have the kernel end this child cleanly, should the runner be killed."""
+    _LIBC.prctl(_PARENT_DEATH, signal.SIGINT, 0, 0, 0)
+
+
+class Processes:
+    """A group of processes. As a context it ends them all: SIGINT, after a while SIGTERM, SIGKILL only as a last resort."""
+
+    def __init__(self) -> None:
+        self._children: list[_Child] = []
+
+    def __enter__(self) -> Processes:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.stop()
+
+    def start(self, name: str, words: Sequence[str], environment: Mapping[str, str]) -> None:
+        """Start a process in a session of its own, so that a Ctrl-C at the terminal comes to the runner alone."""
+        log = tempfile.TemporaryFile()
+        child = subprocess.Popen(
+            words,
+            env=dict(environment),
+            stdin=subprocess.DEVNULL,
+            stdout=log,
+            stderr=log,
+            start_new_session=True,
+            preexec_fn=_die_with_parent,
+        )
+        self._children.append(_Child(name, child, log))
+
+    def check(self) -> None:
+        """Raise :class:`RunFailed` if any process has ended with an error, or has ended at all but may not have."""
+        for child in self._children:
+            status = child.process.poll()
+            if status is not None and (status != 0 or child.name != self.may_end):
+                how = f"signal {-status}" if status < 0 else f"status {status}"
+                raise RunFailed(f"{child.name} ended with {how}: {child.last_words()}")
+
+    may_end = ""
+    """The one process whose end with status 0 is the run's end."""
+
+    def ended(self, name: str) -> bool:
+        """Whether a process has ended."""
+        return any(c.name == name and c.process.poll() is not None for c in self._children)
+
+    def stop(self) -> None:
+        """End all that still run, and wait until they have gone."""
+        with _undisturbed():
+            for ending in (signal.SIGINT, signal.SIGTERM, signal.SIGKILL):
+                running = [c.process for c in self._children if c.process.poll() is None]
+                for process in running:
+                    with contextlib.suppress(ProcessLookupError):
+                        process.send_signal(ending)
+                until = time.monotonic() + _GRACE
+                while any(p.poll() is None for p in running) and time.monotonic() < until:
+                    time.sleep(0.02)
+            for child in self._children:
+                child.words.close()
+            self._children.clear()
+
+
+@contextlib.contextmanager
+def _undisturbed() -> Iterator[None]:
+    """A second Ctrl-C must not leave processes behind."""
+    before = signal.signal(signal.SIGINT, signal.SIG_IGN)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGINT, before)
+
+
+def _raise_interrupt(*_: object) -> None:
+    raise KeyboardInterrupt
+
+
+@contextlib.contextmanager
+def ended_like_an_interrupt() -> Iterator[None]:
+    """Being told to end (SIGTERM, a closed terminal) cleans up like Ctrl-C."""
+    before = {number: signal.signal(number, _raise_interrupt) for number in (signal.SIGTERM, signal.SIGHUP)}
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+def environment(domain: int) -> dict[str, str]:
+    """This process's environment for nodes of a ROS domain, which talk on this machine only unless told otherwise."""
+    return {
+        "ROS_AUTOMATIC_DISCOVERY_RANGE": "LOCALHOST",
+        **os.environ,
+        "ROS_DOMAIN_ID": str(domain),
+        "OPENBLAS_NUM_THREADS": "1",
+    }
