@@ -39,8 +39,8 @@ class LimitCheck:
 
     @property
     def ok(self) -> bool:
-        """Whether it is within its limit."""
-        return self.value <= self.limit
+        """Whether it is within its limit, or on it to rounding."""
+        return self.value <= self.limit * (1.0 + 1e-9)
 
 
 @attrs.frozen
