@@ -27,10 +27,15 @@ class _Trust:
     """
 
     def __init__(self, period: float, rate_density: float, rate_walk: float, time_constant: float) -> None:
-        self._period, self._density = period, rate_density
-        self._angle_growth, self._bias_growth = rate_density**2 * period, rate_walk**2 * period
-        self._noise = (rate_density * time_constant) ** 2 / period
+        self._period = period
+        self.reckon_with(rate_density, rate_walk, time_constant)
         self.restart()
+
+    def reckon_with(self, rate_density: float, rate_walk: float, time_constant: float) -> None:
+        """Take other noise figures; what is known stays, and the gains go to their new values by themselves."""
+        self._density = rate_density
+        self._angle_growth, self._bias_growth = rate_density**2 * self._period, rate_walk**2 * self._period
+        self._noise = (rate_density * time_constant) ** 2 / self._period
 
     def restart(self) -> None:
         """Know nothing."""
@@ -84,6 +89,10 @@ class Attitude:
         self._bias_roll = self._bias_pitch = self._bias_heading = 0.0
         self._age = 0.0
         self._rested = 0
+
+    def reckon_with(self, noise: tuple[float, float], time_constant: float) -> None:
+        """Take other noise figures (as in the constructor) while it runs; the estimate stays."""
+        self._trust.reckon_with(*noise, time_constant)
 
     @property
     def settled(self) -> bool:

@@ -67,7 +67,7 @@ class Controller:
         """``moment_step`` and ``moment_limit``, N m: how much the estimated moment may change in a tick, and be at
         most.
         """
-        self._moment_step, self._moment_limit = moment_step, moment_limit
+        self.moment_step, self.moment_limit = moment_step, moment_limit
         known, past = STATES + MOMENTS, INPUTS * matrices.history
         self.prior = np.zeros(known)
         self.estimate = np.zeros(known)
@@ -79,7 +79,12 @@ class Controller:
     def change(self, matrices: ControllerMatrices) -> None:
         """Take other matrices of the same history; the estimate stays."""
         self._correct, self._output = matrices.correct, matrices.output
-        self._act, self._predict = matrices.act, matrices.predict
+        self.act, self._predict = matrices.act, matrices.predict
+
+    @property
+    def seen(self) -> Array:
+        """What the last torque was worked out from: [estimate; past torques]. It changes with the next one."""
+        return self._seen
 
     def reset(self) -> None:
         """Forget everything: at the reference, no moment, no torque before."""
@@ -99,16 +104,16 @@ class Controller:
             np.dot(self._correct, measured - self._output @ self.prior, out=self.estimate)
             # A push is no moment that lasts: what the estimate of the lasting moment may follow is bounded.
             moment = self.estimate[STATES:]
-            _bound(moment, self._moment_step)
+            _bound(moment, self.moment_step)
             self.estimate += self.prior
-            _bound(moment, self._moment_limit)
+            _bound(moment, self.moment_limit)
 
     def torque(self) -> Array:
         """Torque [3] to add to the reference's, from the present estimate."""
         known = STATES + MOMENTS
         self._seen[:known] = self.estimate
         self._seen[known:] = self._past
-        return np.asarray(self._act @ self._seen)
+        return np.asarray(self.act @ self._seen)
 
     def predict(self, torque: Array) -> None:
         """Go on to the next tick, with the torque [3] beyond the reference's that was really commanded."""

@@ -9,6 +9,7 @@ import attrs
 import numpy as np
 
 from ballbal_ros.balance.attitude import Attitude
+from ballbal_ros.balance.changeover import ChangeOver, PreparedChange
 from ballbal_ros.balance.controller import MEASURED, STATES, Controller
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY, STOPPING, Guard
 from ballbal_ros.balance.measurement import Measurement
@@ -57,19 +58,20 @@ class BalanceLoop:
         self.period = parameters.loop.period
         self.guard = Guard(parameters)
         posture = self.body.posture(arm_position)
-        self._schedule = GainSchedule(description, parameters, posture)
+        schedule = GainSchedule(description, parameters, posture)
         self.controller = Controller(
-            self._schedule.at(posture), parameters.limits.trim_rate * self.period, parameters.limits.trim_moment
+            schedule.at(posture), parameters.limits.trim_rate * self.period, parameters.limits.trim_moment
         )
+        self._gains = ChangeOver(schedule, parameters, description.parameters.limits.drive_torque)
+        self._change: PreparedChange | None = None
         self._ticks = 0
         ahead = parameters.loop.delay + 0.5 * self.period
         self.reference = Reference(self.body, self.period, ahead, parameters.compensation != "none")
-        noise = parameters.estimator
         self.attitude = Attitude(
             description.rotation_imu_in_base,
             np.array(description.parameters.imu.position),
             self.period,
-            (noise.rate_noise * math.sqrt(self.period), noise.rate_walk),
+            _gyro_noise(parameters),
             parameters.attitude_time,
         )
         self.supported = False
@@ -80,7 +82,6 @@ class BalanceLoop:
         self._spin_map = np.ascontiguousarray(drive.spin_map)
         self._effort_map = np.ascontiguousarray(drive.effort_map)
         self._effort_limits = tuple(drive.effort_limit.tolist())
-        self._torque_limit = min(parameters.limits.drive_torque, description.parameters.limits.drive_torque)
         self._zero = np.zeros(len(drive.names))
         self._deviation = np.zeros(MEASURED)
         self._in_base = np.zeros(3)
@@ -134,6 +135,23 @@ class BalanceLoop:
         self.guard.stop(reason)
         self.reference.set_velocity(0.0, 0.0, 0.0)
 
+    @property
+    def schedule(self) -> GainSchedule:
+        """The gains in force: what a change is prepared with, see :func:`ballbal_ros.balance.changeover.prepare`."""
+        return self._gains.schedule
+
+    def change_parameters(self, change: PreparedChange) -> None:
+        """Go over to a prepared change, from the next tick on and without a step in torque. Any thread may call it."""
+        self._change = change
+
+    def _take_over(self) -> None:
+        change, self._change = self._change, None
+        if change is not None:
+            self.parameters = change.parameters
+            self._gains.begin(change)
+            self.attitude.reckon_with(_gyro_noise(change.parameters), change.parameters.attitude_time)
+            self.reference.follow(change.parameters.compensation != "none", self._arm)
+
     def tick(self, measured: Measurement) -> Array:
         """Actuator efforts [n], N m, that answer this measurement; zeros unless the guard lets torque out. Never
         NaN.
@@ -143,9 +161,12 @@ class BalanceLoop:
         fit = measured.finite
         if fit:
             self._sense(measured)
+        if self._change is not None:
+            self._take_over()
         self._ticks += 1
-        if self._ticks % _RESCHEDULE == 0:
-            self.controller.change(self._schedule.at(self.body.posture(self._arm)))
+        posture = self.body.posture(self._arm) if self._ticks % _RESCHEDULE == 0 else None
+        if posture is not None or self._gains.under_way:
+            self._gains.tick(self.controller, posture)
         row = self.reference.update(measured.stamp, measured.arm_position if fit else self._arm)
         if fit:
             self._arm = measured.arm_position
@@ -246,7 +267,7 @@ class BalanceLoop:
 
     def _efforts(self, wanted: Array, share: float, reference: list[float]) -> Array:
         """Limit the torque, turn it into efforts, and let the model go on with what was really sent."""
-        limit = self._torque_limit
+        limit = self._gains.torque_limit
         ahead = reference[10:13]
         tx, ty, tz = (share * (a + b) for a, b in zip(ahead, wanted.tolist()))
         if not math.isfinite(tx + ty + tz):
@@ -277,3 +298,8 @@ class BalanceLoop:
         if tz != 0.0:
             return self._shared_out(tx, ty, 0.0)
         return effort / over, (tx / over, ty / over, 0.0)
+
+
+def _gyro_noise(parameters: BalanceParameters) -> tuple[float, float]:
+    """The gyro's white noise, rad/s/√Hz, and bias walk."""
+    return parameters.estimator.rate_noise * math.sqrt(parameters.loop.period), parameters.estimator.rate_walk

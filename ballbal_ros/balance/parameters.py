@@ -193,14 +193,14 @@ class GuardParameters:
         runtime=True,
         meaning="how fast the trim may follow an outside moment; a push is faster",
     )
-    drive_torque: float = parameter(
+    torque: float = parameter(
         "double",
         40.0,
         unit="N m",
         low=0.1,
         high=1e3,
         runtime=True,
-        meaning="greatest drive torque that it commands about any axis",
+        meaning="greatest drive torque that it commands about any axis, within limits.drive_torque of robot.yaml",
     )
 
 

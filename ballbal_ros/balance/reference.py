@@ -53,6 +53,19 @@ class Reference:
         self._frozen = None
         self._frozen = None if self.follow_arms else self.equilibrium(arm_position)
 
+    def follow(self, follow_arms: bool, arm_position: Array) -> None:
+        """Change whether the lean follows the measured arms; it goes on from where it is, without a jump."""
+        if follow_arms == self.follow_arms:
+            return
+        self.follow_arms = follow_arms
+        here = float(self.row[0]), float(self.row[1])
+        if follow_arms:
+            self._frozen = None
+            roll, pitch = self.equilibrium(arm_position)
+            self._offset = here[0] - roll, here[1] - pitch
+        else:
+            self._frozen, self._offset = here, (0.0, 0.0)
+
     def equilibrium(self, arm_position: Array) -> tuple[float, float]:
         """(roll, pitch) that puts the mass centre of the measured arms above the ball, rad."""
         if self._frozen is not None:

@@ -9,6 +9,8 @@ stands.
 
 from __future__ import annotations
 
+import copy
+
 import attrs
 import numpy as np
 
@@ -66,8 +68,12 @@ def _wide(values: Array) -> tuple[float, float]:
 class GainSchedule:
     """Controller matrices by posture; see the module. Making one designs the whole grid (about 0.1 s)."""
 
-    def __init__(self, description: RobotDescription, parameters: BalanceParameters, present: Posture) -> None:
-        reach = PostureRange.of(description, present)
+    def __init__(
+        self, description: RobotDescription, parameters: BalanceParameters, present: Posture | PostureRange
+    ) -> None:
+        """``present``: a posture that the grid must reach besides the robot's others, or a whole range found before."""
+        reach = present if isinstance(present, PostureRange) else PostureRange.of(description, present)
+        self._description, self._reach = description, reach
         self._moment = np.linspace(*reach.moment, _GRID)
         self._inertia = np.linspace(*reach.inertia, _GRID)
         self._heading = np.linspace(*reach.heading, _GRID * _GRID)
@@ -90,6 +96,17 @@ class GainSchedule:
                 row += len(matrix)
         self._output, self._history = designed[0].output, designed[0].history
         self._weights = np.zeros((3, len(designed)))
+
+    def redesigned(self, parameters: BalanceParameters) -> GainSchedule:
+        """The schedule for other weights, noise figures or trim, on the same grid; this one stays as it is."""
+        return GainSchedule(self._description, parameters, self._reach)
+
+    def mixed(self, other: GainSchedule, share: float) -> GainSchedule:
+        """``share`` of another schedule on the same grid, and the rest of this one: at each posture the mix of both."""
+        between = copy.copy(self)
+        between._stack = (1.0 - share) * self._stack + share * other._stack
+        between._weights = np.zeros_like(self._weights)
+        return between
 
     def at(self, posture: Posture) -> ControllerMatrices:
         """The matrices for a posture, each axis by its own inertia; beyond the grid those of its edge."""

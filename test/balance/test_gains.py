@@ -135,7 +135,7 @@ def test_shove_is_survived() -> None:
     """
     held = postures()[0]
     gains = design(held, shelver(), attrs.evolve(balance(), trim=False))
-    tick, limit = Tick(gains.station, balance().limits.drive_torque), balance().limits.drive_torque
+    tick, limit = Tick(gains.station, balance().limits.torque), balance().limits.torque
     radius, period, force = shelver().parameters.ball.radius, gains.station.plant.period, 250.0
     state, acting = np.zeros(8), np.zeros(2)
     state[:2] = held.equilibrium_lean
