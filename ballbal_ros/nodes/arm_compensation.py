@@ -19,10 +19,11 @@ from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wan
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.spline import ArmPath
+from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, values_of
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
-from ballbal_ros.nodes.parameters import ArmCompensationNodeParameters, NodeParameters
+from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_report import PlanReports
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.nodes.trajectories import (

@@ -12,13 +12,14 @@ from ballbal_ros.balance.gains import checked_design
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.node_parameters import BalanceNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.balance_messages import BalanceMessages
 from ballbal_ros.nodes.balance_requests import BalanceRequests
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
 from ballbal_ros.nodes.lock_step import is_looked_at
 from ballbal_ros.nodes.messages import BILLION
-from ballbal_ros.nodes.parameters import BalanceNodeParameters, NodeParameters
+from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
 from ballbal_ros.nodes.topics import subscribe
 from ballbal_ros.robot.parameters import RobotParameters

@@ -17,11 +17,12 @@ from std_srvs.srv import SetBool
 
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.story import read_story
+from ballbal_ros.node_parameters import SimulatedRobotNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import ERROR, OK, Diagnostics, values_of
 from ballbal_ros.nodes.lock_step import LockStep
 from ballbal_ros.nodes.messages import BILLION, load_of, nanoseconds, seconds
-from ballbal_ros.nodes.parameters import NodeParameters, SimulatedRobotNodeParameters, robot_file
+from ballbal_ros.nodes.parameters import NodeParameters, robot_file
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.nodes.trajectories import ArmWaypoints

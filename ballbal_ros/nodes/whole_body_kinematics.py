@@ -13,10 +13,11 @@ from rclpy.node import Node
 from visualization_msgs.msg import Marker
 
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.node_parameters import KinematicsNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, WARN, Diagnostics
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of
-from ballbal_ros.nodes.parameters import KinematicsNodeParameters, NodeParameters
+from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.loads import Load
