@@ -30,6 +30,7 @@ from ballbal_ros.simulation.timeline import Timeline
 
 _TURN = 0.02
 _AT_ONCE = 5
+_TRY_AGAIN = 0.2
 _LISTENERS = {"hand_load": 3, "arm_plan": 2, "ball_plan": 1}
 
 
@@ -42,7 +43,8 @@ class Bus:
         rclpy.init(context=self._context, domain_id=domain, signal_handler_options=SignalHandlerOptions.NO)
         self._node = rclpy.create_node("headless_runner", context=self._context, namespace=namespace or None)
         self._spinner = process.executor(self._context)
-        self._simulator = f"{namespace}/simulated_robot"
+        self._namespace, self._simulator = namespace, f"{namespace}/simulated_robot"
+        self._refused: dict[str, str] = {}
         self.records: list[bytes] = []
         self.state = ""
         self._told = self._heard = 0
@@ -80,11 +82,20 @@ class Bus:
         for status in message.status:
             if status.name == self._simulator:
                 self.peaks = values_of(status)
+            refused = [pair.value for pair in status.values if pair.key.startswith("refused ")]
+            if status.name.rpartition("/")[0] == self._namespace:
+                self._refused[status.name] = refused[-1] if refused else ""
 
     def turn(self, wait: float = _TURN) -> None:
         """Take in what has come, for up to ``wait`` s, and look after the processes."""
         self._spinner.spin_once(timeout_sec=wait)
         self._processes.check()
+
+    def pause(self, time_span: float) -> None:
+        """Turn for a while, s."""
+        until = time.monotonic() + time_span
+        while time.monotonic() < until:
+            self.turn()
 
     def wait_for(self, what: str, happened: Callable[[], bool]) -> None:
         """Turn until something has happened; raises :class:`RunFailed` when it takes longer than the wall-clock limit."""
@@ -92,7 +103,8 @@ class Bus:
         while not happened():
             self.turn()
             if time.monotonic() > until:
-                raise RunFailed(f"waited {self._timeout:g} s for {what}, in vain")
+                reasons = "; ".join(f"{name} says: {reason}" for name, reason in self._refused.items() if reason)
+                raise RunFailed(f"waited {self._timeout:g} s for {what}, in vain; {reasons or 'nobody says why'}")
 
     def wait_for_nodes(self) -> None:
         """Wait until every node listens."""
@@ -134,7 +146,11 @@ class Bus:
         """Configure and activate the balance, and wait until it balances."""
 
         def configured() -> bool:
-            return self.change_state(Transition.TRANSITION_CONFIGURE)
+            done = self.change_state(Transition.TRANSITION_CONFIGURE)
+            if not done:
+                # It may not have heard of everything yet: give it time.
+                self.pause(_TRY_AGAIN)
+            return done
 
         self.wait_for("balance to be configured", configured)
         if not self.change_state(Transition.TRANSITION_ACTIVATE):

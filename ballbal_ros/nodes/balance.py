@@ -147,9 +147,10 @@ class BalanceNode(LifecycleNode):
     def _try(self, what: str, step: Any) -> TransitionCallbackReturn:
         try:
             step()
-        except BallbalError as error:
-            self.diagnostics.refuse(what, str(error))
-            self.get_logger().error(f"{what}: {error}")
+        except Exception as error:  # noqa: BLE001 - rclpy would pass over it in silence
+            reason = str(error) if isinstance(error, BallbalError) else f"{type(error).__name__}: {error}"
+            self.diagnostics.refuse(what, reason)
+            self.get_logger().error(f"{what}: {reason}")
             return _FAILURE
         self.diagnostics.accept(what)
         self.say_state()

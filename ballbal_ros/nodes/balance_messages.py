@@ -10,7 +10,6 @@ from diagnostic_msgs.msg import DiagnosticStatus
 from geometry_msgs.msg import TransformStamped
 from nav_msgs.msg import Odometry
 from rclpy.node import Node
-from sensor_msgs.msg import JointState
 from std_msgs.msg import Float64MultiArray
 
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY, TRIPPED
@@ -18,6 +17,7 @@ from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, key_values
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.topics import publisher
+from ballbal_ros.nodes.wire import JointStateWriter
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import quat_xyzw
 from ballbal_ros.robot.description import RobotDescription
@@ -34,7 +34,7 @@ class BalanceMessages:
     def __init__(self, node: Node, description: RobotDescription, lifespan: float | None) -> None:
         self._radius = description.parameters.ball.radius
         self._limit = description.parameters.limits.drive_torque
-        self._command = JointState(name=list(description.drive.names))
+        self._command = JointStateWriter(description.drive.names, effort=True)
         self._effort = Float64MultiArray()
         self._odom = Odometry(child_frame_id="base_footprint")
         self._odom.header.frame_id = "odom"
@@ -52,12 +52,9 @@ class BalanceMessages:
 
     def command(self, ns: int, effort: Array) -> None:
         """Publish efforts [n], N m, that answer the tick ``ns``. What is not finite never gets here: the loop sees to it."""
-        values = array.array("d", effort)
-        command = self._command
-        command.header.stamp.sec, command.header.stamp.nanosec = divmod(ns, BILLION)
-        command.effort = values
-        self._to_drive.publish(command)
-        self._effort.data = values
+        self._command.effort[:] = effort
+        self._to_drive.publish(self._command.serialised(ns))
+        self._effort.data = array.array("d", effort.tobytes())
         self._to_controllers.publish(self._effort)
 
     def odometry(self, ns: int, loop: BalanceLoop) -> None:

@@ -77,7 +77,15 @@ def _leave(node: Node | None, spinner: Any) -> None:
     with contextlib.suppress(KeyboardInterrupt, Exception):
         if node is not None and hasattr(node, "leave"):
             node.leave()
-    for step in (getattr(spinner, "shutdown", None), getattr(node, "destroy_node", None), rclpy.try_shutdown):
+    # A lifecycle node's state machine holds on to the node, and so to the middleware's shared memory.
+    machine = getattr(node, "_state_machine", None)
+    steps = (
+        getattr(spinner, "shutdown", None),
+        getattr(node, "destroy_node", None),
+        getattr(machine, "destroy_when_not_in_use", None),
+        rclpy.try_shutdown,
+    )
+    for step in steps:
         with contextlib.suppress(KeyboardInterrupt, Exception):
             if step is not None:
                 step()

@@ -2,20 +2,14 @@
 
 from __future__ import annotations
 
-import array
 import math
-from typing import Any
 
 import numpy as np
-from nav_msgs.msg import Odometry
 from rclpy.node import Node
-from rosgraph_msgs.msg import Clock
-from sensor_msgs.msg import Imu, JointState
 
 from ballbal_ros.errors import BallbalError, nearest
-from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.topics import publisher
-from ballbal_ros.nodes.wire import JointValues
+from ballbal_ros.nodes.wire import ClockWriter, ImuWriter, JointStateWriter, JointValues, OdometryWriter
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.simulation.robot import SimulatedRobot
@@ -28,66 +22,44 @@ class SimulatedMessages:
         self._drives = description.drive.names
         self._effort: Array = np.zeros(len(self._drives))
         self._oriented = imu_topic == "imu/data"
-        self._clock = Clock()
-        self._arms, self._drive = JointState(name=list(description.joint_names)), JointState(name=list(self._drives))
-        self._imu = Imu()
-        self._imu.header.frame_id = description.parameters.imu.frame
-        if not self._oriented:
-            self._imu.orientation_covariance[0] = -1.0
-        self._truth = Odometry(child_frame_id="base_link")
-        self._truth.header.frame_id = "odom"
+        self._clock = ClockWriter()
+        self._arms = JointStateWriter(description.joint_names, position=True, velocity=True)
+        self._drive = JointStateWriter(self._drives, position=True, velocity=True)
+        self._imu = ImuWriter(description.parameters.imu.frame, self._oriented)
+        self._truth = OdometryWriter("odom", "base_link")
         topics = ("/clock", "joint_states", "drive_states", imu_topic, "ground_truth")
         self._publishers = [publisher(node, topic) for topic in topics]
-        self._stamps = [m.header.stamp for m in (self._arms, self._drive, self._imu, self._truth)] + [self._clock.clock]
 
     def publish(self, robot: SimulatedRobot, ns: int) -> None:
         """Publish the instant ``ns``, in ns, that the robot has come to."""
-        sec, nanosec = divmod(ns, BILLION)
-        for stamp in self._stamps:
-            stamp.sec, stamp.nanosec = sec, nanosec
         measured = robot.measurement()
-        self._arms.position = array.array("d", measured.arm_position)
-        self._arms.velocity = array.array("d", robot.arm_rate)
-        self._drive.position = array.array("d", measured.drive_angle)
-        self._drive.velocity = array.array("d", robot.drive_rate)
-        self._fill_imu(measured)
-        clock, arms, drive, imu, _ = self._publishers
-        clock.publish(self._clock)
-        arms.publish(self._arms)
-        drive.publish(self._drive)
-        imu.publish(self._imu)
+        arms, drive, imu = self._arms, self._drive, self._imu.values
+        arms.position[:], arms.velocity[:] = measured.arm_position, robot.arm_rate
+        drive.position[:], drive.velocity[:] = measured.drive_angle, robot.drive_rate
+        if self._oriented and measured.imu_quat_xyzw is not None:
+            imu[0:4] = measured.imu_quat_xyzw
+        imu[13:16], imu[25:28] = measured.imu_rate, measured.imu_acceleration
+        for sender, message in zip(self._publishers, (self._clock, arms, drive, self._imu), strict=False):
+            sender.publish(message.serialised(ns))
         # The answer is under way: what is for the record only costs no time now. Time 0 may be said more than once.
         if ns > 0:
-            self.record(robot)
+            self.record(robot, ns)
 
-    def record(self, robot: SimulatedRobot) -> None:
-        """Publish what is true at the instant that was published last."""
-        self._fill_truth(robot)
-        self._publishers[-1].publish(self._truth)
-
-    def _fill_imu(self, measured: Any) -> None:
-        imu = self._imu
-        rate, force, turn = imu.angular_velocity, imu.linear_acceleration, imu.orientation
-        rate.x, rate.y, rate.z = measured.imu_rate.tolist()
-        force.x, force.y, force.z = measured.imu_acceleration.tolist()
-        if self._oriented:
-            turn.x, turn.y, turn.z, turn.w = measured.imu_quat_xyzw
-
-    def _fill_truth(self, robot: SimulatedRobot) -> None:
-        pose, twist = self._truth.pose.pose, self._truth.twist.twist
-        place, turn = pose.position, pose.orientation
-        place.x, place.y, place.z = robot.ball_position.tolist()
-        x, y, z, w = turn.x, turn.y, turn.z, turn.w = robot.body_quat_xyzw
-        vx, vy, vz = robot.ball_velocity.tolist()
+    def record(self, robot: SimulatedRobot, ns: int) -> None:
+        """Publish what is true at the instant ``ns`` that the robot has come to."""
+        pose, twist = self._truth.pose, self._truth.twist
+        px, py, pz, w, x, y, z = robot.data.qpos[:7].tolist()
+        vx, vy, vz, *turning = robot.data.qvel[:6].tolist()
+        pose[:] = px, py, pz, x, y, z, w
         # Into the axes of base_link, which a twist is in: v + 2 w (u × v) + 2 u × (u × v) with u = -(x, y, z).
         cx, cy, cz = 2.0 * (z * vy - y * vz), 2.0 * (x * vz - z * vx), 2.0 * (y * vx - x * vy)
-        linear, angular = twist.linear, twist.angular
-        linear.x, linear.y, linear.z = (
+        ahead, aside, up = (
             vx + w * cx + z * cy - y * cz,
             vy + w * cy + x * cz - z * cx,
             vz + w * cz + y * cx - x * cy,
         )
-        angular.x, angular.y, angular.z = robot.body_rate.tolist()
+        twist[:] = ahead, aside, up, *turning
+        self._publishers[-1].publish(self._truth.serialised(ns))
 
     def effort(self, command: JointValues) -> Array:
         """The efforts [n] of a ``drive_command``, N m; raises :class:`BallbalError` unless there is a finite one for each actuator."""

@@ -146,7 +146,7 @@ class SimulatedRobotNode(Node):
         if robot.support and self._lock.lets_go(self._ns, not self._real_time):
             self._hold(False)
         if self._ns == 0:
-            self._messages.record(robot)
+            self._messages.record(robot, 0)
         self._happenings.come_to(robot.time)
         robot.step(effort)
         self._peaks.look(effort)

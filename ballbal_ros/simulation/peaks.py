@@ -4,10 +4,7 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-
 from ballbal_ros.robot.arrays import Array
-from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.simulation.robot import SimulatedRobot
 
 
@@ -17,14 +14,17 @@ class Peaks:
     def __init__(self, robot: SimulatedRobot, count_from: float) -> None:
         self._robot, self._from = robot, count_from
         self._torque = self._friction = 0.0
+        self._torque_map = robot.description.drive.torque_map
+        # base_link in odom: the heading in it does not change what is level.
+        self._level = robot.data.xmat[robot.world.base].reshape(3, 3)
 
     def look(self, effort: Array) -> None:
         """Take the instant that the robot has come to with these commanded efforts [n], N m, into account."""
         robot = self._robot
         if robot.time < self._from:
             return
-        level = rotation_lean(np.array(robot.lean)) @ (robot.description.drive.torque_map @ effort)
-        self._torque = max(self._torque, math.hypot(float(level[0]), float(level[1])))
+        x, y, _ = self._level.dot(self._torque_map.dot(effort)).tolist()
+        self._torque = max(self._torque, math.hypot(x, y))
         self._friction = max(self._friction, robot.friction_use)
 
     def values(self) -> dict[str, float | bool]:
