@@ -116,5 +116,6 @@ def headless_stack(
         nodes.append(node)
     remap = (("/clock", f"{namespace}/clock"),) if namespace else ()
     files = (folder.file("robot.yaml"), folder.file("simulation.yaml"))
-    parameters = {"urdf": str(folder.urdf), "use_sim_time": True, "clock": clock, **(simulated or {})}
+    # It makes the time that the others use, and so does not listen to it.
+    parameters = {"urdf": str(folder.urdf), "use_sim_time": False, "clock": clock, **(simulated or {})}
     return [*nodes, NodeStart("simulated_robot", files, parameters, remap)]

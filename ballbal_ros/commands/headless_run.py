@@ -20,6 +20,7 @@ from ballbal_ros.simulation.timeline import RUN_START, Timeline
 from ballbal_ros.stack import RobotFolder, headless_stack
 
 _SIMULATOR = "simulated_robot"
+_LOOP = (_SIMULATOR, "balance")
 _SHOW_EVERY = 0.2
 _KINEMATICS_RATE = 50.0
 _LAST_WORDS = 2.0
@@ -101,7 +102,9 @@ class HeadlessRun:
                 node = node.with_parameters(compensation=way, planner__lead_in=timeline.lead_in)
             elif node.executable == "whole_body_kinematics":
                 node = node.with_parameters(rate=_KINEMATICS_RATE)
-            processes.start(node.executable, node.command(setup.namespace), environment(setup.domain))
+            # On two cores the loop, from simulated robot to balance and back, goes before all that only listens.
+            hurried = node.executable in _LOOP
+            processes.start(node.executable, node.command(setup.namespace), environment(setup.domain), hurried)
 
     def _follow(self, processes: Processes, bus: Bus, show: Callable[[Glimpse], None]) -> None:
         shown = 0.0

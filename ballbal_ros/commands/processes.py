@@ -41,6 +41,12 @@ def _die_with_parent() -> None:
     _LIBC.prctl(_PARENT_DEATH, signal.SIGINT, 0, 0, 0)
 
 
+def _stand_back() -> None:
+    """As :func:`_die_with_parent`, for a process that must not push others off their core when it wakes up."""
+    _die_with_parent()
+    os.sched_setscheduler(0, os.SCHED_BATCH, os.sched_param(0))
+
+
 class Processes:
     """A group of processes. As a context it ends them all: SIGINT, after a while SIGTERM, SIGKILL only as a last resort."""
 
@@ -53,8 +59,11 @@ class Processes:
     def __exit__(self, *_: object) -> None:
         self.stop()
 
-    def start(self, name: str, words: Sequence[str], environment: Mapping[str, str]) -> None:
-        """Start a process in a session of its own, so that a Ctrl-C at the terminal comes to the runner alone."""
+    def start(self, name: str, words: Sequence[str], environment: Mapping[str, str], hurried: bool = True) -> None:
+        """Start a process in a session of its own, so that a Ctrl-C at the terminal comes to the runner alone.
+
+        One that is not ``hurried`` gives way to those that are.
+        """
         log = tempfile.TemporaryFile()
         child = subprocess.Popen(
             words,
@@ -63,7 +72,7 @@ class Processes:
             stdout=log,
             stderr=log,
             start_new_session=True,
-            preexec_fn=_die_with_parent,
+            preexec_fn=_die_with_parent if hurried else _stand_back,
         )
         self._children.append(_Child(name, child, log))
 

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 
+from builtin_interfaces.msg import Time
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
 from rclpy.clock import Clock, ClockType
 from rclpy.node import Node
 
 from ballbal_ros.nodes.topics import publisher
 
+Report = Callable[[], tuple[bytes, str, Mapping[str, object]]]
 OK, WARN, ERROR = DiagnosticStatus.OK, DiagnosticStatus.WARN, DiagnosticStatus.ERROR
 
 
@@ -26,13 +28,12 @@ def values_of(status: DiagnosticStatus) -> dict[str, str]:
 class Diagnostics:
     """One node's status. ``report`` gives (level, message, values); it is asked once a second of wall time (a steady clock).
 
-    ``hardware`` is the robot's name.
+    ``hardware`` is the robot's name; ``now`` gives the stamp, the node's clock's without it.
     """
 
-    def __init__(
-        self, node: Node, hardware: str, report: Callable[[], tuple[bytes, str, Mapping[str, object]]]
-    ) -> None:
-        self._node, self._report = node, report
+    def __init__(self, node: Node, hardware: str, report: Report, now: Callable[[], Time] | None = None) -> None:
+        self._report = report
+        self._now = now or (lambda: node.get_clock().now().to_msg())
         self._publisher = publisher(node, "/diagnostics")
         self._status = DiagnosticStatus(name=node.get_fully_qualified_name(), hardware_id=hardware)
         self._refusals: dict[str, str] = {}
@@ -64,5 +65,5 @@ class Diagnostics:
         status.message = message
         status.values = key_values({**values, **reasons})
         array = DiagnosticArray(status=[status])
-        array.header.stamp = self._node.get_clock().now().to_msg()
+        array.header.stamp = self._now()
         self._publisher.publish(array)

@@ -21,7 +21,7 @@ from ballbal_ros.node_parameters import SimulatedRobotNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import ERROR, OK, Diagnostics, values_of
 from ballbal_ros.nodes.lock_step import LockStep
-from ballbal_ros.nodes.messages import BILLION, load_of, nanoseconds, seconds
+from ballbal_ros.nodes.messages import BILLION, load_of, nanoseconds, seconds, to_time
 from ballbal_ros.nodes.parameters import NodeParameters, robot_file
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.nodes.topics import publisher, subscribe
@@ -74,7 +74,7 @@ class SimulatedRobotNode(Node):
         self._lock = LockStep(self, round(self._period * BILLION), self._own.wait_for_plan)
         self._messages = SimulatedMessages(self, self.description, self._own.imu_topic)
         self._support = publisher(self, "support")
-        self._diagnostics = Diagnostics(self, self.description.name, self._report)
+        self._diagnostics = Diagnostics(self, self.description.name, self._report, lambda: to_time(self._robot.time))
         self._listen()
         self._waiting_since = time.monotonic()
         self._started: float | None = None
