@@ -235,29 +235,38 @@ def read_yaml(path: Path) -> Any:
     except (OSError, UnicodeDecodeError) as error:
         reason = error.strerror if isinstance(error, OSError) and error.strerror else "it is not UTF-8 text"
         raise ParameterError(str(path), f"can't be read: {reason}", "give the path of a YAML file") from error
+    return parse_yaml(text, str(path))
+
+
+def parse_yaml(text: str, source: str) -> Any:
+    """Parse YAML text safely; ``source`` is named in the :class:`ParameterError` that says what is wrong."""
     try:
         return yaml.load(text, Loader=_Loader)
     except (yaml.YAMLError, ValueError, RecursionError) as error:
         mark = getattr(error, "problem_mark", None)
         line = f"line {mark.line + 1}: " if mark is not None else ""
         problem = getattr(error, "problem", None) or str(error)
-        raise ParameterError(str(path), f"{line}{problem}", "mend the YAML") from error
+        raise ParameterError(source, f"{line}{problem}", "mend the YAML") from error
 
 
 def read_parameter_file(path: Path) -> dict[str, Any]:
     """Read a ROS 2 parameter file (``/**:`` / ``ros__parameters:``) into a flat mapping of dotted names."""
-    document = read_yaml(path)
+    return parameters_of(read_yaml(path), str(path))
+
+
+def parameters_of(document: Any, source: str) -> dict[str, Any]:
+    """The flat mapping of dotted names in a parsed ROS 2 parameter file; see :func:`read_parameter_file`."""
     remedy = "it takes '/**:' with 'ros__parameters:' below it, and nothing else"
     if not isinstance(document, Mapping) or list(document) != ["/**"]:
         found = (
             f"has the sections {', '.join(map(str, document))}" if isinstance(document, Mapping) else "is no mapping"
         )
-        raise ParameterError(str(path), found, remedy)
+        raise ParameterError(source, found, remedy)
     inner = document["/**"]
     if not isinstance(inner, Mapping) or list(inner) != ["ros__parameters"]:
-        raise ParameterError(str(path), "has no ros__parameters", remedy)
+        raise ParameterError(source, "has no ros__parameters", remedy)
     flat: dict[str, Any] = {}
-    _flatten_mapping(inner["ros__parameters"] or {}, "", flat, str(path))
+    _flatten_mapping(inner["ros__parameters"] or {}, "", flat, source)
     return flat
 
 

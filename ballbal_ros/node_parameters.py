@@ -19,7 +19,7 @@ class DescriptionParameters:
         unit="s",
         low=0.0,
         high=60.0,
-        meaning="how long to look for a publisher of robot_description before the URDF of robot.yaml is read; 0: not at all",
+        meaning="how long to look for a publisher of robot_description before robot.yaml's URDF is read; 0: not at all",
     )
 
 

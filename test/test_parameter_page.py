@@ -66,7 +66,8 @@ def test_no_node_gets_one_name_from_two_declarations_that_may_change():
 def test_the_page_is_written_without_ros(root: Path):
     """The page needs neither rclpy nor MuJoCo."""
     code = (
-        "import sys, ballbal_ros.report.parameter_page as p; p.page(); print(*(m in sys.modules for m in ('rclpy', 'mujoco')))"
+        "import sys, ballbal_ros.report.parameter_page as p; p.page();"
+        "print(*(m in sys.modules for m in ('rclpy', 'mujoco')))"
     )
     done = subprocess.run([sys.executable, "-c", code], cwd=root, capture_output=True, text=True, check=True)
     assert done.stdout.split() == ["False", "False"]
