@@ -1,0 +1,56 @@
+"""The stack with the simulated robot: ``ros2 launch ballbal_ros headless.launch.py clock:=real_time``.
+
+The simulated robot stands on its stand until balance is configured and activated (``ros2 lifecycle set /balance configure``,
+then ``activate``); when it ends, all ends.
+"""
+
+from pathlib import Path
+
+from ament_index_python.packages import get_package_share_directory
+from launch import LaunchDescription
+from launch.actions import DeclareLaunchArgument, OpaqueFunction, Shutdown
+from launch.substitutions import LaunchConfiguration
+from launch_ros.actions import LifecycleNode, Node
+
+from ballbal_ros.stack import PACKAGE, RobotFolder, checked_namespace, headless_stack
+
+
+def _nodes(context):
+    def given(name):
+        return LaunchConfiguration(name).perform(context)
+
+    namespace = checked_namespace(given("namespace"))
+    folder = RobotFolder.checked(Path(given("robot")), simulated=True)
+    simulated = {"seed": int(given("seed")), "duration": float(given("duration"))}
+    # A person may take a while to activate the balance.
+    simulated["answer_timeout"] = 3600.0
+    actions = []
+    for node in headless_stack(folder, given("clock"), namespace, simulated):
+        leaving = {"on_exit": Shutdown()} if node.executable == "simulated_robot" else {}
+        actions.append(
+            (LifecycleNode if node.lifecycle else Node)(
+                package=PACKAGE,
+                executable=node.executable,
+                name=node.executable,
+                namespace=namespace,
+                parameters=[*map(str, node.files), dict(node.parameters)],
+                remappings=list(node.remappings),
+                output="screen",
+                **leaving,
+            )
+        )
+    return actions
+
+
+def generate_launch_description():
+    robot = str(Path(get_package_share_directory(PACKAGE)) / "config" / "shelver")
+    return LaunchDescription(
+        [
+            DeclareLaunchArgument("robot", default_value=robot, description="folder of the robot's parameter files"),
+            DeclareLaunchArgument("namespace", default_value="", description="namespace of all nodes"),
+            DeclareLaunchArgument("clock", default_value="lock_step", description="lock_step or real_time"),
+            DeclareLaunchArgument("seed", default_value="0", description="seed of the simulated noise"),
+            DeclareLaunchArgument("duration", default_value="0.0", description="simulated time, s; 0: no end"),
+            OpaqueFunction(function=_nodes),
+        ]
+    )
