@@ -11,6 +11,7 @@ from pathlib import Path
 
 import attrs
 import pytest
+
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.declaration import declarations
 from ballbal_ros.motion.parameters import CompensationParameters

@@ -10,6 +10,7 @@ from scipy.spatial.transform import Rotation
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw, rotation_lean
 from ballbal_ros.robot.balance_rows import GRAVITY
+from ballbal_ros.simulation.parameters import SimulatedImuParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.sensors import AttitudeFilter, ImuErrors
 from ballbal_ros.simulation.truth import Truth
@@ -17,10 +18,12 @@ from helpers.robots import shelver
 from helpers.simulated import NO_EFFORT, NO_NOISE, robot, simulation
 
 RATE = simulation().loop_rate
+# The defaults are a mid-range MEMS IMU's: the published calibration of the EuRoC data set's ADIS16448. shelver's is better.
+MID_RANGE = SimulatedImuParameters()
 
 
 def rows(count: int, seed: int = 0) -> Array:
-    source = ImuErrors(simulation().imu, RATE, np.random.default_rng(seed)).rows()
+    source = ImuErrors(MID_RANGE, RATE, np.random.default_rng(seed)).rows()
     return np.array([next(source) for _ in range(count)])
 
 
@@ -42,14 +45,14 @@ def test_noise_has_the_published_densities() -> None:
 
 def test_gyro_bias_walks_with_the_published_density() -> None:
     """In time t the bias walks by 1.9e-5 sqrt(t) rad/s (EuRoC), and it starts as spread as the parameter says."""
-    still = attrs.evolve(simulation().imu, gyro_noise=0.0)
+    still = attrs.evolve(MID_RANGE, gyro_noise=0.0)
     starts, walked = [], []
     for seed in range(300):
         source = ImuErrors(still, RATE, np.random.default_rng(seed)).rows()
         bias = np.array([next(source)[:3] for _ in range(2001)])
         starts.append(bias[0])
         walked.append(bias[-1] - bias[0])
-    assert np.std(starts) == pytest.approx(simulation().imu.gyro_bias, rel=0.08)
+    assert np.std(starts) == pytest.approx(MID_RANGE.gyro_bias, rel=0.08)
     assert np.std(walked) == pytest.approx(1.9e-5 * math.sqrt(2000 / RATE), rel=0.08)
 
 
