@@ -1,0 +1,103 @@
+"""``ballbal headless``: the whole stack over the bus does what the rehearsal says, and the same every time."""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+pytest.importorskip("rclpy")
+
+from ballbal_ros.commands.rehearse import rehearse  # noqa: E402
+from helpers.robots import CONFIG  # noqa: E402
+from helpers.ros_stack import NOD, ROOT, SHELVER, ballbal, listening  # noqa: E402
+
+
+def finished(process: subprocess.Popen[str], timeout: float = 90.0) -> tuple[int, str, str]:
+    """Exit status, standard output and standard error of a command that must end by itself."""
+    try:
+        out, err = process.communicate(timeout=timeout)
+    finally:
+        process.kill()
+    return process.returncode, out, err
+
+
+def test_reach_over_the_bus_is_what_the_rehearsal_says(ros_domain_id: int, tmp_path: Path) -> None:
+    """`reach`, planned, in lock-step: within 2 mm, exit 0, and the same travel as in-process to a hundredth of a millimetre."""
+    plan, file = CONFIG / "plans" / "reach.yaml", tmp_path / "found.json"
+    words = ("headless", str(plan), "--robot", str(SHELVER), "--compensation", "planned", "--json", str(file))
+    status, out, err = finished(ballbal(*words, domain=ros_domain_id))
+    assert status == 0, err
+    assert "planned" in out
+    found = json.loads(file.read_text())
+    assert (found["robot"], found["plan"], found["clock"], found["ok"]) == ("shelver", "reach", "lock-step", True)
+    run = found["runs"][0]
+    expected = rehearse(plan, SHELVER, ("planned",)).runs[0]
+    assert run["ball_travel_peak_mm"] <= 2.0 and not run["fell"]
+    assert run["ball_travel_peak_mm"] == pytest.approx(expected.ball_travel_peak_mm, abs=0.01)
+    assert run["ball_travel_end_mm"] == pytest.approx(expected.ball_travel_end_mm, abs=0.01)
+    assert set(run) == {
+        *("compensation", "seed", "fell", "ball_travel_peak_mm", "ball_travel_end_mm", "lean_peak_deg"),
+        *("drive_torque_peak_nm", "friction_use_peak", "duration_s", "real_time_factor"),
+    }
+
+
+def recorded(domain: int, plan: Path, seed: int) -> list[bytes]:
+    """Run a plan and return every ground_truth message of it, as it came over the bus."""
+    with listening(domain) as listener:
+        kept = listener.record("ground_truth", raw=True)
+        process = ballbal("headless", str(plan), "--compensation", "planned", "--seed", str(seed), domain=domain)
+        try:
+            listener.wait(lambda: process.poll() is not None, 60.0, "the run's end")
+            listener.turn(0.2)
+            assert process.returncode == 0, process.stderr.read() if process.stderr else ""
+        finally:
+            process.kill()
+    return [bytes(raw) for raw in kept]
+
+
+def test_one_seed_gives_one_run_to_the_bit(ros_domain_id: int, tmp_path: Path) -> None:
+    """Two lock-step runs with one seed, the second on a machine that is busy otherwise, have the same ground_truth, bit for bit."""
+    plan = tmp_path / "nod.yaml"
+    plan.write_text(NOD)
+    first = recorded(ros_domain_id, plan, 5)
+    busy = subprocess.Popen([sys.executable, "-c", "while True: pass"], preexec_fn=lambda: os.nice(0) and None)
+    try:
+        second = recorded(ros_domain_id, plan, 5)
+    finally:
+        busy.kill()
+    assert len(first) > 1800
+    assert first == second
+
+
+def test_two_robots_in_two_namespaces_do_not_meet(ros_domain_id: int, tmp_path: Path) -> None:
+    """Two stacks at once in one domain, each in its namespace, give what each gives alone: the seed alone decides."""
+    plan = tmp_path / "nod.yaml"
+    plan.write_text(NOD)
+    files = [tmp_path / f"{name}.json" for name in ("left", "right")]
+    words = ("headless", str(plan), "--compensation", "planned")
+    both = [
+        ballbal(*words, "--namespace", file.stem, "--seed", str(seed), "--json", str(file), domain=ros_domain_id)
+        for seed, file in enumerate(files)
+    ]
+    for process in both:
+        status, _, err = finished(process)
+        assert status == 0, err
+    expected = rehearse(plan, SHELVER, ("planned",), (0, 1)).runs
+    for file, alone in zip(files, expected, strict=True):
+        run = json.loads(file.read_text())["runs"][0]
+        assert run["ball_travel_peak_mm"] == pytest.approx(alone.ball_travel_peak_mm, abs=0.01)
+
+
+def test_help_names_the_kinds_and_clocks() -> None:
+    """``ballbal headless --help`` says what there is to choose."""
+    out = subprocess.run(
+        [sys.executable, "-m", "ballbal_ros.commands.main", "headless", "--help"],
+        cwd=ROOT, capture_output=True, text=True, check=True, env={**os.environ, "PYTHONPATH": str(ROOT), "COLUMNS": "200"},
+    ).stdout  # fmt: skip
+    for word in ("quasi_static", "lock-step", "real-time", "--namespace", "--truth"):
+        assert word in out
