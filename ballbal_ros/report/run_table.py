@@ -21,12 +21,12 @@ def print_runs(runs: RunSet, console: Console) -> None:
     limits.
     """
     count = max((sum(1 for r in runs.runs if r.compensation == kind) for kind in KINDS), default=0)
-    seeds = "" if count <= 1 else f", median (worst) of {count} seeds"
+    seeds = "" if count <= 1 else f", median of {count} seeds (ball travel: worst)"
     console.print(f"[bold]{runs.robot}[/bold], plan {runs.plan}, {runs.clock}{seeds}", highlight=False)
     table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    table.add_column("compensation")
+    table.add_column("compensation", no_wrap=True)
     for heading in ("ball peak\nmm", "ball end\nmm", "lean\ndeg", "torque\nN m", "friction\nuse", "× real\ntime"):
-        table.add_column(heading, justify="right")
+        table.add_column(heading, justify="right", no_wrap=True)
     for kind in KINDS:
         chosen = [run for run in runs.runs if run.compensation == kind]
         if chosen:
@@ -41,16 +41,16 @@ def print_runs(runs: RunSet, console: Console) -> None:
 
 
 def _cells(runs: list[RunResult]) -> list[str]:
-    def cell(values: list[float], digits: int) -> str:
-        text = f"{median(values):.{digits}f}"
-        return text if len(values) == 1 else f"{text} ({max(values):.{digits}f})"
+    def travel(values: list[float]) -> str:
+        text = f"{median(values):.2f}"
+        return text if len(values) == 1 else f"{text} ({max(values):.2f})"
 
     return [
-        cell([r.ball_travel_peak_mm for r in runs], 2),
-        cell([r.ball_travel_end_mm for r in runs], 2),
-        cell([r.lean_peak_deg for r in runs], 1),
-        cell([r.drive_torque_peak_nm for r in runs], 1),
-        cell([r.friction_use_peak for r in runs], 2),
+        travel([r.ball_travel_peak_mm for r in runs]),
+        travel([r.ball_travel_end_mm for r in runs]),
+        f"{median([r.lean_peak_deg for r in runs]):.1f}",
+        f"{median([r.drive_torque_peak_nm for r in runs]):.1f}",
+        f"{median([r.friction_use_peak for r in runs]):.2f}",
         f"{median([r.real_time_factor for r in runs]):.1f}",
     ]
 
