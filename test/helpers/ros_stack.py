@@ -13,11 +13,12 @@ from typing import Any
 
 import rclpy
 from rclpy.context import Context
-from rclpy.executors import SingleThreadedExecutor
+from rclpy.serialization import deserialize_message
 from rclpy.signals import SignalHandlerOptions
 
 from ballbal_ros.commands.processes import Processes, environment
-from ballbal_ros.nodes.topics import publisher, subscribe
+from ballbal_ros.nodes.process import executor
+from ballbal_ros.nodes.topics import TOPICS, publisher, subscribe
 from ballbal_ros.stack import RobotFolder, headless_stack
 from helpers.robots import CONFIG
 
@@ -85,16 +86,19 @@ def wait_until(happened: Callable[[], bool], timeout: float, what: str) -> None:
 
 
 class Listener:
-    """A node of the test's own: keeps the newest of each topic, and all of those asked for."""
+    """A node of the test's own: keeps the newest of each topic, and all of those asked for.
+
+    Messages stay serialised until they are looked at, so that listening costs the stack little.
+    """
 
     def __init__(self, domain: int, namespace: str = "") -> None:
         self._context = Context()
         rclpy.init(context=self._context, domain_id=domain, signal_handler_options=SignalHandlerOptions.NO)
         self.node = rclpy.create_node("test_listener", context=self._context, namespace=namespace or None)
-        self._executor = SingleThreadedExecutor(context=self._context)
+        self._executor = executor(self._context)
         self._executor.add_node(self.node)
-        self.newest: dict[str, Any] = {}
-        self.all: dict[str, list[Any]] = {}
+        self._newest: dict[str, bytes] = {}
+        self.watched: Processes | None = None
 
     def close(self) -> None:
         """Leave the bus."""
@@ -105,11 +109,17 @@ class Listener:
     def hear(self, *topics: str) -> None:
         """Keep the newest message of each topic."""
         for topic in topics:
-            subscribe(self.node, topic, lambda message, topic=topic: self.newest.__setitem__(topic, message))
+            keep = self._newest.__setitem__
+            subscribe(self.node, topic, lambda raw, topic=topic: keep(topic, raw), raw=True)
+
+    def newest(self, topic: str) -> Any:
+        """The newest message of a topic that it hears; None before the first."""
+        raw = self._newest.get(topic)
+        return None if raw is None else deserialize_message(raw, TOPICS[topic][0])
 
     def record(self, topic: str, raw: bool = False) -> list[Any]:
-        """Keep all messages of a topic."""
-        kept = self.all.setdefault(topic, [])
+        """Keep all messages of a topic from now on."""
+        kept: list[Any] = []
         subscribe(self.node, topic, kept.append, raw=raw)
         return kept
 
@@ -118,7 +128,9 @@ class Listener:
         return publisher(self.node, topic)
 
     def turn(self, span: float = 0.05) -> None:
-        """Take in what comes for a while, s of wall time."""
+        """Take in what comes for a while, s of wall time; a process that is watched and has ended is an error."""
+        if self.watched is not None:
+            self.watched.check()
         until = time.monotonic() + span
         while True:
             left = until - time.monotonic()

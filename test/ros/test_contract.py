@@ -1,0 +1,301 @@
+"""What the stack promises to others: topics, types, qualities of service, answers, stops. One stack, in lock-step, for all."""
+
+from __future__ import annotations
+
+import math
+import os
+from collections.abc import Iterator
+from typing import Any
+
+import numpy as np
+import pytest
+
+pytest.importorskip("rclpy")
+
+from ballbal_ros.nodes.diagnostics import ERROR, OK, values_of  # noqa: E402
+from ballbal_ros.nodes.messages import load_message, seconds, to_duration  # noqa: E402
+from ballbal_ros.nodes.topics import TOPICS  # noqa: E402
+from ballbal_ros.robot.loads import Load  # noqa: E402
+from ballbal_ros.robot.whole_body import WholeBody  # noqa: E402
+from geometry_msgs.msg import TwistStamped  # noqa: E402
+from helpers.robots import shelver  # noqa: E402
+from helpers.ros_stack import Listener, listening, running_stack  # noqa: E402
+from lifecycle_msgs.msg import Transition  # noqa: E402
+from lifecycle_msgs.srv import ChangeState  # noqa: E402
+from rcl_interfaces.srv import DescribeParameters, SetParameters  # noqa: E402
+from rclpy.parameter import Parameter  # noqa: E402
+from rclpy.qos import DurabilityPolicy, ReliabilityPolicy  # noqa: E402
+from std_msgs.msg import Bool  # noqa: E402
+from std_srvs.srv import SetBool, Trigger  # noqa: E402
+from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint  # noqa: E402
+
+SHOULDERS = ["left_shoulder_pitch", "right_shoulder_pitch"]
+HEARD = (
+    *("joint_states", "odom", "balance_state", "ground_truth", "center_of_mass", "body_inertia"),
+    *("lean_plan", "arm_command"),
+)
+PUBLISHED = {
+    "simulated_robot": ("/clock", "imu/data", "joint_states", "drive_states", "support", "ground_truth"),
+    "balance": ("drive_command", "drive_effort", "odom", "balance_state"),
+    "arm_compensation": ("lean_plan", "arm_command", "plan_report"),
+    "whole_body_kinematics": ("center_of_mass", "body_inertia", "com_marker"),
+}
+SUBSCRIBED = {
+    "simulated_robot": ("drive_command", "arm_command", "push", "simulated_load"),
+    "balance": (
+        *("imu/data", "drive_states", "joint_states", "hand_load", "lean_plan", "cmd_vel", "goal_pose"),
+        *("emergency_stop", "support"),
+    ),
+    "arm_compensation": (
+        *("arm_plan", "ball_plan", "hand_wrench_plan", "hand_load", "joint_states", "odom", "balance_state"),
+        "emergency_stop",
+    ),
+    "whole_body_kinematics": ("joint_states", "hand_load"),
+}
+
+
+class Robot:
+    """The running stack, as a user meets it."""
+
+    def __init__(self, listener: Listener) -> None:
+        self.listener = listener
+        listener.hear(*HEARD)
+        self.reports = listener.record("plan_report")
+        self.senders = {t: listener.sender(t) for t in ("arm_plan", "hand_load", "cmd_vel", "emergency_stop", "lean_plan")}
+
+    def newest(self, topic: str) -> Any:
+        return self.listener.newest(topic)
+
+    @property
+    def time(self) -> float:
+        return seconds(self.newest("joint_states").header.stamp)
+
+    @property
+    def state(self) -> str:
+        said = self.newest("balance_state")
+        return str(said.message) if said is not None else ""
+
+    def bring_up(self) -> None:
+        """Configure and activate the balance, and wait until the stand has let go."""
+
+        def change(transition: int) -> bool:
+            request = ChangeState.Request(transition=Transition(id=transition))
+            return bool(self.listener.call(ChangeState, "balance/change_state", request).success)
+
+        self.listener.wait(lambda: self.newest("joint_states") is not None, 30.0, "a simulated robot")
+        self.listener.wait(lambda: change(Transition.TRANSITION_CONFIGURE), 30.0, "configuring")
+        assert change(Transition.TRANSITION_ACTIVATE)
+        self.listener.wait(lambda: self.state == "balancing", 30.0, "balancing")
+
+    def go_on(self, span: float) -> None:
+        """Let simulated time go by, s."""
+        until = self.time + span
+        self.listener.wait(lambda: self.time >= until, 30.0, f"{span} s of simulated time")
+
+    def ask(self, message: JointTrajectory) -> Any:
+        """Send an arm plan and return the answer."""
+        count = len(self.reports)
+        self.senders["arm_plan"].publish(message)
+        self.listener.wait(lambda: len(self.reports) > count, 20.0, "plan_report")
+        return self.reports[-1].status[0]
+
+    def angle(self, joint: str) -> float:
+        states = self.newest("joint_states")
+        return float(states.position[list(states.name).index(joint)])
+
+    def ball(self) -> np.ndarray:
+        at = self.newest("ground_truth").pose.pose.position
+        return np.array((at.x, at.y))
+
+
+@pytest.fixture(scope="module")
+def robot() -> Iterator[Robot]:
+    """A stack that balances, let go by its stand. A domain of its own, as this lasts for the whole file."""
+    domain = 1 + os.getpid() % 101
+    slow = [("whole_body_kinematics", {"rate": 20.0})]
+    with running_stack(domain, {"seed": 1, "answer_timeout": 60.0}, slow) as processes, listening(domain) as listener:
+        listener.watched = processes
+        made = Robot(listener)
+        made.bring_up()
+        made.go_on(0.5)
+        yield made
+
+
+def plan(names: list[str], *points: tuple[float, list[float]]) -> JointTrajectory:
+    """An arm plan, as soon as possible."""
+    made = [JointTrajectoryPoint(time_from_start=to_duration(time), positions=values) for time, values in points]
+    return JointTrajectory(joint_names=names, points=made)
+
+
+def test_topics_have_the_types_and_qualities_of_the_contract(robot: Robot) -> None:
+    """Every node publishes and subscribes what it should: type, reliability, durability."""
+    node = robot.listener.node
+    for endpoints, info in ((PUBLISHED, node.get_publishers_info_by_topic), (SUBSCRIBED, node.get_subscriptions_info_by_topic)):
+        for name, topics in endpoints.items():
+            for topic in topics:
+                found = [end for end in info(topic) if end.node_name == name]
+                assert found, f"{name} does not have {topic}"
+                message, kind = TOPICS[topic]
+                package, _, kind_of_message = message.__module__.partition(".")[0], None, message.__name__
+                assert found[0].topic_type == f"{package}/msg/{kind_of_message}", topic
+                kept = found[0].qos_profile.durability == DurabilityPolicy.TRANSIENT_LOCAL
+                assert kept == kind.kept, topic
+                reliable = found[0].qos_profile.reliability == ReliabilityPolicy.RELIABLE
+                assert reliable or endpoints is SUBSCRIBED, topic
+
+
+def test_each_command_answers_a_tick_by_its_stamp(robot: Robot) -> None:
+    """drive_command carries the stamp of the drive states it answers, one finite effort for each actuator, by name."""
+    commands = robot.listener.record("drive_command")
+    robot.listener.wait(lambda: len(commands) > 50, what="fifty commands")
+    stamps = [seconds(m.header.stamp) for m in commands]
+    assert np.allclose(np.array(stamps) * 500.0, np.round(np.array(stamps) * 500.0), atol=1e-6)
+    assert all(b > a for a, b in zip(stamps, stamps[1:], strict=False))
+    for command in commands:
+        assert list(command.name) == list(shelver().drive.names)
+        assert all(map(math.isfinite, command.effort))
+
+
+def test_diagnostics_come_from_every_node(robot: Robot) -> None:
+    """Each node tells its state about once a second."""
+    kept = robot.listener.record("/diagnostics")
+    robot.listener.turn(3.0)
+    counts = {name: sum(status.name == f"/{name}" for array in kept for status in array.status) for name in PUBLISHED}
+    assert all(2 <= count <= 6 for count in counts.values()), counts
+
+
+def test_mass_centre_follows_the_loads(robot: Robot) -> None:
+    """center_of_mass and body_inertia are those of the arms and loads at the joint states' stamp."""
+    robot.senders["hand_load"].publish(load_message(Load("left_hand", 1.0, [0.0, 0.0, -0.05]), 0.0))
+    robot.senders["hand_load"].publish(load_message(Load("right_hand", 1.0, [0.0, 0.0, -0.05]), 0.0))
+    body = WholeBody(shelver(), [Load(h, 1.0, [0.0, 0.0, -0.05]) for h in ("left_hand", "right_hand")])
+    robot.listener.wait(lambda: robot.newest("body_inertia") is not None, what="body_inertia")
+    robot.listener.wait(lambda: abs(robot.newest("body_inertia").inertia.m - body.mass) < 1e-9, what="the loads' mass")
+    at = robot.newest("center_of_mass")
+    assert at.header.frame_id == "base_link"
+    expected = body.center_of_mass(np.zeros(shelver().joint_count))
+    assert (at.point.x, at.point.y, at.point.z) == pytest.approx(expected, abs=2e-3)
+    for hand in ("left_hand", "right_hand"):
+        robot.senders["hand_load"].publish(load_message(Load(hand, 0.0), 0.0))
+    robot.listener.wait(lambda: abs(robot.newest("body_inertia").inertia.m - body.mass + 2.0) < 1e-9, what="empty hands")
+
+
+@pytest.mark.parametrize(
+    ("message", "words"),
+    [
+        (plan(SHOULDERS, (1.0, [math.nan, 0.0])), "left_shoulder_pitch is nan"),
+        (plan(["left_shoulder_pich"], (1.0, [0.1])), "did you mean left_shoulder_pitch"),
+        (plan(SHOULDERS, (1.0, [-9.0, 0.0])), "its limits are"),
+        (plan(SHOULDERS, (0.02, [-1.0, -1.0])), "rad/s"),
+        (plan(SHOULDERS, (1.0, [-0.1, -0.1]), (0.5, [-0.2, -0.2])), "times must increase"),
+        (plan(SHOULDERS, (0.0, [-0.8, -0.8]), (0.5, [-0.2, -0.2])), "begins with"),
+    ],
+    ids=["nan", "unknown joint", "beyond limits", "too fast", "times", "elsewhere"],
+)
+def test_a_plan_that_cannot_be_is_refused_and_nothing_moves(robot: Robot, message: JointTrajectory, words: str) -> None:
+    """The report says in one line why; no lean plan, no arm command goes out."""
+    before = {topic: robot.newest(topic) for topic in ("lean_plan", "arm_command")}
+    report = robot.ask(message)
+    assert report.level == ERROR and report.name == "arm_plan"
+    assert words in report.message and "\n" not in report.message
+    robot.go_on(0.1)
+    assert {topic: robot.newest(topic) for topic in before} == before
+
+
+def test_a_lean_plan_that_does_not_fit_is_not_acknowledged(robot: Robot) -> None:
+    """What anybody sends as a lean plan is checked by balance too: the refusal is told in balance_state."""
+    point = JointTrajectoryPoint(positions=[math.nan] * 5, velocities=[0.0] * 5, accelerations=[0.0] * 5, effort=[0.0] * 5)
+    names = ["lean_roll", "lean_pitch", "heading", "ball_x", "ball_y"]
+    robot.senders["lean_plan"].publish(JointTrajectory(joint_names=names, points=[point] * 3))
+    told = robot.listener.wait(lambda: values_of(robot.newest("balance_state")).get("refusal"), what="a refusal")
+    assert "lean_plan" in told and robot.state == "balancing"
+
+
+def test_a_plan_starts_with_the_lean_and_cancelling_stops_the_arms(robot: Robot) -> None:
+    """Part of the joints suffice; arm_command starts a lead-in after lean_plan; an empty plan brings arms to rest, the ball stays."""
+    start = robot.ball()
+    report = robot.ask(plan(SHOULDERS, (1.2, [-1.2, -1.2])))
+    assert report.level == OK, report.message
+    values = values_of(report)
+    lean, arms = (float(values[key]) for key in ("lean_plan", "arm_command"))
+    assert seconds(robot.newest("lean_plan").header.stamp) == pytest.approx(lean)
+    assert seconds(robot.newest("arm_command").header.stamp) == pytest.approx(arms)
+    assert arms - lean == pytest.approx(float(values["lead-in s"]), abs=1e-6) and arms - lean > 1.0
+    robot.listener.wait(lambda: robot.time > arms + 0.1, 30.0, "the arms' start")
+    assert values_of(robot.newest("balance_state"))["plan"] == values["lean_plan"]
+    report = robot.ask(JointTrajectory())
+    assert report.level == OK, report.message
+    end = float(values_of(report)["arm_command"]) + float(values_of(report)["duration s"])
+    robot.listener.wait(lambda: robot.time > end + 0.05, 30.0, "the arms' rest")
+    rest = robot.angle(SHOULDERS[0])
+    assert -1.15 < rest < -0.1
+    robot.go_on(1.0)
+    assert abs(robot.angle(SHOULDERS[0]) - rest) < 1e-3
+    assert np.hypot(*(robot.ball() - start)) < 0.03 and robot.state == "balancing"
+
+
+def test_a_velocity_rolls_the_ball_until_it_is_too_old(robot: Robot) -> None:
+    """cmd_vel rolls the robot along; half a second after the last message it comes to rest. odom tells the same as the truth."""
+    start, message = robot.ball(), TwistStamped()
+    message.header.frame_id = "base_footprint"
+    message.twist.linear.x = 0.2
+    until = robot.time + 1.0
+    while robot.time < until:
+        robot.senders["cmd_vel"].publish(message)
+        robot.listener.turn(0.02)
+    robot.go_on(3.0)
+    way = robot.ball() - start
+    assert 0.1 < way[0] < 0.45 and abs(way[1]) < 0.03
+    here = robot.ball()
+    robot.go_on(0.5)
+    assert np.hypot(*(robot.ball() - here)) < 0.01
+    odom = robot.newest("odom").pose.pose.position
+    assert (odom.x, odom.y) == pytest.approx(robot.ball(), abs=0.02)
+    message.twist.linear.x = math.nan
+    robot.senders["cmd_vel"].publish(message)
+    robot.go_on(0.3)
+    assert np.hypot(*(robot.ball() - here)) < 0.01
+
+
+def test_parameters_tell_their_range_and_refuse_what_is_beyond(robot: Robot) -> None:
+    """Descriptors carry meaning, unit and range; a value beyond is refused with the reason, one within is taken."""
+    names = ["planner.lead_in", "ball.radius"]
+    answer = robot.listener.call(DescribeParameters, "arm_compensation/describe_parameters", DescribeParameters.Request(names=names))
+    lead_in, radius = answer.descriptors
+    assert "[s]" in lead_in.description and lead_in.floating_point_range[0].to_value == 5.0 and not lead_in.read_only
+    assert radius.read_only
+    for value, taken in ((9.0, False), (1.5, True), (1.6, True)):
+        request = SetParameters.Request(parameters=[Parameter("planner.lead_in", value=value).to_parameter_msg()])
+        result = robot.listener.call(SetParameters, "arm_compensation/set_parameters", request).results[0]
+        assert result.successful is taken, result.reason
+
+
+def test_an_emergency_stop_is_controlled_and_latched(robot: Robot) -> None:
+    """Stopping stays in balance and takes no plan; held by a stand the torque goes; only a reset ends it (IEC 60204-1, category 1)."""
+    report = robot.ask(plan(SHOULDERS, (1.0, [-0.3, -0.3])))
+    assert report.level == OK, report.message
+    arms = float(values_of(report)["arm_command"])
+    robot.listener.wait(lambda: robot.time > arms + 0.2, 30.0, "the arms' start")
+    count = len(robot.reports)
+    robot.senders["emergency_stop"].publish(Bool(data=True))
+    robot.listener.wait(lambda: robot.state == "stopping", what="stopping")
+    robot.listener.wait(lambda: len(robot.reports) > count, what="the report of the stop")
+    assert robot.reports[-1].status[0].name == "emergency_stop" and robot.reports[-1].status[0].level == OK
+    robot.go_on(2.0)
+    rest = robot.angle(SHOULDERS[0])
+    assert robot.state == "stopping"
+    assert robot.ask(plan(SHOULDERS, (1.0, [0.0, 0.0]))).level == ERROR
+    robot.go_on(0.3)
+    assert robot.angle(SHOULDERS[0]) == pytest.approx(rest, abs=1e-3)
+    assert robot.listener.call(SetBool, "simulated_robot/stand", SetBool.Request(data=True)).success
+    robot.listener.wait(lambda: robot.state == "released", what="released")
+    robot.go_on(0.1)
+    commands = robot.listener.record("drive_command")
+    robot.listener.wait(lambda: len(commands) > 5, what="commands")
+    assert list(commands[-1].effort) == [0.0, 0.0, 0.0]
+    assert not robot.listener.call(Trigger, "balance/reset", Trigger.Request()).success
+    robot.senders["emergency_stop"].publish(Bool(data=False))
+    robot.go_on(0.3)
+    assert robot.state == "released"
+    assert robot.listener.call(Trigger, "balance/reset", Trigger.Request()).success
+    robot.listener.wait(lambda: robot.state == "balancing", what="balancing again")
