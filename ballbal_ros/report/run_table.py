@@ -41,9 +41,12 @@ def print_runs(runs: RunSet, console: Console) -> None:
 
 
 def _cells(runs: list[RunResult]) -> list[str]:
+    def short(value: float) -> str:
+        return f"{value:.2f}" if value < 100.0 else f"{value:.0f}"
+
     def travel(values: list[float]) -> str:
-        text = f"{median(values):.2f}"
-        return text if len(values) == 1 else f"{text} ({max(values):.2f})"
+        text = short(median(values))
+        return text if len(values) == 1 else f"{text} ({short(max(values))})"
 
     return [
         travel([r.ball_travel_peak_mm for r in runs]),
