@@ -214,9 +214,9 @@ def test_reach_is_the_motion_asked_for() -> None:
 
 
 def test_shelve_ends_as_it_began() -> None:
-    """shelve: 25 to 35 s, all loads announced and gone at the end, arms back where they were."""
+    """shelve: 20 to 35 s, all loads announced and gone at the end, arms back where they were."""
     story = story_of("shelve")
-    assert 25.0 <= story.duration <= 35.0
+    assert 20.0 <= story.duration <= 35.0
     np.testing.assert_array_equal(story.start, story.end)
     assert sum(story.loads[-1].values()) == 0.0
     assert all(step["load"]["announced"] is True for step in plan_file("shelve")["steps"] if "load" in step)
