@@ -1,8 +1,8 @@
 """Other weights, noise figures and limits while the robot stands, without a step in torque.
 
 A change takes two steps. :func:`prepare` checks that the loop with the new values keeps its margins on the present
-model, and designs the gains: a third of a second, so it belongs in a thread beside the tick's. :class:`ChangeOver`
-then fades, tick by tick. Old and new feedback both work on the one estimate; what the loop sends is
+model, and designs the gains: 0.15 s of work, so it belongs in a process beside the loop's. :class:`ChangeOver` then
+fades, tick by tick. Old and new feedback both work on the one estimate; what the loop sends is
 
     τ = (1 - s) K_old x̂ + s K_new x̂,   s from 0 to 1 over ``ramp_time``, |Δs (K_new - K_old) x̂| ≤ TORQUE_STEP a tick,
 
@@ -18,7 +18,7 @@ from ballbal_ros.balance.controller import STATES, Controller, ControllerMatrice
 from ballbal_ros.balance.gains import Gains, checked_design, design
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.regulator import Regulator
-from ballbal_ros.balance.schedule import GainSchedule
+from ballbal_ros.balance.schedule import GainSchedule, PostureRange
 from ballbal_ros.errors import BallbalError, ParameterError
 from ballbal_ros.parameter_change import changes
 from ballbal_ros.robot.description import RobotDescription
@@ -38,14 +38,14 @@ class PreparedChange:
 
 
 def prepare(
-    schedule: GainSchedule,
+    reach: PostureRange,
     description: RobotDescription,
     old: BalanceParameters,
     new: BalanceParameters,
     posture: Posture,
     where: str = "balance.yaml",
 ) -> PreparedChange:
-    """Check new parameters on the present posture, and design gains on the grid of ``schedule``, the one in force.
+    """Check new parameters on the present posture, and design gains on the grid of ``reach``, as the present ones are.
 
     Raises :class:`BallbalError` in one line, ``where`` first, with the values that change: for one that may not change
     while the loop runs, where a margin is missed, or where the way from the old gains to the new is not stable.
@@ -62,7 +62,7 @@ def prepare(
         _check_the_way(design(posture, description, old), gains)
     except BallbalError as error:
         raise BallbalError(where, f"with {', '.join(deciding)} {error.what}", error.remedy) from error
-    return PreparedChange(new, schedule.redesigned(new))
+    return PreparedChange(new, GainSchedule(description, new, reach))
 
 
 def _decides_gains(name: str) -> bool:

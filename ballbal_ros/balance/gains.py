@@ -7,7 +7,7 @@ import numpy as np
 
 from ballbal_ros.balance.discrete import SampledPlant, discrete_lqr, sampled
 from ballbal_ros.balance.linear_model import BALL, LinearModel, linear_model
-from ballbal_ros.balance.margins import Margins, loop_margins
+from ballbal_ros.balance.margins import LONGEST_DELAY, Margins, loop_margins
 from ballbal_ros.balance.noise import estimator_gain, heading_noise, station_noise
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.regulator import Regulator, steady_trim
@@ -65,17 +65,26 @@ def design(posture: Posture, description: RobotDescription, parameters: BalanceP
     return Gains(parameters, model, _station(model, parameters), _heading(model, parameters))
 
 
-def margins(gains: Gains, plant: SampledPlant | None = None) -> tuple[Margins, Margins]:
-    """Margins of (lean and ball, heading), each loop as sampled; ``plant`` is another than the one designed for."""
-    return loop_margins(gains.station, ("x", "y"), plant), loop_margins(gains.heading, ("z",))
+def margins(
+    gains: Gains, plant: SampledPlant | None = None, longest_delay: float = LONGEST_DELAY
+) -> tuple[Margins, Margins]:
+    """Margins of (lean and ball, heading), each loop as sampled; ``plant`` is another than the one designed for.
+
+    Delays are tried up to ``longest_delay``, s.
+    """
+    station = loop_margins(gains.station, ("x", "y"), plant, longest_delay)
+    return station, loop_margins(gains.heading, ("z",), None, longest_delay)
 
 
 def checked_design(
     posture: Posture, description: RobotDescription, parameters: BalanceParameters
 ) -> tuple[Gains, tuple[Margins, Margins]]:
-    """Gains and margins; raises :class:`BallbalError` where a margin is below what ``margins.*`` asks for."""
+    """Gains and margins; raises :class:`BallbalError` where a margin is below what ``margins.*`` asks for.
+
+    Delays are tried no further than is asked for: a limit beyond counts as infinite.
+    """
     gains = design(posture, description, parameters)
-    found = margins(gains)
+    found = margins(gains, longest_delay=parameters.margins.delay + 2.0 * parameters.loop.period)
     for requirement in requirements(found, parameters):
         if not requirement.ok:
             least = "at least" if requirement.at_least else "at most"

@@ -21,6 +21,7 @@ from ballbal_ros.robot.arrays import Array
 
 GRID = 1500
 LOWEST = 1e-3
+LONGEST_DELAY = 0.5
 
 
 @attrs.frozen
@@ -55,8 +56,11 @@ class Margins:
     delay_limit: float
 
 
-def loop_margins(regulator: Regulator, axes: tuple[str, ...], plant: SampledPlant | None = None) -> Margins:
-    """Measure a loop's margins, on the plant it was designed for or on another.
+def loop_margins(
+    regulator: Regulator, axes: tuple[str, ...], plant: SampledPlant | None = None, longest_delay: float = LONGEST_DELAY
+) -> Margins:
+    """Measure a loop's margins, on the plant it was designed for or on another; delays are tried up to
+    ``longest_delay``, s.
 
     All are zero (gain margins 1) where the closed loop is unstable to begin with.
     """
@@ -77,7 +81,7 @@ def loop_margins(regulator: Regulator, axes: tuple[str, ...], plant: SampledPlan
         sensitivity_peak=_peak(sensitivity),
         complementary_peak=_peak(complementary),
         complementary_floor=floor,
-        delay_limit=delay_limit(regulator, actual),
+        delay_limit=delay_limit(regulator, actual, longest_delay),
     )
 
 
@@ -127,7 +131,7 @@ def _complementary_floor(plant: SampledPlant) -> float:
     return float(max(1.0, np.abs(np.linalg.eigvals(plant.transition)).max()) ** whole)
 
 
-def delay_limit(regulator: Regulator, plant: SampledPlant, longest: float = 0.5) -> float:
+def delay_limit(regulator: Regulator, plant: SampledPlant, longest: float = LONGEST_DELAY) -> float:
     """Extra delay (s) at which the closed loop stops being stable: by steps of half a period, then to a microsecond."""
     step = plant.period / 2.0
     stable, unstable = 0.0, np.inf

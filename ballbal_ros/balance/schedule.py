@@ -10,6 +10,9 @@ stands.
 from __future__ import annotations
 
 import copy
+import math
+from collections.abc import Mapping
+from typing import Any
 
 import attrs
 import numpy as np
@@ -60,6 +63,12 @@ class PostureRange:
         about = np.array([np.diag(p.inertia) for p in found])
         return cls(float(masses.mean()), _wide(moments), _wide(about[:, :2]), _wide(about[:, 2]))
 
+    @classmethod
+    def of_numbers(cls, numbers: Mapping[str, Any]) -> PostureRange:
+        """The range that ``attrs.asdict`` took apart, be it by way of JSON."""
+        pairs = [(float(low), float(high)) for low, high in (numbers[n] for n in ("moment", "inertia", "heading"))]
+        return cls(float(numbers["mass"]), *pairs)
+
 
 def _wide(values: Array) -> tuple[float, float]:
     return 0.98 * float(values.min()), 1.02 * float(values.max())
@@ -72,21 +81,18 @@ class GainSchedule:
         self, description: RobotDescription, parameters: BalanceParameters, present: Posture | PostureRange
     ) -> None:
         """``present``: a posture that the grid must reach besides the robot's others, or a whole range found before."""
-        reach = present if isinstance(present, PostureRange) else PostureRange.of(description, present)
-        self._description, self._reach = description, reach
-        self._moment = np.linspace(*reach.moment, _GRID)
-        self._inertia = np.linspace(*reach.inertia, _GRID)
-        self._heading = np.linspace(*reach.heading, _GRID * _GRID)
+        self.reach = present if isinstance(present, PostureRange) else PostureRange.of(description, present)
+        reach = self.reach
+        moments, inertias, headings = self._lay_grid()
         designed = []
-        for index, (moment, inertia) in enumerate((m, i) for m in self._moment for i in self._inertia):
+        for index, (moment, inertia) in enumerate((m, i) for m in moments for i in inertias):
             posture = Posture(
                 reach.mass,
                 np.array([0.0, 0.0, moment / reach.mass]),
-                np.diag([inertia, inertia, self._heading[index]]),
+                np.diag([inertia, inertia, headings[index]]),
             )
             designed.append(controller_matrices(design(posture, description, parameters)))
-        self._axes = np.array((*_STATE_AXIS, *_INPUT_AXIS, *_STATE_AXIS))
-        self._shapes = [m.shape for m in (designed[0].correct, designed[0].act, designed[0].predict)]
+        self._shapes = tuple(m.shape for m in (designed[0].correct, designed[0].act, designed[0].predict))
         width = max(shape[1] for shape in self._shapes)
         self._stack = np.zeros((len(designed), len(self._axes), width))
         for layer, matrices in zip(self._stack, designed):
@@ -95,14 +101,37 @@ class GainSchedule:
                 layer[row : row + len(matrix), : matrix.shape[1]] = matrix
                 row += len(matrix)
         self._output, self._history = designed[0].output, designed[0].history
-        self._weights = np.zeros((3, len(designed)))
 
-    def redesigned(self, parameters: BalanceParameters) -> GainSchedule:
-        """The schedule for other weights, noise figures or trim, on the same grid; this one stays as it is."""
-        return GainSchedule(self._description, parameters, self._reach)
+    def _lay_grid(self) -> tuple[Array, Array, Array]:
+        reach = self.reach
+        self._moment = np.linspace(*reach.moment, _GRID)
+        self._inertia = np.linspace(*reach.inertia, _GRID)
+        self._heading = np.linspace(*reach.heading, _GRID * _GRID)
+        self._axes = np.array((*_STATE_AXIS, *_INPUT_AXIS, *_STATE_AXIS))
+        self._weights = np.zeros((3, _GRID * _GRID))
+        return self._moment, self._inertia, self._heading
+
+    def pack(self) -> tuple[dict[str, Any], bytes]:
+        """What the schedule is made of, for another process: what JSON holds, and the numbers; see :meth:`unpacked`."""
+        head: dict[str, Any] = {"reach": attrs.asdict(self.reach), "shapes": self._shapes, "history": self._history}
+        head["sizes"] = [self._stack.shape, self._output.shape]
+        return head, self._stack.tobytes() + self._output.tobytes()
+
+    @classmethod
+    def unpacked(cls, head: Mapping[str, Any], numbers: bytes) -> GainSchedule:
+        """The schedule that :meth:`pack` took apart."""
+        made = cls.__new__(cls)
+        made.reach = PostureRange.of_numbers(head["reach"])
+        made._lay_grid()
+        made._shapes, made._history = tuple(tuple(shape) for shape in head["shapes"]), int(head["history"])
+        stack, output = (tuple(size) for size in head["sizes"])
+        every = np.frombuffer(numbers)
+        made._stack = every[: math.prod(stack)].reshape(stack)
+        made._output = every[math.prod(stack) :].reshape(output)
+        return made
 
     def mixed(self, other: GainSchedule, share: float) -> GainSchedule:
-        """``share`` of another schedule on the same grid, and the rest of this one: at each posture the mix of both."""
+        """``share`` of another schedule on the same grid, the rest of this one: at each posture the mix of both."""
         between = copy.copy(self)
         between._stack = (1.0 - share) * self._stack + share * other._stack
         between._weights = np.zeros_like(self._weights)

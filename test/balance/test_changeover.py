@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Callable
+from functools import cache
 from typing import Any
 
 import attrs
@@ -13,7 +15,7 @@ from ballbal_ros.balance.changeover import TORQUE_STEP, prepare
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.balance.parameters import BalanceParameters
-from ballbal_ros.balance.schedule import GainSchedule
+from ballbal_ros.balance.schedule import GainSchedule, PostureRange
 from ballbal_ros.declaration import build, declarations, flatten
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.robot.whole_body import Posture
@@ -33,6 +35,11 @@ def with_values(values: dict[str, Any], of: BalanceParameters | None = None) -> 
 
 def posture() -> Posture:
     return reach().body().posture(reach().first)
+
+
+@cache
+def reached() -> PostureRange:
+    return PostureRange.of(shelver(), posture())
 
 
 @attrs.define
@@ -57,7 +64,7 @@ class Changing:
             while self.when and self.when[0][0] <= measured.stamp:
                 new = with_values(self.when.pop(0)[1], loop.parameters)
                 at = loop.body.posture(measured.arm_position)
-                loop.change_parameters(prepare(loop.schedule, loop.description, loop.parameters, new, at))
+                loop.change_parameters(prepare(loop.schedule.reach, loop.description, loop.parameters, new, at))
                 self.taken.append(new)
             before, was_under_way = loop.controller.act, loop._gains.under_way
             effort = tick(measured)
@@ -103,17 +110,27 @@ def test_changes_that_overtake_each_other_make_no_step_and_the_last_one_is_in_fo
 def test_once_changed_the_gains_are_those_of_a_loop_made_with_the_new_values():
     """After the change the loop has the very gains that it would have been started with."""
     new = with_values({"weights.lean": 0.02, "estimator.torque_noise": 0.2})
-    prepared = prepare(GainSchedule(shelver(), balance(), posture()), shelver(), balance(), new, posture())
     fresh = GainSchedule(shelver(), new, posture())
+    prepared = prepare(reached(), shelver(), balance(), new, posture())
     assert prepared.schedule is not None
     for name in ("correct", "output", "act", "predict"):
         assert np.array_equal(getattr(prepared.schedule.at(posture()), name), getattr(fresh.at(posture()), name))
 
 
+def test_a_schedule_taken_apart_for_another_process_is_the_same_again():
+    """By way of JSON and bytes, a schedule gives the same matrices to the bit."""
+    one = GainSchedule(shelver(), balance(), reached())
+    head, numbers = one.pack()
+    again = GainSchedule.unpacked(json.loads(json.dumps(head)), numbers)
+    assert again.reach == one.reach
+    for name in ("correct", "output", "act", "predict"):
+        assert np.array_equal(getattr(again.at(posture()), name), getattr(one.at(posture()), name))
+
+
 def test_a_mix_of_schedules_is_the_mix_of_their_gains_at_each_posture():
     """A change that is overtaken goes on from where it has come to: the mixed schedule gives mixed matrices."""
     one = GainSchedule(shelver(), balance(), posture())
-    other = one.redesigned(with_values({"weights.torque": 12.0}))
+    other = GainSchedule(shelver(), with_values({"weights.torque": 12.0}), one.reach)
     mixed = one.mixed(other, 0.3).at(posture())
     assert np.allclose(mixed.act, 0.7 * one.at(posture()).act + 0.3 * other.at(posture()).act, rtol=1e-12, atol=1e-9)
     assert np.allclose(mixed.correct, 0.7 * one.at(posture()).correct + 0.3 * other.at(posture()).correct, rtol=1e-12)
@@ -132,9 +149,8 @@ def test_a_mix_of_schedules_is_the_mix_of_their_gains_at_each_posture():
 )
 def test_values_that_cost_the_margins_are_refused_and_named(values: dict[str, Any], words: tuple[str, ...]):
     """A change after which the loop would not keep its margins is refused in one line, with old and new value."""
-    schedule = GainSchedule(shelver(), balance(), posture())
     with pytest.raises(BallbalError) as caught:
-        prepare(schedule, shelver(), balance(), with_values(values), posture(), "somewhere/balance.yaml")
+        prepare(reached(), shelver(), balance(), with_values(values), posture(), "somewhere/balance.yaml")
     line = str(caught.value)
     assert line.startswith("somewhere/balance.yaml: ") and "\n" not in line
     for word in words:
@@ -143,12 +159,11 @@ def test_values_that_cost_the_margins_are_refused_and_named(values: dict[str, An
 
 def test_limits_and_compensation_change_without_new_gains():
     """What is no weight needs no design, and lowering the torque limit goes by small steps."""
-    schedule = GainSchedule(shelver(), balance(), posture())
     new = with_values({"limits.torque": 20.0, "compensation": "none"})
-    assert prepare(schedule, shelver(), balance(), new, posture()).schedule is None
+    assert prepare(reached(), shelver(), balance(), new, posture()).schedule is None
     limits: list[float] = []
     loop = BalanceLoop(shelver(), balance(), reach().first, reach().loads)
-    loop.change_parameters(prepare(loop.schedule, shelver(), balance(), new, posture()))
+    loop.change_parameters(prepare(loop.schedule.reach, shelver(), balance(), new, posture()))
     still = Measurement(
         stamp=0.0,
         imu_quat_xyzw=None,
@@ -197,8 +212,7 @@ def test_two_hundred_random_changes_while_it_reaches_do_not_disturb_it():
             if rng.random() < 0.5:
                 values["weights.ball_position"] = 1e-5
                 with pytest.raises(BallbalError):
-                    schedule = GainSchedule(shelver(), balance(), posture())
-                    prepare(schedule, shelver(), balance(), with_values(values), posture())
+                    prepare(reached(), shelver(), balance(), with_values(values), posture())
                 refused += 1
             else:
                 changing.when.append((float(at), values))
