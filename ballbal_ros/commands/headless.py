@@ -56,7 +56,7 @@ def headless(
             "source your ROS, or install the headless extra: pip install 'ballbal_ros[headless]'",
         )
     from ballbal_ros.commands.headless_run import HeadlessRun, HeadlessSetup
-    from ballbal_ros.commands.processes import ended_like_an_interrupt
+    from ballbal_ros.commands.processes import interruptible
 
     files = read_robot(robot)
     folder = RobotFolder.checked(robot, simulated=True)
@@ -65,7 +65,7 @@ def headless(
     timeline = Timeline.of(story, files.compensation, lead_in)
     lean_plan = plan_story(files, story, timeline) if "planned" in kinds and story.planned else None
     results: list[RunResult] = []
-    with own_domain(domain) as number, ended_like_an_interrupt(), _progress(console, timeline.end) as (progress, task):
+    with own_domain(domain) as number, interruptible(), _progress(console, timeline.end) as (progress, task):
         setup = HeadlessSetup(
             folder=folder,
             description=files.description,

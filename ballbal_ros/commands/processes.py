@@ -8,6 +8,7 @@ import os
 import signal
 import subprocess
 import tempfile
+import threading
 import time
 from collections.abc import Iterator, Mapping, Sequence
 from typing import IO
@@ -16,6 +17,7 @@ import attrs
 
 _PARENT_DEATH = 1  # PR_SET_PDEATHSIG
 _GRACE = 4.0
+_TOLD_TO_END = threading.Event()
 _LIBC = ctypes.CDLL(None, use_errno=True)
 
 
@@ -77,7 +79,12 @@ class Processes:
         self._children.append(_Child(name, child, log))
 
     def check(self) -> None:
-        """Raise :class:`RunFailed` if any process has ended with an error, or has ended at all but may not have."""
+        """Raise :class:`RunFailed` if any process has ended with an error, or has ended at all but may not have.
+
+        Raises KeyboardInterrupt where somebody wants the run to end.
+        """
+        if _TOLD_TO_END.is_set():
+            raise KeyboardInterrupt
         for child in self._children:
             status = child.process.poll()
             if status is not None and (status != 0 or child.name != self.may_end):
@@ -117,14 +124,16 @@ def _undisturbed() -> Iterator[None]:
         signal.signal(signal.SIGINT, before)
 
 
-def _raise_interrupt(*_: object) -> None:
-    raise KeyboardInterrupt
-
-
 @contextlib.contextmanager
-def ended_like_an_interrupt() -> Iterator[None]:
-    """Being told to end (SIGTERM, a closed terminal) cleans up like Ctrl-C."""
-    before = {number: signal.signal(number, _raise_interrupt) for number in (signal.SIGTERM, signal.SIGHUP)}
+def interruptible() -> Iterator[None]:
+    """Ctrl-C, being told to end (SIGTERM) and a closed terminal all end a run at its next look at the processes.
+
+    An exception out of a signal handler could come anywhere, even where it is lost.
+    """
+    told = _TOLD_TO_END
+    told.clear()
+    signals = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
+    before = {number: signal.signal(number, lambda *_: told.set()) for number in signals}
     try:
         yield
     finally:

@@ -168,7 +168,9 @@ def listening(domain: int, namespace: str = "") -> Iterator[Listener]:
 
 
 @contextlib.contextmanager
-def running_stack(domain: int, simulated: dict[str, Any], changes: Sequence[tuple[str, dict[str, Any]]] = ()) -> Iterator[Processes]:
+def running_stack(
+    domain: int, simulated: dict[str, Any], changes: Sequence[tuple[str, dict[str, Any]]] = ()
+) -> Iterator[Processes]:
     """All nodes of the demo robot's stack as processes; ``changes`` are further parameters by executable."""
     with Processes() as processes:
         for node in headless_stack(RobotFolder.checked(SHELVER, simulated=True), simulated=simulated):

@@ -139,12 +139,16 @@ def test_two_hundred_random_edits_while_it_reaches(tmp_path: Path, ros_domain_id
         for number in range(200):
             began = time.monotonic()
             if number % 2:
-                name, bad = rng.choice([("lean", -1.0), ("torque", 1e9), ("lean_rate", "fast"), ("ball_position", 1e-6)])
+                name, bad = rng.choice(
+                    [("lean", -1.0), ("torque", 1e9), ("lean_rate", "fast"), ("ball_position", 1e-6)]
+                )
                 old = f"      {name}: "
                 start = text["balance.yaml"].index(old)
                 end = text["balance.yaml"].index("\n", start)
                 write(stack, "balance.yaml", f"{text['balance.yaml'][:start]}{old}{bad}{text['balance.yaml'][end:]}")
-                stack.wait("a refusal", lambda n=name, t=began: bool(stack.line_with("refused", f"weights.{n}", after=t)), 3.0)
+                stack.wait(
+                    "a refusal", lambda n=name, t=began: bool(stack.line_with("refused", f"weights.{n}", after=t)), 3.0
+                )
                 write(stack, "balance.yaml", text["balance.yaml"])
                 stack.turn(0.2)
             else:
@@ -163,7 +167,7 @@ def test_two_hundred_random_edits_while_it_reaches(tmp_path: Path, ros_domain_id
 def read_with(text: str, name: str, value: float) -> str:
     old = f"      {name}: "
     start = text.index(old)
-    return f"{text[:start]}{old}{value}{text[text.index(chr(10), start):]}"
+    return f"{text[:start]}{old}{value}{text[text.index(chr(10), start) :]}"
 
 
 def write(stack: WatchedStack, file: str, text: str) -> None:

@@ -61,7 +61,9 @@ class Robot:
         self.listener = listener
         listener.hear(*HEARD)
         self.reports = listener.record("plan_report")
-        self.senders = {t: listener.sender(t) for t in ("arm_plan", "hand_load", "cmd_vel", "emergency_stop", "lean_plan")}
+        self.senders = {
+            t: listener.sender(t) for t in ("arm_plan", "hand_load", "cmd_vel", "emergency_stop", "lean_plan")
+        }
 
     def newest(self, topic: str) -> Any:
         return self.listener.newest(topic)
@@ -130,7 +132,10 @@ def plan(names: list[str], *points: tuple[float, list[float]]) -> JointTrajector
 def test_topics_have_the_types_and_qualities_of_the_contract(robot: Robot) -> None:
     """Every node publishes and subscribes what it should: type, reliability, durability."""
     node = robot.listener.node
-    for endpoints, info in ((PUBLISHED, node.get_publishers_info_by_topic), (SUBSCRIBED, node.get_subscriptions_info_by_topic)):
+    for endpoints, info in (
+        (PUBLISHED, node.get_publishers_info_by_topic),
+        (SUBSCRIBED, node.get_subscriptions_info_by_topic),
+    ):
         for name, topics in endpoints.items():
             for topic in topics:
                 found = [end for end in info(topic) if end.node_name == name]
@@ -177,7 +182,9 @@ def test_mass_centre_follows_the_loads(robot: Robot) -> None:
     assert (at.point.x, at.point.y, at.point.z) == pytest.approx(expected, abs=2e-3)
     for hand in ("left_hand", "right_hand"):
         robot.senders["hand_load"].publish(load_message(Load(hand, 0.0), 0.0))
-    robot.listener.wait(lambda: abs(robot.newest("body_inertia").inertia.m - body.mass + 2.0) < 1e-9, what="empty hands")
+    robot.listener.wait(
+        lambda: abs(robot.newest("body_inertia").inertia.m - body.mass + 2.0) < 1e-9, what="empty hands"
+    )
 
 
 @pytest.mark.parametrize(
@@ -204,7 +211,9 @@ def test_a_plan_that_cannot_be_is_refused_and_nothing_moves(robot: Robot, messag
 
 def test_a_lean_plan_that_does_not_fit_is_not_acknowledged(robot: Robot) -> None:
     """What anybody sends as a lean plan is checked by balance too: the refusal is told in balance_state."""
-    point = JointTrajectoryPoint(positions=[math.nan] * 5, velocities=[0.0] * 5, accelerations=[0.0] * 5, effort=[0.0] * 5)
+    point = JointTrajectoryPoint(
+        positions=[math.nan] * 5, velocities=[0.0] * 5, accelerations=[0.0] * 5, effort=[0.0] * 5
+    )
     names = ["lean_roll", "lean_pitch", "heading", "ball_x", "ball_y"]
     robot.senders["lean_plan"].publish(JointTrajectory(joint_names=names, points=[point] * 3))
     told = robot.listener.wait(lambda: values_of(robot.newest("balance_state")).get("refusal"), what="a refusal")
@@ -260,7 +269,9 @@ def test_a_velocity_rolls_the_ball_until_it_is_too_old(robot: Robot) -> None:
 def test_parameters_tell_their_range_and_refuse_what_is_beyond(robot: Robot) -> None:
     """Descriptors carry meaning, unit and range; a value beyond is refused with the reason, one within is taken."""
     names = ["planner.lead_in", "ball.radius"]
-    answer = robot.listener.call(DescribeParameters, "arm_compensation/describe_parameters", DescribeParameters.Request(names=names))
+    answer = robot.listener.call(
+        DescribeParameters, "arm_compensation/describe_parameters", DescribeParameters.Request(names=names)
+    )
     lead_in, radius = answer.descriptors
     assert "[s]" in lead_in.description and lead_in.floating_point_range[0].to_value == 5.0 and not lead_in.read_only
     assert radius.read_only

@@ -68,7 +68,9 @@ def test_wrong_input_starts_nothing(name: str, folder: Path, monkeypatch: pytest
     assert words in str(error.value) and "\n" not in str(error.value)
 
 
-@pytest.mark.parametrize("words", [("--clock", "fast"), ("--namespace", "a-b"), ("--truth", "x=1"), ("--compensation", "no")])
+@pytest.mark.parametrize(
+    "words", [("--clock", "fast"), ("--namespace", "a-b"), ("--truth", "x=1"), ("--compensation", "no")]
+)
 def test_wrong_options_exit_2_with_one_line(words: tuple[str, str], folder: Path, ros_domain_id: int) -> None:
     """An option that can't be is one line on standard error, exit status 2."""
     process = ballbal("headless", str(folder / "nod.yaml"), "--robot", str(folder), *words, domain=ros_domain_id)
