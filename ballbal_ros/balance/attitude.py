@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 import numpy as np
 import pinocchio as pin
@@ -10,6 +11,8 @@ import pinocchio as pin
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.balance_rows import GRAVITY
+
+Triple = tuple[float, float, float]
 
 _SETTLING = 1.0
 _FAR = 0.02
@@ -41,6 +44,10 @@ class _Trust:
         """Know nothing."""
         self._angle, self._cross, self._bias = _FIRST_ANGLE**2, 0.0, _FIRST_BIAS**2
         self.on_angle = self.on_bias = 0.0
+
+    def know_angle(self) -> None:
+        """The angle is known as well as the filter knows it in the end; the bias is not."""
+        self._angle, self._cross, self._bias = self._density**2 * self._period, 0.0, _FIRST_BIAS**2
 
     def know_bias(self, resting_time: float) -> None:
         """The bias has been averaged over ``resting_time`` s of a body at rest."""
@@ -79,7 +86,7 @@ class Attitude:
         time_constant: float,
     ) -> None:
         """``noise``: the gyro's white noise (rad/s/√Hz) and bias walk (rad/s²/√Hz); ``time_constant`` in s."""
-        self._rotation = np.ascontiguousarray(rotation_imu_in_base)
+        self._rotation = tuple(tuple(row) for row in rotation_imu_in_base.tolist())
         self._position = tuple(float(v) for v in imu_position)
         self._period = period
         self._trust = _Trust(period, noise[0], noise[1], time_constant)
@@ -89,6 +96,15 @@ class Attitude:
         self._bias_roll = self._bias_pitch = self._bias_heading = 0.0
         self._age = 0.0
         self._rested = 0
+        self._followed = False
+
+    def in_base(self, vector: Sequence[float]) -> Triple:
+        """A vector (3 numbers) in IMU axes, in those of ``base_link``. (Plain numbers: so few are faster without
+        arrays.)
+        """
+        x, y, z = vector
+        (xx, xy, xz), (yx, yy, yz), (zx, zy, zz) = self._rotation
+        return xx * x + xy * y + xz * z, yx * x + yy * y + yz * z, zx * x + zy * y + zz * z
 
     def reckon_with(self, noise: tuple[float, float], time_constant: float) -> None:
         """Take other noise figures (as in the constructor) while it runs; the estimate stays."""
@@ -106,21 +122,35 @@ class Attitude:
         self._bias_roll = self._bias_pitch = self._bias_heading = 0.0
         self.heading = 0.0
 
-    def from_orientation(self, quat_xyzw: tuple[float, float, float, float], imu_rate: Array) -> None:
-        """Take the IMU's own orientation (unit quaternion of the IMU in ``odom``) and rate [3], rad/s, in IMU axes."""
+    def of_orientation(self, quat_xyzw: tuple[float, float, float, float]) -> Triple:
+        """(roll, pitch, heading) of the body, rad, from the IMU's own orientation, a unit quaternion of the IMU in
+        ``odom``.
+        """
         x, y, z, w = quat_xyzw
         a, b, c, d = self._base_in_imu
-        self.roll, self.pitch, self.heading = lean_and_heading_from_quat_xyzw(
+        return lean_and_heading_from_quat_xyzw(
             w * a + x * d + y * c - z * b,
             w * b - x * c + y * d + z * a,
             w * c + x * b - y * a + z * d,
             w * d - x * a - y * b - z * c,
         )
-        self._set_rates(self._rotation @ imu_rate, 0.0, 0.0, 0.0)
-        self._age = _SETTLING
 
-    def _set_rates(self, body_rate: Array, bias_roll: float, bias_pitch: float, bias_heading: float) -> None:
-        wx, wy, wz = body_rate.tolist()
+    def from_orientation(self, lean_and_heading: Triple, body_rate: Triple) -> None:
+        """Take (roll, pitch, heading), rad, as the IMU has them, and the body's rate (3 numbers), rad/s, in
+        ``base_link``.
+        """
+        self.roll, self.pitch, self.heading = lean_and_heading
+        self._set_rates(body_rate, 0.0, 0.0, 0.0)
+        self._age, self._followed = _SETTLING, True
+
+    def coast(self, lean: tuple[float, float], lean_rate: tuple[float, float], heading: float, turning: float) -> None:
+        """Nothing was measured: take lean, heading (rad) and their rates (rad/s) as they are expected to be."""
+        self.roll, self.pitch = lean
+        self.heading = heading
+        self.rates = (*lean_rate, turning)
+
+    def _set_rates(self, body_rate: Triple, bias_roll: float, bias_pitch: float, bias_heading: float) -> None:
+        wx, wy, wz = body_rate
         sr, cr = math.sin(self.roll), math.cos(self.roll)
         turning = sr * wy + cr * wz
         self.rates = (
@@ -131,34 +161,44 @@ class Attitude:
 
     def from_rates(
         self,
-        imu_rate: Array,
-        imu_acceleration: Array,
+        body_rate: Triple,
+        specific_force: Triple | None,
         known: tuple[float, float, float, float],
         heading_from_drive: float,
         at_rest: bool = False,
     ) -> None:
-        """Our own estimate from rate [3] rad/s and acceleration [3] m/s² in IMU axes.
+        """Our own estimate from rate, rad/s, and the accelerometer's specific force, m/s², None where there is none,
+        both in ``base_link``.
 
         ``at_rest``: a stand holds the body still, so that what the gyro shows is its bias. ``known``: the (roll,
-        pitch) acceleration, rad/s², and the ball's (x, y) acceleration, m/s², in ``base_footprint``, as the
-        loop knows them. ``heading_from_drive``: minus the ball's spin relative to the body, summed up, rad.
+        pitch) acceleration, rad/s², and the ball's (x, y) acceleration, m/s², in ``base_footprint``, as the loop knows
+        them. ``heading_from_drive``: minus the ball's spin relative to the body, summed up, rad.
         """
         old = self.rates
         sr, cr, sp, cp = math.sin(self.roll), math.cos(self.roll), math.sin(self.pitch), math.cos(self.pitch)
-        fx, fy, fz = (self._rotation @ imu_acceleration).tolist()
+        if self._followed:
+            self._trust.know_angle()
+            self._bias_roll = self._bias_pitch = self._bias_heading = 0.0
+            self._followed = False
         if self._age == 0.0:
+            if specific_force is None:
+                return
+            fx, fy, fz = specific_force
             self.roll, self.pitch = math.atan2(fy, fz), math.atan2(-fx, math.hypot(fy, fz))
-            self._set_rates(self._rotation @ imu_rate, self._bias_roll, self._bias_pitch, self._bias_heading)
+            self._set_rates(body_rate, self._bias_roll, self._bias_pitch, self._bias_heading)
             self.heading, self._age = heading_from_drive, self._period
             return
         self._age += self._period
         trust = self._trust
         if at_rest:
-            self._rest(imu_rate)
+            self._rest(body_rate)
         trust.step()
-        ax, ay, az = self._motion(known, old, sr, cr, sp, cp)
-        gx, gy, gz = fx - ax, fy - ay, fz - az
-        self._set_rates(self._rotation @ imu_rate, self._bias_roll, self._bias_pitch, self._bias_heading)
+        gx = gy = gz = 0.0
+        if specific_force is not None:
+            ax, ay, az = self._motion(known, old, sr, cr, sp, cp)
+            fx, fy, fz = specific_force
+            gx, gy, gz = fx - ax, fy - ay, fz - az
+        self._set_rates(body_rate, self._bias_roll, self._bias_pitch, self._bias_heading)
         half = 0.5 * self._period
         self.roll += half * (old[0] + self.rates[0])
         self.pitch += half * (old[1] + self.rates[1])
@@ -175,10 +215,10 @@ class Attitude:
         self.heading += trust.on_angle * off_heading
         self._bias_heading += trust.on_bias * off_heading
 
-    def _rest(self, imu_rate: Array) -> None:
+    def _rest(self, body_rate: Triple) -> None:
         """Average the rates of a body at rest into the biases."""
         self._rested += 1
-        self._set_rates(self._rotation @ imu_rate, self._bias_roll, self._bias_pitch, self._bias_heading)
+        self._set_rates(body_rate, self._bias_roll, self._bias_pitch, self._bias_heading)
         share = 1.0 / self._rested
         self._bias_roll += share * self.rates[0]
         self._bias_pitch += share * self.rates[1]

@@ -63,10 +63,17 @@ class Controller:
     ``base_footprint`` axes. As the reference carries the planned motion, the linear model sees small numbers only.
     """
 
-    def __init__(self, matrices: ControllerMatrices, moment_step: float = np.inf, moment_limit: float = np.inf) -> None:
+    def __init__(
+        self,
+        matrices: ControllerMatrices,
+        moment_step: float = np.inf,
+        moment_limit: float = np.inf,
+        coasting: Array | None = None,
+    ) -> None:
         """``moment_step`` and ``moment_limit``, N m: how much the estimated moment may change in a tick, and be at
-        most.
+        most. ``coasting`` [8, 2]: see :func:`ballbal_ros.balance.coasting.coasting_gain`.
         """
+        self._coasting = np.zeros((8, 2)) if coasting is None else coasting
         self.moment_step, self.moment_limit = moment_step, moment_limit
         known, past = STATES + MOMENTS, INPUTS * matrices.history
         self.prior = np.zeros(known)
@@ -96,12 +103,25 @@ class Controller:
         """Take the outside moment for zero (while a stand holds the robot)."""
         self.prior[STATES:] = 0.0
 
-    def correct(self, measured: Array | None) -> None:
-        """Take the measured deviations [8] in; None where there are none, and the model's prediction stands."""
-        if measured is None:
+    def correct(self, measured: Array | None, imu: bool = True, drive: bool = True) -> None:
+        """Take the measured deviations [8] in; None where there are none, and the model's prediction stands.
+
+        ``imu``, ``drive``: whether these were measured. Without the drive the ball is where the model has it; without
+        the IMU lean and rates are found from the drive, of which ``measured`` must hold x, y and heading as they are
+        with the lean expected.
+        """
+        if measured is None or not (imu or drive):
             self.estimate[:] = self.prior
+        elif not imu:
+            off = measured - self._output @ self.prior
+            self.estimate[:] = self.prior
+            self.estimate[:8] += self._coasting @ off[4:6]
+            self.estimate[8:STATES] += self._correct[8:STATES, 6] * off[6]
         else:
-            np.dot(self._correct, measured - self._output @ self.prior, out=self.estimate)
+            off = measured - self._output @ self.prior
+            if not drive:
+                off[4:6] = 0.0
+            np.dot(self._correct, off, out=self.estimate)
             # A push is no moment that lasts: what the estimate of the lasting moment may follow is bounded.
             moment = self.estimate[STATES:]
             _bound(moment, self.moment_step)

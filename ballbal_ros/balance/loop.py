@@ -8,14 +8,21 @@ from collections.abc import Iterable
 import attrs
 import numpy as np
 
+from ballbal_ros.balance.answers import CLOCK, LEAN, STOP, TRIP
 from ballbal_ros.balance.attitude import Attitude
 from ballbal_ros.balance.changeover import ChangeOver, PreparedChange
+from ballbal_ros.balance.clock import LoopClock
+from ballbal_ros.balance.coasting import coasting_gain
 from ballbal_ros.balance.controller import MEASURED, STATES, Controller
-from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY, STOPPING, Guard
+from ballbal_ros.balance.guard import ENGAGING, STANDBY, STOPPING, Guard
+from ballbal_ros.balance.judge import Judge
 from ballbal_ros.balance.measurement import Measurement
+from ballbal_ros.balance.output import TorqueOutput
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.reference import Reference
 from ballbal_ros.balance.schedule import GainSchedule
+from ballbal_ros.balance.senses import Expected, Senses, gyro_noise
+from ballbal_ros.balance.watch import Watch
 from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
@@ -23,6 +30,7 @@ from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
 _RESCHEDULE = 10
+_REGION = 250
 _TURN = 2.0 * math.pi
 
 
@@ -43,7 +51,8 @@ class BallEstimate:
 class BalanceLoop:
     """Keeps the robot on its ball. Not thread-safe; one :meth:`tick` a period, then read what is wanted.
 
-    ``odom`` begins where it engages, with heading zero.
+    ``odom`` begins where it engages, with heading zero. What is wrong with an input is answered as the table
+    :data:`~ballbal_ros.balance.answers.ANSWERS` says; ``watch`` keeps account of it.
     """
 
     def __init__(
@@ -56,52 +65,43 @@ class BalanceLoop:
         self.description, self.parameters = description, parameters
         self.body = WholeBody(description, loads)
         self.period = parameters.loop.period
-        self.guard = Guard(parameters)
+        self.guard, self.watch, self.clock = Guard(parameters), Watch(), LoopClock(self.period)
         posture = self.body.posture(arm_position)
         schedule = GainSchedule(description, parameters, posture)
         self.controller = Controller(
-            schedule.at(posture), parameters.limits.trim_rate * self.period, parameters.limits.trim_moment
+            schedule.at(posture),
+            parameters.limits.trim_rate * self.period,
+            parameters.limits.trim_moment,
+            coasting_gain(posture, description, parameters),
         )
         self._gains = ChangeOver(schedule, parameters, description.parameters.limits.drive_torque)
         self._change: PreparedChange | None = None
         self._ticks = 0
         ahead = parameters.loop.delay + 0.5 * self.period
         self.reference = Reference(self.body, self.period, ahead, parameters.compensation != "none")
-        self.attitude = Attitude(
-            description.rotation_imu_in_base,
-            np.array(description.parameters.imu.position),
-            self.period,
-            _gyro_noise(parameters),
-            parameters.attitude_time,
-        )
+        self.senses = Senses(description, parameters, self.watch, arm_position)
+        self.output = TorqueOutput(description, parameters, self.body.mass)
+        self.judge = Judge(description, parameters, self.watch, self.output, posture)
         self.supported = False
-        self._own = parameters.attitude == "own"
         self._load_changes: list[tuple[float, Load]] = []
-        drive = description.drive
-        self._radius = description.parameters.ball.radius
-        self._spin_map = np.ascontiguousarray(drive.spin_map)
-        self._effort_map = np.ascontiguousarray(drive.effort_map)
-        self._effort_limits = tuple(drive.effort_limit.tolist())
-        self._zero = np.zeros(len(drive.names))
         self._deviation = np.zeros(MEASURED)
-        self._in_base = np.zeros(3)
-        self._last_angle: Array | None = None
-        self._arm = np.array(arm_position, float)
-        self._last_lean = (0.0, 0.0)
-        self._ball = [0.0, 0.0]
-        self._heading_zero = 0.0
-        self._drive_heading = 0.0
+        self._expected = Expected()
         self.torque = np.zeros(3)
+
+    @property
+    def attitude(self) -> Attitude:
+        """Lean, heading and rates as measured."""
+        return self.senses.attitude
 
     @property
     def lean(self) -> tuple[float, float]:
         """Measured (roll, pitch), rad."""
-        return self.attitude.roll, self.attitude.pitch
+        return self.senses.lean
 
     @property
     def heading(self) -> float:
         """Measured heading in ``odom``, rad."""
-        return self.attitude.heading - self._heading_zero
+        return self.senses.heading
 
     @property
     def outside_moment(self) -> tuple[float, float, float]:
@@ -114,13 +114,18 @@ class BalanceLoop:
         """Estimate of ball and heading in ``odom``."""
         deviation, row = self.controller.estimate, self.reference.row
         return BallEstimate(
-            self._ball[0],
-            self._ball[1],
+            self.senses.ball[0],
+            self.senses.ball[1],
             self.heading,
             float(deviation[6] + row[6]),
             float(deviation[7] + row[7]),
             float(deviation[9] + row[9]),
         )
+
+    @property
+    def schedule(self) -> GainSchedule:
+        """The gains in force: what a change is prepared with, see :func:`ballbal_ros.balance.changeover.prepare`."""
+        return self._gains.schedule
 
     def add_plan(self, stamp: float, plan: LeanPlan) -> None:
         """Follow a lean plan from its stamp, s, on."""
@@ -131,14 +136,29 @@ class BalanceLoop:
         self._load_changes = sorted([*self._load_changes, (stamp, load)], key=lambda change: change[0])
 
     def stop(self, reason: str) -> None:
-        """Controlled stop: no new motion, ball to rest, and torque off once a stand holds the robot."""
+        """Controlled stop: no new motion, ball to rest, and torque off once a stand holds the robot. A plan in force
+        is followed to its end, or until a planned stop takes its place, as the arms go on with it.
+        """
         self.guard.stop(reason)
         self.reference.set_velocity(0.0, 0.0, 0.0)
 
-    @property
-    def schedule(self) -> GainSchedule:
-        """The gains in force: what a change is prepared with, see :func:`ballbal_ros.balance.changeover.prepare`."""
-        return self._gains.schedule
+    def reset(self) -> bool:
+        """A person has seen to it: from where the guard was latched back to standby, or on from a controlled stop.
+        False where there was nothing to reset.
+        """
+        if not self.guard.reset():
+            return False
+        self.watch.restart()
+        self.senses.trust_all()
+        if self.guard.state == STANDBY:
+            self.output.find()
+            self.senses.spin_held = True
+        return True
+
+    def set_drive_scale(self, scale: float) -> None:
+        """What share of its torque the drive can still give, as a battery tells; the capturable region follows."""
+        self.output.scale = min(1.0, max(scale, 0.05))
+        self.judge.use()
 
     def change_parameters(self, change: PreparedChange) -> None:
         """Go over to a prepared change, from the next tick on and without a step in torque. Any thread may call it."""
@@ -149,157 +169,163 @@ class BalanceLoop:
         if change is not None:
             self.parameters = change.parameters
             self._gains.begin(change)
-            self.attitude.reckon_with(_gyro_noise(change.parameters), change.parameters.attitude_time)
-            self.reference.follow(change.parameters.compensation != "none", self._arm)
+            self.attitude.reckon_with(gyro_noise(change.parameters), change.parameters.attitude_time)
+            self.reference.follow(change.parameters.compensation != "none", self.senses.arm_position)
 
     def tick(self, measured: Measurement) -> Array:
         """Actuator efforts [n], N m, that answer this measurement; zeros unless the guard lets torque out. Never
         NaN.
         """
-        while self._load_changes and self._load_changes[0][0] <= measured.stamp + 1e-9:
+        clock, watch = self.clock, self.watch
+        watch.begin()
+        periods = clock.advance(measured.stamp)
+        if clock.wrong:
+            self._time_is_wrong(clock.wrong)
+        if periods == 0:
+            return self.output.effort.copy()
+        for missed in range(periods - 1, 0, -1):
+            self._pass_over(clock.now - missed * self.period)
+        return self._answer(measured, clock.now)
+
+    def _time_is_wrong(self, wrong: str) -> None:
+        now = self.clock.now
+        self.watch.see(now, CLOCK, wrong)
+        if wrong == "jump":
+            self.watch.restart()
+            self.senses.restart()
+            self.reference.cancel_plans(self.senses.arm_position)
+            if self.guard.sends:
+                self.stop(f"{CLOCK}: {wrong}")
+
+    def _pass_over(self, stamp: float) -> None:
+        """A tick that nobody asked for: the drive went on with what it had."""
+        row = self.reference.update(stamp, self.senses.arm_position)
+        if self.guard.sends:
+            self.controller.correct(None)
+            self.controller.predict(self.torque - row[10:13])
+
+    def _answer(self, measured: Measurement, now: float) -> Array:
+        while self._load_changes and self._load_changes[0][0] <= now + 1e-9:
             self.body.set_load(self._load_changes.pop(0)[1])
-        fit = measured.finite
-        if fit:
-            self._sense(measured)
+        senses = self.senses
+        senses.look_at_arms(measured, now)
         if self._change is not None:
             self._take_over()
         self._ticks += 1
-        posture = self.body.posture(self._arm) if self._ticks % _RESCHEDULE == 0 else None
+        posture = self.body.posture(senses.arm_position) if self._ticks % _RESCHEDULE == 0 else None
         if posture is not None or self._gains.under_way:
             self._gains.tick(self.controller, posture)
-        row = self.reference.update(measured.stamp, measured.arm_position if fit else self._arm)
-        if fit:
-            self._arm = measured.arm_position
-        return self._act(measured.stamp, row, fit)
+        if posture is not None and self._ticks % _REGION == 0:
+            self.judge.use(posture, self._gains.torque_limit)
+        row = self.reference.update(now, senses.arm_position)
+        reference: list[float] = row.tolist()
+        at_rest = self.supported and self.guard.state == STANDBY
+        expected = None
+        if self.guard.sends:
+            expected = self._expected
+            still = self.guard.state == ENGAGING
+            before, prior = self.controller.estimate.tolist(), self.controller.prior.tolist()
+            expected.fill(reference, before, prior, self.period, still, self.output.calm)
+        senses.look(measured, now, expected, at_rest)
+        return self._act(now, reference)
 
-    def _sense(self, measured: Measurement) -> None:
-        """Attitude, and the ball's way since the last tick."""
-        attitude, angle = self.attitude, measured.drive_angle
-        last, self._last_angle = self._last_angle, angle.copy()
-        x, y, z = (0.0, 0.0, 0.0) if last is None else (self._spin_map @ (angle - last)).tolist()
-        roll, pitch = self._last_lean
-        sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
-        turn_x, turn_y, turn_z = (
-            cp * x + sp * sr * y + sp * cr * z,
-            cr * y - sr * z,
-            -sp * x + cp * sr * y + cp * cr * z,
-        )
-        self._drive_heading -= turn_z
-        if self._own and measured.imu_acceleration is not None:
-            at_rest = self.supported and self.guard.state == STANDBY
-            attitude.from_rates(
-                measured.imu_rate, measured.imu_acceleration, self._known_acceleration(), self._drive_heading, at_rest
-            )
-        elif measured.imu_quat_xyzw is not None:
-            attitude.from_orientation(measured.imu_quat_xyzw, measured.imu_rate)
-        self._last_lean = attitude.roll, attitude.pitch
-        if last is None:
-            return
-        ahead = self._radius * (turn_y + attitude.pitch - pitch)
-        aside = -self._radius * (turn_x + (attitude.roll - roll) * cp)
-        heading = self.heading
-        sin, cos = math.sin(heading), math.cos(heading)
-        self._ball[0] += cos * ahead - sin * aside
-        self._ball[1] += sin * ahead + cos * aside
-
-    def _known_acceleration(self) -> tuple[float, float, float, float]:
-        """(roll, pitch, ball x, ball y) acceleration at this tick, as reference and model have it; none while a stand
-        may hold it.
-        """
-        if self.guard.state not in (BALANCING, STOPPING):
-            return 0.0, 0.0, 0.0, 0.0
-        controller, row = self.controller, self.reference.row
-        change = ((controller.prior[2:8] - controller.estimate[2:8]) / self.period).tolist()
-        roll, pitch, x, y = row[13:17].tolist()
-        return roll + change[0], pitch + change[1], x + change[4], y + change[5]
-
-    def _act(self, stamp: float, row: Array, fit: bool) -> Array:
-        controller, guard, attitude = self.controller, self.guard, self.attitude
-        reference = row.tolist()
+    def _act(self, now: float, reference: list[float]) -> Array:
+        controller, guard, senses, attitude = self.controller, self.guard, self.senses, self.attitude
         rates = attitude.rates
-        off_roll, off_pitch = attitude.roll - reference[0], attitude.pitch - reference[1]
+        off = attitude.roll - reference[0], attitude.pitch - reference[1]
         off_rates = rates[0] - reference[2], rates[1] - reference[3]
+        if guard.sends:
+            self._judge(now, reference, off, off_rates)
+        elif guard.state == STANDBY:
+            senses.trust_arms()
         before = guard.state
-        share = guard.update(
-            stamp, math.hypot(off_roll, off_pitch), math.hypot(*off_rates), fit and attitude.settled, self.supported
-        )
-        if guard.state == ENGAGING and before == STANDBY:
-            self._engage()
-            off_roll, off_pitch = attitude.roll - self.reference.row[0], attitude.pitch - self.reference.row[1]
-        if guard.state not in (ENGAGING, BALANCING, STOPPING):
+        share = guard.update(now, self._missing(off, off_rates) if before == STANDBY else "", self.supported)
+        if before == STANDBY and guard.state == ENGAGING:
+            self._engage(now)
+            reference = self.reference.row.tolist()
+            off = attitude.roll - reference[0], attitude.pitch - reference[1]
+        if not guard.sends:
             self.torque[:] = 0.0
             controller.reset()
-            return self._zero.copy()
-        if fit:
+            self.judge.begin()
+            return self.output.none()
+        if senses.imu or senses.drive:
             away_x, away_y = self._off_station(reference)
-            off_heading = (self.heading - reference[8] + math.pi) % _TURN - math.pi
-            self._deviation[:] = (
-                off_roll,
-                off_pitch,
-                off_rates[0],
-                off_rates[1],
-                away_x,
-                away_y,
-                off_heading,
-                rates[2] - reference[9],
-            )
-        if guard.state == ENGAGING:
+            off_heading = (senses.heading - reference[8] + math.pi) % _TURN - math.pi
+            if not self.output.gives_heading:
+                # It goes where it will: nothing is asked for, so that nothing is taken from roll and pitch.
+                off_heading = float(controller.prior[8])
+            self._deviation[:] = *off, *off_rates, away_x, away_y, off_heading, rates[2] - reference[9]
+        if guard.state != ENGAGING:
+            self.judge.look_at_actuators(senses, reference, off, off_rates)
+        if share < 1.0:
             controller.forget_moment()
-        controller.correct(self._deviation if fit else None)
+        controller.correct(self._deviation, senses.imu, senses.drive)
         return self._efforts(controller.torque(), share, reference)
+
+    def _missing(self, off: tuple[float, float], off_rates: tuple[float, float]) -> str:
+        """What is missing to engage, in words; "" for nothing."""
+        limits, lean, rate = self.parameters.limits, math.hypot(*off), math.hypot(*off_rates)
+        for there, sense in ((self.senses.imu, "IMU"), (self.senses.drive, "drive"), (self.senses.arms, "arm")):
+            if not there:
+                return f"no {sense} data that can be used"
+        if not self.watch.quiet:
+            return "senses have only just come back"
+        if not self.attitude.settled:
+            return "the attitude estimate settles"
+        if not lean < limits.engage_lean:
+            return f"{lean:.3f} rad off balance, limits.engage_lean is {limits.engage_lean:g}"
+        if not rate < limits.engage_rate:
+            return f"leans with {rate:.2f} rad/s, limits.engage_rate is {limits.engage_rate:g}"
+        return ""
+
+    def _judge(
+        self, now: float, reference: list[float], off: tuple[float, float], off_rates: tuple[float, float]
+    ) -> None:
+        """Stop or trip where the table says so: for what is wrong with an input, for a lean that can't be brought
+        back.
+        """
+        watch, guard = self.watch, self.guard
+        self.judge.look(now, reference, off, off_rates, self.controller.estimate.tolist())
+        if watch.deed == TRIP:
+            guard.trip(watch.reason)
+        elif watch.deed == STOP and guard.state != STOPPING:
+            self.stop(watch.reason)
 
     def _off_station(self, reference: list[float]) -> tuple[float, float]:
         """Distance of the ball from where it is meant to be, in heading axes, m."""
-        frame, station = self.reference.frame_heading, self.reference.station
+        frame, station, ball = self.reference.frame_heading, self.reference.station, self.senses.ball
         sin, cos = math.sin(frame), math.cos(frame)
-        x = self._ball[0] - station[0] - cos * reference[4] + sin * reference[5]
-        y = self._ball[1] - station[1] - sin * reference[4] - cos * reference[5]
+        x = ball[0] - station[0] - cos * reference[4] + sin * reference[5]
+        y = ball[1] - station[1] - sin * reference[4] - cos * reference[5]
         sin, cos = math.sin(reference[8]), math.cos(reference[8])
         return cos * x + sin * y, cos * y - sin * x
 
-    def _engage(self) -> None:
+    def _engage(self, now: float) -> None:
         """``odom`` begins here: ball at its origin, heading zero, nothing estimated yet."""
-        self._ball[0] = self._ball[1] = 0.0
-        self._heading_zero = self.attitude.heading
+        self.senses.engage()
         self.controller.reset()
-        self.reference.engage(self._arm)
-        self.reference.update(-math.inf, self._arm)
+        self.judge.use(self.body.posture(self.senses.arm_position))
+        self.reference.engage(self.senses.arm_position)
+        self.reference.update(-math.inf, self.senses.arm_position)
 
     def _efforts(self, wanted: Array, share: float, reference: list[float]) -> Array:
         """Limit the torque, turn it into efforts, and let the model go on with what was really sent."""
-        limit = self._gains.torque_limit
-        ahead = reference[10:13]
-        tx, ty, tz = (share * (a + b) for a, b in zip(ahead, wanted.tolist()))
-        if not math.isfinite(tx + ty + tz):
-            self.guard.trip("the torque it worked out is not a number")
+        output, (x, y, z) = self.output, reference[10:13]
+        self.judge.sent(output.sent, reference)
+        wx, wy, wz = wanted.tolist()
+        effort = output.send(
+            share * (x + wx),
+            share * (y + wy),
+            share * (z + wz),
+            self._gains.torque_limit,
+            self.lean,
+            self.senses.encoders.rate,
+        )
+        if effort is None:
+            self.guard.trip(f"{LEAN}: torque not a number")
             self.torque[:] = 0.0
-            return self._zero.copy()
-        size = math.hypot(tx, ty)
-        if size > limit:
-            tx, ty = tx * limit / size, ty * limit / size
-        tz = max(-limit, min(limit, tz))
-        effort, sent = self._shared_out(tx, ty, tz)
-        self.torque[:] = sent
-        self.controller.predict(np.array((sent[0] - ahead[0], sent[1] - ahead[1], sent[2] - ahead[2])))
-        return effort
-
-    def _shared_out(self, tx: float, ty: float, tz: float) -> tuple[Array, tuple[float, float, float]]:
-        """Efforts for a torque in ``base_footprint`` axes, within every actuator's limit (the heading gives way
-        first), and what they give.
-        """
-        roll, pitch = self._last_lean
-        sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
-        base = self._in_base
-        base[:] = cp * tx - sp * tz, sp * sr * tx + cr * ty + cp * sr * tz, sp * cr * tx - sr * ty + cp * cr * tz
-        effort = self._effort_map @ base
-        over = max(abs(e) / limit for e, limit in zip(effort.tolist(), self._effort_limits))
-        if over <= 1.0:
-            return effort, (tx, ty, tz)
-        if tz != 0.0:
-            return self._shared_out(tx, ty, 0.0)
-        return effort / over, (tx / over, ty / over, 0.0)
-
-
-def _gyro_noise(parameters: BalanceParameters) -> tuple[float, float]:
-    """The gyro's white noise, rad/s/√Hz, and bias walk."""
-    return parameters.estimator.rate_noise * math.sqrt(parameters.loop.period), parameters.estimator.rate_walk
+            return output.none()
+        self.torque[:] = tx, ty, tz = output.sent
+        self.controller.predict(np.array((tx - x, ty - y, tz - z)))
+        return effort.copy()

@@ -85,6 +85,12 @@ class ImuParameters:
         length=3,
         meaning="its rotation in base_link, fixed-axis roll, pitch, yaw",
     )
+    rate_range: float = parameter(
+        "double", 35.0, unit="rad/s", low=0.1, high=1e3, meaning="end of its rate gyros' range"
+    )
+    acceleration_range: float = parameter(
+        "double", 150.0, unit="m/s²", low=10.0, high=1e4, meaning="end of its accelerometers' range"
+    )
 
 
 @attrs.frozen(kw_only=True)

@@ -1,0 +1,277 @@
+"""What the loop senses each tick: checks first, then lean, heading, ball and arms from what is left."""
+
+from __future__ import annotations
+
+import math
+
+import attrs
+import numpy as np
+
+from ballbal_ros.balance.answers import ARMS, DRIVE, ENCODER, HEADING, IMU, ORIENTATION, SENSES
+from ballbal_ros.balance.attitude import Attitude, Triple
+from ballbal_ros.balance.checks import ArmCheck, ImuCheck, unit_quaternion
+from ballbal_ros.balance.encoders import Encoders
+from ballbal_ros.balance.measurement import Measurement
+from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.balance.tilt import TiltWitness
+from ballbal_ros.balance.watch import Watch
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.description import RobotDescription
+
+_TURNED = 0.02
+_SPIN_SHARE = 0.02
+
+
+@attrs.define
+class Expected:
+    """What reference and model expect at a tick: lean and rates (roll, pitch; rad, rad/s), velocity (m/s) and
+    acceleration (m/s²) of the ball and lean acceleration in ``base_footprint``, turning (rad/s). ``calm``: the torque
+    is so small that the floor holds the ball's spin whatever comes of it. Filled anew each tick.
+    """
+
+    lean: tuple[float, float] = (0.0, 0.0)
+    lean_rate: tuple[float, float] = (0.0, 0.0)
+    velocity: tuple[float, float] = (0.0, 0.0)
+    turning: float = 0.0
+    calm: bool = True
+    acceleration: tuple[float, float, float, float] = (0.0, 0.0, 0.0, 0.0)
+
+    def fill(
+        self, reference: list[float], before: list[float], prior: list[float], period: float, held: bool, calm: bool
+    ) -> None:
+        """From the reference row of this tick, and the deviations estimated the tick before and expected now;
+        ``held``: a stand may still hold it, and nothing is known of accelerations.
+        """
+        self.lean = reference[0] + prior[0], reference[1] + prior[1]
+        self.lean_rate = reference[2] + prior[2], reference[3] + prior[3]
+        self.velocity = reference[6] + prior[6], reference[7] + prior[7]
+        self.turning = reference[9] + prior[9]
+        self.calm = calm
+        if held:
+            self.acceleration = 0.0, 0.0, 0.0, 0.0
+            return
+        rate = 1.0 / period
+        self.acceleration = (
+            reference[13] + rate * (prior[2] - before[2]),
+            reference[14] + rate * (prior[3] - before[3]),
+            reference[15] + rate * (prior[6] - before[6]),
+            reference[16] + rate * (prior[7] - before[7]),
+        )
+
+
+class Senses:
+    """Attitude, ball and arms, tick by tick. ``imu``, ``drive`` and ``arms`` say whether this tick's could be used.
+
+    ``spin_held``: the floor holds the ball's spin, so that the drive shows the heading. ``ball`` is [x, y] in
+    ``odom``, m; ``moved`` and ``moved_before`` how far it came in the last two ticks, in heading axes. Without the
+    IMU, lean and rates are those expected; without the drive, the ball stays where it was last seen until the
+    encoders, which count on, are heard again.
+    """
+
+    def __init__(
+        self, description: RobotDescription, parameters: BalanceParameters, watch: Watch, arm_position: Array
+    ) -> None:
+        self.period = parameters.loop.period
+        self.attitude = Attitude(
+            description.rotation_imu_in_base,
+            np.array(description.parameters.imu.position),
+            self.period,
+            gyro_noise(parameters),
+            parameters.attitude_time,
+        )
+        self._watch = watch
+        self._own = parameters.attitude == "own"
+        self._rate_jump = parameters.limits.rate_jump
+        self._imu = ImuCheck(description, parameters)
+        self._arms = ArmCheck(description, parameters, arm_position)
+        self.encoders = Encoders(description, parameters)
+        self.tilt = TiltWitness(description, parameters)
+        self._radius = description.parameters.ball.radius
+        self.imu = self.drive = self.arms = False
+        self.ball = [0.0, 0.0]
+        self.moved = self.moved_before = (0.0, 0.0)
+        self._heading_zero = 0.0
+        self._drive_heading = 0.0
+        self._last_lean = (0.0, 0.0)
+        self._seen_lean = (0.0, 0.0)
+        self.spin_held = True
+        self._spun, self._most_spun = 0.0, parameters.limits.turning * self.period
+
+    @property
+    def arm_position(self) -> Array:
+        """Arm positions [n] that can be believed."""
+        return self._arms.position
+
+    def arms_age(self, now: float) -> float:
+        """Age of the newest arm data that were taken in, s."""
+        return now - self._arms.believed
+
+    @property
+    def heading(self) -> float:
+        """Measured heading in ``odom``, rad."""
+        return self.attitude.heading - self._heading_zero
+
+    @property
+    def lean(self) -> tuple[float, float]:
+        """(roll, pitch), rad."""
+        return self.attitude.roll, self.attitude.pitch
+
+    def engage(self) -> None:
+        """``odom`` begins here: ball at its origin, heading zero."""
+        self.ball[0] = self.ball[1] = 0.0
+        self._heading_zero = self.attitude.heading
+
+    def restart(self) -> None:
+        """The clock jumped: stamps count anew."""
+        self._imu.restart()
+        self._arms.restart()
+        self.encoders.restart()
+        self.tilt.restart()
+
+    def trust_all(self) -> None:
+        """A person has seen to it: what was distrusted is believed again."""
+        self._arms.restart()
+        self.tilt.trust()
+
+    def trust_arms(self) -> None:
+        """Nothing hangs on the arms' positions now: believe what comes next, even after a jump."""
+        self._arms.restart()
+
+    def look_at_arms(self, measured: Measurement, now: float) -> None:
+        """Take in arm data; ``now`` in s."""
+        wrong = self._arms.look(measured, now)
+        self.arms = not wrong
+        if wrong or not self._watch.quiet:
+            self._watch.see(now, ARMS, wrong)
+
+    def look(self, measured: Measurement, now: float, expected: Expected | None, at_rest: bool) -> None:
+        """Take in IMU and drive data. ``expected``: None while the loop does not run; ``at_rest``: a stand holds the
+        body still.
+        """
+        attitude, watch = self.attitude, self._watch
+        wrong = self._imu.look(measured, now)
+        body_rate: Triple = (0.0, 0.0, 0.0)
+        if not wrong:
+            body_rate = attitude.in_base(self._imu.rate)
+            if not self.tilt.agrees:
+                wrong = "tilt"
+            elif expected is not None and self._jumps(body_rate, expected):
+                wrong = "jump"
+        self.imu = not wrong
+        turning = body_rate[2] if self.imu or expected is None else expected.turning
+        missing = self.encoders.look(measured, now, self._relative(expected, turning), self.period)
+        self.drive = not missing
+        turned = self._level(*self.encoders.turn) if self.drive else (0.0, 0.0, 0.0)
+        self._drive_heading -= turned[2]
+        before = self._last_lean
+        if self.imu and self.drive and expected is not None and self.spin_held:
+            body_rate = self._checked_turning(body_rate, turned[2], now, expected.calm)
+        if self.imu:
+            self._attitude(measured, now, body_rate, expected, at_rest)
+        elif expected is not None:
+            heading = attitude.heading - turned[2] if self.drive else attitude.heading + self.period * expected.turning
+            attitude.coast(expected.lean, expected.lean_rate, heading, expected.turning)
+        self._last_lean = attitude.roll, attitude.pitch
+        self.moved_before, self.moved = self.moved, self._roll(turned, before) if self.drive else (0.0, 0.0)
+        if self.imu and self.drive and expected is not None and self._imu.acceleration is not None:
+            rates = attitude.rates
+            self.tilt.see(attitude.in_base(self._imu.acceleration), self._last_lean, (rates[0], rates[1]), self.moved)
+        if wrong or missing or self.encoders.one_bad or not watch.quiet:
+            self.tilt.restart()
+            watch.see(now, IMU, wrong)
+            watch.see(now, DRIVE, missing)
+            watch.see(now, SENSES, "blind" if wrong and missing else "")
+            watch.see(now, ENCODER, self.encoders.one_bad)
+
+    def _checked_turning(self, body_rate: Triple, turned: float, now: float, calm: bool) -> Triple:
+        """The body's rate, with that about z from the drive where the gyro's differs from it: the floor holds the
+        ball's spin.
+
+        Not ``calm``: an actuator that gives nothing might make the others spin the ball, so that nothing new is
+        learnt.
+        """
+        if calm:
+            self._spun += _SPIN_SHARE * (self.period * body_rate[2] + turned - self._spun)
+        wrong = "" if abs(self._spun) < self._most_spun else "turning"
+        if wrong or not self._watch.quiet:
+            self._watch.see(now, HEADING, wrong)
+        return (body_rate[0], body_rate[1], -turned / self.period) if wrong else body_rate
+
+    def _jumps(self, body_rate: Triple, expected: Expected) -> bool:
+        """Whether the gyro is further from what is expected than anything but a fault takes it."""
+        wx, wy, wz = body_rate
+        sr, cr = _sin_cos(self.attitude.roll)
+        roll = wx + self.attitude.pitch * wz - expected.lean_rate[0]
+        pitch = cr * wy - sr * wz - expected.lean_rate[1]
+        most = self._rate_jump
+        return not (-most < roll < most and -most < pitch < most)
+
+    def _relative(self, expected: Expected | None, turning: float) -> Triple | None:
+        """Rate of the ball relative to the body that is expected, rad/s, ``base_link``."""
+        if expected is None:
+            return None
+        (roll_rate, pitch_rate), (vx, vy) = expected.lean_rate, expected.velocity
+        x, y, z = -vy / self._radius - roll_rate, vx / self._radius - pitch_rate, -turning
+        (sr, cr), (sp, cp) = _sin_cos(self.attitude.roll), _sin_cos(self.attitude.pitch)
+        return cp * x - sp * z, sp * sr * x + cr * y + cp * sr * z, sp * cr * x - sr * y + cp * cr * z
+
+    def _level(self, x: float, y: float, z: float) -> Triple:
+        """A turn in ``base_link`` in the axes of ``base_footprint``."""
+        roll, pitch = self._last_lean
+        (sr, cr), (sp, cp) = _sin_cos(roll), _sin_cos(pitch)
+        return cp * x + sp * sr * y + sp * cr * z, cr * y - sr * z, -sp * x + cp * sr * y + cp * cr * z
+
+    def _attitude(
+        self, measured: Measurement, now: float, body_rate: Triple, expected: Expected | None, at_rest: bool
+    ) -> None:
+        attitude, quat = self.attitude, measured.imu_quat_xyzw
+        if not self._own:
+            wrong = "missing" if quat is None else "" if unit_quaternion(quat) else "not a unit quaternion"
+            if quat is not None and not wrong:
+                lean = attitude.of_orientation(quat)
+                if expected is not None and self._turned(lean):
+                    wrong = "jump"
+                else:
+                    attitude.from_orientation(lean, body_rate)
+                    self._drive_heading = attitude.heading
+            if wrong or not self._watch.quiet:
+                self._watch.see(now, ORIENTATION, wrong)
+            if not wrong:
+                return
+        acceleration = self._imu.acceleration
+        force = None if acceleration is None else attitude.in_base(acceleration)
+        known = (0.0, 0.0, 0.0, 0.0) if expected is None else expected.acceleration
+        if not (self.drive and self.spin_held):
+            self._drive_heading = attitude.heading
+        heading = self._drive_heading
+        attitude.from_rates(body_rate, force, known, heading, at_rest)
+
+    def _turned(self, lean: Triple) -> bool:
+        """Whether the IMU's orientation turned further within a tick than the rates say."""
+        attitude, period = self.attitude, self.period
+        roll_rate, pitch_rate, _ = attitude.rates
+        off = math.hypot(lean[0] - attitude.roll - period * roll_rate, lean[1] - attitude.pitch - period * pitch_rate)
+        return not off < _TURNED
+
+    def _roll(self, turned: Triple, before: tuple[float, float]) -> tuple[float, float]:
+        """Move the ball by what the encoders saw, and by how the body has leaned meanwhile; how far, in heading axes,
+        m.
+        """
+        attitude = self.attitude
+        seen, self._seen_lean = self._seen_lean, (attitude.roll, attitude.pitch)
+        ahead = self._radius * (turned[1] + attitude.pitch - seen[1])
+        aside = -self._radius * (turned[0] + (attitude.roll - seen[0]) * math.cos(before[1]))
+        heading = self.heading
+        sin, cos = math.sin(heading), math.cos(heading)
+        self.ball[0] += cos * ahead - sin * aside
+        self.ball[1] += sin * ahead + cos * aside
+        return ahead, aside
+
+
+def _sin_cos(angle: float) -> tuple[float, float]:
+    return math.sin(angle), math.cos(angle)
+
+
+def gyro_noise(parameters: BalanceParameters) -> tuple[float, float]:
+    """The gyro's white noise, rad/s/√Hz, and bias walk, as the attitude reckons with them."""
+    return parameters.estimator.rate_noise * math.sqrt(parameters.loop.period), parameters.estimator.rate_walk
