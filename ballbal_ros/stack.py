@@ -1,4 +1,6 @@
-"""Which nodes make the stack, with which parameter files and parameters: read by ``launch/`` and by the headless runner."""
+"""Which nodes make the stack, with which parameter files and parameters: read by ``launch/`` and by the headless
+runner.
+"""
 
 from __future__ import annotations
 
@@ -89,28 +91,41 @@ def checked_namespace(namespace: str) -> str:
     return f"/{name}" if name else ""
 
 
-def robot_stack(folder: RobotFolder, namespace: str = "", sim_time: bool = False) -> list[NodeStart]:
-    """The nodes that run on a robot: balance (lifecycle), arm compensation, whole-body kinematics."""
+def robot_stack(
+    folder: RobotFolder, namespace: str = "", sim_time: bool = False, watch: bool = False
+) -> list[NodeStart]:
+    """The nodes that run on a robot: balance (lifecycle), arm compensation, whole-body kinematics; with ``watch`` also
+    config_watch, which brings edited parameter files into them.
+    """
     common = {"urdf": str(folder.urdf), "use_sim_time": sim_time}
     # Two robots of one domain have a clock each.
     remap = (("/clock", f"{namespace}/clock"),) if namespace and sim_time else ()
     robot = folder.file("robot.yaml")
+    watcher = NodeStart("config_watch", (), {"folder": str(folder.path)})
     return [
         NodeStart("whole_body_kinematics", (robot,), common, remap),
         NodeStart("arm_compensation", (robot, folder.file("compensation.yaml")), common, remap),
         NodeStart("balance", (robot, folder.file("balance.yaml")), common, remap, lifecycle=True),
+        *([watcher] if watch else []),
     ]
 
 
 def headless_stack(
-    folder: RobotFolder, clock: str = "lock_step", namespace: str = "", simulated: Mapping[str, Any] | None = None
+    folder: RobotFolder,
+    clock: str = "lock_step",
+    namespace: str = "",
+    simulated: Mapping[str, Any] | None = None,
+    watch: bool = False,
 ) -> list[NodeStart]:
-    """The robot's nodes and the simulated robot, which gets the parameters ``simulated`` besides."""
+    """The robot's nodes and the simulated robot, which gets the parameters ``simulated`` besides; see
+    :func:`robot_stack`.
+    """
     if clock not in CLOCKS:
         raise BallbalError("--clock", f"is {clock!r}", f"it takes one of {', '.join(CLOCKS)}")
     nodes = []
-    for node in robot_stack(folder, namespace, sim_time=True):
-        node = node.with_parameters(robot_description_wait=0.0)
+    for node in robot_stack(folder, namespace, sim_time=True, watch=watch):
+        if node.executable != "config_watch":
+            node = node.with_parameters(robot_description_wait=0.0)
         if node.executable == "balance":
             node = node.with_parameters(lock_step=clock == "lock_step")
         nodes.append(node)

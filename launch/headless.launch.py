@@ -1,18 +1,18 @@
 """The stack with the simulated robot: ``ros2 launch ballbal_ros headless.launch.py clock:=real_time``.
 
-The simulated robot stands on its stand until balance is configured and activated (``ros2 lifecycle set /balance configure``,
-then ``activate``); when it ends, all ends.
+The simulated robot stands on its stand until balance is configured and activated (``ros2 lifecycle set /balance
+configure``, then ``activate``); when it ends, all ends.
 """
 
 from pathlib import Path
 
 from ament_index_python.packages import get_package_share_directory
-from launch import LaunchDescription
 from launch.actions import DeclareLaunchArgument, OpaqueFunction, Shutdown
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 
 from ballbal_ros.stack import PACKAGE, RobotFolder, checked_namespace, headless_stack
+from launch import LaunchDescription
 
 
 def _nodes(context):
@@ -24,8 +24,9 @@ def _nodes(context):
     simulated = {"seed": int(given("seed")), "duration": float(given("duration"))}
     # A person may take a while to activate the balance.
     simulated["answer_timeout"] = 3600.0
+    watch = given("watch").lower() == "true"
     actions = []
-    for node in headless_stack(folder, given("clock"), namespace, simulated):
+    for node in headless_stack(folder, given("clock"), namespace, simulated, watch=watch):
         leaving = {"on_exit": Shutdown()} if node.executable == "simulated_robot" else {}
         actions.append(
             (LifecycleNode if node.lifecycle else Node)(
@@ -48,6 +49,7 @@ def generate_launch_description():
         [
             DeclareLaunchArgument("robot", default_value=robot, description="folder of the robot's parameter files"),
             DeclareLaunchArgument("namespace", default_value="", description="namespace of all nodes"),
+            DeclareLaunchArgument("watch", default_value="true", description="take edits of the parameter files in"),
             DeclareLaunchArgument("clock", default_value="lock_step", description="lock_step or real_time"),
             DeclareLaunchArgument("seed", default_value="0", description="seed of the simulated noise"),
             DeclareLaunchArgument("duration", default_value="0.0", description="simulated time, s; 0: no end"),

@@ -1,22 +1,24 @@
 """The robot's nodes: ``ros2 launch ballbal_ros robot.launch.py robot:=/path/to/config/shelver``.
 
-Balance is a lifecycle node and stays unconfigured: a person configures and activates it with the robot upright on its stand.
+Balance is a lifecycle node and stays unconfigured: a person configures and activates it with the robot upright on its
+stand.
 """
 
 from pathlib import Path
 
 from ament_index_python.packages import get_package_share_directory
-from launch import LaunchDescription
 from launch.actions import DeclareLaunchArgument, OpaqueFunction
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 
 from ballbal_ros.stack import PACKAGE, RobotFolder, checked_namespace, robot_stack
+from launch import LaunchDescription
 
 
 def _nodes(context):
     namespace = checked_namespace(LaunchConfiguration("namespace").perform(context))
     folder = RobotFolder.checked(Path(LaunchConfiguration("robot").perform(context)), simulated=False)
+    watch = LaunchConfiguration("watch").perform(context).lower() == "true"
     return [
         (LifecycleNode if node.lifecycle else Node)(
             package=PACKAGE,
@@ -27,7 +29,7 @@ def _nodes(context):
             remappings=list(node.remappings),
             output="screen",
         )
-        for node in robot_stack(folder, namespace)
+        for node in robot_stack(folder, namespace, watch=watch)
     ]
 
 
@@ -37,6 +39,7 @@ def generate_launch_description():
         [
             DeclareLaunchArgument("robot", default_value=robot, description="folder of the robot's parameter files"),
             DeclareLaunchArgument("namespace", default_value="", description="namespace of all nodes"),
+            DeclareLaunchArgument("watch", default_value="true", description="take edits of the parameter files in"),
             OpaqueFunction(function=_nodes),
         ]
     )

@@ -9,6 +9,7 @@ from types import ModuleType, SimpleNamespace
 from typing import Any
 
 import pytest
+
 from ballbal_ros.errors import BallbalError
 
 ROOT = Path(__file__).resolve().parents[1]
@@ -30,7 +31,9 @@ def _fake(monkeypatch: pytest.MonkeyPatch, name: str, **members: Any) -> None:
 @pytest.fixture
 def launched(monkeypatch: pytest.MonkeyPatch) -> Any:
     """A function that runs a launch file with given arguments and returns its node actions by executable."""
-    kinds = {kind: type(kind, (_Recorded,), {}) for kind in ("Node", "LifecycleNode", "Shutdown", "DeclareLaunchArgument")}
+    kinds = {
+        kind: type(kind, (_Recorded,), {}) for kind in ("Node", "LifecycleNode", "Shutdown", "DeclareLaunchArgument")
+    }
 
     class OpaqueFunction:
         def __init__(self, function: Any) -> None:
@@ -78,7 +81,9 @@ def test_robot_launch_starts_the_robots_nodes_with_their_files(launched: Any) ->
 
 
 def test_headless_launch_adds_the_simulated_robot_whose_end_is_everybodys(launched: Any) -> None:
-    """Headless, the simulated robot starts too, with the clock asked for; in a namespace all have one clock of their own."""
+    """Headless, the simulated robot starts too, with the clock asked for; in a namespace all have one clock of their
+    own.
+    """
     nodes = launched("headless.launch.py", namespace="b", clock="real_time", seed="3")
     assert set(nodes) == {"whole_body_kinematics", "arm_compensation", "balance", "simulated_robot"}
     simulated = nodes["simulated_robot"].keywords

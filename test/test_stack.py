@@ -6,6 +6,7 @@ import shutil
 from pathlib import Path
 
 import pytest
+
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.stack import RobotFolder, checked_namespace, headless_stack, robot_stack
 from helpers.robots import CONFIG
@@ -35,7 +36,9 @@ def test_a_robots_stack_has_no_simulation() -> None:
 
 def test_command_lines_carry_values_that_ros_reads_back() -> None:
     """Values are written as YAML: text in quotes, lists in brackets, true and false in small letters."""
-    node = headless_stack(RobotFolder.checked(SHELVER, simulated=True), simulated={"truth": ["a=1"], "duration": 2.0})[-1]
+    node = headless_stack(RobotFolder.checked(SHELVER, simulated=True), simulated={"truth": ["a=1"], "duration": 2.0})[
+        -1
+    ]
     words = node.command("/left")
     assert 'truth:=["a=1"]' in words and "duration:=2.0" in words and "use_sim_time:=false" in words
     assert words[-2:] == ["-r", "__ns:=/left"]

@@ -15,10 +15,11 @@ _TOPIC = "lean_plan"
 
 
 def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> None:
-    """Raise :class:`PlanRefused` in one line unless the loop can follow the plan from ``start`` (s) on; ``now`` is its last tick.
+    """Raise :class:`PlanRefused` in one line unless the loop can follow the plan from ``start`` (s) on; ``now`` is its
+    last tick.
 
-    Refused: while it does not balance, a start that is past, a lean beyond ``limits.lean``, a torque beyond what it may command, and
-    a lean that begins elsewhere than where the reference will be.
+    Refused: while it does not balance, a start that is past, a lean beyond ``limits.lean``, a torque beyond what it may
+    command, and a lean that begins elsewhere than where the reference will be.
     """
     guard, limits = loop.guard, loop.description.parameters.limits
     if guard.state not in (ENGAGING, BALANCING, STOPPING):

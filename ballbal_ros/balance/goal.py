@@ -20,9 +20,11 @@ class Goal:
     heading: float
 
     def velocity(self, station: tuple[float, float], heading: float) -> tuple[float, float, float]:
-        """Velocity (m/s, m/s in heading axes; rad/s) to command at a station in ``odom`` (m) and heading (rad); zeros once there.
+        """Velocity (m/s, m/s in heading axes; rad/s) to command at a station in ``odom`` (m) and heading (rad); zeros
+        once there.
 
-        Its size is that from which a constant deceleration of 0.15 m/s² (0.3 rad/s²) ends at the goal, at most 0.4 m/s (0.6 rad/s).
+        Its size is that from which a constant deceleration of 0.15 m/s² (0.3 rad/s²) ends at the goal, at most 0.4 m/s
+        (0.6 rad/s).
         """
         dx, dy = self.x - station[0], self.y - station[1]
         far = math.hypot(dx, dy)

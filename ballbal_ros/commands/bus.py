@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import time
 from collections.abc import Callable
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -51,7 +52,7 @@ class Bus:
         self.report: Any = None
         self.peaks: dict[str, str] = {}
         self._publishers = {topic: publisher(self._node, topic) for topic in _LISTENERS}
-        self._client = self._node.create_client(ChangeState, "balance/change_state")
+        self._client: Any = self._node.create_client(ChangeState, "balance/change_state")
         subscribe(self._node, "ground_truth", self._on_truth, raw=True)
         subscribe(self._node, "balance_state", self._on_state)
         subscribe(self._node, "plan_report", self._on_report)
@@ -98,7 +99,9 @@ class Bus:
             self.turn()
 
     def wait_for(self, what: str, happened: Callable[[], bool]) -> None:
-        """Turn until something has happened; raises :class:`RunFailed` when it takes longer than the wall-clock limit."""
+        """Turn until something has happened; raises :class:`RunFailed` when it takes longer than the wall-clock
+        limit.
+        """
         until = time.monotonic() + self._timeout
         while not happened():
             self.turn()
@@ -109,16 +112,20 @@ class Bus:
     def wait_for_nodes(self) -> None:
         """Wait until every node listens."""
         for topic, count in _LISTENERS.items():
-            sender = self._publishers[topic]
-            self.wait_for(f"{count} listeners on {topic}", lambda s=sender, c=count: s.get_subscription_count() >= c)
+            self.wait_for(f"{count} listeners on {topic}", partial(self._has_listeners, topic, count))
         self.wait_for("balance/change_state", self._client.service_is_ready)
         self.wait_for("the simulated robot's ground_truth", lambda: self._count("ground_truth") > 0)
+
+    def _has_listeners(self, topic: str, count: int) -> bool:
+        return bool(self._publishers[topic].get_subscription_count() >= count)
 
     def _count(self, topic: str) -> int:
         return int(self._node.count_publishers(topic))
 
     def _tell_loads(self, loads: list[tuple[float, Load]]) -> None:
-        """Announce loads (stamp in s, load), a few at a time, as a topic keeps ten; the balance says how many it has heard of."""
+        """Announce loads (stamp in s, load), a few at a time, as a topic keeps ten; the balance says how many it has
+        heard of.
+        """
         for first in range(0, len(loads), _AT_ONCE):
             for stamp, load in loads[first : first + _AT_ONCE]:
                 self._publishers["hand_load"].publish(load_message(load, stamp))

@@ -17,7 +17,8 @@ DOMAINS = range(1, 102)
 
 @contextmanager
 def own_domain(asked: int | None = None) -> Iterator[int]:
-    """The domain asked for, or that of ``ROS_DOMAIN_ID``, or one that no other run on this machine has while this one lasts.
+    """The domain asked for, or that of ``ROS_DOMAIN_ID``, or one that no other run on this machine has while this one
+    lasts.
 
     Held by a lock on a file. Raises :class:`BallbalError` for a domain that is none, or where none is free.
     """

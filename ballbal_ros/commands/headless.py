@@ -44,8 +44,8 @@ def headless(
 ) -> RunSet:
     """Run a plan file through the stack. Everything is checked, and planned once, before anything starts.
 
-    Raises :class:`BallbalError` for wrong input or a refused plan, :class:`~ballbal_ros.commands.processes.RunFailed` for a run that
-    did not come to its end.
+    Raises :class:`BallbalError` for wrong input or a refused plan, :class:`~ballbal_ros.commands.processes.RunFailed`
+    for a run that did not come to its end.
     """
     if clock not in _CLOCKS:
         raise BallbalError("--clock", f"is {clock!r}", f"it takes one of {', '.join(_CLOCKS)}")
@@ -131,7 +131,9 @@ def headless_command(
     ] = None,
     json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
-    """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this machine only."""
+    """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this
+    machine only.
+    """
     console = Console()
     from ballbal_ros.commands.processes import RunFailed
 

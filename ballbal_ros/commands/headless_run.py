@@ -28,7 +28,9 @@ _LAST_WORDS = 2.0
 
 @attrs.frozen(eq=False, kw_only=True)
 class HeadlessSetup:
-    """What all runs of one call share. ``rate``: of the loop, Hz; ``timeout``: wall time for which anybody may stay silent, s."""
+    """What all runs of one call share. ``rate``: of the loop, Hz; ``timeout``: wall time for which anybody may stay
+    silent, s.
+    """
 
     folder: RobotFolder
     description: RobotDescription
@@ -46,7 +48,9 @@ class HeadlessSetup:
 
 @attrs.frozen
 class Glimpse:
-    """What a run looks like now: simulated time (s), distance of the true ball from where it was meant to be (mm), the guard's state."""
+    """What a run looks like now: simulated time (s), distance of the true ball from where it was meant to be (mm), the
+    guard's state.
+    """
 
     time: float
     travel: float

@@ -50,7 +50,9 @@ def _stand_back() -> None:
 
 
 class Processes:
-    """A group of processes. As a context it ends them all: SIGINT, after a while SIGTERM, SIGKILL only as a last resort."""
+    """A group of processes. As a context it ends them all: SIGINT, after a while SIGTERM, SIGKILL only as a last
+    resort.
+    """
 
     def __init__(self) -> None:
         self._children: list[_Child] = []
@@ -66,7 +68,7 @@ class Processes:
 
         One that is not ``hurried`` gives way to those that are.
         """
-        log = tempfile.TemporaryFile()
+        log = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the child lives
         child = subprocess.Popen(
             words,
             env=dict(environment),

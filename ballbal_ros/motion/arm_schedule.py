@@ -130,6 +130,7 @@ class ArmSchedule:
         """Plan the arms' way to rest from the motion in force; None where there is nothing to stop.
 
         It takes ``stop_time`` from ``allowance`` s ahead, or up to three times as long where the limits need that.
+
         Raises
         :class:`PlanRefused` where none is possible: then the motion in force, which has been checked, should end as
         planned.

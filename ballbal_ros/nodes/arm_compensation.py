@@ -1,4 +1,6 @@
-"""Node ``arm_compensation``: what somebody wants the arms to do becomes a lean plan and, once that is taken up, an arm command."""
+"""Node ``arm_compensation``: what somebody wants the arms to do becomes a lean plan and, once that is taken up, an arm
+command.
+"""
 
 from __future__ import annotations
 
@@ -42,7 +44,8 @@ _FOLLOWING = (ENGAGING, BALANCING, STOPPING)
 
 @attrs.frozen(eq=False)
 class _Asked:
-    """A proposal that waits for the balance node's acknowledgement; ``what`` asked for it, until ``deadline`` of the steady clock.
+    """A proposal that waits for the balance node's acknowledgement; ``what`` asked for it, until ``deadline`` of the
+    steady clock.
 
     ``answered``: how many plans the balance node had answered before.
     """
@@ -55,7 +58,9 @@ class _Asked:
 
 
 class ArmCompensationNode(Node):
-    """Plans, asks the balance node, and only then lets the arms go. One plan after the other; an emergency stop goes first."""
+    """Plans, asks the balance node, and only then lets the arms go. One plan after the other; an emergency stop goes
+    first.
+    """
 
     def __init__(self) -> None:
         super().__init__("arm_compensation", **process.NODE_OPTIONS)

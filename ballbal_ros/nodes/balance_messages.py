@@ -1,4 +1,6 @@
-"""What the balance node publishes, made once and filled anew: drive command, odometry, its state, and tf where it can be had."""
+"""What the balance node publishes, made once and filled anew: drive command, odometry, its state, and tf where it can
+be had.
+"""
 
 from __future__ import annotations
 
@@ -51,7 +53,9 @@ class BalanceMessages:
         return self._to_tf is not None
 
     def command(self, ns: int, effort: Array) -> None:
-        """Publish efforts [n], N m, that answer the tick ``ns``. What is not finite never gets here: the loop sees to it."""
+        """Publish efforts [n], N m, that answer the tick ``ns``. What is not finite never gets here: the loop sees to
+        it.
+        """
         self._command.effort[:] = effort
         self._to_drive.publish(self._command.serialised(ns))
         self._effort.data = array.array("d", effort.tobytes())

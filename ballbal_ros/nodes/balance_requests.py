@@ -53,7 +53,9 @@ class BalanceRequests:
 
     @property
     def notes(self) -> dict[str, str]:
-        """What ``balance_state`` tells of requests: the plan taken up last, or refused and why; how many were answered."""
+        """What ``balance_state`` tells of requests: the plan taken up last, or refused and why; how many were
+        answered.
+        """
         counts = {"plans answered": str(self._answered), "load changes": str(len(self._loads))}
         return {**self._answers, **counts}
 

@@ -26,7 +26,8 @@ def values_of(status: DiagnosticStatus) -> dict[str, str]:
 
 
 class Diagnostics:
-    """One node's status. ``report`` gives (level, message, values); it is asked once a second of wall time (a steady clock).
+    """One node's status. ``report`` gives (level, message, values); it is asked once a second of wall time (a steady
+    clock).
 
     ``hardware`` is the robot's name; ``now`` gives the stamp, the node's clock's without it.
     """
@@ -41,7 +42,9 @@ class Diagnostics:
         self._timer = node.create_timer(1.0, self.publish, clock=Clock(clock_type=ClockType.STEADY_TIME))
 
     def refuse(self, topic: str, reason: str) -> None:
-        """Say, at once and from now on, that what came on a topic was refused, and why; the same reason is said at once only once."""
+        """Say, at once and from now on, that what came on a topic was refused, and why; the same reason is said at once
+        only once.
+        """
         self.refused += 1
         if self._refusals.get(topic) != reason:
             self._refusals[topic] = reason

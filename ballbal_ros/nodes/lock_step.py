@@ -15,7 +15,8 @@ _LOOK_AGAIN = 20_000_000
 
 
 def is_looked_at(ns: int, period_ns: int) -> bool:
-    """Whether the tick ``ns`` is one at which ``balance`` says its state while it does not balance yet, and the stand looks at it.
+    """Whether the tick ``ns`` is one at which ``balance`` says its state while it does not balance yet, and the stand
+    looks at it.
 
     That is the first tick of each 20 ms.
     """
@@ -31,8 +32,9 @@ def text_nanoseconds(text: str) -> int:
 class LockStep:
     """Keeps a run independent of when messages come: an instant ends only when all that belongs to it is here.
 
-    That is, besides the drive command: an answer to each arm plan and the arm command it announces; while the stand holds the robot
-    and at certain instants, the guard's state of that very instant (without a balance node that tells it, the stand stays).
+    That is, besides the drive command: an answer to each arm plan and the arm command it announces; while the stand
+    holds the robot and at certain instants, the guard's state of that very instant (without a balance node that tells
+    it, the stand stays).
     """
 
     def __init__(self, node: Node, period_ns: int, wait_for_plan: bool) -> None:
@@ -68,7 +70,9 @@ class LockStep:
         self._on_the_way = self._on_the_way or state in (STANDBY, ENGAGING)
 
     def lets_go(self, now: int, lock_step: bool) -> bool:
-        """Whether the stand may let go at ``now``, in ns: the guard balances, and it has engaged while the stand held."""
+        """Whether the stand may let go at ``now``, in ns: the guard balances, and it has engaged while the stand
+        held.
+        """
         if self._state != BALANCING or not self._on_the_way or (lock_step and not is_looked_at(now, self._period)):
             return False
         self._on_the_way = False

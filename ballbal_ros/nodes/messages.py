@@ -52,7 +52,8 @@ def stamp_text(stamp: Time) -> str:
 class JointReader:
     """Takes serialised joint states in, matched by name, whatever their order; others' joints are passed over.
 
-    ``position`` [n] holds the newest of each joint, NaN before its first; rad or m. ``stamp`` is the newest message's, in ns.
+    ``position`` [n] holds the newest of each joint, NaN before its first; rad or m. ``stamp`` is the newest message's,
+    in ns.
     """
 
     def __init__(self, names: Sequence[str], topic: str) -> None:
@@ -74,7 +75,9 @@ class JointReader:
         ]
 
     def read(self, raw: bytes) -> bool:
-        """Take a message in; True where it names any of the joints. Raises :class:`BallbalError` for lengths or numbers that can't be."""
+        """Take a message in; True where it names any of the joints. Raises :class:`BallbalError` for lengths or numbers
+        that can't be.
+        """
         values = self._reader.read(raw)
         names = values.names
         order = self._order.get(names)
@@ -103,7 +106,9 @@ class JointReader:
 
 
 def load_of(message: InertiaStamped, description: RobotDescription, topic: str = "hand_load") -> tuple[float, Load]:
-    """(stamp in s, load) of a ``hand_load`` or ``simulated_load``; raises :class:`BallbalError` for an unknown hand or an impossible load."""
+    """(stamp in s, load) of a ``hand_load`` or ``simulated_load``; raises :class:`BallbalError` for an unknown hand or
+    an impossible load.
+    """
     inertia, hands = message.inertia, description.parameters.hands
     hand = message.header.frame_id
     if hand not in hands.links:

@@ -14,7 +14,9 @@ from ballbal_ros.nodes.topics import publisher
 
 
 class PlanReports:
-    """Publishes one report a plan. ``what`` is who asked (arm_plan, emergency_stop), ``stamp`` the stamp that it asked with."""
+    """Publishes one report a plan. ``what`` is who asked (arm_plan, emergency_stop), ``stamp`` the stamp that it asked
+    with.
+    """
 
     def __init__(self, node: Node, hardware: str) -> None:
         self._node, self._hardware = node, hardware

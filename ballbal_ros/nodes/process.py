@@ -43,7 +43,8 @@ def settle_memory() -> None:
 
 
 def run(make: Callable[[], Node]) -> int:
-    """Make a node, spin it until it is told to leave or its ``exit_status`` is set, and return the process's exit status.
+    """Make a node, spin it until it is told to leave or its ``exit_status`` is set, and return the process's exit
+    status.
 
     2 where what it was given is wrong: then one line on standard error says so, and nothing was published.
     """
@@ -111,7 +112,8 @@ def main(make: Callable[[], Node]) -> None:
 
 
 def describe(node: Node, parameters: RobotParameters, wait: float) -> RobotDescription:
-    """The robot's description: its URDF from ``robot_description`` where that is published within ``wait`` s, else from the file.
+    """The robot's description: its URDF from ``robot_description`` where that is published within ``wait`` s, else from
+    the file.
 
     Raises :class:`BallbalError` in one line.
     """

@@ -19,8 +19,9 @@ from ballbal_ros.robot.description import RobotDescription
 class Senses:
     """Gathers IMU, drive and arm data, and calls ``tick(stamp in ns)`` when :attr:`measurement` is complete.
 
-    In lock-step that is when all three carry one stamp, in whatever order they come. Otherwise it is when IMU data come, with the
-    newest of the others: drive data older than ``drive_timeout`` are left out (NaN), so that the loop coasts on its model.
+    In lock-step that is when all three carry one stamp, in whatever order they come. Otherwise it is when IMU data
+    come, with the newest of the others: drive data older than ``drive_timeout`` are left out (NaN), so that the loop
+    coasts on its model.
     """
 
     def __init__(

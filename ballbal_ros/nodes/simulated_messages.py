@@ -16,7 +16,9 @@ from ballbal_ros.simulation.robot import SimulatedRobot
 
 
 class SimulatedMessages:
-    """Publishes one instant of a simulated robot: clock, arm joints, drive, IMU last, and what is true for the record."""
+    """Publishes one instant of a simulated robot: clock, arm joints, drive, IMU last, and what is true for the
+    record.
+    """
 
     def __init__(self, node: Node, description: RobotDescription, imu_topic: str) -> None:
         self._drives = description.drive.names
@@ -62,7 +64,9 @@ class SimulatedMessages:
         self._publishers[-1].publish(self._truth.serialised(ns))
 
     def effort(self, command: JointValues) -> Array:
-        """The efforts [n] of a ``drive_command``, N m; raises :class:`BallbalError` unless there is a finite one for each actuator."""
+        """The efforts [n] of a ``drive_command``, N m; raises :class:`BallbalError` unless there is a finite one for
+        each actuator.
+        """
         names, values = command.names, command.effort
         if names != self._drives:
             for name in names:

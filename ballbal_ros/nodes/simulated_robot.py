@@ -43,7 +43,8 @@ _LINGER = 0.2
 class SimulatedRobotNode(Node):
     """Publishes what the simulated sensors say at t, waits for the command that answers it, and steps on.
 
-    In lock-step it also waits, at t, for whatever else belongs to t (:class:`LockStep`), so that a run depends on stamps alone.
+    In lock-step it also waits, at t, for whatever else belongs to t (:class:`LockStep`), so that a run depends on
+    stamps alone.
     """
 
     exit_status: int | None = None

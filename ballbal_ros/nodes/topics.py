@@ -29,7 +29,9 @@ def _profile(depth: int, reliable: bool = True, kept: bool = False) -> QoSProfil
 
 @attrs.frozen
 class Kind:
-    """How a topic is published and subscribed: depth, whether late joiners get it, whether a subscriber takes losses."""
+    """How a topic is published and subscribed: depth, whether late joiners get it, whether a subscriber takes
+    losses.
+    """
 
     depth: int
     kept: bool = False

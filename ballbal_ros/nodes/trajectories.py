@@ -36,7 +36,9 @@ def _column(values: Iterable[float]) -> array.array[float]:
 
 
 def path_message(path: ArmPath, names: Sequence[str], start: Time) -> JointTrajectory:
-    """An arm path as a trajectory with positions, velocities and accelerations at its knots: it can be made from it again."""
+    """An arm path as a trajectory with positions, velocities and accelerations at its knots: it can be made from it
+    again.
+    """
     message = JointTrajectory(joint_names=list(names))
     message.header.stamp = start
     knots = path.knots - path.knots[0]
@@ -55,7 +57,9 @@ def path_message(path: ArmPath, names: Sequence[str], start: Time) -> JointTraje
 
 
 class Waypoints:
-    """A trajectory's points, checked: ``times`` [K] s; positions [K, m] and, where given, rates and accelerations of ``names``."""
+    """A trajectory's points, checked: ``times`` [K] s; positions [K, m] and, where given, rates and accelerations of
+    ``names``.
+    """
 
     def __init__(self, message: JointTrajectory, topic: str) -> None:
         self.names = tuple(message.joint_names)
@@ -118,7 +122,9 @@ def lean_plan_message(plan: LeanPlan, start: Time) -> JointTrajectory:
 
 
 def lean_plan_of(message: JointTrajectory) -> LeanPlan:
-    """The lean plan of a ``lean_plan``; raises :class:`PlanError` unless it is complete, finite and on a uniform grid."""
+    """The lean plan of a ``lean_plan``; raises :class:`PlanError` unless it is complete, finite and on a uniform
+    grid.
+    """
     topic = "lean_plan"
     points = Waypoints(message, topic)
     if sorted(points.names) != sorted(LEAN_JOINTS):
@@ -160,7 +166,8 @@ def _torques(message: JointTrajectory, order: Sequence[int]) -> Array:
 
 
 def ball_motion_of(message: JointTrajectory, place: tuple[float, float, float]) -> BallMotion:
-    """The ball motion of a ``ball_plan``, relative to where it begins; ``place`` is (x, y, heading) in ``odom`` before it.
+    """The ball motion of a ``ball_plan``, relative to where it begins; ``place`` is (x, y, heading) in ``odom`` before
+    it.
 
     Axes are those of the heading at its beginning. Raises :class:`PlanError` where it can't be read.
     """
@@ -265,7 +272,9 @@ class ArmWaypoints:
         return path_through_waypoints(times.tolist(), positions, rates, accelerations)
 
     def checked_path(self, position: Array, rate: Array, acceleration: Array) -> ArmPath:
-        """:meth:`path`; raises :class:`PlanError` where it would jump: it begins elsewhere, or leaves out a joint that moves."""
+        """:meth:`path`; raises :class:`PlanError` where it would jump: it begins elsewhere, or leaves out a joint that
+        moves.
+        """
         topic, points, columns = self.points.topic, self.points, list(self.columns)
         others = np.ones(len(position), bool)
         others[columns] = False
@@ -274,8 +283,9 @@ class ArmWaypoints:
         apart = np.abs(points.positions[0] - position[columns])
         if points.times[0] <= 0.0 and apart.max() > _APART:
             worst = int(np.argmax(apart))
-            there = f"{points.names[worst]} at {points.positions[0][worst]:.3f} rad, and it will be at {position[columns[worst]]:.3f}"
-            raise PlanError(topic, f"begins with {there}", "begin there, or later than 0")
+            begins, there = points.positions[0][worst], position[columns[worst]]
+            what = f"begins with {points.names[worst]} at {begins:.3f} rad, and it will be at {there:.3f}"
+            raise PlanError(topic, what, "begin there, or later than 0")
         return self.path(position, rate, acceleration)
 
 

@@ -1,4 +1,6 @@
-"""Node ``whole_body_kinematics``: mass centre and inertia of all that stands on the ball, for everybody who wants to know."""
+"""Node ``whole_body_kinematics``: mass centre and inertia of all that stands on the ball, for everybody who wants to
+know.
+"""
 
 from __future__ import annotations
 

@@ -1,9 +1,9 @@
 """Joint states, IMU data and odometry straight from and to their serialised form.
 
-The loop and the simulated robot exchange six messages a tick, and this takes a fraction of the time of whole messages. For
-reading, a layout is worked out once for each publisher (its names and frame stay the same) and held against what rclpy makes
-of the same bytes; where the two differ, rclpy's way is used for good. For writing, rclpy serialises a message once, and then
-only its numbers change.
+The loop and the simulated robot exchange six messages a tick, and this takes a fraction of the time of whole messages.
+For reading, a layout is worked out once for each publisher (its names and frame stay the same) and held against what
+rclpy makes of the same bytes; where the two differ, rclpy's way is used for good. For writing, rclpy serialises a
+message once, and then only its numbers change.
 """
 
 from __future__ import annotations
@@ -42,7 +42,9 @@ class JointValues:
 
 @attrs.frozen
 class ImuValues:
-    """One IMU reading: ``stamp`` in ns; ``quat_xyzw`` None where the message marks it as not reported; rad/s, m/s², IMU axes."""
+    """One IMU reading: ``stamp`` in ns; ``quat_xyzw`` None where the message marks it as not reported; rad/s, m/s², IMU
+    axes.
+    """
 
     stamp: int
     frame: str
@@ -53,16 +55,15 @@ class ImuValues:
 
 @attrs.frozen
 class _Layout:
-    """Where the numbers of one publisher's joint states are; ``prefix`` is all that stays the same from byte 12 on."""
+    """Where the numbers of one publisher's joint states are; ``prefix`` is all that stays the same from byte 12 on.
+
+    ``ats``, ``counts``: where positions, velocities and efforts are, and how many.
+    """
 
     prefix: bytes
     names: tuple[str, ...]
-    position_at: int
-    velocity_at: int
-    effort_at: int
-    positions: int
-    velocities: int
-    efforts: int
+    ats: tuple[int, int, int]
+    counts: tuple[int, int, int]
     size: int
 
 
@@ -90,8 +91,8 @@ class JointStateReader:
 
 def _fast(raw: bytes, layout: _Layout) -> JointValues:
     sec, nanosec = _stamp(raw, _START)
-    position = np.frombuffer(raw, float, layout.positions, layout.position_at)
-    effort = np.frombuffer(raw, float, layout.efforts, layout.effort_at)
+    position = np.frombuffer(raw, float, layout.counts[0], layout.ats[0])
+    effort = np.frombuffer(raw, float, layout.counts[2], layout.ats[2])
     return JointValues(sec * _BILLION + nanosec, layout.names, position, effort)
 
 
@@ -132,9 +133,9 @@ def _layout(raw: bytes) -> _Layout | None:
             at = _aligned(at, 8) if count else at
             places.append((at, count))
             at += 8 * count
-        starts, counts = zip(*places, strict=True)
-        layout = _Layout(prefix, tuple(names), *starts, *counts, len(raw))
-        return layout if at <= len(raw) else None
+        (position_at, positions), (velocity_at, velocities), (effort_at, efforts) = places
+        ats, counts = (position_at, velocity_at, effort_at), (positions, velocities, efforts)
+        return _Layout(prefix, tuple(names), ats, counts, len(raw)) if at <= len(raw) else None
     except (struct.error, UnicodeDecodeError):
         return None
 
@@ -186,7 +187,9 @@ def _slow_imu(raw: bytes) -> ImuValues:
 
 
 class _Writer:
-    """A serialised message of which only the stamp and a block of numbers change; ``stamp_at`` is where its stamp is."""
+    """A serialised message of which only the stamp and a block of numbers change; ``stamp_at`` is where its stamp
+    is.
+    """
 
     def __init__(self, message: Any) -> None:
         self._buffer = bytearray(serialize_message(message))
@@ -211,7 +214,9 @@ class ClockWriter(_Writer):
 
 
 class JointStateWriter(_Writer):
-    """Writes ``sensor_msgs/JointState`` of fixed names: fill ``position``, ``velocity``, ``effort`` [names], as far as asked for."""
+    """Writes ``sensor_msgs/JointState`` of fixed names: fill ``position``, ``velocity``, ``effort`` [names], as far as
+    asked for.
+    """
 
     def __init__(
         self, names: Sequence[str], *, position: bool = False, velocity: bool = False, effort: bool = False
@@ -224,9 +229,7 @@ class JointStateWriter(_Writer):
         layout = _layout(bytes(self._buffer))
         if layout is None:
             raise RuntimeError("a serialised joint state is not what it should be")
-        self.position = self.numbers(layout.position_at, layout.positions)
-        self.velocity = self.numbers(layout.velocity_at, layout.velocities)
-        self.effort = self.numbers(layout.effort_at, layout.efforts)
+        self.position, self.velocity, self.effort = map(self.numbers, layout.ats, layout.counts)
 
 
 class ImuWriter(_Writer):
@@ -241,7 +244,9 @@ class ImuWriter(_Writer):
 
 
 class OdometryWriter(_Writer):
-    """Writes ``nav_msgs/Odometry``: fill ``pose`` [7] (x y z, quaternion x y z w) and ``twist`` [6] (linear, angular)."""
+    """Writes ``nav_msgs/Odometry``: fill ``pose`` [7] (x y z, quaternion x y z w) and ``twist`` [6] (linear,
+    angular).
+    """
 
     def __init__(self, frame: str, child_frame: str) -> None:
         message = Odometry(child_frame_id=child_frame)

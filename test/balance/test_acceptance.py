@@ -7,6 +7,7 @@ from functools import cache
 import attrs
 import numpy as np
 import pytest
+
 from ballbal_ros.balance.acceptance import check_plan
 from ballbal_ros.balance.goal import Goal
 from ballbal_ros.balance.guard import BALANCING, STANDBY, STOPPING, TRIPPED

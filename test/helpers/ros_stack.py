@@ -110,7 +110,7 @@ class Listener:
         """Keep the newest message of each topic."""
         for topic in topics:
             keep = self._newest.__setitem__
-            subscribe(self.node, topic, lambda raw, topic=topic: keep(topic, raw), raw=True)
+            subscribe(self.node, topic, lambda raw, topic=topic, keep=keep: keep(topic, raw), raw=True)
 
     def newest(self, topic: str) -> Any:
         """The newest message of a topic that it hears; None before the first."""

@@ -5,6 +5,7 @@ from __future__ import annotations
 import attrs
 import numpy as np
 import pytest
+
 from ballbal_ros.errors import PlanError, PlanRefused
 from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
 from ballbal_ros.motion.lean_planner import BallMotion
@@ -38,7 +39,9 @@ def schedule() -> ArmSchedule:
 
 
 def lean_at(proposal: Proposal, time: float) -> tuple[np.ndarray, np.ndarray]:
-    """Lean and lean rate [4], ball and ball rate [4] (ball counted from where it will rest) of a proposal's plan at a time, s."""
+    """Lean and lean rate [4], ball and ball rate [4] (ball counted from where it will rest) of a proposal's plan at a
+    time, s.
+    """
     assert proposal.plan is not None
     row = proposal.plan.table(0.001)[round((time - proposal.lean_start) / 0.001)]
     ball = row[4:8] - np.append(proposal.plan.ball[-1], (0.0, 0.0))
@@ -53,7 +56,9 @@ def test_a_motion_asked_for_ahead_gets_its_full_lead_in() -> None:
 
 
 def test_a_motion_asked_for_late_gets_what_lead_in_is_left() -> None:
-    """Where the request leaves less, the lean starts after the allowance; the arms keep their time, or start with the lean."""
+    """Where the request leaves less, the lean starts after the allowance; the arms keep their time, or start with the
+    lean.
+    """
     proposal = schedule().plan(swing(2.0), 1.0, STILL)
     assert (proposal.lean_start, proposal.arms_start) == (pytest.approx(1.0 + ALLOWANCE), 2.0)
     proposal = schedule().plan(swing(1.1), 1.0, STILL)
@@ -78,7 +83,9 @@ def test_nothing_is_in_force_before_it_is_accepted() -> None:
 
 @pytest.mark.parametrize("now", [2.9, 3.3, 4.0, 4.6, 4.9])
 def test_cancelling_brings_arms_to_rest_without_a_jump(now: float) -> None:
-    """Whenever a motion is cancelled, position, rate and lean go on from where they were, and the arms rest in stop_time."""
+    """Whenever a motion is cancelled, position, rate and lean go on from where they were, and the arms rest in
+    stop_time.
+    """
     made = schedule()
     motion = made.plan(swing(5.0), 1.0, STILL)
     made.accept(motion)

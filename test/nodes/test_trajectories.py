@@ -11,11 +11,14 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from ballbal_ros.errors import BallbalError  # noqa: E402
-from ballbal_ros.motion.lean_planner import BallMotion, PlanRequest, plan_lean  # noqa: E402
-from ballbal_ros.motion.spline import path_through_waypoints  # noqa: E402
-from ballbal_ros.nodes.messages import to_duration, to_time  # noqa: E402
-from ballbal_ros.nodes.trajectories import (  # noqa: E402
+from builtin_interfaces.msg import Time
+from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
+
+from ballbal_ros.errors import BallbalError
+from ballbal_ros.motion.lean_planner import BallMotion, PlanRequest, plan_lean
+from ballbal_ros.motion.spline import path_through_waypoints
+from ballbal_ros.nodes.messages import to_duration, to_time
+from ballbal_ros.nodes.trajectories import (
     ArmWaypoints,
     ball_motion_of,
     ball_plan_message,
@@ -24,10 +27,8 @@ from ballbal_ros.nodes.trajectories import (  # noqa: E402
     lean_plan_of,
     path_message,
 )
-from ballbal_ros.robot.whole_body import WholeBody  # noqa: E402
-from builtin_interfaces.msg import Time  # noqa: E402
-from helpers.robots import compensation, shelver  # noqa: E402
-from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint  # noqa: E402
+from ballbal_ros.robot.whole_body import WholeBody
+from helpers.robots import compensation, shelver
 
 
 def trajectory(names: list[str], *points: tuple[float, list[float]]) -> JointTrajectory:
@@ -66,7 +67,9 @@ def test_lean_plan_goes_through_a_message_unchanged() -> None:
 
 def test_ball_plan_counts_from_where_it_begins() -> None:
     """A roll ahead that begins at heading 90° in odom is a roll along plan axes x, from the ball's own place."""
-    message = trajectory(["heading", "ball_x", "ball_y"], (0.0, [math.pi / 2, 1.0, 2.0]), (2.0, [math.pi / 2, 1.0, 2.5]))
+    message = trajectory(
+        ["heading", "ball_x", "ball_y"], (0.0, [math.pi / 2, 1.0, 2.0]), (2.0, [math.pi / 2, 1.0, 2.5])
+    )
     motion = ball_motion_of(message, (0.0, 0.0, 0.0))
     assert motion.position[-1] == pytest.approx([0.5, 0.0, 0.0], abs=1e-12)
     assert motion.rate[0] == pytest.approx([0.0, 0.0, 0.0]) and motion.times[-1] == 2.0
@@ -109,11 +112,17 @@ SHOULDER = ["left_shoulder_pitch"]
         (lambda: _arm(trajectory(["left_shouldr_pitch"], (1.0, [0.1]))), "did you mean left_shoulder_pitch"),
         (lambda: _arm(trajectory(SHOULDER, (1.0, [0.1, 0.2]))), "2 positions for 1 joints"),
         (lambda: _arm(trajectory(SHOULDER, (1.0, [0.1]), (0.5, [0.2]))), "times must increase"),
-        (lambda: _arm(trajectory(SHOULDER, (0.0, [0.4]), (0.5, [0.2]))), "begins with left_shoulder_pitch at 0.400 rad"),
+        (
+            lambda: _arm(trajectory(SHOULDER, (0.0, [0.4]), (0.5, [0.2]))),
+            "begins with left_shoulder_pitch at 0.400 rad",
+        ),
         (lambda: _arm(trajectory([*SHOULDER, *SHOULDER], (1.0, [0.1, 0.1]))), "each joint may stand once"),
         (lambda: lean_plan_of(trajectory(["lean_roll"], (0.0, [0.0]))), "it takes lean_roll, lean_pitch"),
         (lambda: ball_motion_of(trajectory(["ball_x"], (1.0, [0.0])), (0, 0, 0)), "it takes ball_x, ball_y, heading"),
-        (lambda: hand_wrenches_of(JointTrajectory(joint_names=["left_hand/force/w"]), ("left_hand",)), "unknown joint name"),
+        (
+            lambda: hand_wrenches_of(JointTrajectory(joint_names=["left_hand/force/w"]), ("left_hand",)),
+            "unknown joint name",
+        ),
     ],
 )
 def test_what_is_wrong_is_refused_in_one_line(refused: Callable[[], Any], words: str) -> None:

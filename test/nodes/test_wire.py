@@ -7,7 +7,12 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from ballbal_ros.nodes.wire import (  # noqa: E402
+from nav_msgs.msg import Odometry
+from rclpy.serialization import deserialize_message, serialize_message
+from rosgraph_msgs.msg import Clock
+from sensor_msgs.msg import Imu, JointState
+
+from ballbal_ros.nodes.wire import (
     ClockWriter,
     ImuReader,
     ImuWriter,
@@ -15,10 +20,6 @@ from ballbal_ros.nodes.wire import (  # noqa: E402
     JointStateWriter,
     OdometryWriter,
 )
-from nav_msgs.msg import Odometry  # noqa: E402
-from rclpy.serialization import deserialize_message, serialize_message  # noqa: E402
-from rosgraph_msgs.msg import Clock  # noqa: E402
-from sensor_msgs.msg import Imu, JointState  # noqa: E402
 
 STAMP = 12_345_678_901
 
@@ -27,7 +28,9 @@ STAMP = 12_345_678_901
 @pytest.mark.parametrize("names", [[], ["a"], ["ab", "c"], ["left", "right", "x"]])
 @pytest.mark.parametrize("velocities", [False, True])
 def test_joint_states_read_as_rclpy_reads_them(frame: str, names: list[str], velocities: bool) -> None:
-    """Whatever the lengths of frame, names and lists, and so the padding: both the first and the later messages are read right."""
+    """Whatever the lengths of frame, names and lists, and so the padding: both the first and the later messages are
+    read right.
+    """
     reader = JointStateReader()
     for round_ in range(3):
         message = JointState(name=names)
@@ -48,12 +51,16 @@ def test_publishers_with_other_names_do_not_mix() -> None:
     reader = JointStateReader()
     for _ in range(2):
         for names in (["a", "b"], ["b", "a"], ["c"]):
-            assert reader.read(serialize_message(JointState(name=names, position=[1.0] * len(names)))).names == tuple(names)
+            assert reader.read(serialize_message(JointState(name=names, position=[1.0] * len(names)))).names == tuple(
+                names
+            )
 
 
 @pytest.mark.parametrize("reported", [True, False])
 def test_imu_reads_as_rclpy_reads_it(reported: bool) -> None:
-    """Orientation, rate and acceleration come out; an orientation marked by -1 in its covariance is None (sensor_msgs/Imu)."""
+    """Orientation, rate and acceleration come out; an orientation marked by -1 in its covariance is None
+    (sensor_msgs/Imu).
+    """
     reader = ImuReader()
     for k in range(3):
         message = Imu()

@@ -1,4 +1,6 @@
-"""What the stack promises to others: topics, types, qualities of service, answers, stops. One stack, in lock-step, for all."""
+"""What the stack promises to others: topics, types, qualities of service, answers, stops. One stack, in lock-step, for
+all.
+"""
 
 from __future__ import annotations
 
@@ -12,22 +14,23 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from ballbal_ros.nodes.diagnostics import ERROR, OK, values_of  # noqa: E402
-from ballbal_ros.nodes.messages import load_message, seconds, to_duration  # noqa: E402
-from ballbal_ros.nodes.topics import TOPICS  # noqa: E402
-from ballbal_ros.robot.loads import Load  # noqa: E402
-from ballbal_ros.robot.whole_body import WholeBody  # noqa: E402
-from geometry_msgs.msg import TwistStamped  # noqa: E402
-from helpers.robots import shelver  # noqa: E402
-from helpers.ros_stack import Listener, listening, running_stack  # noqa: E402
-from lifecycle_msgs.msg import Transition  # noqa: E402
-from lifecycle_msgs.srv import ChangeState  # noqa: E402
-from rcl_interfaces.srv import DescribeParameters, SetParameters  # noqa: E402
-from rclpy.parameter import Parameter  # noqa: E402
-from rclpy.qos import DurabilityPolicy, ReliabilityPolicy  # noqa: E402
-from std_msgs.msg import Bool  # noqa: E402
-from std_srvs.srv import SetBool, Trigger  # noqa: E402
-from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint  # noqa: E402
+from geometry_msgs.msg import TwistStamped
+from lifecycle_msgs.msg import Transition
+from lifecycle_msgs.srv import ChangeState
+from rcl_interfaces.srv import DescribeParameters, SetParameters
+from rclpy.parameter import Parameter
+from rclpy.qos import DurabilityPolicy, ReliabilityPolicy
+from std_msgs.msg import Bool
+from std_srvs.srv import SetBool, Trigger
+from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
+
+from ballbal_ros.nodes.diagnostics import ERROR, OK, values_of
+from ballbal_ros.nodes.messages import load_message, seconds, to_duration
+from ballbal_ros.nodes.topics import TOPICS
+from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.whole_body import WholeBody
+from helpers.robots import shelver
+from helpers.ros_stack import Listener, listening, running_stack
 
 SHOULDERS = ["left_shoulder_pitch", "right_shoulder_pitch"]
 HEARD = (
@@ -221,7 +224,9 @@ def test_a_lean_plan_that_does_not_fit_is_not_acknowledged(robot: Robot) -> None
 
 
 def test_a_plan_starts_with_the_lean_and_cancelling_stops_the_arms(robot: Robot) -> None:
-    """Part of the joints suffice; arm_command starts a lead-in after lean_plan; an empty plan brings arms to rest, the ball stays."""
+    """Part of the joints suffice; arm_command starts a lead-in after lean_plan; an empty plan brings arms to rest, the
+    ball stays.
+    """
     start = robot.ball()
     report = robot.ask(plan(SHOULDERS, (1.2, [-1.2, -1.2])))
     assert report.level == OK, report.message
@@ -244,7 +249,9 @@ def test_a_plan_starts_with_the_lean_and_cancelling_stops_the_arms(robot: Robot)
 
 
 def test_a_velocity_rolls_the_ball_until_it_is_too_old(robot: Robot) -> None:
-    """cmd_vel rolls the robot along; half a second after the last message it comes to rest. odom tells the same as the truth."""
+    """cmd_vel rolls the robot along; half a second after the last message it comes to rest. odom tells the same as the
+    truth.
+    """
     start, message = robot.ball(), TwistStamped()
     message.header.frame_id = "base_footprint"
     message.twist.linear.x = 0.2
@@ -282,7 +289,9 @@ def test_parameters_tell_their_range_and_refuse_what_is_beyond(robot: Robot) -> 
 
 
 def test_an_emergency_stop_is_controlled_and_latched(robot: Robot) -> None:
-    """Stopping stays in balance and takes no plan; held by a stand the torque goes; only a reset ends it (IEC 60204-1, category 1)."""
+    """Stopping stays in balance and takes no plan; held by a stand the torque goes; only a reset ends it (IEC 60204-1,
+    category 1).
+    """
     report = robot.ask(plan(SHOULDERS, (1.0, [-0.3, -0.3])))
     assert report.level == OK, report.message
     arms = float(values_of(report)["arm_command"])

@@ -11,7 +11,7 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from helpers.ros_stack import NOD, alive, ballbal, children_of, node_process, wait_until  # noqa: E402
+from helpers.ros_stack import NOD, alive, ballbal, children_of, node_process, wait_until
 
 
 def started(domain: int, plan: Path) -> tuple[subprocess.Popen[str], dict[str, int]]:

@@ -11,11 +11,10 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from ballbal_ros.commands import headless_run  # noqa: E402
-from ballbal_ros.commands.headless import headless  # noqa: E402
-from ballbal_ros.commands.main import app  # noqa: E402, F401
-from ballbal_ros.errors import BallbalError  # noqa: E402
-from helpers.ros_stack import NOD, SHELVER, ballbal, children_of, node_process  # noqa: E402
+from ballbal_ros.commands import headless_run
+from ballbal_ros.commands.headless import headless
+from ballbal_ros.errors import BallbalError
+from helpers.ros_stack import NOD, SHELVER, ballbal, children_of, node_process
 
 
 def _edit(file: str, old: str, new: str) -> Callable[[Path], None]:

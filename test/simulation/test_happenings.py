@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.simulation.happenings import Happenings
@@ -62,7 +63,9 @@ def test_each_happens_at_its_time_and_once() -> None:
 
 
 def test_a_wrench_pushes_along_its_line_of_action() -> None:
-    """A force with the torque that it makes about a link's origin acts at a point on the same line, in the link's axes."""
+    """A force with the torque that it makes about a link's origin acts at a point on the same line, in the link's
+    axes.
+    """
     turned = np.array([[0.0, -1.0, 0.0], [1.0, 0.0, 0.0], [0.0, 0.0, 1.0]])
     robot = _Listener(turned)
     at, force = np.array([0.2, 0.0, 1.1]), np.array([0.0, 30.0, 0.0])
