@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated, Any, Optional
 
 import attrs
 import typer
@@ -201,11 +201,11 @@ def gains_command(
         "config/shelver"
     ),
     posture: Annotated[
-        Path | None, typer.Option("--posture", help="Plan file whose start gives posture and loads.")
+        Optional[Path], typer.Option("--posture", help="Plan file whose start gives posture and loads.")
     ] = None,
-    joint: Annotated[list[str] | None, typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
-    load: Annotated[list[str] | None, typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
-    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+    joint: Annotated[Optional[list[str]], typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
+    load: Annotated[Optional[list[str]], typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
+    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
     """Weights to gains, closed-loop poles, margins, and what delay the loop can bear."""
     raise typer.Exit(run_gains(robot, posture, tuple(joint or ()), tuple(load or ()), json_file))

@@ -7,7 +7,7 @@ import importlib.util
 import sys
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated, Any, Optional
 
 import typer
 from rich.console import Console
@@ -110,26 +110,26 @@ def headless_command(
     plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/shelve.yaml.")],
     robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
     compensation: Annotated[
-        list[str] | None,
+        Optional[list[str]],
         typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it."),
     ] = None,
     seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
     repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
     truth: Annotated[
-        list[str] | None,
+        Optional[list[str]],
         typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
     ] = None,
     lead_in: Annotated[
-        float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
+        Optional[float], typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
     ] = None,
     clock: Annotated[
         str, typer.Option("--clock", help="lock-step: as fast as it goes, the same to the bit; real-time.")
     ] = "lock-step",
     namespace: Annotated[str, typer.Option("--namespace", help="ROS namespace of all nodes.")] = "",
     domain: Annotated[
-        int | None, typer.Option("--domain", min=0, help="ROS domain; ROS_DOMAIN_ID, or one of its own, without it.")
+        Optional[int], typer.Option("--domain", min=0, help="ROS domain; ROS_DOMAIN_ID, or one of its own, without it.")
     ] = None,
-    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
     """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this
     machine only.

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated, Any, Optional
 
 import attrs
 import typer
@@ -170,11 +170,11 @@ def _reserve_rows(found: Inspection) -> list[tuple[str, str]]:
 def inspect_command(
     robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
     posture: Annotated[
-        Path | None, typer.Option("--posture", help="Plan file whose start gives posture and loads.")
+        Optional[Path], typer.Option("--posture", help="Plan file whose start gives posture and loads.")
     ] = None,
-    joint: Annotated[list[str] | None, typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
-    load: Annotated[list[str] | None, typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
-    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+    joint: Annotated[Optional[list[str]], typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
+    load: Annotated[Optional[list[str]], typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
+    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
     """What this robot is, at a posture: masses, mass centre, how fast it falls, and what it has in reserve."""
     found = inspect_robot(robot, posture, tuple(joint or ()), tuple(load or ()))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Optional
 
 import typer
 from rich.console import Console
@@ -101,21 +101,21 @@ def rehearse_command(
     plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/reach.yaml.")],
     robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
     compensation: Annotated[
-        list[str] | None,
+        Optional[list[str]],
         typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it."),
     ] = None,
     seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
     repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
     truth: Annotated[
-        list[str] | None,
+        Optional[list[str]],
         typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
     ] = None,
     lead_in: Annotated[
-        float | None, typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
+        Optional[float], typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
     ] = None,
-    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
     figure: Annotated[
-        Path | None, typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")
+        Optional[Path], typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")
     ] = None,
 ) -> None:
     """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan."""
