@@ -10,6 +10,7 @@ from __future__ import annotations
 
 import math
 import re
+import reprlib
 from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 from typing import Any, TypeVar, cast
@@ -119,39 +120,49 @@ def check_value(declared: Declaration, value: Any, source: str) -> Any:
 
 def _check_array(declared: Declaration, value: Any, refuse: Callable[[str, str], ParameterError]) -> list[Any]:
     if not hasattr(value, "__iter__") or isinstance(value, (str, bytes, Mapping)):
-        raise refuse(f"is {value!r}", f"it takes a list of {declared.kind[:-6]}s")
+        raise refuse(f"is {shown(value)}", f"it takes a list of {declared.kind[:-6]}s")
     items = [_check_scalar(declared, declared.kind[:-6], item, refuse) for item in value]
     if declared.length is not None and len(items) != declared.length:
         raise refuse(f"has {len(items)} numbers", f"it takes {declared.length}")
     if declared.kind == "string_array" and len(set(items)) != len(items):
-        raise refuse(f"is {items!r}", "each name may stand once")
+        raise refuse(f"is {shown(items)}", "each name may stand once")
     return items
 
 
 def _check_scalar(declared: Declaration, kind: str, value: Any, refuse: Callable[[str, str], ParameterError]) -> Any:
     if kind == "double":
         if isinstance(value, bool) or not isinstance(value, (int, float)):
-            raise refuse(f"is {value!r}", f"it takes a number in {declared.unit}")
+            raise refuse(f"is {shown(value)}", f"it takes a number in {declared.unit}")
         if isinstance(value, int):
-            raise refuse(f"is the integer {value}", f"ROS takes no integer for a number with decimals: write {value}.0")
+            raise refuse(
+                f"is the integer {shown(value)}",
+                f"ROS takes no integer for a number with decimals: write {shown(value)}.0",
+            )
         if not math.isfinite(value):
             raise refuse(f"is {value}", f"it takes a finite number in {declared.unit}")
     elif kind == "integer":
         if isinstance(value, bool) or not isinstance(value, int):
-            raise refuse(f"is {value!r}", "it takes a whole number")
+            raise refuse(f"is {shown(value)}", "it takes a whole number")
     elif kind == "bool":
         if not isinstance(value, bool):
-            raise refuse(f"is {value!r}", "it takes true or false")
+            raise refuse(f"is {shown(value)}", "it takes true or false")
     elif not isinstance(value, str):
-        raise refuse(f"is {value!r}", "it takes text")
+        raise refuse(f"is {shown(value)}", "it takes text")
     if declared.choices and value not in declared.choices:
-        raise refuse(f"is {value!r}", f"it takes one of {', '.join(declared.choices)}")
+        raise refuse(f"is {shown(value)}", f"it takes one of {', '.join(declared.choices)}")
     if kind in ("double", "integer"):
         below = declared.low is not None and value < declared.low
         if below or (declared.high is not None and value > declared.high):
             unit = "" if declared.unit == "-" else f" {declared.unit}"
-            raise refuse(f"is {value:g}{unit}", f"its range is {declared.range_text}{unit}")
+            number = f"{value:g}" if abs(value) < 1e15 else shown(value)
+            raise refuse(f"is {number}{unit}", f"its range is {declared.range_text}{unit}")
     return value
+
+
+def shown(value: Any) -> str:
+    """A value as an error shows it: not more of it than a line has room for."""
+    text = reprlib.Repr().repr(value)
+    return text if len(text) <= 80 else f"{text[:77]}..."
 
 
 def build(cls: type[T], flat: Mapping[str, Any], source: str) -> T:
@@ -204,8 +215,20 @@ def flatten(parameters: Any, prefix: str = "") -> dict[str, Any]:
     return flat
 
 
+_LARGEST = 1 << 20
+
+
 class _Loader(yaml.SafeLoader):
-    """YAML's safe loader, which reads 1e-3 as a number and refuses a key that stands twice."""
+    """YAML's safe loader, which reads 1e-3 as a number, and refuses a key that stands twice and aliases: ROS reads no
+    file with aliases, and a few lines of them can stand for more than fits into memory.
+    """
+
+    def compose_node(self, parent: yaml.Node | None, index: Any) -> yaml.Node | None:
+        """A node as written."""
+        event = self.peek_event()  # type: ignore[no-untyped-call]
+        if isinstance(event, yaml.AliasEvent):
+            raise yaml.composer.ComposerError(None, None, f"an alias (*{event.anchor})", cast(Any, event.start_mark))
+        return super().compose_node(parent, index)
 
 
 _Loader.add_implicit_resolver(  # type: ignore[no-untyped-call]
@@ -218,7 +241,7 @@ def _mapping_once(loader: _Loader, node: yaml.MappingNode) -> dict[Any, Any]:
     for key_node, value_node in node.value:
         key = loader.construct_object(key_node, deep=True)  # type: ignore[no-untyped-call]
         if not isinstance(key, str):
-            raise yaml.constructor.ConstructorError(None, None, f"{key!r} is no name", key_node.start_mark)
+            raise yaml.constructor.ConstructorError(None, None, f"{shown(key)} is no name", key_node.start_mark)
         if key in mapping:
             raise yaml.constructor.ConstructorError(None, None, f"{key} stands twice", key_node.start_mark)
         mapping[key] = loader.construct_object(value_node, deep=True)  # type: ignore[no-untyped-call]
@@ -231,6 +254,8 @@ _Loader.add_constructor("tag:yaml.org,2002:map", _mapping_once)
 def read_yaml(path: Path) -> Any:
     """Read a YAML file safely. Raises :class:`ParameterError` in one line where it can't be read or is no YAML."""
     try:
+        if path.stat().st_size > _LARGEST:
+            raise ParameterError(str(path), f"is larger than {_LARGEST >> 20} MiB", "give a parameter file or a plan")
         text = path.read_text(encoding="utf-8")
     except (OSError, UnicodeDecodeError) as error:
         reason = error.strerror if isinstance(error, OSError) and error.strerror else "it is not UTF-8 text"
@@ -272,7 +297,7 @@ def parameters_of(document: Any, source: str) -> dict[str, Any]:
 
 def _flatten_mapping(mapping: Any, prefix: str, flat: dict[str, Any], source: str) -> None:
     if not isinstance(mapping, Mapping):
-        raise ParameterError(source, f"ros__parameters is {mapping!r}", "it takes names and values")
+        raise ParameterError(source, f"ros__parameters is {shown(mapping)}", "it takes names and values")
     for key, value in mapping.items():
         if isinstance(value, Mapping):
             _flatten_mapping(value, f"{prefix}{key}.", flat, source)

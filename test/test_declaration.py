@@ -1,10 +1,13 @@
 """What is wrong in a parameter file is said in one line that names file, key, what was found and what would do."""
 
+import math
+import random
 from pathlib import Path
 
 import attrs
 import pytest
 
+from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.declaration import (
     build,
     check_value,
@@ -175,3 +178,120 @@ def test_the_demo_robot_survives_a_round_trip():
     """The demo robot's file gives the same parameters again after flattening and building."""
     parameters = load(RobotParameters, CONFIG / "shelver" / "robot.yaml")
     assert build(RobotParameters, flatten(parameters), "again") == parameters
+
+
+BOMB = """/**:
+  ros__parameters:
+    a: &a {x: 1.0, y: 1.0, z: 1.0}
+    b: &b {x: *a, y: *a, z: *a}
+    c: {x: *b, y: *b, z: *b}
+"""
+
+
+@pytest.mark.parametrize(
+    ("text", "words"),
+    [
+        (BOMB, ("line 4", "alias")),
+        ("/**:\n  ros__parameters:\n    a: !!python/object/apply:os.getcwd []\n", ("line 3", "constructor")),
+        ("/**:\n  ros__parameters:\n    a: !!python/name:os.system\n", ("line 3",)),
+        ("/**:\n  ros__parameters:\n    a: 2020-13-45\n", ("month",)),
+        (f"/**:\n  ros__parameters:\n    a: {'[' * 3000}\n", ()),
+        (f"# {'x' * (1 << 20)}\n", ("larger than 1 MiB",)),
+    ],
+)
+def test_a_file_can_do_nothing_but_be_read(tmp_path: Path, text: str, words: tuple[str, ...]):
+    """Files that would run code, or grow beyond memory or stack, are refused in one line and do nothing else."""
+    with pytest.raises(ParameterError) as caught:
+        read_parameter_file(write(tmp_path, text))
+    line = str(caught.value)
+    assert "\n" not in line
+    for word in words:
+        assert word in line
+
+
+def spoilt(text: str, rng: random.Random) -> str:
+    """A file's text with some of what goes wrong in an editor, on a disk, or in somebody's mind."""
+    for _ in range(rng.randint(1, 4)):
+        lines = text.splitlines(keepends=True) or [""]
+        at, where = rng.randrange(len(lines)), rng.randrange(len(text) + 1)
+        kind = rng.randrange(7)
+        if kind == 0:
+            text = text[:where] + rng.choice(SIGNS) + text[where:]
+        elif kind == 1:
+            text = text[:where] + text[where + rng.randint(1, 30) :]
+        elif kind == 2:
+            text = "".join(lines[:at] + lines[at + 1 :])
+        elif kind == 3:
+            text = "".join([*lines[:at], lines[at], lines[at], *lines[at + 1 :]])
+        elif kind == 4:
+            lines[at] = f"{lines[at].partition(':')[0]}: {rng.choice(VALUES)}\n"
+            text = "".join(lines)
+        elif kind == 5:
+            text = text[:where]
+        else:
+            lines[at] = " " * rng.randrange(9) + lines[at].lstrip()
+            text = "".join(lines)
+    return text
+
+
+SIGNS = [
+    "{",
+    "}",
+    "[",
+    "]",
+    ":",
+    "- ",
+    "&a ",
+    "*a",
+    "!!set",
+    "%",
+    "\t",
+    "\x00",
+    "\ud7ff",
+    "\u202e",
+    "'",
+    '"',
+    "|",
+    "> ",
+    "#",
+    "? ",
+]
+VALUES = [
+    ".nan",
+    ".inf",
+    "-1e999",
+    "1e400",
+    "0x" + "f" * 300,
+    "9" * 5000,
+    "1:30",
+    "2020-02-30",
+    "~",
+    "yes",
+    "[]",
+    "{}",
+    "[[1.0]]",
+    "''",
+]
+
+
+@pytest.mark.parametrize("count", [300, pytest.param(10_000, marks=pytest.mark.prove)])
+def test_whatever_becomes_of_a_file_it_is_read_or_refused_in_one_line(tmp_path: Path, count: int):
+    """Spoilt copies of the files give finite, checked values, or one line that names the file; never a traceback."""
+    rng = random.Random(6)
+    classes = {"robot.yaml": RobotParameters, "balance.yaml": BalanceParameters}
+    texts = {name: (CONFIG / "shelver" / name).read_text(encoding="utf-8") for name in classes}
+    read = 0
+    for _ in range(count):
+        name = rng.choice(list(classes))
+        path = tmp_path / name
+        path.write_text(spoilt(texts[name], rng), encoding="utf-8", errors="surrogatepass")
+        try:
+            parameters = load(classes[name], path)
+        except ParameterError as error:
+            line = str(error)
+            assert "\n" not in line and str(path) in line and len(line) < 2000
+        else:
+            read += 1
+            for value in flatten(parameters).values():
+                assert not isinstance(value, float) or math.isfinite(value)
+    assert 0 < read < count
