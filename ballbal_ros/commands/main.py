@@ -6,7 +6,7 @@ from __future__ import annotations
 
 import os
 import sys
-from typing import Any
+from typing import Any, get_type_hints
 
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
@@ -24,10 +24,15 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     help="Balance and arm compensation for a mobile manipulator that stands on one rolling ball.",
 )
-app.command("inspect")(inspect_command)
-app.command("gains")(gains_command)
-app.command("rehearse")(rehearse_command)
-app.command("headless")(headless_command)
+for _name, _command in (
+    ("inspect", inspect_command),
+    ("gains", gains_command),
+    ("rehearse", rehearse_command),
+    ("headless", headless_command),
+):
+    # typer 0.9, Ubuntu 24.04's, does not look behind annotations that are text.
+    _command.__annotations__ = get_type_hints(_command, include_extras=True)
+    app.command(_name)(_command)
 
 
 # The base of all complaints about a command line; typer carries it, but does not name it in every version.

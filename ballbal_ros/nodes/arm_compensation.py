@@ -142,8 +142,9 @@ class ArmCompensationNode(Node):
     def _go_on(self) -> None:
         while self._waiting and self._asked is None:
             message, deadline = self._waiting[0]
-            if not self._state and time.monotonic() < deadline:
-                # The balance node has not been met yet: its state may be on its way.
+            unknown = not self._state or not self._arms.complete
+            if unknown and time.monotonic() < deadline:
+                # Balance or arms have not been heard of yet: their messages may be on their way.
                 return
             self._waiting.popleft()
             stamp = stamp_text(message.header.stamp)

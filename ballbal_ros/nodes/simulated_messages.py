@@ -32,8 +32,8 @@ class SimulatedMessages:
         topics = ("/clock", "joint_states", "drive_states", imu_topic, "ground_truth")
         self._publishers = [publisher(node, topic) for topic in topics]
 
-    def publish(self, robot: SimulatedRobot, ns: int) -> None:
-        """Publish the instant ``ns``, in ns, that the robot has come to."""
+    def publish(self, robot: SimulatedRobot, ns: int, again: bool = False) -> None:
+        """Publish the instant ``ns``, in ns, that the robot has come to; ``again`` where it has been published before."""
         measured = robot.measurement()
         arms, drive, imu = self._arms, self._drive, self._imu.values
         arms.position[:], arms.velocity[:] = measured.arm_position, robot.arm_rate
@@ -43,8 +43,8 @@ class SimulatedMessages:
         imu[13:16], imu[25:28] = measured.imu_rate, measured.imu_acceleration
         for sender, message in zip(self._publishers, (self._clock, arms, drive, self._imu), strict=False):
             sender.publish(message.serialised(ns))
-        # The answer is under way: what is for the record only costs no time now. Time 0 may be said more than once.
-        if ns > 0:
+        # The answer is under way: what is for the record only costs no time now. It comes once for each instant.
+        if not again:
             self.record(robot, ns)
 
     def record(self, robot: SimulatedRobot, ns: int) -> None:

@@ -84,7 +84,7 @@ class SimulatedRobotNode(Node):
         steady = RosClock(clock_type=ClockType.STEADY_TIME)
         self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
         self._pacing = self.create_timer(self._period, self._pace, clock=steady, autostart=False)
-        self._publish()
+        self._messages.publish(self._robot, 0, again=True)
 
     def _make_robot(self, parameters: SimulationParameters) -> SimulatedRobot:
         own = self._own
@@ -170,15 +170,16 @@ class SimulatedRobotNode(Node):
         self._messages.publish(self._robot, self._ns)
 
     def _attend(self) -> None:
-        """By the wall clock: say t = 0 again until it is answered, and end if somebody stays silent."""
+        """By the wall clock: say what is so now again until it is answered, and end if somebody stays silent."""
         if self._ended is not None:
             if time.monotonic() - self._ended[1] > _LINGER:
                 self.exit_status = self._ended[0]
             return
         if self._started is not None:
             return
-        if self._ns == 0 and self._effort is None:
-            self._publish()
+        if time.monotonic() - self._waiting_since > _ATTEND:
+            # Somebody may have come to listen only now.
+            self._messages.publish(self._robot, self._ns, again=True)
         self._go_on()
         if self._ended is None and time.monotonic() - self._waiting_since > self._own.answer_timeout:
             self._end(1, self._who_is_silent())
