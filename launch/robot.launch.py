@@ -2,6 +2,9 @@
 
 Balance is a lifecycle node and stays unconfigured: a person configures and activates it with the robot upright on its
 stand.
+
+This program drives a heavy machine that falls when it loses power, and is no safety function. Do the machine's own risk
+assessment, follow local codes, have what needs a licence done by those who hold one; keep people out of its fall.
 """
 
 from pathlib import Path
