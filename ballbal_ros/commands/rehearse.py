@@ -118,7 +118,10 @@ def rehearse_command(
         Optional[Path], typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")
     ] = None,
 ) -> None:
-    """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan."""
+    """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan.
+
+    A good rehearsal is no proof for a real machine, which has its own risk assessment, local codes and licensed practice.
+    """
     console = Console()
     runs = rehearse(
         plan, robot, asked_kinds(compensation), range(seed, seed + repeat), tuple(truth or ()), lead_in, console, figure
