@@ -58,8 +58,9 @@ class BalanceMessages:
         """
         self._command.effort[:] = effort
         self._to_drive.publish(self._command.serialised(ns))
-        self._effort.data = array.array("d", effort.tobytes())
-        self._to_controllers.publish(self._effort)
+        if self._to_controllers.get_subscription_count() > 0:
+            self._effort.data = array.array("d", effort.tobytes())
+            self._to_controllers.publish(self._effort)
 
     def odometry(self, ns: int, loop: BalanceLoop) -> None:
         """Publish where the loop thinks the ball is, and tf down to ``base_link``."""
