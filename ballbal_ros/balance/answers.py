@@ -110,7 +110,7 @@ _ROWS = (
     Answer(DRIVE, "silent", "no sample with a newer stamp", _BALL_UNSEEN, _LOOP),
     Answer(DRIVE, "late", "older than drive_timeout when it comes", _BALL_UNSEEN, _LOOP),
     Answer(DRIVE, "not finite", "NaN or infinity among the angles", _BALL_UNSEEN, _LOOP),
-    Answer(DRIVE, "encoders absurd", "two encoders or more jump or stick at once", _BALL_UNSEEN, _LOOP),
+    Answer(DRIVE, "encoders absurd", "two encoders or more jump, stick or shake at once", _BALL_UNSEEN, _LOOP),
     Answer(DRIVE, "names", "an actuator missing, named twice, or not as many angles as names", _BALL_UNSEEN, _NODE),
     Answer(SENSES, "blind", "neither could be used", _steps((0.0, COAST), (0.1, STOP), (0.5, TRIP)), _LOOP),
     Answer(
@@ -164,11 +164,12 @@ _ROWS = (
     ),
     Answer(CLOCK, "standing still", "the same stamp again: a duplicate", _REFUSED, _LOOP),
     Answer(CLOCK, "backwards", "an older stamp: reordered messages", _REFUSED, _LOOP),
+    Answer(CLOCK, "ahead", "more than 0.1 s ahead, for one stamp or two", _REFUSED, _LOOP),
     Answer(CLOCK, "late tick", "up to 0.1 s since the tick before", _steps((0.0, COAST)), _LOOP),
     Answer(
         CLOCK,
         "jump",
-        "more than 0.1 s forward, or three stamps in order behind the last: plans are forgotten",
+        "three stamps in order from elsewhere: time goes on from there, plans are forgotten",
         _steps((0.0, STOP)),
         _LOOP,
     ),

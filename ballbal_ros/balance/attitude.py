@@ -143,6 +143,14 @@ class Attitude:
         self._set_rates(body_rate, 0.0, 0.0, 0.0)
         self._age, self._followed = _SETTLING, True
 
+    def bridge(self, lean_rate: tuple[float, float], turning: float) -> None:
+        """Nothing was measured at this tick: go on with the rates that are expected, rad/s."""
+        period = self._period
+        self.roll += period * lean_rate[0]
+        self.pitch += period * lean_rate[1]
+        self.heading += period * turning
+        self.rates = (*lean_rate, turning)
+
     def coast(self, lean: tuple[float, float], lean_rate: tuple[float, float], heading: float, turning: float) -> None:
         """Nothing was measured: take lean, heading (rad) and their rates (rad/s) as they are expected to be."""
         self.roll, self.pitch = lean

@@ -43,7 +43,7 @@ class LoopClock:
         self._in_order = self._in_order + 1 if follows else 1
         self._elsewhere = stamp
         if self._in_order < _IN_ORDER:
-            self.wrong = "backwards" if not passed > 0.0 else "jump ahead"
+            self.wrong = "backwards" if not passed > 0.0 else "ahead"
             return 0
         self.now, self._in_order, self.wrong = stamp, 0, "jump"
         return 1

@@ -14,6 +14,10 @@ from ballbal_ros.robot.description import RobotDescription
 Triple = tuple[float, float, float]
 
 _SOON = 1e-9
+_GAP = 25
+_SETTLING = 50
+_SHAKES = 0.0015
+_SHARE = 0.1
 _STILL_TICKS = 5
 _STILL_STEPS = 20.0
 _STILL_ANGLE = 2e-3
@@ -32,7 +36,8 @@ class Encoders:
     def __init__(self, description: RobotDescription, parameters: BalanceParameters) -> None:
         drive = description.drive
         self._late, self._most = parameters.drive_timeout, parameters.limits.wheel_jump
-        self._fastest = 1.5 * drive.rate_limit
+        self._fastest: Array = 1.5 * drive.rate_limit
+        self._start = parameters.limits.wheel_start
         self._names = drive.names
         self._rate_map = np.ascontiguousarray(drive.rate_map)
         self._spin_map = np.ascontiguousarray(drive.spin_map)
@@ -49,6 +54,10 @@ class Encoders:
         self.turn: Triple = (0.0, 0.0, 0.0)
         self.rate: Array = np.zeros(len(drive.names))
         self.one_bad, self.bad_name = "", ""
+        self.gap = False
+        self._settling = self._lost = 0
+        self._shaking = [0.0] * len(drive.names)
+        self._moved = [0.0] * len(drive.names)
 
     def restart(self) -> None:
         """The clock jumped, or it begins anew: the next sample is where it starts from."""
@@ -56,6 +65,11 @@ class Encoders:
         self._stuck.clear()
         self._quiet = [0] * len(self._names)
         self._missed = [0.0] * len(self._names)
+
+    def pass_over(self, expected: Triple) -> None:
+        """A tick without a look; ``expected`` as there."""
+        self._expected += expected
+        self._waited += 1
 
     def look(self, measured: Measurement, now: float, expected: Triple | None, period: float) -> str:
         """What is wrong with this tick's drive data as a whole; "" for nothing.
@@ -66,7 +80,7 @@ class Encoders:
         if expected is not None:
             self._expected += expected
         self._waited += 1
-        self.one_bad = ""
+        self.one_bad, self.gap = "", False
         stamp = measured.stamp if measured.drive_stamp is None else measured.drive_stamp
         if not stamp > self._stamp + _SOON:
             return "silent"
@@ -84,13 +98,20 @@ class Encoders:
             return ""
         moved = angle - last
         self.rate = moved / (ticks * period)
+        if ticks > _GAP and expected is not None:
+            self._gap(long=True)
+            return ""
         bad = self._bad(moved, waited if expected is not None else None, ticks, period)
+        if len(bad) > 1:
+            self._lost += 1
+            return "encoders absurd"
+        if self._lost:
+            self._gap(long=self._lost > _GAP)
+            return ""
         if not bad:
             x, y, z = (self._spin_map @ moved).tolist()
             self.turn, self._spin = (x, y, z), z / ticks
             return ""
-        if len(bad) > 1:
-            return "encoders absurd"
         (index,) = bad
         self.one_bad, self.bad_name = bad[index], self._names[index]
         moved[index] = 0.0
@@ -98,6 +119,12 @@ class Encoders:
         x, y, z = (self._without[index] @ np.append(moved, z)).tolist()
         self.turn = (x, y, z)
         return ""
+
+    def _gap(self, long: bool) -> None:
+        """How it moved meanwhile can't be told; from here on it can."""
+        self.gap, self._lost = True, 0
+        if long:
+            self._settling, self._moved = _SETTLING, [0.0] * len(self._names)
 
     def _bad(self, moved: Array, expected: Array | None, ticks: int, period: float) -> dict[int, str]:
         """What is wrong with which encoder."""
@@ -112,7 +139,15 @@ class Encoders:
         # The ball may spin, but not all at once.
         spin = (self._by_spin * (self._spin * ticks - float(expected[2]))).tolist()
         most = self._most * (1.0 + 0.1 * (ticks - 1))
+        last, self._moved = self._moved, [d / ticks for d in moved.tolist()]
+        if self._settling:
+            # It has only just been heard again: what was expected meanwhile may be far off.
+            self._settling -= 1
+            return {i: "jump" for i, d in enumerate(self._moved) if abs(d) > self._fastest[i] * period}
+        shaking, frozen = self._shaking, not any(self._moved)
         for i, d in enumerate(moved.tolist()):
+            shaken = abs(d / ticks - last[i])
+            shaking[i] += _SHARE * (min(shaken, 3.0 * _SHAKES) - shaking[i])
             if d == 0.0:
                 self._quiet[i] += 1
                 self._missed[i] += due[i]
@@ -128,8 +163,10 @@ class Encoders:
                     self._stuck.discard(i)
                     bad[i] = "stuck"
                     continue
-            if not abs(d - due[i] - spin[i]) <= most:
+            if not abs(d - due[i] - spin[i]) <= most or not shaken <= self._start or shaking[i] > _SHAKES:
                 bad[i] = "jump"
+        if bad and frozen and min(self._quiet) >= _STILL_TICKS:
+            return {i: "stuck" for i in range(len(self._names))}
         return bad
 
 

@@ -201,8 +201,10 @@ class BalanceLoop:
         """A tick that nobody asked for: the drive went on with what it had."""
         row = self.reference.update(stamp, self.senses.arm_position)
         if self.guard.sends:
+            self.senses.pass_over(self._expectation(row.tolist()))
             self.controller.correct(None)
             self.controller.predict(self.torque - row[10:13])
+            self.judge.begin()
 
     def _answer(self, measured: Measurement, now: float) -> Array:
         while self._load_changes and self._load_changes[0][0] <= now + 1e-9:
@@ -220,14 +222,15 @@ class BalanceLoop:
         row = self.reference.update(now, senses.arm_position)
         reference: list[float] = row.tolist()
         at_rest = self.supported and self.guard.state == STANDBY
-        expected = None
-        if self.guard.sends:
-            expected = self._expected
-            still = self.guard.state == ENGAGING
-            before, prior = self.controller.estimate.tolist(), self.controller.prior.tolist()
-            expected.fill(reference, before, prior, self.period, still, self.output.calm)
-        senses.look(measured, now, expected, at_rest)
+        senses.look(measured, now, self._expectation(reference) if self.guard.sends else None, at_rest)
         return self._act(now, reference)
+
+    def _expectation(self, reference: list[float]) -> Expected:
+        """What reference and model expect at this tick."""
+        before, prior = self.controller.estimate.tolist(), self.controller.prior.tolist()
+        held = self.guard.state == ENGAGING
+        self._expected.fill(reference, before, prior, self.period, held, self.output.calm)
+        return self._expected
 
     def _act(self, now: float, reference: list[float]) -> Array:
         controller, guard, senses, attitude = self.controller, self.guard, self.senses, self.attitude
@@ -249,7 +252,7 @@ class BalanceLoop:
             controller.reset()
             self.judge.begin()
             return self.output.none()
-        if senses.imu or senses.drive:
+        if senses.lean_known or senses.drive:
             away_x, away_y = self._off_station(reference)
             off_heading = (senses.heading - reference[8] + math.pi) % _TURN - math.pi
             if not self.output.gives_heading:
@@ -260,7 +263,7 @@ class BalanceLoop:
             self.judge.look_at_actuators(senses, reference, off, off_rates)
         if share < 1.0:
             controller.forget_moment()
-        controller.correct(self._deviation, senses.imu, senses.drive)
+        controller.correct(self._deviation, senses.lean_known, senses.drive and not senses.encoders.gap)
         return self._efforts(controller.torque(), share, reference)
 
     def _missing(self, off: tuple[float, float], off_rates: tuple[float, float]) -> str:

@@ -247,6 +247,14 @@ class GuardParameters:
         high=100.0,
         meaning="how far gyro and drive may differ in the rate of the heading over 0.1 s, and be believed",
     )
+    wheel_start: float = parameter(
+        "double",
+        0.004,
+        unit="rad",
+        low=1e-5,
+        high=100.0,
+        meaning="how far an actuator's turn in a tick may be from that in the tick before, and be believed",
+    )
     wheel_jump: float = parameter(
         "double",
         0.03,

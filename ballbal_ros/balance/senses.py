@@ -20,6 +20,9 @@ from ballbal_ros.robot.description import RobotDescription
 
 _TURNED = 0.02
 _SPIN_SHARE = 0.02
+_BRIDGED = 10
+_QUARANTINE = 10
+_ABSURD = ("jump", "not finite", "saturated")
 
 
 @attrs.define
@@ -90,10 +93,12 @@ class Senses:
         self.imu = self.drive = self.arms = False
         self.ball = [0.0, 0.0]
         self.moved = self.moved_before = (0.0, 0.0)
+        self._guessed = [0.0, 0.0]
         self._heading_zero = 0.0
         self._drive_heading = 0.0
         self._last_lean = (0.0, 0.0)
         self._seen_lean = (0.0, 0.0)
+        self._unseen, self._quarantine, self._quarantined_for = 0, 0, ""
         self.spin_held = True
         self._spun, self._most_spun = 0.0, parameters.limits.turning * self.period
 
@@ -157,6 +162,7 @@ class Senses:
                 wrong = "tilt"
             elif expected is not None and self._jumps(body_rate, expected):
                 wrong = "jump"
+        wrong = self._quarantined(wrong)
         self.imu = not wrong
         turning = body_rate[2] if self.imu or expected is None else expected.turning
         missing = self.encoders.look(measured, now, self._relative(expected, turning), self.period)
@@ -170,9 +176,12 @@ class Senses:
             self._attitude(measured, now, body_rate, expected, at_rest)
         elif expected is not None:
             heading = attitude.heading - turned[2] if self.drive else attitude.heading + self.period * expected.turning
-            attitude.coast(expected.lean, expected.lean_rate, heading, expected.turning)
+            if self._unseen <= _BRIDGED:
+                attitude.bridge(expected.lean_rate, expected.turning)
+            else:
+                attitude.coast(expected.lean, expected.lean_rate, heading, expected.turning)
         self._last_lean = attitude.roll, attitude.pitch
-        self.moved_before, self.moved = self.moved, self._roll(turned, before) if self.drive else (0.0, 0.0)
+        self.moved_before, self.moved = self.moved, self._go(turned, before, expected)
         if self.imu and self.drive and expected is not None and self._imu.acceleration is not None:
             rates = attitude.rates
             self.tilt.see(attitude.in_base(self._imu.acceleration), self._last_lean, (rates[0], rates[1]), self.moved)
@@ -196,6 +205,30 @@ class Senses:
         if wrong or not self._watch.quiet:
             self._watch.see(now, HEADING, wrong)
         return (body_rate[0], body_rate[1], -turned / self.period) if wrong else body_rate
+
+    def pass_over(self, expected: Expected) -> None:
+        """A tick at which nobody looked: go on with what is expected."""
+        self.attitude.bridge(expected.lean_rate, expected.turning)
+        self._last_lean = self.lean
+        relative = self._relative(expected, expected.turning)
+        if relative is not None:
+            self.encoders.pass_over(relative)
+        self.tilt.restart()
+
+    def _quarantined(self, wrong: str) -> str:
+        """After absurd IMU data, good ones must come for a while before they are believed: among noise some are always near."""
+        if wrong in _ABSURD:
+            self._quarantine, self._quarantined_for = _QUARANTINE, wrong
+        elif self._quarantine > 0 and not wrong:
+            self._quarantine -= 1
+            wrong = self._quarantined_for
+        self._unseen = self._unseen + 1 if wrong else 0
+        return wrong
+
+    @property
+    def lean_known(self) -> bool:
+        """Whether the lean has been measured, or no longer ago than the rates expected can bridge."""
+        return self._unseen <= _BRIDGED
 
     def _jumps(self, body_rate: Triple, expected: Expected) -> bool:
         """Whether the gyro is further from what is expected than anything but a fault takes it."""
@@ -252,6 +285,25 @@ class Senses:
         roll_rate, pitch_rate, _ = attitude.rates
         off = math.hypot(lean[0] - attitude.roll - period * roll_rate, lean[1] - attitude.pitch - period * pitch_rate)
         return not off < _TURNED
+
+    def _go(self, turned: Triple, before: tuple[float, float], expected: Expected | None) -> tuple[float, float]:
+        """Move the ball; how far, in heading axes, m. After long without the drive the way meanwhile is that expected."""
+        if self.drive and not self.encoders.gap:
+            self._guessed = [0.0, 0.0]
+            return self._roll(turned, before)
+        if expected is None:
+            return 0.0, 0.0
+        ahead, aside = self.period * expected.velocity[0], self.period * expected.velocity[1]
+        sin, cos = math.sin(self.heading), math.cos(self.heading)
+        self._guessed[0] += cos * ahead - sin * aside
+        self._guessed[1] += sin * ahead + cos * aside
+        if self.drive:
+            # Whatever the encoders count, the place is as good as any: nothing is to jump.
+            self.ball[0] += self._guessed[0]
+            self.ball[1] += self._guessed[1]
+            self._guessed = [0.0, 0.0]
+            self._seen_lean = self.attitude.roll, self.attitude.pitch
+        return ahead, aside
 
     def _roll(self, turned: Triple, before: tuple[float, float]) -> tuple[float, float]:
         """Move the ball by what the encoders saw, and by how the body has leaned meanwhile; how far, in heading axes,

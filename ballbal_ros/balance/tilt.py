@@ -20,7 +20,7 @@ _WINDOW = 0.1
 
 
 class TiltWitness:
-    """Adds up tick by tick; ``off`` is the last window's ε (about y, about x), rad, ``agrees`` what follows from it."""
+    """Adds up tick by tick; ``off`` is the last window's ε (about y, about x), rad, ``agrees`` whether not two were too far off in a row."""
 
     def __init__(self, description: RobotDescription, parameters: BalanceParameters) -> None:
         self._period = parameters.loop.period
@@ -79,7 +79,6 @@ class TiltWitness:
         weight = 1.0 / (GRAVITY * self._period * self._count)
         x = weight * (self._period * self._force[0] - velocity[0] + begun[0])
         y = weight * (self._period * self._force[1] - velocity[1] + begun[1])
-        x, y = 0.5 * (x + self.off[0]), 0.5 * (y + self.off[1])
-        self.off = x, y
-        if not math.hypot(x, y) < self._most:
+        before, self.off = self.off, (x, y)
+        if not math.hypot(x, y) < self._most and not math.hypot(*before) < self._most:
             self.agrees = False

@@ -66,14 +66,14 @@ class FaultyRobot:
             arm_stamp=true.stamp,
             drive_angle=true.drive_angle + self.slipped,
         )
-        fault = self.fault
+        fault, as_it_was = self.fault, attrs.evolve(told)
         if self._change is not None and (fault.on(true.stamp) or self._shift):
             if self._first is None:
                 self._first = self._past[-1] if self._past else told
             changed = self._change(self, told)
         else:
             changed = told
-        self._past.append(told)
+        self._past.append(as_it_was)
         return changed
 
     def effort(self, commanded: Array, now: float) -> Array:
