@@ -9,7 +9,7 @@ from setuptools import find_packages, setup
 
 PACKAGE = "ballbal_ros"
 SHARE = f"share/{PACKAGE}"
-NODES = ("whole_body_kinematics", "arm_compensation", "balance", "simulated_robot")
+NODES = ("whole_body_kinematics", "arm_compensation", "balance", "config_watch", "simulated_robot")
 INTERFACES = (
     "builtin-interfaces",
     "diagnostic-msgs",

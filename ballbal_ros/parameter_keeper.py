@@ -73,7 +73,7 @@ class Keeper:
                     outcomes.append(self._take_in(file, whole=False))
             except BallbalError as error:
                 outcomes.append(error)
-        for file, declared in _changeable().items():
+        for file, declared in changeable().items():
             self._notice(file, self._nodes.get(file, list(declared)) or {})
         self._keep("start", now)
         return outcomes
@@ -89,7 +89,7 @@ class Keeper:
         new, before = read_values(path), self.files.files.get(file, {})
         asked = {change.name: change for change in edits(path, before, new)}
         if whole:
-            for name, declared in _changeable().get(file, {}).items():
+            for name, declared in changeable().get(file, {}).items():
                 asked.setdefault(name, Change(declared, new[name], new[name]))
         running = self._nodes.get(file, list(asked)) if asked else {}
         changes = [attrs.evolve(c, old=(running or {}).get(c.name, c.old)) for c in asked.values()]
@@ -110,7 +110,7 @@ class Keeper:
         return taken
 
     def _notice(self, file: str, values: Mapping[str, Any]) -> Taken:
-        declared, known = _changeable().get(file, {}), self.in_force.files.get(file, {})
+        declared, known = changeable().get(file, {}), self.in_force.files.get(file, {})
         changes = [
             Change(declared[name], known[name], value)
             for name, value in values.items()
@@ -163,7 +163,7 @@ class Keeper:
         """
         texts: dict[Path, str] = {}
         saved: list[Taken] = []
-        for file, declared in _changeable().items():
+        for file, declared in changeable().items():
             path = self.folder / file
             there = read_values(path)
             running = self._nodes.get(file, list(declared))
@@ -192,8 +192,8 @@ class Keeper:
 
 
 @cache
-def _changeable() -> dict[str, dict[str, Declaration]]:
-    """What may change at run time, by file and dotted name."""
+def changeable() -> dict[str, dict[str, Declaration]]:
+    """What may change at run time: file → dotted name → declaration; files that have such alone."""
     found = {file: {d.name: d for d in declarations(cls) if d.runtime} for file, cls in FILES.items()}
     return {file: declared for file, declared in found.items() if declared}
 

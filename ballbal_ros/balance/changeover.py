@@ -85,7 +85,10 @@ def _between(old: Regulator, new: Regulator, share: float) -> Regulator:
 
 
 class ChangeOver:
-    """The gains and limits in force at each tick, and the way from the old to the new. Not thread-safe."""
+    """The gains and limits in force at each tick, and the way from the old to the new. Not thread-safe.
+
+    ``largest_step``, N m: the most that changes have added to the torque in one tick so far.
+    """
 
     def __init__(self, schedule: GainSchedule, parameters: BalanceParameters, torque_limit: float) -> None:
         """``torque_limit``, N m: what the robot itself allows; parameters may allow less."""
@@ -94,6 +97,7 @@ class ChangeOver:
         self._pair: tuple[ControllerMatrices, ControllerMatrices] | None = None
         self._share = 0.0
         self._settled = True
+        self.largest_step = 0.0
         self.torque_limit = min(parameters.limits.torque, torque_limit)
 
     @property
@@ -126,7 +130,9 @@ class ChangeOver:
         loop = self._parameters.loop
         rise = loop.period / max(self._parameters.ramp_time, loop.period)
         jump = float(np.abs((new.act - old.act) @ controller.seen).max())
-        self._share = min(1.0, self._share + (rise if jump * rise <= TORQUE_STEP else TORQUE_STEP / jump))
+        before = self._share
+        self._share = min(1.0, before + (rise if jump * rise <= TORQUE_STEP else TORQUE_STEP / jump))
+        self.largest_step = max(self.largest_step, (self._share - before) * jump)
         if self._share >= 1.0 and self._next is not None:
             controller.change(new)
             self.schedule, self._next, self._pair = self._next, None, None

@@ -127,6 +127,11 @@ class BalanceLoop:
         """The gains in force: what a change is prepared with, see :func:`ballbal_ros.balance.changeover.prepare`."""
         return self._gains.schedule
 
+    @property
+    def change_step(self) -> float:
+        """The most that changes of parameters have added to the torque in one tick, N m."""
+        return self._gains.largest_step
+
     def add_plan(self, stamp: float, plan: LeanPlan) -> None:
         """Follow a lean plan from its stamp, s, on."""
         self.reference.add_plan(stamp, plan)

@@ -16,12 +16,14 @@ from ballbal_ros.node_parameters import BalanceNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.balance_messages import BalanceMessages
 from ballbal_ros.nodes.balance_requests import BalanceRequests
+from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
 from ballbal_ros.nodes.lock_step import is_looked_at
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
 from ballbal_ros.nodes.topics import subscribe
+from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import WholeBody
 
@@ -30,17 +32,18 @@ _SUCCESS, _FAILURE = TransitionCallbackReturn.SUCCESS, TransitionCallbackReturn.
 
 
 class BalanceNode(LifecycleNode):
-    """Keeps the robot on its ball while it is active. The tick runs in the callback of the message that completes it."""
+    """Keeps the robot on its ball while it is active. The tick runs in the callback of the message that completes
+    it.
+    """
 
     def __init__(self) -> None:
-        super().__init__("balance", **process.NODE_OPTIONS)
+        super().__init__("balance", start_parameter_services=False, **process.NODE_OPTIONS)
         parameters = NodeParameters(
             self, {"robot.yaml": RobotParameters, "balance.yaml": BalanceParameters, "node": BalanceNodeParameters}
         )
         own: BalanceNodeParameters = parameters["node"]
         self.parameters: BalanceParameters = parameters["balance.yaml"]
         self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
-        parameters.declare()
         self.loop: BalanceLoop | None = None
         self.active = False
         self.ns = -1
@@ -54,6 +57,7 @@ class BalanceNode(LifecycleNode):
         self.diagnostics = Diagnostics(self, self.description.name, self._report)
         self.requests = BalanceRequests(self)
         self._senses = Senses(self.description, self.parameters, own.lock_step, self._tick, self.diagnostics)
+        self._tuning = BalanceTuning(self, parameters)
         subscribe(self, "joint_states", self._senses.on_arms, raw=True)
         subscribe(self, "drive_states", self._senses.on_drive, every=own.lock_step, raw=True)
         subscribe(self, own.imu_topic, self._senses.on_imu, every=own.lock_step, raw=True)
@@ -78,6 +82,10 @@ class BalanceNode(LifecycleNode):
         due = state != self._said or ns - self._said_at >= _STATE_EVERY
         if due or (state in ("standby", "engaging") and is_looked_at(ns, self._period_ns)):
             self.say_state()
+
+    def arm_position(self) -> Array:
+        """Where the arms are [n], as far as is known; rad."""
+        return self._senses.arms.position.copy()
 
     def say_state(self) -> None:
         """Publish ``balance_state`` now."""
@@ -147,7 +155,7 @@ class BalanceNode(LifecycleNode):
     def _try(self, what: str, step: Any) -> TransitionCallbackReturn:
         try:
             step()
-        except Exception as error:  # noqa: BLE001 - rclpy would pass over it in silence
+        except Exception as error:  # rclpy would pass over it in silence
             reason = str(error) if isinstance(error, BallbalError) else f"{type(error).__name__}: {error}"
             self.diagnostics.refuse(what, reason)
             self.get_logger().error(f"{what}: {reason}")
@@ -159,6 +167,7 @@ class BalanceNode(LifecycleNode):
     def leave(self) -> None:
         """Torque off before the process ends."""
         self._let_go()
+        self._tuning.leave()
 
     def _report(self) -> tuple[bytes, str, Mapping[str, object]]:
         ticks, self._ticks_before = self._ticks - self._ticks_before, self._ticks
@@ -171,6 +180,7 @@ class BalanceNode(LifecycleNode):
             return OK, "inactive", values
         state = loop.guard.state
         values.update({"reason": loop.guard.reason, "last tick": max(self.ns, 0) / BILLION})
+        values["largest change-over step"] = loop.change_step
         if state == "tripped":
             return ERROR, state, values
         return (WARN if ticks == 0 or state in ("stopping", "released") else OK), state, values

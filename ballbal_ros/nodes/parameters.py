@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import array
+import copy
 import sys
 from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
@@ -14,6 +15,7 @@ from rclpy.parameter import Parameter
 
 from ballbal_ros.declaration import Declaration, build, declarations, flatten
 from ballbal_ros.errors import BallbalError, ParameterError, nearest
+from ballbal_ros.parameter_change import Change
 
 _TYPES = {
     "double": ParameterType.PARAMETER_DOUBLE,
@@ -42,19 +44,21 @@ def robot_file() -> Path:
 class NodeParameters:
     """The parameters of one node: one read-only object for each class, from what the parameter files and ``-p`` gave.
 
-    The node must have been made with ``automatically_declare_parameters_from_overrides=True``. ``classes`` maps a file's name
-    (as errors name it) to the parameter class of that file. Raises :class:`ParameterError` in one line.
+    The node must have been made with ``automatically_declare_parameters_from_overrides=True``. ``classes`` maps a
+    file's name (as errors name it) to the parameter class of that file. Raises :class:`ParameterError` in one line.
     """
 
     def __init__(self, node: Node, classes: Mapping[str, type]) -> None:
         self._node, self._classes = node, dict(classes)
-        given = {name: _plain(p.value) for name, p in node.get_parameters_by_prefix("").items() if _is_ours(name)}
+        given = {name: plain(p.value) for name, p in node.get_parameters_by_prefix("").items() if _is_ours(name)}
         self._objects = self._build(given)
         for name in given:
             node.undeclare_parameter(name)
         self._on_change: Callable[[NodeParameters], None] | None = None
         self._flat = {key: value for made in self._objects.values() for key, value in flatten(made).items()}
-        self._declared = {d.name: d for cls in classes.values() for d in declarations(cls, flat=self._flat)}
+        named = [(d, file) for file, cls in classes.items() for d in declarations(cls, flat=self._flat)]
+        self._declared = {declared.name: declared for declared, _ in named}
+        self._files = {declared.name: file for declared, file in named}
 
     def __getitem__(self, file: str) -> Any:
         """The parameter object of one file's class."""
@@ -77,23 +81,46 @@ class NodeParameters:
                 )
         self._node.add_on_set_parameters_callback(self._set)
 
+    def proposed(self, changed: Mapping[str, Any]) -> NodeParameters | None:
+        """What the parameters would be with some values changed, checked; None where none of them is ours.
+
+        Raises :class:`ParameterError` in one line. Nothing is set.
+        """
+        flat = {name: value for name, value in changed.items() if name in self._declared}
+        if not flat:
+            return None
+        for name, value in flat.items():
+            declared = self._declared[name]
+            if not declared.runtime and value != self._flat[name]:
+                change = Change(declared, self._flat[name], value)
+                where = self.source(self._files[name])
+                raise ParameterError(where, f"{change} can't change while the node runs", "start the node anew with it")
+        new = copy.copy(self)
+        new._flat = {**self._flat, **flat}
+        new._objects = self._build(new._flat)
+        return new
+
+    def source(self, file: str) -> str:
+        """How errors name a file: by its path where it was given on the command line."""
+        return str(parameter_files().get(file, f"parameters of {self._node.get_name()}"))
+
     def _build(self, flat: Mapping[str, Any]) -> dict[str, Any]:
         names = {file: {d.name for d in declarations(cls, flat=flat)} for file, cls in self._classes.items()}
         known = set().union(*names.values())
         paths = parameter_files()
         for key in flat:
             if key not in known:
-                raise ParameterError(self._source(key, paths), f"unknown parameter {key}", nearest(key, known))
+                raise ParameterError(self._given_by(key, paths), f"unknown parameter {key}", nearest(key, known))
         return {
             file: build(
                 cls,
                 {k: v for k, v in flat.items() if k in names[file]},
-                str(paths.get(file, f"parameters of {self._node.get_name()}")),
+                self.source(file),
             )
             for file, cls in self._classes.items()
         }
 
-    def _source(self, key: str, paths: Mapping[str, Path]) -> str:
+    def _given_by(self, key: str, paths: Mapping[str, Path]) -> str:
         last = key.rpartition(".")[2]
         for path in paths.values():
             if path.is_file() and f"{last}:" in path.read_text(encoding="utf-8", errors="replace"):
@@ -101,20 +128,14 @@ class NodeParameters:
         return f"parameters of {self._node.get_name()}"
 
     def _set(self, changed: Sequence[Any]) -> SetParametersResult:
-        flat = {p.name: _plain(p.value) for p in changed if p.name in self._declared}
-        if not flat:
-            return SetParametersResult(successful=True)
         try:
+            new = self.proposed({p.name: plain(p.value) for p in changed})
+            if new is None:
+                return SetParametersResult(successful=True)
             if self._on_change is None:
-                raise ParameterError(next(iter(flat)), "can't change while the node runs", "start the node anew")
-            before = self._objects, self._flat
-            self._flat = {**self._flat, **flat}
-            try:
-                self._objects = self._build(self._flat)
-                self._on_change(self)
-            except BaseException:
-                self._objects, self._flat = before
-                raise
+                raise ParameterError(changed[0].name, "can't change while the node runs", "start the node anew")
+            self._on_change(new)
+            self._objects, self._flat = new._objects, new._flat
         except BallbalError as error:
             return SetParametersResult(successful=False, reason=str(error))
         except Exception as error:
@@ -123,7 +144,9 @@ class NodeParameters:
 
 
 def descriptor_of(declared: Declaration, *, changeable: bool) -> ParameterDescriptor:
-    """The ROS descriptor of a declaration: type, range, meaning with unit, read-only unless it may change while running."""
+    """The ROS descriptor of a declaration: type, range, meaning with unit, read-only unless it may change while
+    running.
+    """
     unit = "" if declared.unit == "-" else f" [{declared.unit}]"
     descriptor = ParameterDescriptor(
         name=declared.name,
@@ -149,6 +172,6 @@ def _is_ours(name: str) -> bool:
     return name not in _OF_ROS and not name.startswith("qos_overrides.")
 
 
-def _plain(value: Any) -> Any:
+def plain(value: Any) -> Any:
     """Lists for what ROS gives as arrays; what can't be compared otherwise stays as it is."""
     return list(value) if hasattr(value, "__iter__") and not isinstance(value, (str, bytes)) else value

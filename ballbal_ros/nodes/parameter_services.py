@@ -1,0 +1,85 @@
+"""The parameter services of a node whose set takes a while: it is checked beside the loop, then values are swapped."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from typing import Any
+
+from rcl_interfaces.msg import Parameter as ParameterMessage
+from rcl_interfaces.msg import SetParametersResult
+from rcl_interfaces.srv import (
+    DescribeParameters,
+    GetParameters,
+    GetParameterTypes,
+    ListParameters,
+    SetParameters,
+    SetParametersAtomically,
+)
+from rclpy.exceptions import ParameterException
+from rclpy.node import Node
+from rclpy.parameter import Parameter
+from rclpy.qos import qos_profile_parameters
+
+from ballbal_ros.errors import BallbalError
+from ballbal_ros.nodes.beside import Beside
+from ballbal_ros.nodes.parameters import plain
+
+
+class ParameterServices:
+    """The six services by which ``ros2 param`` and everybody else gets at a node's parameters.
+
+    The node is made with ``start_parameter_services=False``. ``prepare`` takes the wanted values (name → value) before
+    they are set, may take its time, and raises :class:`BallbalError` with the reason to refuse.
+    """
+
+    def __init__(self, beside: Beside, node: Node, prepare: Callable[[Mapping[str, Any]], None]) -> None:
+        self._node, self._prepare = node, prepare
+        for kind, name, answer in (
+            (DescribeParameters, "describe_parameters", self._describe),
+            (GetParameters, "get_parameters", self._get),
+            (GetParameterTypes, "get_parameter_types", self._types),
+            (ListParameters, "list_parameters", self._list),
+            (SetParameters, "set_parameters", self._set_each),
+            (SetParametersAtomically, "set_parameters_atomically", self._set_all),
+        ):
+            beside.node.create_service(kind, beside.name_of(name), answer, qos_profile=qos_profile_parameters)
+
+    def _known(self, names: Sequence[str]) -> list[str]:
+        """The names, or none of them where one is unknown: so ROS answers."""
+        return list(names) if all(self._node.has_parameter(name) for name in names) else []
+
+    def _describe(self, request: Any, response: Any) -> Any:
+        response.descriptors = self._node.describe_parameters(self._known(request.names))
+        return response
+
+    def _get(self, request: Any, response: Any) -> Any:
+        names = self._known(request.names)
+        response.values = [self._node.get_parameter_or(name, Parameter(name)).get_parameter_value() for name in names]
+        return response
+
+    def _types(self, request: Any, response: Any) -> Any:
+        response.types = [self._node.get_parameter_type(name) for name in self._known(request.names)]
+        return response
+
+    def _list(self, request: Any, response: Any) -> Any:
+        response.result = self._node.list_parameters(request.prefixes, request.depth)
+        return response
+
+    def _set_each(self, request: Any, response: Any) -> Any:
+        response.results = [self._set([message]) for message in request.parameters]
+        return response
+
+    def _set_all(self, request: Any, response: Any) -> Any:
+        response.result = self._set(request.parameters)
+        return response
+
+    def _set(self, messages: Sequence[ParameterMessage]) -> SetParametersResult:
+        try:
+            wanted = [Parameter.from_parameter_msg(message) for message in messages]
+            self._prepare({parameter.name: plain(parameter.value) for parameter in wanted})
+            result: SetParametersResult = self._node.set_parameters_atomically(wanted)
+        except (BallbalError, ParameterException) as error:
+            return SetParametersResult(successful=False, reason=" ".join(str(error).split()))
+        except Exception as error:
+            return SetParametersResult(successful=False, reason=f"{type(error).__name__}: {error}")
+        return result
