@@ -41,6 +41,14 @@ class BalanceNodeParameters(DescriptionParameters):
         high=1.0,
         meaning="age past which an undelivered drive command is dropped (not in lock-step)",
     )
+    realtime_priority: int = parameter(
+        "integer",
+        0,
+        unit="-",
+        low=0,
+        high=99,
+        meaning="SCHED_FIFO priority to ask for, where the system grants it; diagnostics tell; 0: ordinary scheduling",
+    )
     odom_rate: float = parameter("double", 50.0, unit="Hz", low=1.0, high=1000.0, meaning="how often odom is published")
 
 
@@ -139,6 +147,14 @@ class SimulatedRobotNodeParameters:
         low=0.001,
         high=10.0,
         meaning="age of the newest drive command past which the drive lets go (real time)",
+    )
+    realtime_priority: int = parameter(
+        "integer",
+        0,
+        unit="-",
+        low=0,
+        high=99,
+        meaning="SCHED_FIFO priority to ask for, where the system grants it; diagnostics tell; 0: ordinary scheduling",
     )
     wait_for_plan: bool = parameter(
         "bool",

@@ -20,6 +20,7 @@ from ballbal_ros.simulation.timeline import RUN_START, Timeline
 from ballbal_ros.stack import RobotFolder, headless_stack
 
 _SIMULATOR = "simulated_robot"
+_PRIORITY = 20
 _LOOP = (_SIMULATOR, "balance")
 _SHOW_EVERY = 0.2
 _KINEMATICS_RATE = 50.0
@@ -63,7 +64,6 @@ class HeadlessRun:
     def __init__(self, setup: HeadlessSetup, kind: str, seed: int) -> None:
         self.setup, self.kind, self.seed = setup, kind, seed
         self.moves = kind != "still" and setup.story.planned
-        self._began: float | None = None
         self._origin: tuple[float, float] | None = None
 
     def run(self, show: Callable[[Glimpse], None]) -> RunResult:
@@ -79,10 +79,11 @@ class HeadlessRun:
                 if self.moves:
                     bus.send_story(setup.story, setup.timeline, setup.description.joint_names)
                     bus.wait_for_report()
-                self._began = time.monotonic()
+                began, from_time = time.monotonic(), bus.place()[0]
                 self._follow(processes, bus, show)
-                took = time.monotonic() - self._began
-                return self._result(self._whole(bus), bus.peaks, took)
+                took = time.monotonic() - began
+                truth = self._whole(bus)
+                return self._result(truth, bus.peaks, (truth[-1, 0] - from_time) / max(took, 1e-9))
 
     def _start(self, processes: Processes) -> None:
         setup, timeline = self.setup, self.setup.timeline
@@ -100,6 +101,9 @@ class HeadlessRun:
             simulated["truth"] = list(setup.truth)
         processes.may_end = _SIMULATOR
         for node in headless_stack(setup.folder, setup.clock, setup.namespace, simulated):
+            if node.executable in _LOOP and setup.clock == "real_time":
+                # As on a robot: a loop by the wall clock must not wait for other programs.
+                node = node.with_parameters(realtime_priority=_PRIORITY)
             if node.executable == "balance":
                 node = node.with_parameters(compensation=way)
             elif node.executable == "arm_compensation":
@@ -156,7 +160,7 @@ class HeadlessRun:
         meant = self._meant(np.array([at]))[0]
         return 1e3 * float(np.hypot(x - self._origin[0] - meant[0], y - self._origin[1] - meant[1]))
 
-    def _result(self, truth: Array, peaks: dict[str, str], took: float) -> RunResult:
+    def _result(self, truth: Array, peaks: dict[str, str], factor: float) -> RunResult:
         counted = truth[truth[:, 0] >= RUN_START - 1e-6]
         away = counted[:, 1:3] - counted[0, 1:3] - self._meant(counted[:, 0])
         travel = 1e3 * np.hypot(*away.T)
@@ -170,5 +174,5 @@ class HeadlessRun:
             drive_torque_peak_nm=float(peaks["drive torque peak"]),
             friction_use_peak=float(peaks["friction use peak"]),
             duration_s=float(truth[-1, 0]),
-            real_time_factor=float(truth[-1, 0] / max(took, 1e-9)),
+            real_time_factor=float(factor),
         )

@@ -9,6 +9,7 @@ from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
 from rclpy.clock import Clock, ClockType
 from rclpy.node import Node
 
+from ballbal_ros.nodes.priority import Scheduling
 from ballbal_ros.nodes.topics import publisher
 
 Report = Callable[[], tuple[bytes, str, Mapping[str, object]]]
@@ -66,7 +67,8 @@ class Diagnostics:
         status = self._status
         status.level = max(level, WARN) if reasons else level
         status.message = message
-        status.values = key_values({**values, **reasons})
+        scheduling = {"scheduling": Scheduling.told} if Scheduling.told else {}
+        status.values = key_values({**values, **scheduling, **reasons})
         array = DiagnosticArray(status=[status])
         array.header.stamp = self._now()
         self._publisher.publish(array)
