@@ -37,7 +37,7 @@ class BalanceNode(LifecycleNode):
     """
 
     def __init__(self) -> None:
-        super().__init__("balance", start_parameter_services=False, **process.NODE_OPTIONS)
+        super().__init__("balance", **process.NODE_OPTIONS)
         parameters = NodeParameters(
             self, {"robot.yaml": RobotParameters, "balance.yaml": BalanceParameters, "node": BalanceNodeParameters}
         )

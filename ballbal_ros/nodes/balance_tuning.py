@@ -27,11 +27,10 @@ class BalanceTuning:
         """Declares ``parameters`` on ``node``."""
         self._node, self._parameters = node, parameters
         self._prepared: tuple[BalanceLoop, PreparedChange] | None = None
-        parameters.declare(self._change)
         self._designer = Designer(node.description, parameters.source(_FILE))
         self._designer.start()
         self._beside = Beside(node, "parameters")
-        ParameterServices(self._beside, node, self._prepare)
+        parameters.declare(self._change, ParameterServices(self._beside.node, node, self._prepare))
         self._beside.start()
 
     def leave(self) -> None:

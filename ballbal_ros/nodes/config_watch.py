@@ -25,7 +25,8 @@ from ballbal_ros.nodes.beside import Beside
 from ballbal_ros.nodes.diagnostics import OK, WARN, Diagnostics
 from ballbal_ros.nodes.file_watch import FileWatch
 from ballbal_ros.nodes.parameter_link import ParameterLink
-from ballbal_ros.nodes.parameters import NodeParameters, plain, robot_file
+from ballbal_ros.nodes.parameter_services import plain
+from ballbal_ros.nodes.parameters import NodeParameters, robot_file
 from ballbal_ros.parameter_files import FILES, READERS
 from ballbal_ros.parameter_history import ParameterHistory, state_folder
 from ballbal_ros.parameter_keeper import Keeper, Taken, changeable

@@ -12,7 +12,7 @@ from rclpy.parameter import Parameter, parameter_value_to_python
 from rclpy.qos import qos_profile_parameters
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.nodes.parameters import plain
+from ballbal_ros.nodes.parameter_services import plain
 from ballbal_ros.parameter_change import Change
 from ballbal_ros.parameter_files import READERS
 from ballbal_ros.parameter_keeper import changeable

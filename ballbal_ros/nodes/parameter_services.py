@@ -1,4 +1,4 @@
-"""The parameter services of a node whose set takes a while: it is checked beside the loop, then values are swapped."""
+"""The parameter services of a node: the same check and line for whoever sets a value, in whichever thread may wait."""
 
 from __future__ import annotations
 
@@ -21,18 +21,17 @@ from rclpy.parameter import Parameter
 from rclpy.qos import qos_profile_parameters
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.nodes.beside import Beside
-from ballbal_ros.nodes.parameters import plain
 
 
 class ParameterServices:
     """The six services by which ``ros2 param`` and everybody else gets at a node's parameters.
 
-    The node is made with ``start_parameter_services=False``. ``prepare`` takes the wanted values (name → value) before
-    they are set, may take its time, and raises :class:`BallbalError` with the reason to refuse.
+    ``host`` is the node whose thread answers, ``node`` itself or one beside it; ``node`` is made without services of
+    ROS's own. ``prepare`` takes the wanted values (name → value) before they are set, may take as long as that thread
+    may, and raises :class:`BallbalError` with the reason to refuse.
     """
 
-    def __init__(self, beside: Beside, node: Node, prepare: Callable[[Mapping[str, Any]], None]) -> None:
+    def __init__(self, host: Node, node: Node, prepare: Callable[[Mapping[str, Any]], object]) -> None:
         self._node, self._prepare = node, prepare
         for kind, name, answer in (
             (DescribeParameters, "describe_parameters", self._describe),
@@ -42,7 +41,8 @@ class ParameterServices:
             (SetParameters, "set_parameters", self._set_each),
             (SetParametersAtomically, "set_parameters_atomically", self._set_all),
         ):
-            beside.node.create_service(kind, beside.name_of(name), answer, qos_profile=qos_profile_parameters)
+            full = f"{node.get_fully_qualified_name()}/{name}"
+            host.create_service(kind, full, answer, qos_profile=qos_profile_parameters)
 
     def _known(self, names: Sequence[str]) -> list[str]:
         """The names, or none of them where one is unknown: so ROS answers."""
@@ -83,3 +83,8 @@ class ParameterServices:
         except Exception as error:
             return SetParametersResult(successful=False, reason=f"{type(error).__name__}: {error}")
         return result
+
+
+def plain(value: Any) -> Any:
+    """Lists for what ROS gives as arrays; what can't be compared otherwise stays as it is."""
+    return list(value) if hasattr(value, "__iter__") and not isinstance(value, (str, bytes)) else value

@@ -15,6 +15,7 @@ from rclpy.parameter import Parameter
 
 from ballbal_ros.declaration import Declaration, build, declarations, flatten
 from ballbal_ros.errors import BallbalError, ParameterError, nearest
+from ballbal_ros.nodes.parameter_services import ParameterServices, plain
 from ballbal_ros.parameter_change import Change
 
 _TYPES = {
@@ -44,7 +45,7 @@ def robot_file() -> Path:
 class NodeParameters:
     """The parameters of one node: one read-only object for each class, from what the parameter files and ``-p`` gave.
 
-    The node must have been made with ``automatically_declare_parameters_from_overrides=True``. ``classes`` maps a
+    The node must have been made with ``process.NODE_OPTIONS``. ``classes`` maps a
     file's name (as errors name it) to the parameter class of that file. Raises :class:`ParameterError` in one line.
     """
 
@@ -64,11 +65,16 @@ class NodeParameters:
         """The parameter object of one file's class."""
         return self._objects[file]
 
-    def declare(self, on_change: Callable[[NodeParameters], None] | None = None) -> None:
+    def declare(
+        self, on_change: Callable[[NodeParameters], None] | None = None, services: ParameterServices | None = None
+    ) -> None:
         """Declare all to ROS. ``on_change`` takes changed runtime parameters over, or raises :class:`BallbalError`.
 
-        Without it nothing may change while the node runs.
+        Without it nothing may change while the node runs. ``services`` are the node's parameter services, where others
+        than the usual are wanted: these check a value and answer at once.
         """
+        if services is None:
+            ParameterServices(self._node, self._node, self.proposed)
         self._on_change = on_change
         for name, declared in self._declared.items():
             value, descriptor = self._flat[name], descriptor_of(declared, changeable=on_change is not None)
@@ -170,8 +176,3 @@ def descriptor_of(declared: Declaration, *, changeable: bool) -> ParameterDescri
 
 def _is_ours(name: str) -> bool:
     return name not in _OF_ROS and not name.startswith("qos_overrides.")
-
-
-def plain(value: Any) -> Any:
-    """Lists for what ROS gives as arrays; what can't be compared otherwise stays as it is."""
-    return list(value) if hasattr(value, "__iter__") and not isinstance(value, (str, bytes)) else value

@@ -27,7 +27,11 @@ try:
 except ImportError:
     QuickExecutor = SingleThreadedExecutor
 
-NODE_OPTIONS: dict[str, Any] = {"automatically_declare_parameters_from_overrides": True}
+# Parameter services are NodeParameters' own.
+NODE_OPTIONS: dict[str, Any] = {
+    "automatically_declare_parameters_from_overrides": True,
+    "start_parameter_services": False,
+}
 _DESCRIPTION_TIMEOUT = 5.0
 
 

@@ -9,7 +9,9 @@ from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import rclpy
+from builtin_interfaces.msg import Time
 from diagnostic_msgs.msg import DiagnosticArray
 from rcl_interfaces.msg import Log
 from rcl_interfaces.srv import GetParameters, SetParametersAtomically
@@ -20,14 +22,17 @@ from std_srvs.srv import Trigger
 
 from ballbal_ros.commands.bus import Bus
 from ballbal_ros.commands.processes import Processes, environment
+from ballbal_ros.motion.spline import path_through_waypoints
 from ballbal_ros.motion.story import read_story
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import values_of
+from ballbal_ros.nodes.topics import publisher
+from ballbal_ros.nodes.trajectories import path_message
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.stack import RobotFolder, headless_stack
 from helpers.rehearsing import files
-from helpers.robots import CONFIG
+from helpers.robots import CONFIG, reach
 
 TIMEOUT = 30.0
 
@@ -65,6 +70,7 @@ class WatchedStack:
         self._node.create_subscription(Log, "/rosout", self._on_log, 100)
         self._node.create_subscription(DiagnosticArray, "/diagnostics", self._on_diagnostics, 10)
         self._clients: dict[str, Any] = {}
+        self._arm_plan, self._swung, self._at_end = publisher(self._node, "arm_plan"), time.monotonic(), True
         self._spinner.add_node(self._node)
         folder = RobotFolder.checked(self.folder, simulated=True)
         simulated = {"duration": self._duration, "answer_timeout": TIMEOUT, "wait_for_plan": self._plan.stem != "still"}
@@ -141,6 +147,15 @@ class WatchedStack:
         beside = self.folder / f".{file}.new"
         beside.write_text(text.replace(old, new), encoding="utf-8")
         os.replace(beside, self.folder / file)
+
+    def swing_on(self) -> None:
+        """Swing the arms of `reach` back, or forth again, once they rest."""
+        rest = self.diagnostics.get("/arm_compensation", {}).get("message") == "idle"
+        if rest and time.monotonic() - self._swung > 2.5:
+            self._swung, self._at_end = time.monotonic(), not self._at_end
+            way = (reach().first, reach().last) if self._at_end else (reach().last, reach().first)
+            path = path_through_waypoints([0.0, reach().duration], np.stack(way))
+            self._arm_plan.publish(path_message(path, files().description.joint_names, Time()))
 
     def line_with(self, *words: str, after: float = 0.0) -> str:
         """The first line of config_watch's log after a time that holds all the words; "" where there is none."""
