@@ -19,6 +19,7 @@ from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.story import read_story
 from ballbal_ros.node_parameters import SimulatedRobotNodeParameters
 from ballbal_ros.nodes import process
+from ballbal_ros.nodes.answer_times import AnswerTimes
 from ballbal_ros.nodes.diagnostics import ERROR, OK, Diagnostics, values_of
 from ballbal_ros.nodes.lock_step import LockStep
 from ballbal_ros.nodes.messages import BILLION, load_of, nanoseconds, seconds, to_time
@@ -71,6 +72,7 @@ class SimulatedRobotNode(Node):
         self._ended: tuple[int, float] | None = None
         self._effort: Any = None
         self._commands = JointStateReader()
+        self._answers, self._late = AnswerTimes(), 0.0
         self._nothing = np.zeros(len(self.description.drive.names))
         self._lock = LockStep(self, round(self._period * BILLION), self._own.wait_for_plan)
         self._messages = SimulatedMessages(self, self.description, self._own.imu_topic)
@@ -110,6 +112,7 @@ class SimulatedRobotNode(Node):
 
     def _on_drive_command(self, raw: bytes) -> None:
         command = self._commands.read(raw)
+        self._answers.answered(command.stamp)
         if command.stamp != self._ns and not (self._real_time and self._started is not None):
             return
         try:
@@ -140,6 +143,7 @@ class SimulatedRobotNode(Node):
         now = time.monotonic()
         while self._robot.time + self._period <= now - self._started and self._ended is None:
             stale = now - self._command_came > self._own.drive_watchdog
+            self._late = now - self._started - self._robot.time - self._period
             self._step(self._nothing if stale or self._effort is None else self._effort)
 
     def _step(self, effort: Any) -> None:
@@ -167,6 +171,7 @@ class SimulatedRobotNode(Node):
         return response
 
     def _publish(self) -> None:
+        self._answers.asked(self._ns, self._late)
         self._messages.publish(self._robot, self._ns)
 
     def _attend(self) -> None:
@@ -255,6 +260,7 @@ class SimulatedRobotNode(Node):
             "support": robot.support,
             "seed": self._own.seed,
             **self._peaks.values(),
+            **(self._answers.values() if self._started is not None else {}),
         }
         return (ERROR, "fell", values) if robot.fell else (OK, "on its stand" if robot.support else "free", values)
 
