@@ -24,6 +24,7 @@ from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, values_of
+from ballbal_ros.nodes.lean_trajectory import lean_plan_message
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_report import PlanReports
@@ -32,7 +33,6 @@ from ballbal_ros.nodes.trajectories import (
     ArmWaypoints,
     ball_motion_of,
     hand_wrenches_of,
-    lean_plan_message,
     path_message,
 )
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw

@@ -12,9 +12,9 @@ from ballbal_ros.balance.goal import Goal
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.errors import BallbalError, PlanRefused
+from ballbal_ros.nodes.lean_trajectory import lean_plan_of
 from ballbal_ros.nodes.messages import BILLION, load_of, seconds, stamp_text
 from ballbal_ros.nodes.topics import subscribe
-from ballbal_ros.nodes.trajectories import lean_plan_of
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.loads import Load
 

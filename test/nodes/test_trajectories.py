@@ -17,14 +17,13 @@ from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.lean_planner import BallMotion, PlanRequest, plan_lean
 from ballbal_ros.motion.spline import path_through_waypoints
+from ballbal_ros.nodes.lean_trajectory import lean_plan_message, lean_plan_of
 from ballbal_ros.nodes.messages import to_duration, to_time
 from ballbal_ros.nodes.trajectories import (
     ArmWaypoints,
     ball_motion_of,
     ball_plan_message,
     hand_wrenches_of,
-    lean_plan_message,
-    lean_plan_of,
     path_message,
 )
 from ballbal_ros.robot.whole_body import WholeBody
