@@ -3,7 +3,8 @@
 The simulated robot stands on its stand until balance is configured and activated (``ros2 lifecycle set /balance
 configure``, then ``activate``); when it ends, all ends.
 
-Nothing real must listen in its domain: keep ``ROS_AUTOMATIC_DISCOVERY_RANGE=LOCALHOST``, and a domain of its own. What holds
+Nothing real must listen in its domain: keep ``ROS_AUTOMATIC_DISCOVERY_RANGE=LOCALHOST``, and a domain of its own.
+What holds
 in the simulation is no proof for a real machine; that has its own risk assessment, local codes and licensed practice.
 """
 

@@ -216,7 +216,9 @@ class Senses:
         self.tilt.restart()
 
     def _quarantined(self, wrong: str) -> str:
-        """After absurd IMU data, good ones must come for a while before they are believed: among noise some are always near."""
+        """After absurd IMU data, good ones must come for a while before they are believed: among noise some are
+        always near.
+        """
         if wrong in _ABSURD:
             self._quarantine, self._quarantined_for = _QUARANTINE, wrong
         elif self._quarantine > 0 and not wrong:
@@ -287,7 +289,9 @@ class Senses:
         return not off < _TURNED
 
     def _go(self, turned: Triple, before: tuple[float, float], expected: Expected | None) -> tuple[float, float]:
-        """Move the ball; how far, in heading axes, m. After long without the drive the way meanwhile is that expected."""
+        """Move the ball; how far, in heading axes, m. After long without the drive the way meanwhile is that
+        expected.
+        """
         if self.drive and not self.encoders.gap:
             self._guessed = [0.0, 0.0]
             return self._roll(turned, before)

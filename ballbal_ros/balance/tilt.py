@@ -20,7 +20,9 @@ _WINDOW = 0.1
 
 
 class TiltWitness:
-    """Adds up tick by tick; ``off`` is the last window's ε (about y, about x), rad, ``agrees`` whether not two were too far off in a row."""
+    """Adds up tick by tick; ``off`` is the last window's ε (about y, about x), rad, ``agrees`` whether not two were
+    too far off in a row.
+    """
 
     def __init__(self, description: RobotDescription, parameters: BalanceParameters) -> None:
         self._period = parameters.loop.period

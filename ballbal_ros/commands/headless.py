@@ -134,7 +134,8 @@ def headless_command(
     """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this
     machine only.
 
-    A good run here is no proof for a real machine, which has its own risk assessment, local codes and licensed practice.
+    A good run here is no proof for a real machine, which has its own risk assessment, local codes and licensed
+    practice.
     Let nothing real listen in its domain.
     """
     console = Console()

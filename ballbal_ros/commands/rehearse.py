@@ -120,7 +120,8 @@ def rehearse_command(
 ) -> None:
     """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan.
 
-    A good rehearsal is no proof for a real machine, which has its own risk assessment, local codes and licensed practice.
+    A good rehearsal is no proof for a real machine, which has its own risk assessment, local codes and licensed
+    practice.
     """
     console = Console()
     runs = rehearse(

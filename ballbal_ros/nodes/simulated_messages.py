@@ -33,7 +33,9 @@ class SimulatedMessages:
         self._publishers = [publisher(node, topic) for topic in topics]
 
     def publish(self, robot: SimulatedRobot, ns: int, again: bool = False) -> None:
-        """Publish the instant ``ns``, in ns, that the robot has come to; ``again`` where it has been published before."""
+        """Publish the instant ``ns``, in ns, that the robot has come to; ``again`` where it has been published
+        before.
+        """
         measured = robot.measurement()
         arms, drive, imu = self._arms, self._drive, self._imu.values
         arms.position[:], arms.velocity[:] = measured.arm_position, robot.arm_rate

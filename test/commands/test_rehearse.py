@@ -9,6 +9,7 @@ import sys
 from pathlib import Path
 
 import pytest
+
 from helpers.robots import CONFIG
 
 ROOT = CONFIG.parent

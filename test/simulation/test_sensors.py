@@ -18,7 +18,8 @@ from helpers.robots import shelver
 from helpers.simulated import NO_EFFORT, NO_NOISE, robot, simulation
 
 RATE = simulation().loop_rate
-# The defaults are a mid-range MEMS IMU's: the published calibration of the EuRoC data set's ADIS16448. shelver's is better.
+# The defaults are a mid-range MEMS IMU's: the published calibration of the EuRoC data set's ADIS16448. shelver's is
+# better.
 MID_RANGE = SimulatedImuParameters()
 
 
