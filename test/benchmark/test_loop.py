@@ -17,7 +17,7 @@ _TICK_MOST = 70e-6
 
 
 def test_control_tick(benchmark) -> None:
-    """One control tick with 12 arm joints takes at most 70 µs in the mean, over a planned reach with everything in force.
+    """One control tick with 12 arm joints takes at most 70 µs in the mean, over a planned reach with all in force.
 
     Beside it, as extra_info, the bare Pinocchio calls that a tick needs (mass centre each tick, inertia every tenth).
     """
