@@ -78,7 +78,11 @@ class Designer:
         while b"\n" not in answer:
             answer += self._read(until)
         line, _, numbers = answer.partition(b"\n")
-        head = json.loads(line)
+        try:
+            head = json.loads(line)
+        except ValueError as error:
+            # Whatever follows can't be told from an answer any more.
+            raise self._lost("says what is no answer") from error
         if "refused" in head:
             raise BallbalError(*head["refused"])
         while len(numbers) < head["size"]:

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import os
 import signal
+import subprocess
+import sys
 import time
 from collections.abc import Iterator
 
@@ -80,3 +82,15 @@ def test_it_ends_with_its_input_whatever_ended_that(designer: Designer):
     while child.poll() is None and time.monotonic() < until:
         time.sleep(0.02)
     assert child.poll() == 0
+
+
+def test_what_is_no_answer_is_refused_and_the_next_request_works(designer: Designer):
+    """A library that prints into the answers spoils one change, said in one line, and not those after it."""
+    posture = reach().body().posture(reach().first)
+    reached = PostureRange.of(shelver(), posture)
+    new = attrs.evolve(balance(), weights=attrs.evolve(balance().weights, lean=0.02))
+    babble = "import sys; print('a warning', flush=True); sys.stdin.read()"
+    designer._child = subprocess.Popen([sys.executable, "-c", babble], stdin=subprocess.PIPE, stdout=subprocess.PIPE)
+    with pytest.raises(BallbalError, match="says what is no answer; set it again"):
+        designer.prepare(reached, balance(), new, posture)
+    assert designer.prepare(reached, balance(), new, posture).schedule is not None
