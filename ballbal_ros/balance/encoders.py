@@ -166,7 +166,7 @@ class Encoders:
             if not abs(d - due[i] - spin[i]) <= most or not shaken <= self._start or shaking[i] > _SHAKES:
                 bad[i] = "jump"
         if bad and frozen and min(self._quiet) >= _STILL_TICKS:
-            return {i: "stuck" for i in range(len(self._names))}
+            return dict.fromkeys(range(len(self._names)), "stuck")
         return bad
 
 

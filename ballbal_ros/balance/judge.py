@@ -54,7 +54,9 @@ class Judge:
         return CapturableRegion.of(model, self._posture, self._description, torque, reserve)
 
     def use(self, posture: Posture | None = None, torque_limit: float | None = None) -> None:
-        """Work the region out anew: the posture is another, the loop's torque limit (N m) is, or the drive gives less."""
+        """Work the region out anew: the posture is another, the loop's torque limit (N m) is, or the drive gives
+        less.
+        """
         if posture is not None:
             self._posture = posture
             self._actuators.use(linear_model(posture, self._description))

@@ -184,7 +184,8 @@ class GuardParameters:
         unit="-",
         low=0.0,
         high=0.9,
-        meaning="share kept of the region from which torque, friction and speed can bring it back; beyond, torque goes off",
+        meaning="share kept of the region from which torque, friction and speed can bring it back; beyond, torque goes "
+        "off",
     )
     trip_lean: float = parameter(
         "double",
@@ -192,7 +193,8 @@ class GuardParameters:
         unit="rad",
         low=0.01,
         high=1.2,
-        meaning="distance from the reference lean past which torque goes off at once, whatever the capturable region says",
+        meaning="distance from the reference lean past which torque goes off at once, whatever the capturable region "
+        "says",
     )
     trim_moment: float = parameter(
         "double",

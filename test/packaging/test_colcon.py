@@ -14,7 +14,7 @@ from catkin_pkg.package import parse_package
 
 import ballbal_ros
 
-EXECUTABLES = {"ballbal", "whole_body_kinematics", "arm_compensation", "balance", "simulated_robot"}
+EXECUTABLES = {"ballbal", "whole_body_kinematics", "arm_compensation", "balance", "config_watch", "simulated_robot"}
 FOLDERS = ("ballbal_ros", "config", "launch", "resource")
 FILES = ("package.xml", "setup.py", "setup.cfg", "pyproject.toml", "LICENSE")
 ROS_IMPORT = re.compile(r"^\s*(?:from|import) ([a-z0-9_]+(?:_msgs|_srvs|_interfaces)|rclpy|pinocchio)\b", re.MULTILINE)
