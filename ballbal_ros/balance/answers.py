@@ -118,6 +118,13 @@ _ROWS = (
     ),
     Answer(
         ENCODER,
+        "slip",
+        "alone off by more than limits.wheel_slip from what model and gyro expect",
+        _ONE_LEFT_OUT,
+        _LOOP,
+    ),
+    Answer(
+        ENCODER,
         "stuck",
         "stands still to the bit while the others and the model say that it turns",
         _ONE_LEFT_OUT,

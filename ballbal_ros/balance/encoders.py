@@ -18,6 +18,9 @@ _GAP = 25
 _SETTLING = 50
 _SHAKES = 0.0015
 _SHARE = 0.1
+_ALONE = 4.0
+_SLIDES = 4
+_SMOOTH = 10
 _STILL_TICKS = 5
 _STILL_STEPS = 20.0
 _STILL_ANGLE = 2e-3
@@ -37,7 +40,7 @@ class Encoders:
         drive = description.drive
         self._late, self._most = parameters.drive_timeout, parameters.limits.wheel_jump
         self._fastest: Array = 1.5 * drive.rate_limit
-        self._start = parameters.limits.wheel_start
+        self._start, self._slip = parameters.limits.wheel_start, parameters.limits.wheel_slip
         self._names = drive.names
         self._rate_map = np.ascontiguousarray(drive.rate_map)
         self._spin_map = np.ascontiguousarray(drive.spin_map)
@@ -55,7 +58,9 @@ class Encoders:
         self.rate: Array = np.zeros(len(drive.names))
         self.one_bad, self.bad_name = "", ""
         self.gap = False
-        self._settling = self._lost = 0
+        self.spin_held = True
+        self._settling = self._lost = self._smooth = 0
+        self._runs, self._ran = 0, -1
         self._shaking = [0.0] * len(drive.names)
         self._moved = [0.0] * len(drive.names)
 
@@ -65,6 +70,13 @@ class Encoders:
         self._stuck.clear()
         self._quiet = [0] * len(self._names)
         self._missed = [0.0] * len(self._names)
+
+    @property
+    def sliding(self) -> int | None:
+        """The index of an actuator that has been off alone for several ticks now: it slides on the ball, or nothing
+        holds it.
+        """
+        return self._ran if self._runs >= _SLIDES else None
 
     def pass_over(self, expected: Triple) -> None:
         """A tick without a look; ``expected`` as there."""
@@ -104,21 +116,35 @@ class Encoders:
         bad = self._bad(moved, waited if expected is not None else None, ticks, period)
         if len(bad) > 1:
             self._lost += 1
-            return "encoders absurd"
+            # All turn smoothly, only not as expected: then it is the expectation that is wrong.
+            if self._smooth < _SMOOTH:
+                return "encoders absurd"
+            self._gap(long=True)
+            return ""
         if self._lost:
             self._gap(long=self._lost > _GAP)
             return ""
         if not bad:
+            self._runs = 0
             x, y, z = (self._spin_map @ moved).tolist()
             self.turn, self._spin = (x, y, z), z / ticks
             return ""
         (index,) = bad
+        self._runs = self._runs + 1 if index == self._ran and bad[index] != "stuck" else 1
+        self._ran = index
         self.one_bad, self.bad_name = bad[index], self._names[index]
         moved[index] = 0.0
-        z = float(waited[2]) if expected is not None else 0.0
+        z = 0.0 if expected is None else float(waited[2]) if self.spin_held else self._spin * ticks
         x, y, z = (self._without[index] @ np.append(moved, z)).tolist()
         self.turn = (x, y, z)
         return ""
+
+    def _single_out(self, off: list[float], bad: dict[int, str]) -> None:
+        """One that is off alone slides on the ball; what the model does not know of shows in several."""
+        most = max(off)
+        index = off.index(most)
+        if most > self._slip and all(_ALONE * o < most for i, o in enumerate(off) if i != index):
+            bad[index] = "slip"
 
     def _gap(self, long: bool) -> None:
         """How it moved meanwhile can't be told; from here on it can."""
@@ -144,10 +170,11 @@ class Encoders:
             # It has only just been heard again: what was expected meanwhile may be far off.
             self._settling -= 1
             return {i: "jump" for i, d in enumerate(self._moved) if abs(d) > self._fastest[i] * period}
-        shaking, frozen = self._shaking, not any(self._moved)
+        shaking, frozen, smooth = self._shaking, not any(self._moved), True
         for i, d in enumerate(moved.tolist()):
             shaken = abs(d / ticks - last[i])
             shaking[i] += _SHARE * (min(shaken, 3.0 * _SHAKES) - shaking[i])
+            smooth = smooth and d != 0.0 and shaken <= self._start and shaking[i] <= _SHAKES
             if d == 0.0:
                 self._quiet[i] += 1
                 self._missed[i] += due[i]
@@ -165,6 +192,10 @@ class Encoders:
                     continue
             if not abs(d - due[i] - spin[i]) <= most or not shaken <= self._start or shaking[i] > _SHAKES:
                 bad[i] = "jump"
+        self._smooth = self._smooth + 1 if smooth and len(bad) > 1 else 0
+        # With the ball free to spin there is no third equation to do without one.
+        if self.spin_held and not bad:
+            self._single_out([abs(d - e) for d, e in zip(moved.tolist(), due)], bad)
         if bad and frozen and min(self._quiet) >= _STILL_TICKS:
             return dict.fromkeys(range(len(self._names)), "stuck")
         return bad

@@ -100,6 +100,10 @@ class Judge:
 
     def look_at_actuators(self, senses: Senses, reference: list[float], off: Pair, off_rates: Pair) -> None:
         """See whether what was sent a loop delay ago came about, and do without an actuator that gives nothing."""
+        found = senses.encoders.sliding
+        if found is not None:
+            # More effort would only make it slide faster.
+            self._do_without(found, senses)
         if not (senses.imu and senses.drive):
             self._actuators.restart()
             return
@@ -107,9 +111,13 @@ class Judge:
         turning = senses.attitude.rates[2] - reference[9]
         rates = (*off_rates, half * (x + bx) - reference[6], half * (y + by) - reference[7], turning)
         found = self._actuators.see(rates, off, self._torque, self._effort)
+        if found is not None:
+            self._do_without(found, senses)
+
+    def _do_without(self, index: int, senses: Senses) -> None:
         output = self._output
-        if found is not None and found not in output.lost:
-            output.lose(found)
-            senses.spin_held = output.gives_heading
+        if index not in output.lost and output.can_lose(index):
+            output.lose(index)
+            senses.spin_held = senses.encoders.spin_held = output.gives_heading
             self._actuators.restart()
             self.use()

@@ -157,7 +157,7 @@ class BalanceLoop:
         self.senses.trust_all()
         if self.guard.state == STANDBY:
             self.output.find()
-            self.senses.spin_held = True
+            self.senses.spin_held = self.senses.encoders.spin_held = True
         return True
 
     def set_drive_scale(self, scale: float) -> None:

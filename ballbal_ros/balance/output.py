@@ -61,6 +61,11 @@ class TorqueOutput:
         kept = np.delete(self._torque_map, sorted(without), axis=1)
         return kept.shape[1] >= 3 and bool(np.linalg.svd(kept, compute_uv=False)[-1] > 0.1)
 
+    def can_lose(self, index: int) -> bool:
+        """Whether the others still give torque about every level axis."""
+        kept = np.delete(self._torque_map[:2], sorted({*self.lost, index}), axis=1)
+        return kept.shape[1] >= 2 and bool(np.linalg.svd(kept, compute_uv=False)[-1] > 0.1)
+
     def lose(self, index: int) -> None:
         """Reckon no more with an actuator."""
         self.lost.add(index)

@@ -251,15 +251,23 @@ class GuardParameters:
     )
     wheel_start: float = parameter(
         "double",
-        0.004,
+        0.003,
         unit="rad",
         low=1e-5,
         high=100.0,
         meaning="how far an actuator's turn in a tick may be from that in the tick before, and be believed",
     )
+    wheel_slip: float = parameter(
+        "double",
+        0.001,
+        unit="rad",
+        low=1e-5,
+        high=100.0,
+        meaning="how far one actuator's turn in a tick may alone be from what is expected, and be believed",
+    )
     wheel_jump: float = parameter(
         "double",
-        0.03,
+        0.01,
         unit="rad",
         low=1e-4,
         high=100.0,
