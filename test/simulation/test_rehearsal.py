@@ -8,7 +8,10 @@ import attrs
 import numpy as np
 import pytest
 
+from ballbal_ros.balance.guard import BALANCING
+from ballbal_ros.simulation.rehearsal import Rehearsal
 from ballbal_ros.simulation.run_result import median
+from ballbal_ros.simulation.timeline import Timeline
 from helpers.rehearsing import changed, files, one_run, rehearsed, story, story_of
 
 SEEDS = range(5)
@@ -76,6 +79,29 @@ def test_a_long_push_moves_it_away_from_the_push(tmp_path: Path):
     _, trace = one_run(story_of(text, tmp_path), "planned", trace=True)
     begin = np.searchsorted(trace.time, trace.time[-1] - 1.1)
     assert trace.ball[-1, 0] - trace.ball[begin, 0] > 1e-3
+
+
+def test_to_set_off_the_ball_first_rolls_the_other_way():
+    """After a step of the commanded velocity the ball first goes back, then the body leans, and the whole follows (common
+    practice, no source).
+    """
+    timeline = Timeline.of(story("still"), files().compensation)
+    run = Rehearsal(files(), story("still"), "still", timeline)
+    robot, loop = run.robot, run.loop
+    way = []
+    for _ in range(int(5.5 * files().balance.loop.rate)):
+        effort = loop.tick(robot.measurement())
+        if robot.support and loop.guard.state == BALANCING:
+            robot.support = loop.supported = False
+        if abs(robot.time - 3.0) < 1e-6:
+            start = robot.ball_position[0]
+            loop.reference.set_velocity(0.3, 0.0, 0.0)
+        if robot.time >= 3.0:
+            way.append(robot.ball_position[0] - start)
+        robot.step(effort)
+    back = int(np.argmin(way))
+    assert way[back] < -2e-3 and back < 0.8 * files().balance.loop.rate
+    assert way[-1] > 0.2
 
 
 def test_a_load_said_to_be_lighter_than_it_is_is_trimmed_away():
