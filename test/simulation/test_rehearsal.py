@@ -82,8 +82,8 @@ def test_a_long_push_moves_it_away_from_the_push(tmp_path: Path):
 
 
 def test_to_set_off_the_ball_first_rolls_the_other_way():
-    """After a step of the commanded velocity the ball first goes back, then the body leans, and the whole follows (common
-    practice, no source).
+    """After a step of the commanded velocity the ball first goes back, then the body leans, and the whole follows
+    (common practice, no source).
     """
     timeline = Timeline.of(story("still"), files().compensation)
     run = Rehearsal(files(), story("still"), "still", timeline)
