@@ -27,7 +27,7 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
-from ballbal_ros.robot.whole_body import WholeBody
+from ballbal_ros.robot.whole_body import Posture, WholeBody
 
 _RESCHEDULE = 10
 _REGION = 250
@@ -77,6 +77,9 @@ class BalanceLoop:
         self._gains = ChangeOver(schedule, parameters, description.parameters.limits.drive_torque)
         self._change: PreparedChange | None = None
         self._ticks = 0
+        # What gains and capturable region are for: arms at rest need neither anew.
+        self._scheduled: Posture | None = None
+        self._judged: tuple[Posture | None, float] = (None, 0.0)
         ahead = parameters.loop.delay + 0.5 * self.period
         self.reference = Reference(self.body, self.period, ahead, parameters.compensation != "none")
         self.senses = Senses(description, parameters, self.watch, arm_position)
@@ -220,10 +223,17 @@ class BalanceLoop:
             self._take_over()
         self._ticks += 1
         posture = self.body.posture(senses.arm_position) if self._ticks % _RESCHEDULE == 0 else None
-        if posture is not None or self._gains.under_way:
+        if self._gains.under_way or (posture is not None and not posture.like(self._scheduled)):
             self._gains.tick(self.controller, posture)
-        if posture is not None and self._ticks % _REGION == 0:
-            self.judge.use(posture, self._gains.torque_limit)
+            self._scheduled = posture or self._scheduled
+        limit = self._gains.torque_limit
+        if (
+            posture is not None
+            and self._ticks % _REGION == 0
+            and not (posture.like(self._judged[0]) and limit == self._judged[1])
+        ):
+            self.judge.use(posture, limit)
+            self._judged = posture, limit
         row = self.reference.update(now, senses.arm_position)
         reference: list[float] = row.tolist()
         at_rest = self.supported and self.guard.state == STANDBY
