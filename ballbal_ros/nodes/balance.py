@@ -22,6 +22,7 @@ from ballbal_ros.nodes.lock_step import is_looked_at
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
+from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.nodes.topics import subscribe
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.parameters import RobotParameters
@@ -44,6 +45,7 @@ class BalanceNode(LifecycleNode):
         own: BalanceNodeParameters = parameters["node"]
         self.parameters: BalanceParameters = parameters["balance.yaml"]
         self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
+        self._stamp_clock = StampClock(self)
         self.loop: BalanceLoop | None = None
         self.active = False
         self.ns = -1
@@ -76,6 +78,7 @@ class BalanceNode(LifecycleNode):
         self._messages.command(ns, self._answer)
         self._ticks += 1
         if self._ticks % self._odom_every == 0:
+            self._stamp_clock.go_to(ns)
             self.requests.go_on(ns)
             self._messages.odometry(ns, loop)
         state = loop.guard.state

@@ -18,6 +18,7 @@ from rclpy.wait_for_message import wait_for_message
 
 from ballbal_ros.errors import BallbalError, ModelError
 from ballbal_ros.nodes.parameters import robot_file
+from ballbal_ros.nodes.priority import Scheduling
 from ballbal_ros.nodes.topics import TOPICS, _profile
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.parameters import RobotParameters
@@ -61,6 +62,8 @@ def run(make: Callable[[], Node]) -> int:
     try:
         node = make()
         settle_memory()
+        if node.has_parameter("realtime_priority"):
+            Scheduling.hurry(int(node.get_parameter("realtime_priority").value))
         spinner = executor()
         spinner.add_node(node)
         while rclpy.ok() and getattr(node, "exit_status", None) is None:

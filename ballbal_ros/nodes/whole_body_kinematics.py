@@ -20,6 +20,7 @@ from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, WARN, Diagnostics
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of
 from ballbal_ros.nodes.parameters import NodeParameters
+from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.loads import Load
@@ -36,6 +37,7 @@ class WholeBodyKinematicsNode(Node):
         own: KinematicsNodeParameters = parameters["node"]
         self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
         parameters.declare()
+        self._stamp_clock = StampClock(self)
         self._body = WholeBody(self.description)
         self._arms = JointReader(self.description.joint_names, "joint_states")
         self._every = 0 if own.rate <= 0.0 else round(BILLION / own.rate)
@@ -75,6 +77,7 @@ class WholeBodyKinematicsNode(Node):
         if not mine or soon or not self._arms.complete:
             return
         self._last = now
+        self._stamp_clock.go_to(now)
         while self._loads and self._loads[0][0] <= now / BILLION + 1e-9:
             self._body.set_load(self._loads.pop(0)[1])
         self._publish(self._body.posture(self._arms.position), now)
