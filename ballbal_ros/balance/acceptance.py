@@ -30,6 +30,12 @@ def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> N
         raise PlanRefused(
             _TOPIC, f"starts at {start:.3f} s, and it is {now:.3f} s", "give it a start that is still to come"
         )
+    age, oldest = loop.senses.arms_age(now), loop.parameters.arms_timeout
+    if loop.clock.now > -math.inf and age > oldest:
+        raise PlanRefused(_TOPIC, f"came while joint_states are {age:.2f} s old", f"they may be {oldest:g} s old")
+    speed = float(np.hypot(*plan.ball_rate.T).max())
+    if speed > limits.ball_speed:
+        raise PlanRefused(_TOPIC, f"rolls with {speed:.3g} m/s", f"limits.ball_speed is {limits.ball_speed:g} m/s")
     lean = float(np.hypot(*plan.lean.T).max())
     if lean > limits.lean:
         raise PlanRefused(_TOPIC, f"leans {lean:.3f} rad", f"limits.lean is {limits.lean:g} rad")

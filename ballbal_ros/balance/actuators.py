@@ -17,6 +17,7 @@ from ballbal_ros.robot.arrays import Array
 
 _WINDOW = 10
 _FORGET = 0.9
+_LEAST = 0.3
 _ENOUGH = 3.0
 _EXPLAINS = 0.75
 _LOSS = (0.6, 1.5)
@@ -45,7 +46,9 @@ class _Axis:
 
 
 class ActuatorWatch:
-    """Takes every tick in; :meth:`found` is the index of an actuator that has been found dead, or None."""
+    """Takes every tick's efforts in, and judges window after window. Torques are taken level as in ``base_link``: the
+    lean is small.
+    """
 
     def __init__(self, model: LinearModel, torque_map: Array, period: float) -> None:
         self._period = period
@@ -65,57 +68,51 @@ class ActuatorWatch:
         self._in_a_row, self._suspect = 0, -1
         self._begin(None)
 
-    def _begin(self, rates: tuple[float, float, float, float, float] | None) -> None:
-        self._begun, self._count = rates, 0
-        self._lean = [0.0, 0.0]
-        self._torque = [0.0, 0.0, 0.0]
+    def _begin(self, state: Array | None) -> None:
+        self._begun, self._count = state, 0
         self._effort: Array = np.zeros(self._map.shape[1])
 
-    def see(
-        self,
-        rates: tuple[float, float, float, float, float],
-        lean: tuple[float, float],
-        torque: tuple[float, float, float],
-        effort: Array,
-    ) -> int | None:
-        """Take a tick in: deviations from the reference of (roll rate, pitch rate, vx, vy, heading rate) and of the
-        lean; torque beyond the reference's, N m, and efforts [n] that act since the tick before. Returns what it has
-        found.
-        """
-        if self._begun is None:
-            self._begin(rates)
-            return None
+    def sent(self, effort: Array) -> bool:
+        """Take in the efforts [n] that act since the tick before; True where a window is full, or none has begun."""
         self._count += 1
-        self._lean[0] += lean[0]
-        self._lean[1] += lean[1]
-        total = self._torque
-        total[0] += torque[0]
-        total[1] += torque[1]
-        total[2] += torque[2]
         self._effort += effort
-        if self._count < _WINDOW:
-            return None
-        found = self._judge(rates, self._begun)
-        self._begin(rates)
+        return self._count >= _WINDOW or self._begun is None
+
+    def see(self, state: Array) -> int | None:
+        """End a window, and begin the next: deviations from the reference of (roll rate, pitch rate, vx, vy, heading
+        rate, roll, pitch), and the reference's own torque (3, N m). Returns what it has found.
+
+        Lean and reference change so little within a window that their ends say enough; efforts do not.
+        """
+        begun = self._begun
+        found = None if begun is None else self._judge(state, begun)
+        self._begin(state)
         return found
 
-    def _judge(self, rates: tuple[float, ...], begun: tuple[float, ...]) -> int | None:
+    def _judge(self, state: Array, begun: Array) -> int | None:
+        self._shared *= _FORGET
+        self._size *= _FORGET
+        self._total *= _FORGET
         share = 1.0 / self._count
-        changed = [(now - before) * share / self._period for now, before in zip(rates, begun)]
+        if not max(map(abs, self._effort.tolist())) * share > _LEAST:
+            # So little is lost in the drive's friction: nothing can be learnt of it.
+            return self._decide()
+        changed = ((state[:5] - begun[:5]) * (share / self._period)).tolist()
+        lean = (0.5 * (state[5:7] + begun[5:7])).tolist()
+        effort = share * self._effort
+        torque = (self._map @ effort - 0.5 * (state[7:] + begun[7:])).tolist()
         roll, pitch = self._axes
         missing = np.array(
             (
-                roll.missing(changed[0], changed[3], share * self._lean[0], share * self._torque[0]),
-                pitch.missing(changed[1], changed[2], share * self._lean[1], share * self._torque[1]),
-                self._heading_inertia * changed[4] - share * self._torque[2],
+                roll.missing(changed[0], changed[3], lean[0], torque[0]),
+                pitch.missing(changed[1], changed[2], lean[1], torque[1]),
+                self._heading_inertia * changed[4] - torque[2],
             )
         )
-        signs = self._map * (-share * self._effort)
-        self._shared *= _FORGET
+        signs = self._map * -effort
         self._shared += missing @ signs
-        self._size *= _FORGET
         self._size += np.einsum("ij,ij->j", signs, signs)
-        self._total = _FORGET * self._total + float(missing @ missing)
+        self._total += float(missing @ missing)
         return self._decide()
 
     def _decide(self) -> int | None:

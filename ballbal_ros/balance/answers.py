@@ -82,7 +82,13 @@ _ROWS = (
     Answer(
         IMU, "saturated", "a rate or acceleration at the end of imu.rate_range or imu.acceleration_range", _BLIND, _LOOP
     ),
-    Answer(IMU, "jump", "a rate further than limits.rate_jump from what model and other senses expect", _BLIND, _LOOP),
+    Answer(
+        IMU,
+        "jump",
+        "further than limits.rate_start from the last rate, or limits.rate_jump from that expected",
+        _BLIND,
+        _LOOP,
+    ),
     Answer(
         IMU,
         "tilt",
@@ -147,11 +153,11 @@ _ROWS = (
     Answer(
         SUPPLY,
         "sags",
-        "reported, or less torque found than commanded: limits and capturable region computed anew",
+        "reported to the loop: limits and capturable region are computed anew",
         _steps((0.0, HOLD)),
         _LOOP,
     ),
-    Answer(SUPPLY, "too weak", "less than half of the torque is left", _steps((0.0, STOP)), _LOOP),
+    Answer(SUPPLY, "too weak", "reported: less than half of the torque is left", _steps((0.0, STOP)), _LOOP),
     Answer(ARMS, "silent", "no newer sample; after arms_timeout new plans are refused", _ARMS_UNSEEN, _LOOP),
     Answer(ARMS, "late", "older than arms_timeout when it comes", _ARMS_UNSEEN, _LOOP),
     Answer(ARMS, "not finite", "NaN or infinity in a position", _ARMS_UNSEEN, _LOOP),
@@ -215,10 +221,10 @@ _ROWS = (
     Answer(
         VELOCITY, "stale", "0.5 s without another one: the ball comes to rest", _steps((0.0, GO_ON), (0.5, HOLD)), _NODE
     ),
-    Answer(VELOCITY, "not balancing", "came in another state than balancing", _REFUSED, "check_velocity"),
-    Answer(VELOCITY, "absurd", "wrong frame, not finite, or beyond limits.ball_speed", _REFUSED, "check_velocity"),
-    Answer(GOAL, "not balancing", "came in another state than balancing", _REFUSED, "check_goal"),
-    Answer(GOAL, "absurd", "wrong frame, not finite, or no unit quaternion", _REFUSED, "check_goal"),
+    Answer(VELOCITY, "not balancing", "came in another state than balancing", _REFUSED, _NODE),
+    Answer(VELOCITY, "absurd", "wrong frame, not finite, or beyond limits.ball_speed", _REFUSED, _NODE),
+    Answer(GOAL, "not balancing", "came in another state than balancing", _REFUSED, _NODE),
+    Answer(GOAL, "absurd", "wrong frame, not finite, or no unit quaternion", _REFUSED, _NODE),
     Answer(
         EMERGENCY, "true", "somebody wants it to stop; latched, false alone does not end it", _steps((0.0, STOP)), _NODE
     ),

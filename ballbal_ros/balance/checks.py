@@ -27,6 +27,7 @@ class ImuCheck:
         imu = description.parameters.imu
         self._late = parameters.imu_timeout
         self._rate_end, self._acceleration_end = _AT_THE_END * imu.rate_range, _AT_THE_END * imu.acceleration_range
+        self._least_end = min(self._rate_end, self._acceleration_end)
         self._stamp = -math.inf
         self._last: list[float] = []
         self.rate: list[float] = [0.0, 0.0, 0.0]
@@ -51,11 +52,12 @@ class ImuCheck:
         if numbers == self._last:
             return "frozen"
         self._last, self._stamp = numbers, stamp
-        end = self._rate_end
-        if not (-end < min(rate) and max(rate) < end):
-            return "saturated"
-        if acceleration is not None and not max(map(abs, acceleration)) < self._acceleration_end:
-            return "saturated"
+        end = self._least_end
+        if not -end < min(numbers) <= max(numbers) < end:
+            if not max(map(abs, rate)) < self._rate_end:
+                return "saturated"
+            if acceleration is not None and not max(map(abs, acceleration)) < self._acceleration_end:
+                return "saturated"
         self.rate, self.acceleration = rate, acceleration
         return ""
 
@@ -77,6 +79,8 @@ class ArmCheck:
     def __init__(self, description: RobotDescription, parameters: BalanceParameters, position: Array) -> None:
         self._late = parameters.arms_timeout
         self._fastest = _FASTER * description.velocity_limit
+        self._period = parameters.loop.period
+        self._tick_share = 1.0 / (self._fastest * self._period + _ARM_NOISE)
         self.position = np.array(position, float)
         self.believed = -math.inf
         self._offset = np.zeros(len(self.position))
@@ -102,6 +106,12 @@ class ArmCheck:
                 return "not finite"
             self.position, self.believed = raw.copy(), stamp
             return ""
+        if not self._jumped and passed <= 1.001 * self._period:
+            share = (raw - self.position) * self._tick_share
+            if float(share @ share) < 1.0:
+                # All joints together moved less than any one may: the common case, and cheap.
+                self.position, self.believed = raw, stamp
+                return ""
         position = raw + self._offset if self._jumped else raw
         most = self._fastest * min(passed, self._late) + _ARM_NOISE
         if not (np.abs(position - self.position) <= most).all():

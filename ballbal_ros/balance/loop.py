@@ -61,13 +61,15 @@ class BalanceLoop:
         parameters: BalanceParameters,
         arm_position: Array,
         loads: Iterable[Load] = (),
+        schedule: GainSchedule | None = None,
     ):
+        """``schedule``: gains designed before for this robot, posture and parameters; without it, they are now."""
         self.description, self.parameters = description, parameters
         self.body = WholeBody(description, loads)
         self.period = parameters.loop.period
         self.guard, self.watch, self.clock = Guard(parameters), Watch(), LoopClock(self.period)
         posture = self.body.posture(arm_position)
-        schedule = GainSchedule(description, parameters, posture)
+        schedule = schedule or GainSchedule(description, parameters, posture)
         self.controller = Controller(
             schedule.at(posture),
             parameters.limits.trim_rate * self.period,
@@ -330,16 +332,11 @@ class BalanceLoop:
     def _efforts(self, wanted: Array, share: float, reference: list[float]) -> Array:
         """Limit the torque, turn it into efforts, and let the model go on with what was really sent."""
         output, (x, y, z) = self.output, reference[10:13]
-        self.judge.sent(output.sent, reference)
+        self.judge.sent()
         wx, wy, wz = wanted.tolist()
-        effort = output.send(
-            share * (x + wx),
-            share * (y + wy),
-            share * (z + wz),
-            self._gains.torque_limit,
-            self.lean,
-            self.senses.encoders.rate,
-        )
+        encoders, limit = self.senses.encoders, self._gains.torque_limit
+        tx, ty, tz = share * (x + wx), share * (y + wy), share * (z + wz)
+        effort = output.send(tx, ty, tz, limit, self.lean, encoders.moved, encoders.passed)
         if effort is None:
             self.guard.trip(f"{LEAN}: torque not a number")
             self.torque[:] = 0.0

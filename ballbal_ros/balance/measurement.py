@@ -11,11 +11,12 @@ from ballbal_ros.robot.arrays import Array
 
 @attrs.define(eq=False)
 class Measurement:
-    """One tick's input; made once and filled anew each tick, as the loop is fast.
+    """One tick's input; made once and filled anew each tick, as the loop is fast. ``arm_position`` is kept by the
+    loop: a new array each tick.
 
     ``stamp`` in s is the tick's; ``imu_quat_xyzw`` the IMU's orientation in ``odom`` or None; ``imu_rate`` [3] rad/s
-    and ``imu_acceleration`` [3] m/s² in IMU axes (REP-145: at rest with z up it reads +g) or None; ``drive_angle``
-    [n] rad, relative to the body; ``arm_position`` [joints].
+    and ``imu_acceleration`` [3] m/s² in IMU axes (REP-145: at rest with z up it reads +g) or None; ``drive_angle`` [n]
+    rad, relative to the body; ``arm_position`` [joints].
 
     ``imu_stamp``, ``drive_stamp`` and ``arm_stamp``, s: when each was measured, None for the tick's own stamp. What
     has the stamp that it had before is nothing new. Nothing here need be finite or sensible: the loop's checks see to

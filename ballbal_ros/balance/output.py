@@ -13,6 +13,8 @@ from ballbal_ros.robot.description import RobotDescription
 
 Triple = tuple[float, float, float]
 
+_ROUNDING = 1.0 + 1e-9
+
 
 class TorqueOutput:
     """Limits torque, its rate and the drive's power, and shares it out among the actuators that give torque.
@@ -35,11 +37,15 @@ class TorqueOutput:
         self.lost: set[int] = set()
         self.scale = 1.0
         self.gives_heading = True
-        self._effort_map = np.ascontiguousarray(drive.effort_map)
+        self._shares = [1.0 / limit for limit in self._limits]
+        self._map_efforts(drive.effort_map)
         self._zero = np.zeros(len(drive.names))
-        self._in_base = np.zeros(3)
         self.sent: Triple = (0.0, 0.0, 0.0)
         self.effort = self._zero.copy()
+
+    def _map_efforts(self, effort_map: Array) -> None:
+        # Plain numbers: for so few they are faster than arrays.
+        self._effort_map, self._effort_rows = effort_map, effort_map.tolist()
 
     @property
     def spare(self) -> bool:
@@ -69,19 +75,22 @@ class TorqueOutput:
     def lose(self, index: int) -> None:
         """Reckon no more with an actuator."""
         self.lost.add(index)
+        self.effort = self.effort.copy()
+        self.effort[index] = 0.0
+        self.sent = self._level(self.effort, (0.0, 0.0))
         self.gives_heading = self._spans(self.lost)
         kept = self._torque_map.copy()
         kept[:, sorted(self.lost)] = 0.0
         if not self.gives_heading:
             kept[2] = 0.0
         # About a level axis even where two are all that is left; pinv gives none to those that are lost.
-        self._effort_map = np.ascontiguousarray(np.linalg.pinv(kept, rcond=1e-3))
+        self._map_efforts(np.asarray(np.linalg.pinv(kept, rcond=1e-3), float))
 
     def find(self) -> None:
         """Reckon with every actuator again (a person has seen to them)."""
         self.lost.clear()
         self.gives_heading = True
-        self._effort_map = np.ascontiguousarray(np.linalg.pinv(self._torque_map))
+        self._map_efforts(np.asarray(np.linalg.pinv(self._torque_map), float))
 
     def none(self) -> Array:
         """No torque at all, at once."""
@@ -90,13 +99,20 @@ class TorqueOutput:
         return self._zero.copy()
 
     def send(
-        self, tx: float, ty: float, tz: float, limit: float, lean: tuple[float, float], rate: Array
+        self,
+        tx: float,
+        ty: float,
+        tz: float,
+        limit: float,
+        lean: tuple[float, float],
+        moved: list[float],
+        passed: float,
     ) -> Array | None:
         """Efforts [n] for a torque on the body in ``base_footprint`` axes, N m; None where it is not finite. ``sent``
         is what they give.
 
-        ``limit``: greatest torque, N m, about any level axis; about z it is at most what the floor holds; ``rate``:
-        the actuators' rates [n], rad/s.
+        ``limit``: greatest torque, N m, about any level axis; about z it is at most what the floor holds; ``moved``:
+        how far each actuator went within the last ``passed`` s, rad.
         """
         if not math.isfinite(tx + ty + tz):
             return None
@@ -113,35 +129,48 @@ class TorqueOutput:
             tx, ty = last_x + (tx - last_x) * step / change, last_y + (ty - last_y) * step / change
         if self.gives_heading:
             tz = max(last_z - step, min(last_z + step, tz))
-        self.effort = self._within_power(self._shared_out(tx, ty, tz, lean), rate, lean)
+        effort = self._shared_out(tx, ty, tz, lean)
+        most_work = self._power * passed
+        work = 0.0
+        for e, m in zip(effort, moved):
+            work += abs(e * m)
+        if work > most_work:
+            effort = [e * most_work / work for e in effort]
+            self.sent = self._level(effort, lean)
+        self.effort = np.array(self._without_step(effort, last_x, last_y, lean))
         return self.effort
 
-    def _shared_out(self, tx: float, ty: float, tz: float, lean: tuple[float, float]) -> Array:
+    def _without_step(self, effort: list[float], x: float, y: float, lean: tuple[float, float]) -> list[float]:
+        """Where actuators' limits turned the torque aside, go no further from the last (x, y), N m, than a tick may."""
+        change = math.hypot(self.sent[0] - x, self.sent[1] - y)
+        if change <= self._step * _ROUNDING:
+            return effort
+        share = self._step / change
+        near = [before + share * (e - before) for e, before in zip(effort, self.effort.tolist())]
+        self.sent = self._level(near, lean)
+        return near
+
+    def _shared_out(self, tx: float, ty: float, tz: float, lean: tuple[float, float]) -> list[float]:
         """Efforts within every actuator's limit: the heading gives way first."""
         roll, pitch = lean
         sr, cr, sp, cp = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
-        base = self._in_base
-        base[:] = cp * tx - sp * tz, sp * sr * tx + cr * ty + cp * sr * tz, sp * cr * tx - sr * ty + cp * cr * tz
-        effort = self._effort_map @ base
-        over = max(abs(e) / limit for e, limit in zip(effort.tolist(), self._limits)) / self.scale
+        x, y, z = cp * tx - sp * tz, sp * sr * tx + cr * ty + cp * sr * tz, sp * cr * tx - sr * ty + cp * cr * tz
+        effort = [ex * x + ey * y + ez * z for ex, ey, ez in self._effort_rows]
+        over = 0.0
+        for e, share in zip(effort, self._shares):
+            over = max(over, abs(e) * share)
+        over /= self.scale
         if over > 1.0 and tz != 0.0:
             return self._shared_out(tx, ty, 0.0, lean)
         if over > 1.0:
-            effort /= over
+            effort = [e / over for e in effort]
         if over > 1.0 or not self.gives_heading:
             self.sent = self._level(effort, lean)
         else:
             self.sent = tx, ty, tz
         return effort
 
-    def _within_power(self, effort: Array, rate: Array, lean: tuple[float, float]) -> Array:
-        power = float(np.abs(effort) @ np.abs(rate))
-        if power > self._power:
-            effort *= self._power / power
-            self.sent = self._level(effort, lean)
-        return effort
-
-    def _level(self, effort: Array, lean: tuple[float, float]) -> Triple:
+    def _level(self, effort: list[float] | Array, lean: tuple[float, float]) -> Triple:
         """The torque, in ``base_footprint`` axes, that efforts give."""
         x, y, z = (self._torque_map @ effort).tolist()
         roll, pitch = lean

@@ -225,6 +225,14 @@ class GuardParameters:
     drive_power: float = parameter(
         "double", 1500.0, unit="W", low=1.0, high=1e6, meaning="greatest power of all drive actuators together"
     )
+    rate_start: float = parameter(
+        "double",
+        0.1,
+        unit="rad/s",
+        low=1e-3,
+        high=100.0,
+        meaning="how far a measured rate may be from that of the tick before, and be believed",
+    )
     rate_jump: float = parameter(
         "double",
         0.4,

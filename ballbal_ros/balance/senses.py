@@ -84,7 +84,8 @@ class Senses:
         )
         self._watch = watch
         self._own = parameters.attitude == "own"
-        self._rate_jump = parameters.limits.rate_jump
+        self._rate_jump, self._rate_start = parameters.limits.rate_jump, parameters.limits.rate_start
+        self._rate_before = (0.0, 0.0)
         self._imu = ImuCheck(description, parameters)
         self._arms = ArmCheck(description, parameters, arm_position)
         self.encoders = Encoders(description, parameters)
@@ -96,7 +97,7 @@ class Senses:
         self._guessed = [0.0, 0.0]
         self._heading_zero = 0.0
         self._drive_heading = 0.0
-        self._last_lean = (0.0, 0.0)
+        self._turn = (0.0, 1.0, 0.0, 1.0)
         self._seen_lean = (0.0, 0.0)
         self._unseen, self._quarantine, self._quarantined_for = 0, 0, ""
         self.spin_held = True
@@ -154,37 +155,42 @@ class Senses:
         body still.
         """
         attitude, watch = self.attitude, self._watch
+        before = attitude.roll, attitude.pitch
+        self._turn_by(*before)
         wrong = self._imu.look(measured, now)
         body_rate: Triple = (0.0, 0.0, 0.0)
+        force: Triple | None = None
         if not wrong:
             body_rate = attitude.in_base(self._imu.rate)
+            if self._imu.acceleration is not None:
+                force = attitude.in_base(self._imu.acceleration)
             if not self.tilt.agrees:
                 wrong = "tilt"
-            elif expected is not None and self._jumps(body_rate, expected):
+            elif expected is None:
+                self._rate_before = body_rate[:2]
+            elif self._jumps(body_rate, expected):
                 wrong = "jump"
         wrong = self._quarantined(wrong)
         self.imu = not wrong
         turning = body_rate[2] if self.imu or expected is None else expected.turning
-        missing = self.encoders.look(measured, now, self._relative(expected, turning), self.period)
+        relative = None if expected is None else self._relative(expected, turning)
+        missing = self.encoders.look(measured, now, relative, self.period)
         self.drive = not missing
         turned = self._level(*self.encoders.turn) if self.drive else (0.0, 0.0, 0.0)
         self._drive_heading -= turned[2]
-        before = self._last_lean
         if self.imu and self.drive and expected is not None and self.spin_held:
             body_rate = self._checked_turning(body_rate, turned[2], now, expected.calm)
         if self.imu:
-            self._attitude(measured, now, body_rate, expected, at_rest)
+            self._attitude(measured, now, body_rate, force, expected, at_rest)
         elif expected is not None:
             heading = attitude.heading - turned[2] if self.drive else attitude.heading + self.period * expected.turning
             if self._unseen <= _BRIDGED:
                 attitude.bridge(expected.lean_rate, expected.turning)
             else:
                 attitude.coast(expected.lean, expected.lean_rate, heading, expected.turning)
-        self._last_lean = attitude.roll, attitude.pitch
         self.moved_before, self.moved = self.moved, self._go(turned, before, expected)
-        if self.imu and self.drive and expected is not None and self._imu.acceleration is not None:
-            rates = attitude.rates
-            self.tilt.see(attitude.in_base(self._imu.acceleration), self._last_lean, (rates[0], rates[1]), self.moved)
+        if self.imu and self.drive and expected is not None and force is not None:
+            self.tilt.see(force, attitude.roll, attitude.pitch, attitude.rates, self.moved)
         if wrong or missing or self.encoders.one_bad or not watch.quiet:
             self.tilt.restart()
             watch.see(now, IMU, wrong)
@@ -208,11 +214,9 @@ class Senses:
 
     def pass_over(self, expected: Expected) -> None:
         """A tick at which nobody looked: go on with what is expected."""
+        self._turn_by(self.attitude.roll, self.attitude.pitch)
+        self.encoders.pass_over(self._relative(expected, expected.turning))
         self.attitude.bridge(expected.lean_rate, expected.turning)
-        self._last_lean = self.lean
-        relative = self._relative(expected, expected.turning)
-        if relative is not None:
-            self.encoders.pass_over(relative)
         self.tilt.restart()
 
     def _quarantined(self, wrong: str) -> str:
@@ -235,29 +239,41 @@ class Senses:
     def _jumps(self, body_rate: Triple, expected: Expected) -> bool:
         """Whether the gyro is further from what is expected than anything but a fault takes it."""
         wx, wy, wz = body_rate
-        sr, cr = _sin_cos(self.attitude.roll)
+        sr, cr, _, _ = self._turn
         roll = wx + self.attitude.pitch * wz - expected.lean_rate[0]
         pitch = cr * wy - sr * wz - expected.lean_rate[1]
-        most = self._rate_jump
+        # A change that no push makes in a tick; and after one, only what is much nearer is believed again.
+        (bx, by), start = self._rate_before, self._rate_start
+        self._rate_before = wx, wy
+        if self._unseen == 0 and not (-start < wx - bx < start and -start < wy - by < start):
+            return True
+        most = self._rate_jump if self._quarantine == 0 else start
         return not (-most < roll < most and -most < pitch < most)
 
-    def _relative(self, expected: Expected | None, turning: float) -> Triple | None:
+    def _turn_by(self, roll: float, pitch: float) -> None:
+        """Keep sines and cosines of the lean at the tick's beginning."""
+        self._turn = math.sin(roll), math.cos(roll), math.sin(pitch), math.cos(pitch)
+
+    def _relative(self, expected: Expected, turning: float) -> Triple:
         """Rate of the ball relative to the body that is expected, rad/s, ``base_link``."""
-        if expected is None:
-            return None
         (roll_rate, pitch_rate), (vx, vy) = expected.lean_rate, expected.velocity
         x, y, z = -vy / self._radius - roll_rate, vx / self._radius - pitch_rate, -turning
-        (sr, cr), (sp, cp) = _sin_cos(self.attitude.roll), _sin_cos(self.attitude.pitch)
+        sr, cr, sp, cp = self._turn
         return cp * x - sp * z, sp * sr * x + cr * y + cp * sr * z, sp * cr * x - sr * y + cp * cr * z
 
     def _level(self, x: float, y: float, z: float) -> Triple:
         """A turn in ``base_link`` in the axes of ``base_footprint``."""
-        roll, pitch = self._last_lean
-        (sr, cr), (sp, cp) = _sin_cos(roll), _sin_cos(pitch)
+        sr, cr, sp, cp = self._turn
         return cp * x + sp * sr * y + sp * cr * z, cr * y - sr * z, -sp * x + cp * sr * y + cp * cr * z
 
     def _attitude(
-        self, measured: Measurement, now: float, body_rate: Triple, expected: Expected | None, at_rest: bool
+        self,
+        measured: Measurement,
+        now: float,
+        body_rate: Triple,
+        force: Triple | None,
+        expected: Expected | None,
+        at_rest: bool,
     ) -> None:
         attitude, quat = self.attitude, measured.imu_quat_xyzw
         if not self._own:
@@ -273,8 +289,6 @@ class Senses:
                 self._watch.see(now, ORIENTATION, wrong)
             if not wrong:
                 return
-        acceleration = self._imu.acceleration
-        force = None if acceleration is None else attitude.in_base(acceleration)
         known = (0.0, 0.0, 0.0, 0.0) if expected is None else expected.acceleration
         if not (self.drive and self.spin_held):
             self._drive_heading = attitude.heading
@@ -322,10 +336,6 @@ class Senses:
         self.ball[0] += cos * ahead - sin * aside
         self.ball[1] += sin * ahead + cos * aside
         return ahead, aside
-
-
-def _sin_cos(angle: float) -> tuple[float, float]:
-    return math.sin(angle), math.cos(angle)
 
 
 def gyro_noise(parameters: BalanceParameters) -> tuple[float, float]:

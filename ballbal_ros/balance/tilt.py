@@ -48,14 +48,15 @@ class TiltWitness:
     def see(
         self,
         force: tuple[float, float, float],
-        lean: tuple[float, float],
-        lean_rate: tuple[float, float],
+        roll: float,
+        pitch: float,
+        lean_rate: tuple[float, float, float],
         moved: tuple[float, float],
     ) -> None:
         """Take one tick: specific force (``base_link``, m/s²), lean and its rate, and how far the ball moved (heading
         axes, m).
         """
-        (fx, fy, fz), (roll, pitch) = force, lean
+        fx, fy, fz = force
         sr, cr = math.sin(roll), math.cos(roll)
         down = sr * fy + cr * fz
         total = self._force

@@ -54,7 +54,12 @@ class FaultyRobot:
         self._shift = 0.0
         self._skipped = False
         drive = description.drive
-        self.slip = Slip(drive.effort_limit, drive.rate_limit, [1e-3 + 0.002] * len(drive.names))
+        self._effort_limit = drive.effort_limit
+        self.slip = Slip(
+            drive.effort_limit,
+            drive.rate_limit,
+            [m.rotor_inertia + 1e-3 for m in description.parameters.drive.contact.values()],
+        )
         self.slipped = np.zeros(len(drive.names))
 
     def measure(self, true: Measurement) -> Measurement | None:
@@ -200,6 +205,11 @@ class FaultyRobot:
     def _weak(self, effort: Array) -> Array:
         return self.fault.size * effort
 
+    def _bounded(self, effort: Array) -> Array:
+        """The battery gives so much of the greatest effort, and no more."""
+        most = self.fault.size * self._effort_limit
+        return np.clip(effort, -most, most)
+
     def _slips(self, effort: Array) -> Array:
         which = self.fault.which % len(effort)
         sent = effort.copy()
@@ -276,5 +286,6 @@ CHANGES: dict[str, Change] = {
 ON_DRIVE: dict[str, Callable[[FaultyRobot, Array], Array]] = {
     "actuator dead": lambda f, e: f._dead(e),
     "torque sags": lambda f, e: f._weak(e),
+    "battery sags": lambda f, e: f._bounded(e),
     "wheel slips": lambda f, e: f._slips(e),
 }

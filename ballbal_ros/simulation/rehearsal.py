@@ -13,6 +13,7 @@ import numpy as np
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.balance.schedule import GainSchedule
 from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
@@ -86,12 +87,14 @@ class Rehearsal:
         plan: LeanPlan | None = None,
         seed: int = 0,
         truth: Truth | None = None,
+        schedule: GainSchedule | None = None,
     ) -> None:
+        """``schedule``: as :class:`BalanceLoop` takes it."""
         self.kind, self.seed, self.timeline, self.story = kind, seed, timeline, story
         self.robot = SimulatedRobot(files.description, files.simulation, story.posture, story.start_loads, seed, truth)
         way = kind if kind in ("quasi_static", "none") else "planned"
         self.loop = BalanceLoop(
-            files.description, attrs.evolve(files.balance, compensation=way), story.posture, story.start_loads
+            files.description, attrs.evolve(files.balance, compensation=way), story.posture, story.start_loads, schedule
         )
         self.loop.supported = True
         self._plan = plan if kind == "planned" else None
