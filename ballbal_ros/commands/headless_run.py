@@ -115,11 +115,15 @@ class HeadlessRun:
             processes.start(node.executable, node.command(setup.namespace), environment(setup.domain), hurried)
 
     def _follow(self, processes: Processes, bus: Bus, show: Callable[[Glimpse], None]) -> None:
-        shown = 0.0
+        """Until all is recorded: every tick of the run, and what the simulated robot says at its end."""
+        shown, ended_at = 0.0, np.inf
         silent_since, heard = time.monotonic(), 0
-        while not processes.ended(_SIMULATOR):
+        while len(bus.records) <= self._wanted or bus.peaks.get("ended") != "True":
             bus.turn()
             now = time.monotonic()
+            ended_at = min(ended_at, now if processes.ended(_SIMULATOR) else np.inf)
+            if now - ended_at > _LAST_WORDS:
+                break
             if len(bus.records) != heard:
                 silent_since, heard = now, len(bus.records)
             elif now - silent_since > 2.0 * self.setup.timeout:
@@ -128,20 +132,16 @@ class HeadlessRun:
                 shown = now
                 at, x, y = bus.place()
                 show(Glimpse(at, self._travel(at, x, y), bus.state))
-        processes.check()
+
+    @property
+    def _wanted(self) -> int:
+        return round(self.setup.timeline.end * self.setup.rate)
 
     def _whole(self, bus: Bus) -> Array:
-        """The record once it is complete: every tick of the run."""
-        rate = self.setup.rate
-        wanted = round(self.setup.timeline.end * rate)
-        until = time.monotonic() + _LAST_WORDS
-        while time.monotonic() < until and (len(bus.records) < wanted or "drive torque peak" not in bus.peaks):
-            bus.turn()
-        truth = bus.truth()
-        if len(truth) < wanted or np.abs(np.diff(truth[:, 0]) * rate - 1.0).max() > 1e-3:
-            raise RunFailed(
-                f"ground_truth: {len(truth)} of {wanted + 1} instants came: the machine is too busy to record"
-            )
+        """The record, which must be complete."""
+        truth, wanted = bus.truth(), self._wanted + 1
+        if len(truth) != wanted or np.abs(np.diff(truth[:, 0]) * self.setup.rate - 1.0).max() > 1e-3:
+            raise RunFailed(f"ground_truth: {len(truth)} of {wanted} instants came: the bus lost some")
         return truth
 
     def _meant(self, times: Array) -> Array:

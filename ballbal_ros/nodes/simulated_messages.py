@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
+from rclpy.duration import Duration
 from rclpy.node import Node
 
 from ballbal_ros.errors import BallbalError, nearest
@@ -13,6 +14,8 @@ from ballbal_ros.nodes.wire import ClockWriter, ImuWriter, JointStateWriter, Joi
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.simulation.robot import SimulatedRobot
+
+_AT_ONCE = Duration()
 
 
 class SimulatedMessages:
@@ -35,6 +38,8 @@ class SimulatedMessages:
     def publish(self, robot: SimulatedRobot, ns: int, again: bool = False) -> None:
         """Publish the instant ``ns``, in ns, that the robot has come to; ``again`` where it has been published
         before.
+
+        The record comes once for each instant; but that of t = 0 until it is left, for whoever came to listen.
         """
         measured = robot.measurement()
         arms, drive, imu = self._arms, self._drive, self._imu.values
@@ -45,8 +50,8 @@ class SimulatedMessages:
         imu[13:16], imu[25:28] = measured.imu_rate, measured.imu_acceleration
         for sender, message in zip(self._publishers, (self._clock, arms, drive, self._imu), strict=False):
             sender.publish(message.serialised(ns))
-        # The answer is under way: what is for the record only costs no time now. It comes once for each instant.
-        if not again:
+        # The answer is under way: what is for the record only costs no time now.
+        if not again or ns == 0:
             self.record(robot, ns)
 
     def record(self, robot: SimulatedRobot, ns: int) -> None:
@@ -64,6 +69,10 @@ class SimulatedMessages:
         )
         twist[:] = ahead, aside, up, *turning
         self._publishers[-1].publish(self._truth.serialised(ns))
+
+    def recorded(self) -> bool:
+        """Whether all that listen have the whole record."""
+        return bool(self._publishers[-1].wait_for_all_acked(_AT_ONCE))
 
     def effort(self, command: JointValues) -> Array:
         """The efforts [n] of a ``drive_command``, N m; raises :class:`BallbalError` unless there is a finite one for

@@ -38,7 +38,8 @@ from ballbal_ros.simulation.truth import parse_truth
 
 _ATTEND = 0.1
 _PUSH_LASTS = 0.1
-_LINGER = 0.2
+# Whoever has lost a message on the way asks for it again within 3 s.
+_LINGER = (0.2, 4.0)
 
 
 class SimulatedRobotNode(Node):
@@ -177,8 +178,7 @@ class SimulatedRobotNode(Node):
     def _attend(self) -> None:
         """By the wall clock: say what is so now again until it is answered, and end if somebody stays silent."""
         if self._ended is not None:
-            if time.monotonic() - self._ended[1] > _LINGER:
-                self.exit_status = self._ended[0]
+            self._linger(*self._ended)
             return
         if self._started is not None:
             return
@@ -188,6 +188,15 @@ class SimulatedRobotNode(Node):
         self._go_on()
         if self._ended is None and time.monotonic() - self._waiting_since > self._own.answer_timeout:
             self._end(1, self._who_is_silent())
+
+    def _linger(self, status: int, since: float) -> None:
+        """Leave when everybody has the record."""
+        least, most = _LINGER
+        gone_by = time.monotonic() - since
+        if gone_by > most or (gone_by > least and (status != 0 or self._messages.recorded())):
+            self.exit_status = status
+        else:
+            self._diagnostics.publish()
 
     def _who_is_silent(self) -> str:
         where = f"simulated_robot: at t = {self._robot.time:.3f} s, {self._own.answer_timeout:g} s without"
@@ -259,6 +268,7 @@ class SimulatedRobotNode(Node):
             "time": robot.time,
             "support": robot.support,
             "seed": self._own.seed,
+            "ended": self._ended is not None,
             **self._peaks.values(),
             **(self._answers.values() if self._started is not None else {}),
         }

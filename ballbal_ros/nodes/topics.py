@@ -42,7 +42,8 @@ SENSOR = Kind(1, lossy=True)
 COMMAND = Kind(1)
 PLAN = Kind(10, kept=True)
 JOINTS = Kind(20)
-RECORD = Kind(1000)
+# What was lost on the way is asked for again every 3 s, and must still be there: lock-step may do 2000 steps a second.
+RECORD = Kind(20_000)
 DESCRIPTION = Kind(1, kept=True)
 
 TOPICS: dict[str, tuple[type, Kind]] = {
