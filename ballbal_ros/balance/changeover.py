@@ -11,11 +11,13 @@ so that not even a change in the middle of a push makes a step. Limits go to the
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import attrs
 import numpy as np
 
 from ballbal_ros.balance.controller import STATES, Controller, ControllerMatrices
-from ballbal_ros.balance.gains import Gains, checked_design, design
+from ballbal_ros.balance.gains import Gains, checked_design, design, least_margins
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.regulator import Regulator
 from ballbal_ros.balance.schedule import GainSchedule, PostureRange
@@ -31,10 +33,14 @@ _ON_THE_WAY = (0.25, 0.5, 0.75)
 
 @attrs.frozen(eq=False)
 class PreparedChange:
-    """New parameters, checked, with the gains designed for them; ``schedule`` is None where the gains stay."""
+    """New parameters, checked, with the gains designed for them; ``schedule`` is None where the gains stay.
+
+    ``margins``: the least of each kind, see :func:`~ballbal_ros.balance.gains.least_margins`; None where they stay.
+    """
 
     parameters: BalanceParameters
     schedule: GainSchedule | None
+    margins: Mapping[str, float] | None = None
 
 
 def prepare(
@@ -58,11 +64,11 @@ def prepare(
     if not deciding:
         return PreparedChange(new, None)
     try:
-        gains, _ = checked_design(posture, description, new)
+        gains, found = checked_design(posture, description, new)
         _check_the_way(design(posture, description, old), gains)
     except BallbalError as error:
         raise BallbalError(where, f"with {', '.join(deciding)} {error.what}", error.remedy) from error
-    return PreparedChange(new, GainSchedule(description, new, reach))
+    return PreparedChange(new, GainSchedule(description, new, reach), least_margins(found))
 
 
 def _decides_gains(name: str) -> bool:

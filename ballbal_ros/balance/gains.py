@@ -114,6 +114,18 @@ def requirements(found: tuple[Margins, Margins], parameters: BalanceParameters) 
     return rows
 
 
+def least_margins(found: tuple[Margins, Margins]) -> dict[str, float]:
+    """The least margin of each kind over all axes, by a name that ends with its unit. Infinite: more than was tried."""
+    axes = [axis for loop in found for axis in loop.axes]
+    return {
+        "gain margin up": min(axis.gain_up for axis in axes),
+        "gain margin down": max(axis.gain_down for axis in axes),
+        "phase margin deg": min(axis.phase for axis in axes),
+        "delay margin ms": 1e3 * min(*(axis.delay for axis in axes), *(loop.delay_limit for loop in found)),
+        "disk margin": min(loop.disk for loop in found),
+    }
+
+
 def poles(regulator: Regulator) -> list[Pole]:
     """Closed-loop poles, slowest first, pairs once; those of the delay, which die within a sample, left out."""
     found = []

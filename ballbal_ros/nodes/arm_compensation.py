@@ -28,7 +28,7 @@ from ballbal_ros.nodes.lean_trajectory import lean_plan_message
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_report import PlanReports
-from ballbal_ros.nodes.topics import publisher, subscribe
+from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.nodes.trajectories import (
     ArmWaypoints,
     ball_motion_of,
@@ -93,14 +93,15 @@ class ArmCompensationNode(Node):
         self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
 
     def _listen(self) -> None:
-        subscribe(self, "hand_load", self._on_load)
-        subscribe(self, "joint_states", self._on_joint_states, raw=True)
-        subscribe(self, "odom", self._on_odom)
-        subscribe(self, "balance_state", self._on_balance_state)
-        subscribe(self, "ball_plan", self._on_ball_plan)
-        subscribe(self, "hand_wrench_plan", self._on_wrench_plan)
-        subscribe(self, "emergency_stop", self._on_emergency_stop)
-        subscribe(self, "arm_plan", self._on_arm_plan)
+        inputs = self._diagnostics.inputs
+        inputs.subscribe("hand_load", self._on_load)
+        inputs.subscribe("joint_states", self._on_joint_states, raw=True)
+        inputs.subscribe("odom", self._on_odom)
+        inputs.subscribe("balance_state", self._on_balance_state)
+        inputs.subscribe("ball_plan", self._on_ball_plan)
+        inputs.subscribe("hand_wrench_plan", self._on_wrench_plan)
+        inputs.subscribe("emergency_stop", self._on_emergency_stop)
+        inputs.subscribe("arm_plan", self._on_arm_plan)
 
     def _change(self, parameters: NodeParameters) -> None:
         self._schedule.parameters = parameters["compensation.yaml"]
@@ -229,6 +230,7 @@ class ArmCompensationNode(Node):
         self._go_on()
 
     def _attend(self) -> None:
+        self._diagnostics.pace.ran_after(_ATTEND)
         if self._asked is not None and time.monotonic() > self._asked.deadline:
             timeout = self._schedule.parameters.answer_timeout
             what = f"lean_plan: no acknowledgement in balance_state within {timeout:g} s"

@@ -2,19 +2,20 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
 from rclpy.lifecycle import LifecycleNode, TransitionCallbackReturn
 
-from ballbal_ros.balance.gains import checked_design
+from ballbal_ros.balance.gains import checked_design, least_margins
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.node_parameters import BalanceNodeParameters
 from ballbal_ros.nodes import process
-from ballbal_ros.nodes.balance_messages import BalanceMessages
+from ballbal_ros.nodes.balance_messages import BalanceMessages, running_values
 from ballbal_ros.nodes.balance_requests import BalanceRequests
 from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
@@ -23,7 +24,6 @@ from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
 from ballbal_ros.nodes.stamp_clock import StampClock
-from ballbal_ros.nodes.topics import subscribe
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import WholeBody
@@ -51,7 +51,9 @@ class BalanceNode(LifecycleNode):
         self.ns = -1
         self._period_ns = round(self.parameters.loop.period * BILLION)
         self._odom_every = max(1, round(self.parameters.loop.rate / own.odom_rate))
-        self._ticks, self._ticks_before = 0, 0
+        self._ticks = 0
+        self.margins: Mapping[str, float] = {}
+        self._most_torque = 0.0
         self._lock_step = own.lock_step
         self._answer = np.zeros(len(self.description.drive.names))
         self._said, self._said_at = "", 0
@@ -60,9 +62,10 @@ class BalanceNode(LifecycleNode):
         self.requests = BalanceRequests(self)
         self._senses = Senses(self.description, self.parameters, own.lock_step, self._tick, self.diagnostics)
         self._tuning = BalanceTuning(self, parameters)
-        subscribe(self, "joint_states", self._senses.on_arms, raw=True)
-        subscribe(self, "drive_states", self._senses.on_drive, every=own.lock_step, raw=True)
-        subscribe(self, own.imu_topic, self._senses.on_imu, every=own.lock_step, raw=True)
+        inputs = self.diagnostics.inputs
+        inputs.subscribe("joint_states", self._senses.on_arms, raw=True)
+        inputs.subscribe("drive_states", self._senses.on_drive, every=own.lock_step, raw=True)
+        inputs.subscribe(own.imu_topic, self._senses.on_imu, every=own.lock_step, raw=True)
 
     def _tick(self, ns: int) -> None:
         """Answer the measurement of ``ns``; one that came before is answered as before."""
@@ -76,6 +79,8 @@ class BalanceNode(LifecycleNode):
         self.ns = ns
         self._answer = loop.tick(self._senses.measurement)
         self._messages.command(ns, self._answer)
+        self.diagnostics.pace.ran(ns / BILLION)
+        self._most_torque = max(self._most_torque, math.hypot(loop.output.sent[0], loop.output.sent[1]))
         self._ticks += 1
         if self._ticks % self._odom_every == 0:
             self._stamp_clock.go_to(ns)
@@ -107,7 +112,8 @@ class BalanceNode(LifecycleNode):
             raise BallbalError("support", "has not been heard of", "start the simulated robot first")
         loads, to_come = self.requests.loads_at(arms.stamp)
         posture = WholeBody(self.description, loads).posture(arms.position)
-        checked_design(posture, self.description, self.parameters)
+        _, found = checked_design(posture, self.description, self.parameters)
+        self.margins = least_margins(found)
         loop = BalanceLoop(self.description, self.parameters, arms.position.copy(), loads)
         for stamp, load in to_come:
             loop.set_load(load, stamp)
@@ -173,17 +179,17 @@ class BalanceNode(LifecycleNode):
         self._tuning.leave()
 
     def _report(self) -> tuple[bytes, str, Mapping[str, object]]:
-        ticks, self._ticks_before = self._ticks - self._ticks_before, self._ticks
         values: dict[str, object] = {
-            "ticks in the last second": ticks,
+            "clock": "lock_step" if self._lock_step else "real_time",
             "tf": "yes" if self._messages.has_tf else "no tf2_msgs here",
         }
-        loop = self.loop
+        loop, ticks = self.loop, self.diagnostics.pace.count
         if loop is None or not self.active:
             return OK, "inactive", values
         state = loop.guard.state
-        values.update({"reason": loop.guard.reason, "last tick": max(self.ns, 0) / BILLION})
-        values["largest change-over step"] = loop.change_step
+        values.update(running_values(loop, self._messages.torque_limit, self._most_torque), **self.margins)
+        values["last tick"] = max(self.ns, 0) / BILLION
+        self._most_torque = 0.0
         if state == "tripped":
             return ERROR, state, values
         return (WARN if ticks == 0 or state in ("stopping", "released") else OK), state, values

@@ -35,7 +35,7 @@ class BalanceMessages:
 
     def __init__(self, node: Node, description: RobotDescription, lifespan: float | None) -> None:
         self._radius = description.parameters.ball.radius
-        self._limit = description.parameters.limits.drive_torque
+        self.torque_limit = description.parameters.limits.drive_torque
         self._command = JointStateWriter(description.drive.names, effort=True)
         self._effort = Float64MultiArray()
         self._odom = Odometry(child_frame_id="base_footprint")
@@ -101,7 +101,7 @@ class BalanceMessages:
             on_the_way = guard.state in (STANDBY, ENGAGING, BALANCING)
             message.level = ERROR if guard.state == TRIPPED else OK if on_the_way else WARN
             message.message = guard.state
-            values.update(_values(loop, self._limit))
+            values.update(_values(loop, self.torque_limit))
         message.values = key_values(values)
         self._to_state.publish(message)
 
@@ -119,4 +119,27 @@ def _values(loop: BalanceLoop, torque_limit: float) -> dict[str, Any]:
         "ball x": ball.x,
         "ball y": ball.y,
         "heading": ball.heading,
+    }
+
+
+def running_values(loop: BalanceLoop, torque_limit: float, most_torque: float) -> dict[str, Any]:
+    """What diagnostics tell of a loop that runs: trim, reserves, what is or was wrong with its inputs.
+
+    ``torque_limit`` of the robot and ``most_torque``, the greatest about a level axis since it was told last, in N m.
+    """
+    roll, pitch, yaw = loop.outside_moment
+    limit = min(torque_limit, loop.parameters.limits.torque) * loop.output.scale
+    lost = [loop.description.drive.names[index] for index in sorted(loop.output.lost)]
+    return {
+        "reason": loop.guard.reason,
+        "trim N m": math.hypot(roll, pitch),
+        "trim roll": roll,
+        "trim pitch": pitch,
+        "trim yaw": yaw,
+        "torque reserve": 1.0 - most_torque / limit,
+        "capture use": loop.judge.capture_use,
+        "largest change-over step": loop.change_step,
+        **({"actuators lost": ", ".join(lost)} if lost else {}),
+        **{f"wrong {name}": what for name, what in loop.watch.troubles(loop.clock.now).items()},
+        **{f"seen {name}: {wrong}": count for (name, wrong), count in loop.watch.counts.items()},
     }

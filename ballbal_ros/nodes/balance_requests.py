@@ -14,7 +14,6 @@ from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.nodes.lean_trajectory import lean_plan_of
 from ballbal_ros.nodes.messages import BILLION, load_of, seconds, stamp_text
-from ballbal_ros.nodes.topics import subscribe
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.loads import Load
 
@@ -36,12 +35,13 @@ class BalanceRequests:
         self._loads: list[tuple[float, Load]] = []
         self._goal: Goal | None = None
         self._velocity_until = -1
-        subscribe(node, "hand_load", self._on_load)
-        subscribe(node, "lean_plan", self._on_lean_plan)
-        subscribe(node, "cmd_vel", self._on_velocity)
-        subscribe(node, "goal_pose", self._on_goal)
-        subscribe(node, "emergency_stop", self._on_emergency_stop)
-        subscribe(node, "support", self._on_support)
+        inputs = node.diagnostics.inputs
+        inputs.subscribe("hand_load", self._on_load)
+        inputs.subscribe("lean_plan", self._on_lean_plan)
+        inputs.subscribe("cmd_vel", self._on_velocity)
+        inputs.subscribe("goal_pose", self._on_goal)
+        inputs.subscribe("emergency_stop", self._on_emergency_stop)
+        inputs.subscribe("support", self._on_support)
         node.create_service(Trigger, "~/reset", self._on_reset)
 
     def begin(self) -> None:

@@ -56,4 +56,5 @@ class BalanceTuning:
                     self._parameters.source(_FILE), "came while balance was configured", "set it again"
                 )
             loop.change_parameters(prepared[1])
+            self._node.margins = prepared[1].margins or self._node.margins
         self._node.parameters = new[_FILE]

@@ -87,7 +87,9 @@ class Designer:
             raise BallbalError(*head["refused"])
         while len(numbers) < head["size"]:
             numbers += self._read(until)
-        return PreparedChange(new, GainSchedule.unpacked(head["schedule"], numbers) if head["size"] else None)
+        if not head["size"]:
+            return PreparedChange(new, None)
+        return PreparedChange(new, GainSchedule.unpacked(head["schedule"], numbers), head["margins"])
 
     def _send(self, request: Mapping[str, Any]) -> None:
         child = self._child
@@ -144,7 +146,8 @@ def answered(request: Mapping[str, Any], description: RobotDescription, where: s
     if prepared.schedule is None:
         return json.dumps({"size": 0}).encode() + b"\n"
     head, numbers = prepared.schedule.pack()
-    return json.dumps({"size": len(numbers), "schedule": head}).encode() + b"\n" + numbers
+    answer = {"size": len(numbers), "schedule": head, "margins": prepared.margins}
+    return json.dumps(answer).encode() + b"\n" + numbers
 
 
 def main() -> None:

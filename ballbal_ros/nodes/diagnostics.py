@@ -9,6 +9,7 @@ from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
 from rclpy.clock import Clock, ClockType
 from rclpy.node import Node
 
+from ballbal_ros.nodes.pace import Inputs, Pace
 from ballbal_ros.nodes.priority import Scheduling
 from ballbal_ros.nodes.topics import publisher
 
@@ -28,19 +29,24 @@ def values_of(status: DiagnosticStatus) -> dict[str, str]:
 
 class Diagnostics:
     """One node's status. ``report`` gives (level, message, values); it is asked once a second of wall time (a steady
-    clock).
+    clock), and what ``pace`` and ``inputs`` tell comes with it.
 
     ``hardware`` is the robot's name; ``now`` gives the stamp, the node's clock's without it.
     """
 
     def __init__(self, node: Node, hardware: str, report: Report, now: Callable[[], Time] | None = None) -> None:
         self._report = report
+        self.pace, self.inputs = Pace(), Inputs(node)
         self._now = now or (lambda: node.get_clock().now().to_msg())
         self._publisher = publisher(node, "/diagnostics")
         self._status = DiagnosticStatus(name=node.get_fully_qualified_name(), hardware_id=hardware)
         self._refusals: dict[str, str] = {}
         self.refused = 0
-        self._timer = node.create_timer(1.0, self.publish, clock=Clock(clock_type=ClockType.STEADY_TIME))
+        self._timer = node.create_timer(1.0, self._turn, clock=Clock(clock_type=ClockType.STEADY_TIME))
+
+    def _turn(self) -> None:
+        self.pace.turn()
+        self.publish()
 
     def refuse(self, topic: str, reason: str) -> None:
         """Say, at once and from now on, that what came on a topic was refused, and why; the same reason is said at once
@@ -67,8 +73,8 @@ class Diagnostics:
         status = self._status
         status.level = max(level, WARN) if reasons else level
         status.message = message
-        scheduling = {"scheduling": Scheduling.told} if Scheduling.told else {}
-        status.values = key_values({**values, **scheduling, **reasons})
+        own = {**self.pace.values(), **self.inputs.values(), "scheduling": Scheduling.told}
+        status.values = key_values({**values, **own, **reasons})
         array = DiagnosticArray(status=[status])
         array.header.stamp = self._now()
         self._publisher.publish(array)

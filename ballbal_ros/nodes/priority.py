@@ -10,9 +10,9 @@ _LOCK_ALL = 3  # MCL_CURRENT | MCL_FUTURE
 
 
 class Scheduling:
-    """What the system granted this process. ``told`` says it for diagnostics; empty where nothing was asked for."""
+    """What the system granted this process. ``told`` says it for diagnostics."""
 
-    told = ""
+    told = "ordinary, memory not locked: not asked for"
 
     @classmethod
     def hurry(cls, priority: int) -> None:

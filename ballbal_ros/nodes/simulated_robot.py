@@ -25,7 +25,7 @@ from ballbal_ros.nodes.lock_step import LockStep
 from ballbal_ros.nodes.messages import BILLION, load_of, nanoseconds, seconds, to_time
 from ballbal_ros.nodes.parameters import NodeParameters, robot_file
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
-from ballbal_ros.nodes.topics import publisher, subscribe
+from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.nodes.trajectories import ArmWaypoints
 from ballbal_ros.nodes.wire import JointStateReader
 from ballbal_ros.robot.description import RobotDescription
@@ -102,13 +102,14 @@ class SimulatedRobotNode(Node):
         return robot
 
     def _listen(self) -> None:
-        subscribe(self, "drive_command", self._on_drive_command, raw=True)
-        subscribe(self, "arm_command", self._on_arm_command)
-        subscribe(self, "balance_state", self._on_balance_state)
-        subscribe(self, "push", self._on_push)
-        subscribe(self, "simulated_load", self._on_load)
-        subscribe(self, "arm_plan", self._on_arm_plan)
-        subscribe(self, "plan_report", self._on_plan_report)
+        inputs = self._diagnostics.inputs
+        inputs.subscribe("drive_command", self._on_drive_command, raw=True)
+        inputs.subscribe("arm_command", self._on_arm_command)
+        inputs.subscribe("balance_state", self._on_balance_state)
+        inputs.subscribe("push", self._on_push)
+        inputs.subscribe("simulated_load", self._on_load)
+        inputs.subscribe("arm_plan", self._on_arm_plan)
+        inputs.subscribe("plan_report", self._on_plan_report)
         self.create_service(SetBool, "~/stand", self._on_stand)
 
     def _on_drive_command(self, raw: bytes) -> None:
@@ -154,6 +155,7 @@ class SimulatedRobotNode(Node):
         if self._ns == 0:
             self._messages.record(robot, 0)
         self._happenings.come_to(robot.time)
+        self._diagnostics.pace.was_late(self._late)
         robot.step(effort)
         self._peaks.look(effort)
         self._ns = round(robot.time * BILLION)

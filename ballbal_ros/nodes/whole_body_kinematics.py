@@ -21,7 +21,7 @@ from ballbal_ros.nodes.diagnostics import OK, WARN, Diagnostics
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.stamp_clock import StampClock
-from ballbal_ros.nodes.topics import publisher, subscribe
+from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.parameters import RobotParameters
@@ -43,7 +43,6 @@ class WholeBodyKinematicsNode(Node):
         self._every = 0 if own.rate <= 0.0 else round(BILLION / own.rate)
         self._marker_every = round(BILLION / own.marker_rate)
         self._last = self._last_marker = -BILLION
-        self._updates = self._updates_before = 0
         self._loads: list[tuple[float, Load]] = []
         self._center = PointStamped()
         self._inertia = InertiaStamped()
@@ -53,8 +52,8 @@ class WholeBodyKinematicsNode(Node):
         self._to_inertia = publisher(self, "body_inertia")
         self._to_marker = publisher(self, "com_marker")
         self._diagnostics = Diagnostics(self, self.description.name, self._report)
-        subscribe(self, "hand_load", self._on_load)
-        subscribe(self, "joint_states", self._on_joint_states, raw=True)
+        self._diagnostics.inputs.subscribe("hand_load", self._on_load)
+        self._diagnostics.inputs.subscribe("joint_states", self._on_joint_states, raw=True)
 
     def _on_load(self, message: Any) -> None:
         try:
@@ -83,7 +82,7 @@ class WholeBodyKinematicsNode(Node):
         self._publish(self._body.posture(self._arms.position), now)
 
     def _publish(self, posture: Posture, now: int) -> None:
-        self._updates += 1
+        self._diagnostics.pace.ran(now / BILLION)
         sec, nanosec = divmod(now, BILLION)
         for header in (self._center.header, self._inertia.header):
             header.stamp.sec, header.stamp.nanosec = sec, nanosec
@@ -109,8 +108,8 @@ class WholeBodyKinematicsNode(Node):
         self._to_marker.publish(self._marker)
 
     def _report(self) -> tuple[bytes, str, Mapping[str, object]]:
-        updates, self._updates_before = self._updates - self._updates_before, self._updates
-        values: dict[str, object] = {"updates in the last second": updates, "mass": self._body.mass}
+        updates = self._diagnostics.pace.count
+        values: dict[str, object] = {"mass": self._body.mass}
         missing = [] if math.isfinite(self._arms.position.sum()) else self._arms.missing()
         if missing:
             return WARN, f"joint_states has not told of {', '.join(missing)}", values

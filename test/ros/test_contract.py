@@ -56,6 +56,8 @@ SUBSCRIBED = {
     "whole_body_kinematics": ("joint_states", "hand_load"),
 }
 
+LISTENED = {"simulated_robot": {"balance_state", "arm_plan", "plan_report"}}
+
 
 class Robot:
     """The running stack, as a user meets it."""
@@ -286,6 +288,36 @@ def test_parameters_tell_their_range_and_refuse_what_is_beyond(robot: Robot) -> 
         request = SetParameters.Request(parameters=[Parameter("planner.lead_in", value=value).to_parameter_msg()])
         result = robot.listener.call(SetParameters, "arm_compensation/set_parameters", request).results[0]
         assert result.successful is taken, result.reason
+
+
+def test_every_node_tells_of_itself_once_a_second(robot: Robot) -> None:
+    """Diagnostics at 1 Hz from each node: state, rate, lateness, age of inputs, scheduling; the loop's margins, trim,
+    reserve.
+    """
+    came: dict[str, list[float]] = {}
+    heard = robot.listener.record("/diagnostics")
+    nodes = [f"/{name}" for name in PUBLISHED]
+
+    def twice() -> bool:
+        came.clear()
+        for array in heard:
+            came.setdefault(array.status[0].name, []).append(seconds(array.header.stamp))
+        return all(len(came.get(name, ())) >= 3 for name in nodes)
+
+    robot.listener.wait(twice, 10.0, "diagnostics of all")
+    told = {array.status[0].name: array.status[0] for array in heard}
+    for name in nodes:
+        values = values_of(told[name])
+        assert told[name].message and values["scheduling"]
+        assert {"loop rate Hz", "late mean ms", "late worst ms"} <= set(values)
+        ages = {key[4:-2]: value for key, value in values.items() if key.startswith("age ")}
+        assert set(ages) == set(SUBSCRIBED[name[1:]]) | LISTENED.get(name[1:], set())
+    loop = values_of(told["/balance"])
+    assert told["/balance"].message == robot.state == "balancing"
+    assert float(loop["loop rate Hz"]) > 10.0 and float(loop["age imu/data s"]) < 1.0
+    assert 0.5 < float(loop["torque reserve"]) <= 1.0 and abs(float(loop["trim N m"])) < 15.0
+    assert float(loop["phase margin deg"]) >= 30.0 and float(loop["delay margin ms"]) >= 8.0
+    assert loop["age goal_pose s"] == "never"
 
 
 def test_an_emergency_stop_is_controlled_and_latched(robot: Robot) -> None:
