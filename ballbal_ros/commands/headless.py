@@ -62,7 +62,7 @@ def headless(
     folder = RobotFolder.checked(robot, simulated=True)
     story = read_story(plan, files.description)
     parse_truth(truth, files.description)
-    timeline = Timeline.of(story, files.compensation, lead_in)
+    timeline = Timeline.of(story, files.compensation, lead_in, bool(truth))
     lean_plan = plan_story(files, story, timeline) if "planned" in kinds and story.planned else None
     results: list[RunResult] = []
     with own_domain(domain) as number, interruptible(), _progress(console, timeline.end) as (progress, task):

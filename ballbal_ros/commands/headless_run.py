@@ -16,7 +16,7 @@ from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.simulation.run_result import RunResult
-from ballbal_ros.simulation.timeline import RUN_START, Timeline
+from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.stack import RobotFolder, headless_stack
 
 _SIMULATOR = "simulated_robot"
@@ -95,7 +95,7 @@ class HeadlessRun:
             "wait_for_plan": self.moves,
             "plan": str(setup.story_file.resolve()),
             "plan_start": timeline.story if self.kind != "still" else -1.0,
-            "count_from": RUN_START,
+            "count_from": timeline.count_from,
         }
         if setup.truth:
             simulated["truth"] = list(setup.truth)
@@ -153,7 +153,7 @@ class HeadlessRun:
         return np.stack([np.interp(since, plan.times, column) for column in plan.ball.T], axis=1)
 
     def _travel(self, at: float, x: float, y: float) -> float:
-        if at < RUN_START:
+        if at < self.setup.timeline.count_from:
             return 0.0
         if self._origin is None:
             self._origin = x, y
@@ -161,7 +161,7 @@ class HeadlessRun:
         return 1e3 * float(np.hypot(x - self._origin[0] - meant[0], y - self._origin[1] - meant[1]))
 
     def _result(self, truth: Array, peaks: dict[str, str], factor: float) -> RunResult:
-        counted = truth[truth[:, 0] >= RUN_START - 1e-6]
+        counted = truth[truth[:, 0] >= self.setup.timeline.count_from - 1e-6]
         away = counted[:, 1:3] - counted[0, 1:3] - self._meant(counted[:, 0])
         travel = 1e3 * np.hypot(*away.T)
         return RunResult(

@@ -52,7 +52,7 @@ def rehearse(
     files = read_robot(robot)
     story = read_story(plan, files.description)
     differences = parse_truth(truth, files.description)
-    timeline = Timeline.of(story, files.compensation, lead_in)
+    timeline = Timeline.of(story, files.compensation, lead_in, bool(truth))
     lean_plan: LeanPlan | None = None
     if "planned" in kinds and story.planned:
         lean_plan = plan_story(files, story, timeline)

@@ -26,7 +26,7 @@ from ballbal_ros.robot.whole_body import WholeBody
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.run_result import RunResult
-from ballbal_ros.simulation.timeline import RUN_START, Timeline
+from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import Truth
 
 
@@ -124,20 +124,30 @@ class Rehearsal:
             self.robot.push(push.link, push.at, push.force)
             self._pushing = push.time + push.during + self.timeline.story
 
+    def answer(self) -> Array:
+        """One tick of the loop, after what happens then: its efforts, which the robot has still to step with."""
+        robot, loop = self.robot, self.loop
+        self._happen(robot.time)
+        effort = loop.tick(robot.measurement())
+        if robot.support and loop.guard.state == BALANCING:
+            robot.support = loop.supported = False
+        return effort
+
+    def step(self) -> None:
+        """One tick of loop and robot together."""
+        self.robot.step(self.answer())
+
     def run(self, trace: bool = False) -> tuple[RunResult, Trace | None]:
         """Run to the end, or until it falls; with ``trace`` keep what it looked like."""
         robot, loop = self.robot, self.loop
         ticks = int(round(self.timeline.end / loop.period))
-        first = int(round(RUN_START / loop.period))
+        first = int(round(self.timeline.count_from / loop.period))
         states = np.zeros((max(ticks - first, 1), 6))
         rows: list[tuple[Array, ...]] = []
         began = time.perf_counter()
         count = 0
         for tick in range(ticks):
-            self._happen(robot.time)
-            effort = loop.tick(robot.measurement())
-            if robot.support and loop.guard.state == BALANCING:
-                robot.support = loop.supported = False
+            effort = self.answer()
             if tick >= first:
                 roll, pitch = loop.lean
                 x, y, _ = robot.ball_position.tolist()
@@ -157,7 +167,7 @@ class Rehearsal:
             states = np.full((1, 6), np.nan)
         away = states[:, :2] - states[0, :2]
         if self._meant is not None:
-            begin = int(round((self.timeline.lean - RUN_START) / self.loop.period))
+            begin = int(round((self.timeline.lean - self.timeline.count_from) / self.loop.period))
             index = np.clip(np.arange(len(away)) - begin, 0, len(self._meant) - 1)
             away = away - self._meant[index]
         travel = 1e3 * np.hypot(*away.T)
@@ -177,7 +187,7 @@ class Rehearsal:
     def _trace(self, states: Array, rows: list[tuple[Array, ...]]) -> Trace:
         lean, torque, arms = (np.array(column) for column in zip(*rows))
         return Trace(
-            np.asarray(RUN_START + self.loop.period * np.arange(len(states)), float),
+            np.asarray(self.timeline.count_from + self.loop.period * np.arange(len(states)), float),
             states[:, :2],
             lean,
             torque,

@@ -74,6 +74,7 @@ def one_run(
 ) -> tuple[RunResult, Trace | None]:
     """Run a story, and keep what it looked like where ``trace``."""
     of = robot or files()
-    timeline = Timeline.of(what, of.compensation, lead_in)
+    truth = tuple(truth)
+    timeline = Timeline.of(what, of.compensation, lead_in, bool(truth))
     plan = plan_story(of, what, timeline) if kind == "planned" and what.planned else None
     return Rehearsal(of, what, kind, timeline, plan, seed, parse_truth(truth, of.description)).run(trace)

@@ -105,9 +105,11 @@ def test_to_set_off_the_ball_first_rolls_the_other_way():
 
 
 def test_a_load_said_to_be_lighter_than_it_is_is_trimmed_away():
-    """10 % more in the hands than the planner was told: the ball goes, and comes back, as the lean is trimmed."""
+    """10 % more in the hands than the planner was told: the ball goes a centimetre or so, and comes back within a
+    millimetre, as the lean is trimmed.
+    """
     run = rehearsed(story("reach"), "planned", truth=["left_hand.load=2.2", "right_hand.load=2.2"])[0]
-    assert not run.fell and run.ball_travel_peak_mm <= 30.0 and run.ball_travel_end_mm <= 3.0
+    assert not run.fell and run.ball_travel_peak_mm <= 13.0 and run.ball_travel_end_mm <= 1.0
 
 
 def test_our_attitude_bears_acceleration_that_an_attitude_filter_takes_for_tilt():
