@@ -12,6 +12,7 @@ from ballbal_ros.robot.whole_body import WholeBody
 
 _ACCELERATION = 0.4
 _TURNING = 0.8
+_TORQUE = 0.01
 
 
 class Reference:
@@ -22,7 +23,8 @@ class Reference:
     With no plan in
     force the lean is that which balances the measured arms (compensation ``planned`` and ``quasi_static``), or that
     at engage
-    (``none``); after a plan's end it goes on from the plan's last lean without a jump.
+    (``none``); after a plan's end it goes on from the plan's last lean and torque without a jump: what pulls at a hand
+    then still does.
     """
 
     def __init__(self, body: WholeBody, period: float, torque_ahead: float, follow_arms: bool) -> None:
@@ -35,6 +37,7 @@ class Reference:
         self._velocity = [0.0, 0.0, 0.0]
         self._wanted = [0.0, 0.0, 0.0]
         self._offset = (0.0, 0.0)
+        self._held: tuple[float, float, float] | None = None
         self._frozen: tuple[float, float] | None = None
         self._tables: list[tuple[float, Array]] = []
         self.plan_stamp: float | None = None
@@ -48,7 +51,7 @@ class Reference:
         """Station here, heading zero; plans whose time is to come stay."""
         self.station, self.frame_heading = [0.0, 0.0], 0.0
         self._velocity, self._wanted = [0.0] * 3, [0.0] * 3
-        self._offset = (0.0, 0.0)
+        self._offset, self._held = (0.0, 0.0), None
         self.row[:] = 0.0
         self._frozen = None
         self._frozen = None if self.follow_arms else self.equilibrium(arm_position)
@@ -117,6 +120,7 @@ class Reference:
             self.row[:] = table[-1]
             self.row[8] += self._heading
             self._end_plan(arm_position)
+            self._hold_torque(table[-1])
             tables.pop(0)
         return self._unplanned(arm_position)
 
@@ -138,10 +142,17 @@ class Reference:
             self._offset = (float(self.row[0]) - roll, float(self.row[1]) - pitch)
         self.plan_stamp = None
 
+    def _hold_torque(self, row: Array) -> None:
+        """What the drive gives at a plan's end against a pull, it goes on giving: ``row`` [17] is the plan's last."""
+        x, y, z = row[10:13].tolist()
+        self._held = (x, y, z) if max(abs(x), abs(y), abs(z)) > _TORQUE else None
+
     def _unplanned(self, arm_position: Array) -> Array:
         row = self.row
         roll, pitch = self.equilibrium(arm_position)
         row[2:] = 0.0
+        if self._held is not None:
+            row[10:13] = self._held
         heading = float(self.frame_heading)
         row[0], row[1] = roll + self._offset[0], pitch + self._offset[1]
         if self._wanted != [0.0, 0.0, 0.0] or self._velocity != [0.0, 0.0, 0.0]:

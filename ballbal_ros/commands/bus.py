@@ -23,7 +23,7 @@ from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, values_of
 from ballbal_ros.nodes.messages import BILLION, load_message, nanoseconds, to_time
 from ballbal_ros.nodes.topics import publisher, subscribe
-from ballbal_ros.nodes.trajectories import ball_plan_message, path_message
+from ballbal_ros.nodes.trajectories import ball_plan_message, hand_wrench_message, path_message
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.loads import Load
@@ -33,7 +33,7 @@ _TURN = 0.02
 _AT_ONCE = 5
 _TRY_AGAIN = 0.2
 _STAMP = slice(4, 12)
-_LISTENERS = {"hand_load": 3, "arm_plan": 2, "ball_plan": 1}
+_LISTENERS = {"hand_load": 3, "arm_plan": 2, "ball_plan": 1, "hand_wrench_plan": 1}
 
 
 class Bus:
@@ -138,10 +138,13 @@ class Bus:
         self._tell_loads([(0.0, load) for load in story.start_loads])
 
     def send_story(self, story: Story, timeline: Timeline, joint_names: tuple[str, ...]) -> None:
-        """Announce what is to come: loads, the ball's motion, and last the arms' motion, all with the stamps when."""
+        """Announce what is to come: loads, ball motion, pulls, and last the arms' motion, all with the stamps when."""
         self._tell_loads([(timeline.arms + when, load) for when, load in story.announced])
         if story.ball is not None:
             self._publishers["ball_plan"].publish(ball_plan_message(story.ball, to_time(timeline.arms)))
+        if story.wrenches:
+            # Stamp 0: it goes with the arm plan that follows, and is timed from its start.
+            self._publishers["hand_wrench_plan"].publish(hand_wrench_message(story.wrenches, to_time(0.0)))
         self._publishers["arm_plan"].publish(path_message(story.arms, joint_names, to_time(timeline.arms)))
 
     def change_state(self, transition: int) -> bool:

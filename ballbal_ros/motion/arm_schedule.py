@@ -13,6 +13,7 @@ from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench, PlanRequest, plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.pulls import joined
 from ballbal_ros.motion.spline import ArmPath, FollowedPath, JointPath, check_path
 from ballbal_ros.motion.stopping import Handover, Later, Spliced, stop_path
 from ballbal_ros.robot.arrays import Array
@@ -42,8 +43,7 @@ class Wanted:
     """An arm motion that somebody wants. ``stamp``: when the arms should start, s; 0: as soon as possible.
 
     ``path`` makes it from where the arms will be then; it takes ``duration`` s. The ball's motion and the outside
-    forces
-    are timed from the arms' start.
+    forces are timed from the arms' start; what pulls at a hand at their end goes on in the plans that follow.
     """
 
     stamp: float
@@ -56,7 +56,7 @@ class Wanted:
 @attrs.frozen(eq=False)
 class Proposal:
     """A motion ready to go: the arms' path from ``arms_start``, s, on, and the lean plan from ``lean_start`` on (or
-    none).
+    none). ``wrenches``: what the world is then planned to exert on the hands, their times as ours.
     """
 
     lean_start: float
@@ -65,6 +65,7 @@ class Proposal:
     plan: LeanPlan | None
     command: JointPath
     command_start: float
+    wrenches: Sequence[HandWrench] = ()
 
     @property
     def end(self) -> float:
@@ -82,10 +83,15 @@ class ArmSchedule:
         self.description, self.parameters = description, parameters
         self._loads: list[tuple[float, Load]] = []
         self._motion: Proposal | None = None
+        self._standing: Sequence[HandWrench] = ()
 
     def set_load(self, stamp: float, load: Load) -> None:
         """A hand's load from ``stamp``, s, on."""
         self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
+
+    def forget_wrenches(self) -> None:
+        """Nothing pulls at a hand any more, for plans to come."""
+        self._standing = ()
 
     @property
     def load_changes(self) -> int:
@@ -154,7 +160,7 @@ class ArmSchedule:
 
     def accept(self, proposal: Proposal) -> None:
         """Take a proposal as the motion in force."""
-        self._motion = proposal
+        self._motion, self._standing = proposal, proposal.wrenches
 
     def _propose(self, lean_start: float, arms_start: float, path: ArmPath, wanted: Wanted | None) -> Proposal:
         command: JointPath = path
@@ -164,12 +170,20 @@ class ArmSchedule:
             command = Spliced(motion.command, path, arms_start - motion.command_start)
             command_start = motion.command_start
         plan = None
+        coming = () if wanted is None else wanted.wrenches
+        coming = [attrs.evolve(wrench, times=wrench.times + arms_start) for wrench in coming]
+        wrenches = joined(self._standing, coming, lean_start)
         if self.parameters.compensation == "planned":
-            plan = self._lean(lean_start, arms_start, (command, command_start), wanted)
-        return Proposal(lean_start, arms_start, path, plan, command, command_start)
+            plan = self._lean(lean_start, arms_start, (command, command_start), wanted, wrenches)
+        return Proposal(lean_start, arms_start, path, plan, command, command_start, wrenches)
 
     def _lean(
-        self, lean_start: float, arms_start: float, commanded: tuple[JointPath, float], wanted: Wanted | None
+        self,
+        lean_start: float,
+        arms_start: float,
+        commanded: tuple[JointPath, float],
+        wanted: Wanted | None,
+        wrenches: Sequence[HandWrench],
     ) -> LeanPlan:
         command, command_start = commanded
         arm = self.description.parameters.arm
@@ -179,14 +193,13 @@ class ArmSchedule:
             arms, lead_in = Later(arms, -lead_in), 0.0
         handover = self._handover(lean_start)
         ball = self._ball(wanted, arms_start - lean_start, handover)
-        wrenches = () if wanted is None else wanted.wrenches
         body = WholeBody(self.description, self._held_at(lean_start))
         request = PlanRequest(
             arms=arms,
             lead_in=lead_in,
             loads=[(stamp - lean_start, load) for stamp, load in self._loads if stamp > lean_start + _SOON],
             ball=ball,
-            wrenches=[attrs.evolve(w, times=w.times + arms_start - lean_start) for w in wrenches],
+            wrenches=[attrs.evolve(w, times=w.times - lean_start) for w in wrenches],
             start=None if handover is None else handover.start,
         )
         plan = plan_lean(body, request, self.parameters)

@@ -14,7 +14,8 @@ from cattrs.v import format_exception
 
 from ballbal_ros.declaration import read_yaml
 from ballbal_ros.errors import BallbalError, PlanError, nearest
-from ballbal_ros.motion.lean_planner import BallMotion
+from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
+from ballbal_ros.motion.pulls import Pull, hand_wrenches
 from ballbal_ros.motion.spline import ArmPath, check_path
 from ballbal_ros.robot.arrays import Array, read_only
 from ballbal_ros.robot.description import RobotDescription
@@ -71,6 +72,20 @@ class PushStep:
 
 
 @attrs.frozen
+class PullStep:
+    """What the world exerts on a hand goes to ``force`` [3] N and ``moment`` [3] N m within ``during`` s, and stays.
+
+    ``base_footprint`` axes, at the hand link's origin; ``announced``: the planner is told.
+    """
+
+    hand: str
+    during: float = attrs.field(validator=_POSITIVE)
+    force: list[float] = attrs.field(factory=lambda: [0.0, 0.0, 0.0], validator=_VECTOR)
+    moment: list[float] = attrs.field(factory=lambda: [0.0, 0.0, 0.0], validator=_VECTOR)
+    announced: bool = True
+
+
+@attrs.frozen
 class RollStep:
     """The ball rolls from rest to rest to x, y (m) and heading (rad) from where the plan began, in ``during`` s."""
 
@@ -122,18 +137,24 @@ class Story:
     arms_start: float
     load_changes: tuple[LoadChange, ...]
     pushes: tuple[Push, ...]
+    pulls: tuple[Pull, ...]
     ball: BallMotion | None
     duration: float
 
     @property
     def planned(self) -> bool:
-        """Whether there is anything to plan for (a move, an announced load, a ball move)."""
+        """Whether there is anything to plan for (a move, an announced load or pull, a ball move)."""
         return self.arms_start < self.duration
 
     @property
     def announced(self) -> tuple[tuple[float, Load], ...]:
         """The load changes that the robot is told of, timed from ``arms_start``."""
         return tuple((c.time - self.arms_start, c.load) for c in self.load_changes if c.announced)
+
+    @property
+    def wrenches(self) -> tuple[HandWrench, ...]:
+        """What the robot is told that the world will exert on its hands, timed from ``arms_start``."""
+        return hand_wrenches((pull for pull in self.pulls if pull.announced), -self.arms_start)
 
 
 def _strict(kind: type[T]) -> Callable[[Any, Any], T]:
@@ -149,7 +170,9 @@ def _strict(kind: type[T]) -> Callable[[Any, Any], T]:
 _CONVERTER = cattrs.Converter(forbid_extra_keys=True, detailed_validation=True)
 for _kind in (float, str, bool):
     _CONVERTER.register_structure_hook(_kind, _strict(_kind))
-_VERBS: dict[str, type] = {"wait": Wait, "move": Move, "load": LoadStep, "push": PushStep, "roll": RollStep}
+_VERBS: dict[str, type] = {
+    "wait": Wait, "move": Move, "load": LoadStep, "push": PushStep, "pull": PullStep, "roll": RollStep
+}  # fmt: skip
 
 
 def _reason(error: BaseException, kind: type | None) -> str:
@@ -214,18 +237,23 @@ class _Builder:
         self.knots: list[tuple[float, Array]] = []
         self.changes: list[LoadChange] = []
         self.pushes: list[Push] = []
+        self.pulls: list[Pull] = []
         self.rolls: list[tuple[float, float, RollStep]] = []
 
     def _load(self, step: LoadStep, where: str) -> Load:
         hands = self.description.parameters.hands
-        if step.hand not in hands.links:
-            raise PlanError(where, f"unknown hand {step.hand}", nearest(step.hand, hands.links))
+        self._check_hand(step.hand, where)
         load = Load(step.hand, step.mass, step.center)
         try:
             load.check(where, hands.load_limit)
         except BallbalError as error:
             raise PlanError(error.where, error.what, error.remedy) from error
         return load
+
+    def _check_hand(self, hand: str, where: str) -> None:
+        hands = self.description.parameters.hands.links
+        if hand not in hands:
+            raise PlanError(where, f"unknown hand {hand}", nearest(hand, hands))
 
     def add(self, step: object, where: str) -> None:
         """Put one step at the present end of the timeline."""
@@ -246,6 +274,11 @@ class _Builder:
                 Push(self.now, step.during, step.link, (x, y, z), (step.force[0], step.force[1], step.force[2]))
             )
             self.now += step.during
+        elif isinstance(step, PullStep):
+            self._check_hand(step.hand, where)
+            (x, y, z), (a, b, c) = step.force, step.moment
+            self.pulls.append(Pull(self.now, step.during, step.hand, (x, y, z), (a, b, c), step.announced))
+            self.now += step.during
         elif isinstance(step, RollStep):
             before = self.rolls[-1][2] if self.rolls else RollStep()
             far = float(np.hypot(step.x - before.x, step.y - before.y)) + 0.3 * abs(step.heading - before.heading)
@@ -264,6 +297,7 @@ class _Builder:
         begins = (
             [time for time, _ in self.knots]
             + [c.time for c in self.changes if c.announced]
+            + [pull.time for pull in self.pulls if pull.announced]
             + [roll[0] for roll in self.rolls]
         )
         first = min(begins, default=self.now)
@@ -287,6 +321,7 @@ class _Builder:
             arms_start=first,
             load_changes=tuple(self.changes),
             pushes=tuple(self.pushes),
+            pulls=tuple(self.pulls),
             ball=self._ball(first),
             duration=self.now,
         )

@@ -25,7 +25,7 @@ from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, values_of
 from ballbal_ros.nodes.lean_trajectory import lean_plan_message
-from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
+from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds, stamp_text, to_time
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_report import PlanReports
 from ballbal_ros.nodes.topics import publisher
@@ -133,16 +133,28 @@ class ArmCompensationNode(Node):
         self._ball_plan = message if message.points else None
 
     def _on_wrench_plan(self, message: Any) -> None:
-        self._wrench_plan = message if message.points else None
+        """With a stamp it is planned for at once, arms at rest; without, it goes with the next arm plan. Empty: nothing
+        pulls any more.
+        """
+        self._wrench_plan = None
+        if not message.points:
+            self._schedule.forget_wrenches()
+        elif message.header.stamp.sec or message.header.stamp.nanosec:
+            self._queue("hand_wrench_plan", message)
+        else:
+            self._wrench_plan = message
 
     def _on_arm_plan(self, message: Any) -> None:
+        self._queue("arm_plan", message)
+
+    def _queue(self, what: str, message: Any) -> None:
         """Plan it now, or when the one before has been answered."""
-        self._waiting.append((message, time.monotonic() + self._schedule.parameters.answer_timeout))
+        self._waiting.append((what, message, time.monotonic() + self._schedule.parameters.answer_timeout))
         self._go_on()
 
     def _go_on(self) -> None:
         while self._waiting and self._asked is None:
-            message, deadline = self._waiting[0]
+            what, message, deadline = self._waiting[0]
             unknown = not self._state or not self._arms.complete
             if unknown and time.monotonic() < deadline:
                 # Balance or arms have not been heard of yet: their messages may be on their way.
@@ -150,19 +162,19 @@ class ArmCompensationNode(Node):
             self._waiting.popleft()
             stamp = stamp_text(message.header.stamp)
             try:
-                proposal = self._proposal(message)
+                proposal = self._proposal(message) if what == "arm_plan" else self._standing(message)
             except BallbalError as error:
-                self._reports.refuse("arm_plan", stamp, str(error))
+                self._reports.refuse(what, stamp, str(error))
                 continue
             if proposal is None:
-                self._reports.accept("arm_plan", stamp, "nothing moves: nothing to cancel")
+                self._reports.accept(what, stamp, "nothing moves: nothing to cancel")
             else:
-                self._ask(proposal, "arm_plan", stamp)
+                self._ask(proposal, what, stamp)
 
     def _proposal(self, message: Any) -> Proposal | None:
         if not message.points:
             return self._schedule.stop(self._now)
-        self._check_ready()
+        self._check_ready("arm_plan")
         waypoints = ArmWaypoints.of(message, self.description, "arm_plan")
 
         def path(state: ArmState) -> ArmPath:
@@ -171,12 +183,27 @@ class ArmCompensationNode(Node):
         wanted = Wanted(waypoints.start, waypoints.duration, path, self._ball(), self._wrenches())
         return self._schedule.plan(wanted, self._now, self._arms.position.copy())
 
-    def _check_ready(self) -> None:
+    def _standing(self, message: Any) -> Proposal:
+        """The lean for a pull at the hands while the arms rest."""
+        self._check_ready("hand_wrench_plan")
+        start = seconds(message.header.stamp)
+        if self._schedule.busy_until(start) is not None:
+            what = f"begins at {start:.3f} s, while the arms move"
+            raise PlanRefused("hand_wrench_plan", what, "send it with stamp 0, before the arm_plan that it goes with")
+        wrenches = hand_wrenches_of(message, self.description.parameters.hands.links)
+        wanted = Wanted(start, 0.0, lambda state: ArmPath.still(state.position), None, wrenches)
+        proposal = self._schedule.plan(wanted, self._now, self._arms.position.copy())
+        if proposal.arms_start > start + self._schedule.parameters.planner.step:
+            what = f"begins at {start:.3f} s, which is too soon"
+            raise PlanRefused("hand_wrench_plan", what, f"give a stamp of {proposal.arms_start:.3f} s or later")
+        return proposal
+
+    def _check_ready(self, topic: str) -> None:
         if self._emergency:
-            raise PlanRefused("arm_plan", "came during an emergency stop", "end that first, and reset the balance")
+            raise PlanRefused(topic, "came during an emergency stop", "end that first, and reset the balance")
         if self._state not in (ENGAGING, BALANCING):
             what = f"came while the balance is {self._state or 'not there'}"
-            raise PlanRefused("arm_plan", what, "send it once balance_state says balancing")
+            raise PlanRefused(topic, what, "send it once balance_state says balancing")
         if not self._arms.complete:
             raise PlanRefused(
                 "joint_states", f"has not told of {', '.join(self._arms.missing())}", "publish them first"
@@ -195,7 +222,7 @@ class ArmCompensationNode(Node):
         """Without a lean plan nobody has to be asked; otherwise the balance node takes it up first."""
         timeout = self._schedule.parameters.answer_timeout
         asked = _Asked(proposal, what, stamp, time.monotonic() + timeout, self._answered)
-        if proposal.plan is None or (what != "arm_plan" and self._state not in _FOLLOWING):
+        if proposal.plan is None or (what == "emergency_stop" and self._state not in _FOLLOWING):
             self._let_go(asked)
             return
         self._asked = asked
@@ -205,8 +232,9 @@ class ArmCompensationNode(Node):
         proposal = asked.proposal
         self._asked = None
         self._schedule.accept(proposal)
-        start = to_time(proposal.arms_start)
-        self._to_arms.publish(path_message(proposal.path, self.description.joint_names, start))
+        if asked.what != "hand_wrench_plan":
+            start = to_time(proposal.arms_start)
+            self._to_arms.publish(path_message(proposal.path, self.description.joint_names, start))
         self._reports.accept_proposal(asked.what, asked.stamp, proposal, self._schedule.load_changes)
         self._go_on()
 

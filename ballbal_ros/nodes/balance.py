@@ -10,12 +10,14 @@ import numpy as np
 from rclpy.lifecycle import LifecycleNode, TransitionCallbackReturn
 
 from ballbal_ros.balance.gains import checked_design, least_margins
+from ballbal_ros.balance.guard import BALANCING
+from ballbal_ros.balance.hand_force import PullWatch
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.node_parameters import BalanceNodeParameters
 from ballbal_ros.nodes import process
-from ballbal_ros.nodes.balance_messages import BalanceMessages, running_values
+from ballbal_ros.nodes.balance_messages import BalanceMessages, pull_values, running_values
 from ballbal_ros.nodes.balance_requests import BalanceRequests
 from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
@@ -86,10 +88,19 @@ class BalanceNode(LifecycleNode):
             self._stamp_clock.go_to(ns)
             self.requests.go_on(ns)
             self._messages.odometry(ns, loop)
+            self._see_pull(ns, loop)
         state = loop.guard.state
         due = state != self._said or ns - self._said_at >= _STATE_EVERY
         if due or (state in ("standby", "engaging") and is_looked_at(ns, self._period_ns)):
             self.say_state()
+
+    def _see_pull(self, ns: int, loop: BalanceLoop) -> None:
+        """Keep account of the motion that tells what pulls at a hand: the numbers alone, it is worked out on demand."""
+        if loop.guard.state == BALANCING:
+            ball, rates = loop.ball, loop.attitude.rates
+            self._pull.see(ns / BILLION, loop.lean, rates[:2], (ball.vx, ball.vy), loop.senses.arm_position)
+        else:
+            self._pull.forget()
 
     def arm_position(self) -> Array:
         """Where the arms are [n], as far as is known; rad."""
@@ -126,8 +137,12 @@ class BalanceNode(LifecycleNode):
 
     def _configure(self) -> None:
         self.loop = self._make_loop()
+        self._watch_pull(self.loop)
         self.ns = -1
         process.settle_memory()
+
+    def _watch_pull(self, loop: BalanceLoop) -> None:
+        self._pull = PullWatch(loop.body, every=self._odom_every / self.parameters.loop.rate)
 
     def on_activate(self, state: Any) -> TransitionCallbackReturn:
         """From the next measurement on the guard may let torque out."""
@@ -136,6 +151,7 @@ class BalanceNode(LifecycleNode):
     def _activate(self) -> None:
         if self.ns >= 0:
             self.loop = self._make_loop()
+            self._watch_pull(self.loop)
         self.active = True
         self.requests.begin()
 
@@ -190,6 +206,7 @@ class BalanceNode(LifecycleNode):
         values.update(running_values(loop, self._messages.torque_limit, self._most_torque), **self.margins)
         values["last tick"] = max(self.ns, 0) / BILLION
         self._most_torque = 0.0
+        values.update(pull_values(self._pull, self.description.parameters.hands.links))
         if state == "tripped":
             return ERROR, state, values
         return (WARN if ticks == 0 or state in ("stopping", "released") else OK), state, values

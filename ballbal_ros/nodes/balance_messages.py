@@ -6,6 +6,7 @@ from __future__ import annotations
 
 import array
 import math
+from collections.abc import Sequence
 from typing import Any
 
 from diagnostic_msgs.msg import DiagnosticStatus
@@ -15,6 +16,7 @@ from rclpy.node import Node
 from std_msgs.msg import Float64MultiArray
 
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY, TRIPPED
+from ballbal_ros.balance.hand_force import PullWatch
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, key_values
 from ballbal_ros.nodes.messages import BILLION
@@ -143,3 +145,16 @@ def running_values(loop: BalanceLoop, torque_limit: float, most_torque: float) -
         **{f"wrong {name}": what for name, what in loop.watch.troubles(loop.clock.now).items()},
         **{f"seen {name}: {wrong}": count for (name, wrong), count in loop.watch.counts.items()},
     }
+
+
+def pull_values(watch: PullWatch, hands: Sequence[str]) -> dict[str, object]:
+    """What the outside moment amounts to as a horizontal force at each hand, N, if that is what it comes from."""
+    found = watch.moment()
+    if found is None:
+        return {}
+    values: dict[str, object] = {}
+    for each in (watch.force_of(found, hand) for hand in hands):
+        for axis, force, error in zip(("x", "y"), each.force, each.error):
+            values[f"pull at {each.hand} {axis} N"] = force
+            values[f"pull at {each.hand} {axis} error N"] = error
+    return values

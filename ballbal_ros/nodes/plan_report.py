@@ -35,7 +35,7 @@ class PlanReports:
         plan = proposal.plan
         values: dict[str, object] = {
             "lean_plan": "none" if plan is None else stamp_text(to_time(proposal.lean_start)),
-            "arm_command": stamp_text(to_time(proposal.arms_start)),
+            "arm_command": "none" if what == "hand_wrench_plan" else stamp_text(to_time(proposal.arms_start)),
             "lead-in s": proposal.arms_start - proposal.lean_start,
             "duration s": proposal.path.duration,
             "load changes": load_changes,

@@ -16,6 +16,7 @@ from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.errors import PlanError, nearest
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
+from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
 from ballbal_ros.nodes.lean_trajectory import Waypoints, column
 from ballbal_ros.nodes.messages import seconds, to_duration
@@ -94,7 +95,10 @@ def ball_plan_message(motion: BallMotion, start: Time) -> JointTrajectory:
 
 
 def hand_wrenches_of(message: JointTrajectory, hands: Sequence[str]) -> list[HandWrench]:
-    """The outside forces and moments of a ``hand_wrench_plan``; times from its own start. Parts not named are zero."""
+    """The outside forces and moments of a ``hand_wrench_plan``; times from its own start. Parts not named are zero.
+
+    Between points it is linear, held after the last, and as at the first before it. Raises :class:`PlanError`.
+    """
     topic = "hand_wrench_plan"
     known = {f"{hand}/{part}": (hand, column) for hand in hands for column, part in enumerate(_WRENCH_PARTS)}
     for name in message.joint_names:
@@ -113,6 +117,21 @@ def hand_wrenches_of(message: JointTrajectory, hands: Sequence[str]) -> list[Han
         hand, column = known[name]
         found.setdefault(hand, np.zeros((len(times), 6)))[:, column] = [row[index] for row in efforts]
     return [HandWrench(hand, times, table[:, :3], table[:, 3:]) for hand, table in found.items()]
+
+
+def hand_wrench_message(wrenches: Sequence[HandWrench], start: Time) -> JointTrajectory:
+    """What the world is to exert on the hands as a ``hand_wrench_plan``; negative times are left out, as what they
+    lead to is there already.
+    """
+    names = [f"{wrench.hand}/{part}" for wrench in wrenches for part in _WRENCH_PARTS]
+    message = JointTrajectory(joint_names=names)
+    message.header.stamp, message.header.frame_id = start, "base_footprint"
+    times = np.unique(np.concatenate([wrench.times for wrench in wrenches]).round(9))
+    for time in times[times >= 0.0].tolist():
+        effort = np.concatenate([np.concatenate(at_time(wrench, time)) for wrench in wrenches])
+        point = JointTrajectoryPoint(effort=column(effort), time_from_start=to_duration(time))
+        message.points.append(point)
+    return message
 
 
 @attrs.frozen(eq=False)

@@ -1,4 +1,4 @@
-"""What happens to the simulated robot at given times: loads that truly come and go, pushes."""
+"""What happens to the simulated robot at given times: loads that truly come and go, pushes, pulls."""
 
 from __future__ import annotations
 
@@ -7,8 +7,11 @@ from collections.abc import Iterable
 import numpy as np
 
 from ballbal_ros.errors import BallbalError, nearest
+from ballbal_ros.motion.lean_planner import HandWrench
+from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.loads import Load
+from ballbal_ros.simulation.outside import true_wrenches
 from ballbal_ros.simulation.robot import SimulatedRobot
 
 _SOON = 1e-9
@@ -22,13 +25,16 @@ class Happenings:
         self._loads: list[tuple[float, Load]] = []
         self._pushes: list[tuple[float, float, str, tuple[float, ...], tuple[float, ...]]] = []
         self._pushed_until: float | None = None
+        self._pulls: list[HandWrench] = []
 
     def add_story(self, story: Story, begin: float) -> None:
-        """All loads, announced or not, and pushes of a story that begins at ``begin``, s."""
+        """All loads and pulls, announced or not, and pushes of a story that begins at ``begin``, s."""
         for change in story.load_changes:
             self.add_load(change.load, begin + change.time)
         for push in story.pushes:
             self.add_push(begin + push.time, push.during, push.link, push.at, push.force)
+        if story.pulls:
+            self._pulls += true_wrenches(story, self._robot.truth, begin)
 
     def add_load(self, load: Load, time: float) -> None:
         """What is truly in a hand from ``time`` on."""
@@ -78,3 +84,5 @@ class Happenings:
             time, during, link, at, force = self._pushes.pop(0)
             self._robot.push(link, at, force)
             self._pushed_until = max(time, now) + during
+        for wrench in self._pulls:
+            self._robot.pull(wrench.hand, *at_time(wrench, now))

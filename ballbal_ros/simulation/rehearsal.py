@@ -17,12 +17,14 @@ from ballbal_ros.balance.schedule import GainSchedule
 from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.spline import FollowedPath
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
+from ballbal_ros.simulation.outside import true_wrenches
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.run_result import RunResult
@@ -67,6 +69,7 @@ def plan_story(files: RobotFiles, story: Story, timeline: Timeline) -> LeanPlan:
         lead_in=lead_in,
         loads=[(when + lead_in, load) for when, load in story.announced],
         ball=ball,
+        wrenches=[attrs.evolve(wrench, times=wrench.times + lead_in) for wrench in story.wrenches],
     )
     plan = plan_lean(body, request, files.compensation)
     plan.refuse_beyond_limits(story.name)
@@ -111,6 +114,7 @@ class Rehearsal:
                     self.loop.set_load(change.load, change.time + timeline.story)
         self._pushes = [] if kind == "still" else sorted(story.pushes, key=lambda push: push.time)
         self._pushing: float | None = None
+        self._pulls = () if kind == "still" else true_wrenches(story, self.robot.truth, timeline.story)
 
     def _happen(self, now: float) -> None:
         """Loads and pushes whose time has come."""
@@ -123,6 +127,8 @@ class Rehearsal:
             push = self._pushes.pop(0)
             self.robot.push(push.link, push.at, push.force)
             self._pushing = push.time + push.during + self.timeline.story
+        for wrench in self._pulls:
+            self.robot.pull(wrench.hand, *at_time(wrench, now))
 
     def answer(self) -> Array:
         """One tick of the loop, after what happens then: its efforts, which the robot has still to step with."""

@@ -21,6 +21,7 @@ from ballbal_ros.robot.whole_body import WholeBody
 from ballbal_ros.simulation.arms import ArmServo
 from ballbal_ros.simulation.drive import SimulatedDrive, whole_steps
 from ballbal_ros.simulation.floor import FloorMoments
+from ballbal_ros.simulation.outside import OutsideForces
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.sensors import Sample, SimulatedSensors
 from ballbal_ros.simulation.truth import Truth
@@ -70,7 +71,7 @@ class SimulatedRobot:
         )
         self._servo = ArmServo(description, self.parameters, self.world, self.data)
         self._tick, self._fell = 0, False
-        self._push: tuple[int, Array, Array] | None = None
+        self._outside = OutsideForces(self.world, self.data)
         whole, late = divmod(whole_steps(self.parameters.sensor_delay, step, "sensor_delay"), self._steps)
         self._look_after = self._steps - 1 - late
         self._felt = [value * self._steps for value in self._sensed[3:6].tolist()]
@@ -158,8 +159,8 @@ class SimulatedRobot:
     def _move(self) -> None:
         model, data, drive, felt = self._model, self.data, self._drive, self._felt
         torque = self._applied_to_ball
-        if self._push is not None:
-            self._apply_push(self._push)
+        if self._outside.there:
+            self._outside.apply()
         for step in range(self._steps):
             torque[0], torque[1], torque[2] = drive.torque(step)
             self._feel_floor()
@@ -188,30 +189,21 @@ class SimulatedRobot:
         moment = self._moment_on_ball
         moment[0], moment[1], moment[2] = self._floor.on_ball(self._qfrc_constraint.item(2), vx, vy, spin)
 
-    def _apply_push(self, push: tuple[int, Array, Array]) -> None:
-        body, at, force = push
-        data = self.data
-        lever = data.xpos[body] + data.xmat[body].reshape(3, 3) @ at - data.xipos[body]
-        data.xfrc_applied[body, :3] = force
-        data.xfrc_applied[body, 3:] = np.cross(lever, force)
-
     def command_arms(self, path: JointPath, start: float) -> None:
         """Have the arms follow a path from time ``start`` (s; at once where that is past) on; its end is held."""
         self._servo.command(path, start, self._tick)
 
     def push(self, link: str, at: Sequence[float], force: Sequence[float]) -> None:
         """Push with a force [3], N in ``odom``, on the point ``at`` [3], m in the link, until :meth:`release_push`."""
-        body = self.world.bodies.get(link)
-        if body is None:
-            raise ModelError("push", f"unknown link {link}", nearest(link, self.world.bodies))
-        self.release_push()
-        self._push = (body, np.array(at, float), np.array(force, float))
+        self._outside.push(link, at, force)
 
     def release_push(self) -> None:
         """End the push."""
-        if self._push is not None:
-            self.data.xfrc_applied[self._push[0]] = 0.0
-        self._push = None
+        self._outside.release_push()
+
+    def pull(self, hand: str, force: Array, moment: Array) -> None:
+        """Exert a force [3], N, and a moment [3], N m, ``base_footprint`` axes, at a hand's origin until told else."""
+        self._outside.pull(hand, force, moment)
 
     def set_load(self, load: Load) -> None:
         """Put a load into a hand now, in place of what it held; ``truth`` decides what is truly there. Mass 0: none."""

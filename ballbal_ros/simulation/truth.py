@@ -15,10 +15,10 @@ from ballbal_ros.simulation.parameters import SimulationParameters
 
 WHERE = "--truth"
 _LINK_KEYS = {"mass_factor": 1, "center": 3}
-_HAND_KEYS = {"load": 1, "load_factor": 1}
+_HAND_KEYS = {"load": 1, "load_factor": 1, "pull_factor": 1, "pull_late": 1}
 _KEYS = (
-    "it takes <hand>.load, <hand>.load_factor, <link>.mass_factor, <link>.center, imu.tilt, "
-    "or a parameter of simulation.yaml"
+    "it takes <hand>.load, <hand>.load_factor, <hand>.pull_factor, <hand>.pull_late, <link>.mass_factor, "
+    "<link>.center, imu.tilt, or a parameter of simulation.yaml"
 )
 
 
@@ -27,14 +27,17 @@ class Truth:
     """Differences between the simulated robot and the model; without any, they are the same.
 
     ``load`` [hand]: true mass in kg of whatever the hand is said to hold; ``load_factor`` [hand]: or its true mass
-    over the said one (the inertia scales along). ``mass_factor`` [link]: true mass and inertia of a URDF link over
-    the URDF's; ``center`` [link]: how far (3 numbers, m, link axes) the link's mass centre is from the URDF's.
-    ``imu_tilt``: (roll, pitch) in rad by which the IMU is mounted wrongly, about ``base_link`` axes. ``parameters``:
-    values in place of simulation.yaml's.
+    over the said one (the inertia scales along). ``pull_factor`` [hand]: what the world truly exerts on a hand over
+    what the plan says; ``pull_late`` [hand]: by how much it comes later, s. ``mass_factor`` [link]: true mass and
+    inertia of a URDF link over the URDF's; ``center`` [link]: how far (3 numbers, m, link axes) the link's mass centre
+    is from the URDF's. ``imu_tilt``: (roll, pitch) in rad by which the IMU is mounted wrongly, about ``base_link``
+    axes. ``parameters``: values in place of simulation.yaml's.
     """
 
     load: Mapping[str, float] = attrs.field(factory=dict)
     load_factor: Mapping[str, float] = attrs.field(factory=dict)
+    pull_factor: Mapping[str, float] = attrs.field(factory=dict)
+    pull_late: Mapping[str, float] = attrs.field(factory=dict)
     mass_factor: Mapping[str, float] = attrs.field(factory=dict)
     center: Mapping[str, tuple[float, ...]] = attrs.field(factory=dict)
     imu_tilt: tuple[float, float] = (0.0, 0.0)
@@ -57,9 +60,10 @@ class Truth:
 def parse_truth(items: Iterable[str], description: RobotDescription) -> Truth:
     """Make the truth from words ``KEY=VALUE``; lists are separated by commas.
 
-    Keys: ``<hand>.load`` (kg), ``<hand>.load_factor``, ``<link>.mass_factor``, ``<link>.center`` (dx,dy,dz in m),
-    ``imu.tilt`` (roll,pitch in rad), and every parameter of simulation.yaml (``floor.friction=0.4``).
-    Raises :class:`BallbalError` in one line for an unknown key or a value that does not fit.
+    Keys: ``<hand>.load`` (kg), ``<hand>.load_factor``, ``<hand>.pull_factor``, ``<hand>.pull_late`` (s),
+    ``<link>.mass_factor``, ``<link>.center`` (dx,dy,dz in m), ``imu.tilt`` (roll,pitch in rad), and every parameter of
+    simulation.yaml (``floor.friction=0.4``). Raises :class:`BallbalError` in one line for an unknown key or a value
+    that does not fit.
     """
     hands = description.parameters.hands.links
     links = [frame.name for frame in description.model.frames if frame.type.name == "BODY"]
@@ -80,7 +84,7 @@ def parse_truth(items: Iterable[str], description: RobotDescription) -> Truth:
         elif key in structural:
             owner, _, name = key.rpartition(".")
             values = _numbers(key, text, structural[key])
-            if name != "center" and values[0] <= 0.0:
+            if name not in ("center", "pull_late") and values[0] <= 0.0:
                 raise BallbalError(WHERE, f"{key} is {text}", "it takes a positive number")
             found[name][owner] = values if name == "center" else values[0]
         else:
