@@ -12,6 +12,7 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import typer
 
+from ballbal_ros.commands.checkup import checkup_command
 from ballbal_ros.commands.faults import faults_command
 from ballbal_ros.commands.gains import gains_command
 from ballbal_ros.commands.headless import headless_command
@@ -31,6 +32,7 @@ for _name, _command in (
     ("rehearse", rehearse_command),
     ("headless", headless_command),
     ("faults", faults_command),
+    ("checkup", checkup_command),
 ):
     # typer 0.9, Ubuntu 24.04's, does not look behind annotations that are text.
     _command.__annotations__ = get_type_hints(_command, include_extras=True)

@@ -71,9 +71,7 @@ class Inputs:
         self._node = node
         self._came: dict[str, float | None] = {}
 
-    def subscribe(
-        self, topic: str, callback: Callable[[Any], None], *, every: bool = False, raw: bool = False
-    ) -> None:
+    def subscribe(self, topic: str, callback: Callable[[Any], None], *, every: bool = False, raw: bool = False) -> None:
         """As :func:`ballbal_ros.nodes.topics.subscribe`."""
         came, clock = self._came, time.monotonic
         came[topic] = None

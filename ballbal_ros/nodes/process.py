@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import gc
+import os
 import sys
 import time
 from collections.abc import Callable
@@ -36,6 +37,11 @@ NODE_OPTIONS: dict[str, Any] = {
 _DESCRIPTION_TIMEOUT = 5.0
 
 
+def stay_on_this_machine() -> None:
+    """Have the bus talk on this machine only, unless the environment says otherwise: docs/security.md."""
+    os.environ.setdefault("ROS_AUTOMATIC_DISCOVERY_RANGE", "LOCALHOST")
+
+
 def executor(context: Context | None = None) -> Any:
     """The executor that answers a message soonest with this rclpy."""
     return QuickExecutor(context=context)
@@ -53,6 +59,7 @@ def run(make: Callable[[], Node]) -> int:
 
     2 where what it was given is wrong: then one line on standard error says so, and nothing was published.
     """
+    stay_on_this_machine()
     try:
         rclpy.init(args=sys.argv)
     except Exception as error:

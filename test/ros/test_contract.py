@@ -4,9 +4,11 @@ all.
 
 from __future__ import annotations
 
+import json
 import math
 import os
 from collections.abc import Iterator
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -30,7 +32,7 @@ from ballbal_ros.nodes.topics import TOPICS
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 from helpers.robots import shelver
-from helpers.ros_stack import Listener, listening, running_stack
+from helpers.ros_stack import Listener, ballbal, listening, running_stack
 
 SHOULDERS = ["left_shoulder_pitch", "right_shoulder_pitch"]
 HEARD = (
@@ -318,6 +320,22 @@ def test_every_node_tells_of_itself_once_a_second(robot: Robot) -> None:
     assert 0.5 < float(loop["torque reserve"]) <= 1.0 and abs(float(loop["trim N m"])) < 15.0
     assert float(loop["phase margin deg"]) >= 30.0 and float(loop["delay margin ms"]) >= 8.0
     assert loop["age goal_pose s"] == "never"
+
+
+def test_a_checkup_hears_the_stack_and_sends_nothing(robot: Robot, tmp_path: Path) -> None:
+    """`ballbal checkup` finds every node at work, tells of the loop's trim and reserves, and disturbs nothing."""
+    file = tmp_path / "found.json"
+    process = ballbal("checkup", "--wait", "10", "--json", str(file), domain=1 + os.getpid() % 101)
+    robot.listener.wait(lambda: process.poll() is not None, 40.0, "the checkup's end")
+    printed, said = process.communicate()
+    assert process.returncode in (0, 1), said
+    found = json.loads(file.read_text())
+    assert found["stack"] and "The stack is up" in printed
+    verdicts = {check["what"]: check["verdict"] for check in found["checks"]}
+    assert all(verdicts[name] == "ok" for name in PUBLISHED), printed
+    assert {"margins in force", "trim", "torque reserve"} <= set(verdicts)
+    assert "wrong" not in verdicts.values(), printed
+    assert robot.state == "balancing"
 
 
 def test_an_emergency_stop_is_controlled_and_latched(robot: Robot) -> None:
