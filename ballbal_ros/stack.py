@@ -25,13 +25,17 @@ CLOCKS = ("lock_step", "real_time")
 
 @attrs.frozen
 class NodeStart:
-    """One node to start: its executable (and name), its parameter files, parameters beside them, and remapped names."""
+    """One node to start: its executable (and name), its parameter files, parameters beside them, and remapped names.
+
+    ``respawn``: where its process ends, it is started anew; the others go on without it meanwhile.
+    """
 
     executable: str
     files: tuple[Path, ...]
     parameters: Mapping[str, Any]
     remappings: tuple[tuple[str, str], ...] = ()
     lifecycle: bool = False
+    respawn: bool = False
 
     def with_parameters(self, **parameters: Any) -> NodeStart:
         """The same node with further parameters; ``__`` in a name stands for a dot."""
@@ -103,8 +107,8 @@ def robot_stack(
     robot = folder.file("robot.yaml")
     watcher = NodeStart("config_watch", (), {"folder": str(folder.path)})
     return [
-        NodeStart("whole_body_kinematics", (robot,), common, remap),
-        NodeStart("arm_compensation", (robot, folder.file("compensation.yaml")), common, remap),
+        NodeStart("whole_body_kinematics", (robot,), common, remap, respawn=True),
+        NodeStart("arm_compensation", (robot, folder.file("compensation.yaml")), common, remap, respawn=True),
         NodeStart("balance", (robot, folder.file("balance.yaml")), common, remap, lifecycle=True),
         *([watcher] if watch else []),
     ]

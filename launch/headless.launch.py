@@ -41,6 +41,8 @@ def _nodes(context):
                 parameters=[*map(str, node.files), dict(node.parameters)],
                 remappings=list(node.remappings),
                 output="screen",
+                respawn=node.respawn,
+                respawn_delay=0.5,
                 **leaving,
             )
         )

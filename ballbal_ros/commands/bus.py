@@ -22,6 +22,7 @@ from ballbal_ros.motion.story import Story
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import OK, values_of
 from ballbal_ros.nodes.messages import BILLION, load_message, nanoseconds, to_time
+from ballbal_ros.nodes.plan_report import EARLIER
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.nodes.trajectories import ball_plan_message, hand_wrench_message, path_message
 from ballbal_ros.robot.arrays import Array
@@ -79,7 +80,8 @@ class Bus:
 
     def _on_report(self, message: Any) -> None:
         for status in message.status:
-            if status.name == "arm_plan":
+            again = self.report is not None and EARLIER in values_of(status)
+            if status.name == "arm_plan" and not again:
                 self.report = status
 
     def _on_diagnostics(self, message: Any) -> None:

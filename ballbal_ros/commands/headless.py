@@ -47,14 +47,7 @@ def headless(
     Raises :class:`BallbalError` for wrong input or a refused plan, :class:`~ballbal_ros.commands.processes.RunFailed`
     for a run that did not come to its end.
     """
-    if clock not in _CLOCKS:
-        raise BallbalError("--clock", f"is {clock!r}", f"it takes one of {', '.join(_CLOCKS)}")
-    if importlib.util.find_spec("rclpy") is None:
-        raise BallbalError(
-            "rclpy",
-            "is not there",
-            "source your ROS, or install the headless extra: pip install 'ballbal_ros[headless]'",
-        )
+    _check_can_run(clock)
     from ballbal_ros.commands.headless_run import HeadlessRun, HeadlessSetup
     from ballbal_ros.commands.processes import interruptible
 
@@ -65,6 +58,7 @@ def headless(
     timeline = Timeline.of(story, files.compensation, lead_in, bool(truth))
     lean_plan = plan_story(files, story, timeline) if "planned" in kinds and story.planned else None
     results: list[RunResult] = []
+    notes: list[str] = []
     with own_domain(domain) as number, interruptible(), _progress(console, timeline.end) as (progress, task):
         setup = HeadlessSetup(
             folder=folder,
@@ -87,9 +81,22 @@ def headless(
                 def show(now: Any) -> None:
                     progress.update(task, completed=now.time, travel=now.travel, state=now.state)
 
-                results.append(HeadlessRun(setup, kind, seed).run(show))
+                run = HeadlessRun(setup, kind, seed)
+                results.append(run.run(show))
+                notes += run.notes
     limits = planned_limits(results, files, lean_plan)
-    return RunSet(files.description.name, story.name, clock, tuple(results), limits)
+    return RunSet(files.description.name, story.name, clock, tuple(results), limits, tuple(notes))
+
+
+def _check_can_run(clock: str) -> None:
+    if clock not in _CLOCKS:
+        raise BallbalError("--clock", f"is {clock!r}", f"it takes one of {', '.join(_CLOCKS)}")
+    if importlib.util.find_spec("rclpy") is None:
+        raise BallbalError(
+            "rclpy",
+            "is not there",
+            "source your ROS, or install the headless extra: pip install 'ballbal_ros[headless]'",
+        )
 
 
 @contextlib.contextmanager

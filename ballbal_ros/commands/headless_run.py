@@ -65,25 +65,44 @@ class HeadlessRun:
         self.setup, self.kind, self.seed = setup, kind, seed
         self.moves = kind != "still" and setup.story.planned
         self._origin: tuple[float, float] | None = None
+        self.notes: list[str] = []
 
     def run(self, show: Callable[[Glimpse], None]) -> RunResult:
-        """Start all, run to the end, end all; raises :class:`RunFailed` in one line."""
-        setup = self.setup
+        """Start all, run to the end, end all; raises :class:`RunFailed` in one line.
+
+        A node that ends and may be started anew is; ``notes`` then say so, and what became of the plan.
+        """
         with Processes() as processes:
-            self._start(processes)
-            with Bus(setup.domain, setup.namespace, processes, setup.timeout) as bus:
-                show(Glimpse(0.0, 0.0, "starting"))
-                bus.wait_for_nodes()
-                bus.send_start(setup.story)
-                bus.bring_up()
-                if self.moves:
-                    bus.send_story(setup.story, setup.timeline, setup.description.joint_names)
-                    bus.wait_for_report()
-                began, from_time = time.monotonic(), bus.place()[0]
-                self._follow(processes, bus, show)
-                took = time.monotonic() - began
-                truth = self._whole(bus)
-                return self._result(truth, bus.peaks, (truth[-1, 0] - from_time) / max(took, 1e-9))
+            try:
+                result = self._run(processes, show)
+            except RunFailed as error:
+                raise RunFailed("; ".join([str(error), *self._restarts(processes)])) from error
+            end = "the plan was finished" if self.moves else "the run went on to its end"
+            self.notes = [f"{self.kind}, seed {self.seed}: {line}; {end}" for line in self._restarts(processes)]
+            return result
+
+    @staticmethod
+    def _restarts(processes: Processes) -> list[str]:
+        return [f"{name} ended with {how} and was started anew" for name, how in processes.restarts]
+
+    def _run(self, processes: Processes, show: Callable[[Glimpse], None]) -> RunResult:
+        setup = self.setup
+        self._start(processes)
+        with Bus(setup.domain, setup.namespace, processes, setup.timeout) as bus:
+            show(Glimpse(0.0, 0.0, "starting"))
+            bus.wait_for_nodes()
+            bus.send_start(setup.story)
+            bus.bring_up()
+            if self.moves:
+                bus.send_story(setup.story, setup.timeline, setup.description.joint_names)
+                bus.wait_for_report()
+            began, from_time = time.monotonic(), bus.place()[0]
+            self._follow(processes, bus, show)
+            took = time.monotonic() - began
+            truth = self._whole(bus)
+            if processes.restarts and bus.state != "balancing":
+                raise RunFailed(f"the plan was not finished: balance ended {bus.state}")
+            return self._result(truth, bus.peaks, (truth[-1, 0] - from_time) / max(took, 1e-9))
 
     def _start(self, processes: Processes) -> None:
         setup, timeline = self.setup, self.setup.timeline
@@ -112,7 +131,8 @@ class HeadlessRun:
                 node = node.with_parameters(rate=_KINEMATICS_RATE)
             # On two cores the loop, from simulated robot to balance and back, goes before all that only listens.
             hurried = node.executable in _LOOP
-            processes.start(node.executable, node.command(setup.namespace), environment(setup.domain), hurried)
+            words = node.command(setup.namespace)
+            processes.start(node.executable, words, environment(setup.domain), hurried, node.respawn)
 
     def _follow(self, processes: Processes, bus: Bus, show: Callable[[Glimpse], None]) -> None:
         """Until all is recorded: every tick of the run, and what the simulated robot says at its end."""

@@ -10,13 +10,15 @@ import subprocess
 import tempfile
 import threading
 import time
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from typing import IO
 
 import attrs
 
 _PARENT_DEATH = 1  # PR_SET_PDEATHSIG
 _GRACE = 4.0
+_WRONG = 2
+_MOST_RESTARTS = 3
 _TOLD_TO_END = threading.Event()
 _LIBC = ctypes.CDLL(None, use_errno=True)
 
@@ -25,11 +27,13 @@ class RunFailed(Exception):
     """A run could not be brought to its end; the one line says who failed and what its last words were."""
 
 
-@attrs.frozen(eq=False)
+@attrs.define(eq=False)
 class _Child:
     name: str
     process: subprocess.Popen[bytes]
     words: IO[bytes]
+    start: Callable[[], subprocess.Popen[bytes]]
+    respawn: bool
 
     def last_words(self) -> str:
         """The last line that it wrote to standard error, without colours."""
@@ -56,6 +60,7 @@ class Processes:
 
     def __init__(self) -> None:
         self._children: list[_Child] = []
+        self.restarts: list[tuple[str, str]] = []
 
     def __enter__(self) -> Processes:
         return self
@@ -63,25 +68,37 @@ class Processes:
     def __exit__(self, *_: object) -> None:
         self.stop()
 
-    def start(self, name: str, words: Sequence[str], environment: Mapping[str, str], hurried: bool = True) -> None:
+    def start(
+        self,
+        name: str,
+        words: Sequence[str],
+        environment: Mapping[str, str],
+        hurried: bool = True,
+        respawn: bool = False,
+    ) -> None:
         """Start a process in a session of its own, so that a Ctrl-C at the terminal comes to the runner alone.
 
-        One that is not ``hurried`` gives way to those that are.
+        One that is not ``hurried`` gives way to those that are. With ``respawn`` it is started anew when it ends, up to
+        three times, unless what it was given is wrong (exit status 2); ``restarts`` says of which, and how each ended.
         """
         log = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the child lives
-        child = subprocess.Popen(
-            words,
-            env=dict(environment),
-            stdin=subprocess.DEVNULL,
-            stdout=log,
-            stderr=log,
-            start_new_session=True,
-            preexec_fn=_die_with_parent if hurried else _stand_back,
-        )
-        self._children.append(_Child(name, child, log))
+
+        def begin() -> subprocess.Popen[bytes]:
+            return subprocess.Popen(
+                words,
+                env=dict(environment),
+                stdin=subprocess.DEVNULL,
+                stdout=log,
+                stderr=log,
+                start_new_session=True,
+                preexec_fn=_die_with_parent if hurried else _stand_back,
+            )
+
+        self._children.append(_Child(name, begin(), log, begin, respawn))
 
     def check(self) -> None:
-        """Raise :class:`RunFailed` if any process has ended with an error, or has ended at all but may not have.
+        """Raise :class:`RunFailed` if any process has ended with an error, or has ended at all but may not have; those
+        that may be are started anew.
 
         Raises KeyboardInterrupt where somebody wants the run to end.
         """
@@ -91,6 +108,10 @@ class Processes:
             status = child.process.poll()
             if status is not None and (status != 0 or child.name != self.may_end):
                 how = f"signal {-status}" if status < 0 else f"status {status}"
+                if child.respawn and status != _WRONG and len(self.restarts) < _MOST_RESTARTS:
+                    self.restarts.append((child.name, how))
+                    child.process = child.start()
+                    continue
                 raise RunFailed(f"{child.name} ended with {how}: {child.last_words()}")
 
     may_end = ""

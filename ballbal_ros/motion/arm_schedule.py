@@ -98,6 +98,11 @@ class ArmSchedule:
         """How many load changes it has been told of."""
         return len(self._loads)
 
+    @property
+    def idle(self) -> bool:
+        """Whether it has not let any motion go yet."""
+        return self._motion is None
+
     def busy_until(self, now: float) -> float | None:
         """When the arms of the motion in force come to rest, s; None where they rest already."""
         return self._motion.end if self._motion is not None and self._motion.end > now else None

@@ -23,11 +23,12 @@ from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
-from ballbal_ros.nodes.diagnostics import OK, Diagnostics, values_of
+from ballbal_ros.nodes.diagnostics import OK, Diagnostics, number_of, values_of
 from ballbal_ros.nodes.lean_trajectory import lean_plan_message
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds, stamp_text, to_time
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_report import PlanReports
+from ballbal_ros.nodes.predecessor import LONG_SETTLED, Predecessor
 from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.nodes.trajectories import (
     ArmWaypoints,
@@ -57,9 +58,21 @@ class _Asked:
     answered: str
 
 
+@attrs.frozen(eq=False)
+class _Sent:
+    """A plan of the topic ``what`` that waits to be answered. By ``deadline``, s of the steady clock, balance and arms
+    must be heard of; ``earlier``: it may have been sent before this node started.
+    """
+
+    what: str
+    message: Any
+    deadline: float
+    earlier: bool
+
+
 class ArmCompensationNode(Node):
     """Plans, asks the balance node, and only then lets the arms go. One plan after the other; an emergency stop goes
-    first.
+    first. Started anew while a motion is under way, it leaves that one to its end and begins no second one.
     """
 
     def __init__(self) -> None:
@@ -81,7 +94,8 @@ class ArmCompensationNode(Node):
         self._state, self._answered = "", ""
         self._emergency = False
         self._asked: _Asked | None = None
-        self._waiting: deque[Any] = deque()
+        self._waiting: deque[_Sent] = deque()
+        self._before = Predecessor()
         self._ball_plan: Any = None
         self._wrench_plan: Any = None
         self._to_balance = publisher(self, "lean_plan")
@@ -149,31 +163,49 @@ class ArmCompensationNode(Node):
 
     def _queue(self, what: str, message: Any) -> None:
         """Plan it now, or when the one before has been answered."""
-        self._waiting.append((what, message, time.monotonic() + self._schedule.parameters.answer_timeout))
+        now, before = time.monotonic(), self._before
+        earlier = before.may_have_heard(now)
+        patience = max(self._schedule.parameters.answer_timeout, LONG_SETTLED if earlier else 0.0)
+        self._waiting.append(_Sent(what, message, now + patience, earlier))
         self._go_on()
 
     def _go_on(self) -> None:
         while self._waiting and self._asked is None:
-            what, message, deadline = self._waiting[0]
-            unknown = not self._state or not self._arms.complete
-            if unknown and time.monotonic() < deadline:
+            sent, now = self._waiting[0], time.monotonic()
+            unknown = not self._before.settled(now) or not self._arms.complete
+            if unknown and now < sent.deadline:
                 # Balance or arms have not been heard of yet: their messages may be on their way.
                 return
             self._waiting.popleft()
-            stamp = stamp_text(message.header.stamp)
+            stamp = stamp_text(sent.message.header.stamp)
             try:
-                proposal = self._proposal(message) if what == "arm_plan" else self._standing(message)
+                proposal = self._answer(sent)
             except BallbalError as error:
-                self._reports.refuse(what, stamp, str(error))
+                self._reports.refuse(sent.what, stamp, str(error), sent.earlier)
                 continue
             if proposal is None:
-                self._reports.accept(what, stamp, "nothing moves: nothing to cancel")
+                self._reports.accept(sent.what, stamp, "nothing moves: nothing to cancel")
             else:
-                self._ask(proposal, what, stamp)
+                self._ask(proposal, sent.what, stamp)
+
+    def _answer(self, sent: _Sent) -> Proposal | None:
+        if sent.earlier and self._has_predecessor():
+            raise self._before.refusal(sent.what)
+        return self._proposal(sent.message) if sent.what == "arm_plan" else self._standing(sent.message)
+
+    def _has_predecessor(self) -> bool:
+        planned = self._schedule.parameters.compensation == "planned"
+        return self._before.was_there(self._answered, self._state, planned)
+
+    def _stop(self, what: str) -> Proposal | None:
+        proposal = self._schedule.stop(self._now)
+        if proposal is None:
+            self._before.check_nothing_to_stop(what, self._now)
+        return proposal
 
     def _proposal(self, message: Any) -> Proposal | None:
         if not message.points:
-            return self._schedule.stop(self._now)
+            return self._stop("arm_plan")
         self._check_ready("arm_plan")
         waypoints = ArmWaypoints.of(message, self.description, "arm_plan")
 
@@ -208,6 +240,7 @@ class ArmCompensationNode(Node):
             raise PlanRefused(
                 "joint_states", f"has not told of {', '.join(self._arms.missing())}", "publish them first"
             )
+        self._before.check_over(topic, self._now)
 
     def _ball(self) -> BallMotion | None:
         """The ball plan that goes with the next arm plan; it is used once."""
@@ -226,6 +259,8 @@ class ArmCompensationNode(Node):
             self._let_go(asked)
             return
         self._asked = asked
+        # As it was before this node asked for the first time.
+        self._has_predecessor()
         self._to_balance.publish(lean_plan_message(proposal.plan, to_time(proposal.lean_start)))
 
     def _let_go(self, asked: _Asked) -> None:
@@ -241,7 +276,10 @@ class ArmCompensationNode(Node):
     def _on_balance_state(self, message: Any) -> None:
         values = values_of(message)
         self._state, self._answered = message.message, values.get("plans answered", "")
+        self._before.heard(time.monotonic())
         asked = self._asked
+        if asked is None and self._schedule.idle:
+            self._before.until = number_of(values.get("plan ends", ""))
         if asked is None or self._answered == asked.answered:
             self._go_on()
             return
@@ -275,7 +313,7 @@ class ArmCompensationNode(Node):
         if self._asked is not None:
             self._give_up("arm_plan: overtaken by an emergency stop")
         try:
-            proposal = self._schedule.stop(self._now)
+            proposal = self._stop("emergency_stop")
         except BallbalError as error:
             self._reports.refuse("emergency_stop", stamp, str(error))
             return

@@ -108,7 +108,7 @@ class BalanceRequests:
             self._answers.update({"refused plan": start, "refusal": str(error)})
         else:
             node.diagnostics.accept("lean_plan")
-            self._answers = {"plan": start}
+            self._answers = {"plan": start, "plan ends": f"{seconds(message.header.stamp) + plan.duration:.3f}"}
             self._goal = None
         self._answered += 1
         node.say_state()

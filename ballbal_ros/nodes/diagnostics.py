@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Mapping
 
 from builtin_interfaces.msg import Time
@@ -25,6 +26,15 @@ def key_values(values: Mapping[str, object]) -> list[KeyValue]:
 def values_of(status: DiagnosticStatus) -> dict[str, str]:
     """The values of a status by their name."""
     return {pair.key: pair.value for pair in status.values}
+
+
+def number_of(text: str) -> float:
+    """The number that a value says; 0 where it says none."""
+    try:
+        value = float(text)
+    except ValueError:
+        return 0.0
+    return value if math.isfinite(value) else 0.0
 
 
 class Diagnostics:

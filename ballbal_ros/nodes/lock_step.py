@@ -10,6 +10,7 @@ from rclpy.node import Node
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY
 from ballbal_ros.nodes.diagnostics import values_of
 from ballbal_ros.nodes.messages import BILLION
+from ballbal_ros.nodes.plan_report import EARLIER
 
 _LOOK_AGAIN = 20_000_000
 
@@ -53,8 +54,11 @@ class LockStep:
     def plan_report_came(self, message: Any) -> None:
         """An answer to an arm plan; it may announce an arm command by its stamp."""
         for status in message.status:
-            self._reports += status.name == "arm_plan"
-            announced = text_nanoseconds(values_of(status).get("arm_command", ""))
+            values = values_of(status)
+            # Of a plan that is answered already, a node that is started anew may say so once more.
+            again = EARLIER in values and self._reports >= max(self._plans, self._wanted)
+            self._reports += status.name == "arm_plan" and not again
+            announced = text_nanoseconds(values.get("arm_command", ""))
             if announced >= 0 and announced not in self._commands:
                 self._announced.add(announced)
 

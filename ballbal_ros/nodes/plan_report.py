@@ -12,6 +12,8 @@ from ballbal_ros.nodes.diagnostics import ERROR, OK, key_values
 from ballbal_ros.nodes.messages import stamp_text, to_time
 from ballbal_ros.nodes.topics import publisher
 
+EARLIER = "sent before the start"
+
 
 class PlanReports:
     """Publishes one report a plan. ``what`` is who asked (arm_plan, emergency_stop), ``stamp`` the stamp that it asked
@@ -22,9 +24,13 @@ class PlanReports:
         self._node, self._hardware = node, hardware
         self._publisher = publisher(node, "plan_report")
 
-    def refuse(self, what: str, stamp: str, reason: str) -> None:
-        """A plan was refused, in one line; nothing moves because of it."""
-        self._publish(ERROR, what, reason, {"requested": stamp, "accepted": "no"})
+    def refuse(self, what: str, stamp: str, reason: str, earlier: bool = False) -> None:
+        """A plan was refused, in one line; nothing moves because of it.
+
+        ``earlier``: it was sent before this node started, and may have been answered by the one before it.
+        """
+        mark = {EARLIER: "yes"} if earlier else {}
+        self._publish(ERROR, what, reason, {"requested": stamp, "accepted": "no", **mark})
 
     def accept(self, what: str, stamp: str, message: str, values: Mapping[str, object] | None = None) -> None:
         """A plan was accepted."""

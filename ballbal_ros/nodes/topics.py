@@ -41,6 +41,8 @@ class Kind:
 SENSOR = Kind(1, lossy=True)
 COMMAND = Kind(1)
 PLAN = Kind(10, kept=True)
+# Whoever is started anew needs to know of all of them, those to come included.
+LOADS = Kind(100, kept=True)
 JOINTS = Kind(20)
 # What was lost on the way is asked for again every 3 s, and must still be there: lock-step may do 2000 steps a second.
 RECORD = Kind(20_000)
@@ -58,7 +60,7 @@ TOPICS: dict[str, tuple[type, Kind]] = {
     "arm_plan": (JointTrajectory, PLAN),
     "ball_plan": (JointTrajectory, PLAN),
     "hand_wrench_plan": (JointTrajectory, PLAN),
-    "hand_load": (InertiaStamped, PLAN),
+    "hand_load": (InertiaStamped, LOADS),
     "arm_command": (JointTrajectory, PLAN),
     "lean_plan": (JointTrajectory, PLAN),
     "plan_report": (DiagnosticArray, PLAN),

@@ -38,6 +38,8 @@ def print_runs(runs: RunSet, console: Console) -> None:
         verdict = "[green]ok[/green]    " if limit.ok else "[bold red]beyond[/bold red]"
         value = f"{limit.value:.3g} {limit.unit}".strip()
         console.print(f"{verdict} {limit.name} {value}, at most {limit.limit:.3g}", highlight=False)
+    for note in runs.notes:
+        console.print(f"[yellow]note[/yellow]   {note}", highlight=False)
 
 
 def _cells(runs: list[RunResult]) -> list[str]:

@@ -45,13 +45,16 @@ class LimitCheck:
 
 @attrs.frozen
 class RunSet:
-    """Runs of one plan on one robot. ``clock`` is in-process, lock-step or real-time."""
+    """Runs of one plan on one robot. ``clock`` is in-process, lock-step or real-time; ``notes`` say what else
+    happened.
+    """
 
     robot: str
     plan: str
     clock: str
     runs: tuple[RunResult, ...]
     limits: tuple[LimitCheck, ...]
+    notes: tuple[str, ...] = ()
 
     @property
     def ok(self) -> bool:
@@ -67,6 +70,7 @@ class RunSet:
             "runs": [attrs.asdict(run) for run in self.runs],
             "limits": [{**attrs.asdict(limit), "ok": limit.ok} for limit in self.limits],
             "ok": self.ok,
+            **({"notes": list(self.notes)} if self.notes else {}),
         }
 
 
