@@ -25,10 +25,11 @@ STANDS_ON = {
     "robot": set(),
     "motion": {"robot"},
     "balance": {"robot", "motion"},
-    "simulation": {"robot", "motion", "balance"},
-    "report": {"robot", "motion", "balance", "simulation"},
-    "nodes": {"robot", "motion", "balance", "simulation", "report"},
-    "commands": {"robot", "motion", "balance", "simulation", "report", "nodes"},
+    "weighing": {"robot", "motion", "balance"},
+    "simulation": {"robot", "motion", "balance", "weighing"},
+    "report": {"robot", "motion", "balance", "weighing", "simulation"},
+    "nodes": {"robot", "motion", "balance", "weighing", "simulation", "report"},
+    "commands": {"robot", "motion", "balance", "weighing", "simulation", "report", "nodes"},
 }
 MAY_KNOW_ROS = {"nodes", "commands"}
 ROS = (

@@ -9,6 +9,9 @@ from scipy.linalg import block_diag
 from ballbal_ros.balance.gains import Gains
 from ballbal_ros.balance.regulator import Regulator
 from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.attitude import rotation_lean
+from ballbal_ros.robot.balance_rows import GRAVITY
+from ballbal_ros.robot.whole_body import Posture
 
 STATES = 10
 MEASURED = 8
@@ -103,6 +106,14 @@ class Controller:
         """Take the outside moment for zero (while a stand holds the robot)."""
         self.prior[STATES:] = 0.0
 
+    def shift(self, lean: Array, moment: Array) -> None:
+        """The reference's lean goes by ``lean`` [2], rad, and the moment that is still unknown by ``moment`` [2], N m:
+        deviations and moment are counted from there.
+        """
+        for known in (self.prior, self.estimate):
+            known[:2] -= lean
+            known[STATES : STATES + 2] += moment
+
     def correct(self, measured: Array | None, imu: bool = True, drive: bool = True) -> None:
         """Take the measured deviations [8] in; None where there are none, and the model's prediction stands.
 
@@ -145,6 +156,15 @@ class Controller:
         if len(self._past):
             self._past[INPUTS:] = self._past[:-INPUTS].copy()
             self._past[:INPUTS] = torque
+
+
+def handed_over(before: Posture, after: Posture, lean: tuple[float, float]) -> tuple[Array, Array]:
+    """How far the equilibrium lean goes, [2] in rad, and the moment about the contact that is explained, [2] in N m
+    (roll, pitch), when the mass model of a robot that stands at ``lean`` is replaced.
+    """
+    turn = rotation_lean(np.array(lean))
+    x, y, _ = (turn @ (after.mass * after.center - before.mass * before.center)).tolist()
+    return np.subtract(after.equilibrium_lean, before.equilibrium_lean), GRAVITY * np.array((y, -x))
 
 
 def _bound(vector: Array, limit: float) -> None:

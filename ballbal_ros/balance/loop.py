@@ -13,7 +13,7 @@ from ballbal_ros.balance.attitude import Attitude
 from ballbal_ros.balance.changeover import ChangeOver, PreparedChange
 from ballbal_ros.balance.clock import LoopClock
 from ballbal_ros.balance.coasting import coasting_gain
-from ballbal_ros.balance.controller import MEASURED, STATES, Controller
+from ballbal_ros.balance.controller import MEASURED, STATES, Controller, handed_over
 from ballbal_ros.balance.guard import ENGAGING, STANDBY, STOPPING, Guard
 from ballbal_ros.balance.judge import Judge
 from ballbal_ros.balance.measurement import Measurement
@@ -144,6 +144,20 @@ class BalanceLoop:
     def set_load(self, load: Load, stamp: float = -math.inf) -> None:
         """Take a load into the mass model, at once or from a stamp to come on, s."""
         self._load_changes = sorted([*self._load_changes, (stamp, load)], key=lambda change: change[0])
+
+    def adopt_load(self, load: Load) -> bool:
+        """Believe a load that the robot has found out by itself, and stood with all the time: what the trim bore of it
+        goes over to the mass model, and moves with the arms from now on, without a jump in torque. Not while a plan
+        is in force, which was made without it: False then.
+        """
+        reference, arms = self.reference, self.senses.arm_position
+        if reference.has_plan or not reference.follow_arms:
+            return False
+        before = self.body.posture(arms)
+        self.body.set_load(load, "found load")
+        after = self.body.posture(arms)
+        self.controller.shift(*handed_over(before, after, self.senses.lean))
+        return True
 
     def stop(self, reason: str) -> None:
         """Controlled stop: no new motion, ball to rest, and torque off once a stand holds the robot. A plan in force

@@ -148,6 +148,13 @@ class WholeBody:
         pin.forwardKinematics(self._model, self._data, self._q)
         return np.array(pin.updateFramePlacement(self._model, self._data, self._hand_frame(hand)).translation)
 
+    def hand_placement(self, hand: str, arm_position: Array) -> tuple[Array, Array]:
+        """Origin [3], m, and turn [3, 3] of a hand link in ``base_link``."""
+        self._arm[:] = arm_position
+        pin.forwardKinematics(self._model, self._data, self._q)
+        placement = pin.updateFramePlacement(self._model, self._data, self._hand_frame(hand))
+        return np.array(placement.translation), np.array(placement.rotation)
+
     def terms(self, position: Array, rate: Array, acceleration: Array, hands: Iterable[str] = ()) -> UpperBodyTerms:
         """The upper body along an arm motion [N, n]: one pass of Pinocchio a sample, all that the balance rows need.
 

@@ -6,6 +6,7 @@ from __future__ import annotations
 
 import math
 import time
+from collections.abc import Iterable
 
 import attrs
 import numpy as np
@@ -30,6 +31,7 @@ from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.run_result import RunResult
 from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import Truth
+from ballbal_ros.weighing.standing import EVERY, StandingWatch
 
 
 @attrs.frozen(kw_only=True)
@@ -56,10 +58,12 @@ class Trace:
     friction: Array
 
 
-def plan_story(files: RobotFiles, story: Story, timeline: Timeline) -> LeanPlan:
-    """The lean plan for a story, servo lag and announced loads included; refused where it goes beyond the limits."""
+def plan_story(files: RobotFiles, story: Story, timeline: Timeline, loads: Iterable[Load] | None = None) -> LeanPlan:
+    """The lean plan for a story, servo lag and announced loads included; refused where it goes beyond the limits.
+    ``loads``: what the hands hold at its start, where that is not what the story says.
+    """
     arm = files.description.parameters.arm
-    body = WholeBody(files.description, story.start_loads)
+    body = WholeBody(files.description, story.start_loads if loads is None else loads)
     lead_in = timeline.lead_in
     ball = story.ball
     if ball is not None:
@@ -102,9 +106,12 @@ class Rehearsal:
         self.loop.supported = True
         self._plan = plan if kind == "planned" else None
         self._meant: Array | None = None
-        if self._plan is not None:
-            self.loop.add_plan(timeline.lean, self._plan)
-            self._meant = self._plan.table(self.loop.period)[:, 4:6] if story.ball is not None else None
+        self._files, self._planning = files, timeline.lean - files.compensation.planner.allowance
+        self.watch = StandingWatch(self.loop)
+        self._look_every = max(1, round(EVERY / self.loop.period))
+        self._ticks, self._believes_other = 0, False
+        if self._plan is not None and story.ball is not None:
+            self._meant = self._plan.table(self.loop.period)[:, 4:6]
         self._truly: list[tuple[float, Load]] = []
         if kind != "still":
             self.robot.command_arms(story.arms, timeline.arms)
@@ -134,10 +141,25 @@ class Rehearsal:
         """One tick of the loop, after what happens then: its efforts, which the robot has still to step with."""
         robot, loop = self.robot, self.loop
         self._happen(robot.time)
+        if robot.time >= self._planning - 1e-9:
+            self._offer_plan()
         effort = loop.tick(robot.measurement())
         if robot.support and loop.guard.state == BALANCING:
             robot.support = loop.supported = False
+        self._ticks += 1
+        if self._ticks % self._look_every == 0:
+            found = [load for load in self.watch.see(robot.time) if loop.adopt_load(load)]
+            self.watch.adopted(found)
+            self._believes_other |= bool(found)
         return effort
+
+    def _offer_plan(self) -> None:
+        """Hand the plan to the loop; made anew where the robot has found other loads than it was told of."""
+        plan, self._planning = self._plan, math.inf
+        if plan is not None and self._believes_other:
+            plan = plan_story(self._files, self.story, self.timeline, self.loop.body.loads.values())
+        if plan is not None:
+            self.loop.add_plan(self.timeline.lean, plan)
 
     def step(self) -> None:
         """One tick of loop and robot together."""
