@@ -23,7 +23,7 @@ MOMENTS = 3
 class ControllerMatrices:
     """One tick as matrices: estimate += ``correct`` (measured - ``output`` prior); torque = ``act`` [estimate; past
     torques];
-    prior = ``predict`` [estimate; torque; past torques]. ``history``: how many past torques still act.
+    prior = ``predict`` [estimate; past torques; torque]. ``history``: how many past torques still act.
     """
 
     correct: Array
@@ -51,8 +51,8 @@ def controller_matrices(gains: Gains) -> ControllerMatrices:
     predict[:STATES, STATES:known] = block_diag(*(r.plant.disturbance for r in pair))
     predict[STATES:, STATES:known] = np.eye(MOMENTS)
     for j in range(history + 1):
-        columns = slice(known + j * INPUTS, known + (j + 1) * INPUTS)
-        predict[:STATES, columns] = block_diag(*(r.plant.inputs[j] for r in pair))
+        first = known + INPUTS * (j - 1 if j else history)
+        predict[:STATES, first : first + INPUTS] = block_diag(*(r.plant.inputs[j] for r in pair))
     act = np.hstack((-feedback, on_moment, *(-block for block in past)))
     return ControllerMatrices(correct, output, act, predict, history)
 
@@ -80,10 +80,13 @@ class Controller:
         self.moment_step, self.moment_limit = moment_step, moment_limit
         known, past = STATES + MOMENTS, INPUTS * matrices.history
         self.prior = np.zeros(known)
-        self.estimate = np.zeros(known)
-        self._past = np.zeros(past)
-        self._stack = np.zeros(known + INPUTS + past)
-        self._seen = np.zeros(known + past)
+        # One array, and what it is made of: nothing is copied from one place to another in a tick.
+        self._stack = np.zeros(known + past + INPUTS)
+        self._seen, self._torque = self._stack[:-INPUTS], self._stack[-INPUTS:]
+        self.estimate, self._past = self._seen[:known], self._seen[known:]
+        self._moment = self.estimate[STATES:]
+        self._newest, self._newer, self._older = self._past[:INPUTS], self._past[:-INPUTS], self._past[INPUTS:]
+        self._expected, self._act = np.zeros(MEASURED), np.zeros(INPUTS)
         self.change(matrices)
 
     def change(self, matrices: ControllerMatrices) -> None:
@@ -129,33 +132,29 @@ class Controller:
             self.estimate[:8] += self._coasting @ off[4:6]
             self.estimate[8:STATES] += self._correct[8:STATES, 6] * off[6]
         else:
-            off = measured - self._output @ self.prior
+            off = np.dot(self._output, self.prior, out=self._expected)
+            np.subtract(measured, off, out=off)
             if not drive:
                 off[4:6] = 0.0
             np.dot(self._correct, off, out=self.estimate)
             # A push is no moment that lasts: what the estimate of the lasting moment may follow is bounded.
-            moment = self.estimate[STATES:]
-            _bound(moment, self.moment_step)
+            _bound(self._moment, self.moment_step)
             self.estimate += self.prior
-            _bound(moment, self.moment_limit)
+            _bound(self._moment, self.moment_limit)
 
     def torque(self) -> Array:
-        """Torque [3] to add to the reference's, from the present estimate."""
-        known = STATES + MOMENTS
-        self._seen[:known] = self.estimate
-        self._seen[known:] = self._past
-        return np.asarray(self.act @ self._seen)
+        """Torque [3] to add to the reference's, from the present estimate; the next call uses the same array."""
+        return np.dot(self.act, self._seen, out=self._act)
 
-    def predict(self, torque: Array) -> None:
-        """Go on to the next tick, with the torque [3] beyond the reference's that was really commanded."""
-        known = STATES + MOMENTS
-        self._stack[:known] = self.estimate
-        self._stack[known : known + INPUTS] = torque
-        self._stack[known + INPUTS :] = self._past
+    def predict(self, x: float, y: float, z: float) -> None:
+        """Go on to the next tick, with the torque beyond the reference's, N m, that was really commanded."""
+        torque = self._torque
+        torque[0], torque[1], torque[2] = x, y, z
         np.dot(self._predict, self._stack, out=self.prior)
         if len(self._past):
-            self._past[INPUTS:] = self._past[:-INPUTS].copy()
-            self._past[:INPUTS] = torque
+            if len(self._newer):
+                self._older[:] = self._newer.copy()
+            self._newest[:] = torque
 
 
 def handed_over(before: Posture, after: Posture, lean: tuple[float, float]) -> tuple[Array, Array]:
@@ -169,8 +168,10 @@ def handed_over(before: Posture, after: Posture, lean: tuple[float, float]) -> t
 
 def _bound(vector: Array, limit: float) -> None:
     """Clip a vector in place to ±limit."""
-    np.minimum(vector, limit, out=vector)
-    np.maximum(vector, -limit, out=vector)
+    x, y, z = vector.tolist()
+    if not (-limit <= x <= limit and -limit <= y <= limit and -limit <= z <= limit):
+        np.minimum(vector, limit, out=vector)
+        np.maximum(vector, -limit, out=vector)
 
 
 def _past(regulator: Regulator, j: int) -> Array:

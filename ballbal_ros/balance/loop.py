@@ -227,7 +227,7 @@ class BalanceLoop:
         if self.guard.sends:
             self.senses.pass_over(self._expectation(row.tolist()))
             self.controller.correct(None)
-            self.controller.predict(self.torque - row[10:13])
+            self.controller.predict(*(self.torque - row[10:13]).tolist())
             self.judge.begin()
 
     def _answer(self, measured: Measurement, now: float) -> Array:
@@ -356,5 +356,5 @@ class BalanceLoop:
             self.torque[:] = 0.0
             return output.none()
         self.torque[:] = tx, ty, tz = output.sent
-        self.controller.predict(np.array((tx - x, ty - y, tz - z)))
-        return effort.copy()
+        self.controller.predict(tx - x, ty - y, tz - z)
+        return effort

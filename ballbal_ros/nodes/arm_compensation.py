@@ -29,6 +29,7 @@ from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds, s
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_report import PlanReports
 from ballbal_ros.nodes.predecessor import LONG_SETTLED, Predecessor
+from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.nodes.trajectories import (
     ArmWaypoints,
@@ -89,6 +90,7 @@ class ArmCompensationNode(Node):
         self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
         self._schedule = ArmSchedule(self.description, parameters["compensation.yaml"])
         parameters.declare(self._change)
+        self._stamp_clock = StampClock(self)
         self._arms = JointReader(self.description.joint_names, "joint_states")
         self._place = (0.0, 0.0, 0.0)
         self._state, self._answered = "", ""
@@ -135,7 +137,8 @@ class ArmCompensationNode(Node):
 
     def _on_joint_states(self, raw: bytes) -> None:
         try:
-            self._arms.read(raw)
+            if self._arms.read(raw):
+                self._stamp_clock.go_to(self._arms.stamp)
         except BallbalError as error:
             self._diagnostics.refuse("joint_states", str(error))
 

@@ -66,8 +66,8 @@ class BalanceNode(LifecycleNode):
         self._tuning = BalanceTuning(self, parameters)
         inputs = self.diagnostics.inputs
         inputs.subscribe("joint_states", self._senses.on_arms, raw=True)
-        inputs.subscribe("drive_states", self._senses.on_drive, every=own.lock_step, raw=True)
-        inputs.subscribe(own.imu_topic, self._senses.on_imu, every=own.lock_step, raw=True)
+        inputs.subscribe("drive_states", self._senses.on_drive, raw=True)
+        inputs.subscribe(own.imu_topic, self._senses.on_imu, raw=True)
 
     def _tick(self, ns: int) -> None:
         """Answer the measurement of ``ns``; one that came before is answered as before."""

@@ -59,6 +59,7 @@ class JointReader:
     def __init__(self, names: Sequence[str], topic: str) -> None:
         self._names, self._topic = tuple(names), topic
         self._order: dict[tuple[str, ...], tuple[Array, Array]] = {}
+        self._last: tuple[str, ...] = ()
         self._reader = JointStateReader()
         self.position: Array = np.full(len(self._names), np.nan)
         self.stamp = -1
@@ -80,12 +81,19 @@ class JointReader:
         """
         values = self._reader.read(raw)
         names = values.names
+        if names is self._last and len(values.position) == len(names) and math.isfinite(values.position.sum()):
+            # All of them, in order, as the message before: the common case.
+            self.position[:] = values.position
+            self.stamp = values.stamp
+            return True
         order = self._order.get(names)
         if order is None:
             here = [(i, self._names.index(name)) for i, name in enumerate(names) if name in self._names]
             order = np.array([i for i, _ in here], int), np.array([k for _, k in here], int)
             if len(self._order) < 64:
                 self._order[names] = order
+        if names == self._names:
+            self._last = names
         if not len(order[0]):
             return False
         if len(values.position) != len(names):

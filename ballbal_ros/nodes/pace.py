@@ -71,7 +71,7 @@ class Inputs:
         self._node = node
         self._came: dict[str, float | None] = {}
 
-    def subscribe(self, topic: str, callback: Callable[[Any], None], *, every: bool = False, raw: bool = False) -> None:
+    def subscribe(self, topic: str, callback: Callable[[Any], None], *, raw: bool = False) -> None:
         """As :func:`ballbal_ros.nodes.topics.subscribe`."""
         came, clock = self._came, time.monotonic
         came[topic] = None
@@ -80,7 +80,7 @@ class Inputs:
             came[topic] = clock()
             callback(message)
 
-        subscribe(self._node, topic, take, every=every, raw=raw)
+        subscribe(self._node, topic, take, raw=raw)
 
     def values(self) -> dict[str, object]:
         """``age <topic> s`` for each: wall time since a message came, or that none did."""

@@ -30,7 +30,7 @@ def _profile(depth: int, reliable: bool = True, kept: bool = False) -> QoSProfil
 @attrs.frozen
 class Kind:
     """How a topic is published and subscribed: depth, whether late joiners get it, whether a subscriber takes
-    losses.
+    losses, for which nothing has to be acknowledged (in lock-step an instant that is not answered is said again).
     """
 
     depth: int
@@ -40,10 +40,11 @@ class Kind:
 
 SENSOR = Kind(1, lossy=True)
 COMMAND = Kind(1)
+DRIVE_COMMAND = Kind(1, lossy=True)
 PLAN = Kind(10, kept=True)
 # Whoever is started anew needs to know of all of them, those to come included.
 LOADS = Kind(100, kept=True)
-JOINTS = Kind(20)
+JOINTS = Kind(20, lossy=True)
 # What was lost on the way is asked for again every 3 s, and must still be there: lock-step may do 2000 steps a second.
 RECORD = Kind(20_000)
 DESCRIPTION = Kind(1, kept=True)
@@ -55,7 +56,7 @@ TOPICS: dict[str, tuple[type, Kind]] = {
     "imu/data_raw": (Imu, SENSOR),
     "joint_states": (JointState, JOINTS),
     "drive_states": (JointState, SENSOR),
-    "drive_command": (JointState, COMMAND),
+    "drive_command": (JointState, DRIVE_COMMAND),
     "drive_effort": (Float64MultiArray, COMMAND),
     "arm_plan": (JointTrajectory, PLAN),
     "ball_plan": (JointTrajectory, PLAN),
@@ -89,10 +90,8 @@ def publisher(node: Node, topic: str, lifespan: float | None = None) -> Any:
     return node.create_publisher(message, topic, profile)
 
 
-def subscribe(
-    node: Node, topic: str, callback: Callable[[Any], None], *, every: bool = False, raw: bool = False
-) -> Any:
-    """A subscription to a topic of the stack; ``every``: no sensor message may be lost (lock-step)."""
+def subscribe(node: Node, topic: str, callback: Callable[[Any], None], *, raw: bool = False) -> Any:
+    """A subscription to a topic of the stack; ``raw``: the callback gets the serialised message."""
     message, kind = TOPICS[topic]
-    profile = _profile(kind.depth, reliable=every or not kind.lossy, kept=kind.kept)
+    profile = _profile(kind.depth, reliable=not kind.lossy, kept=kind.kept)
     return node.create_subscription(message, topic, callback, profile, raw=raw)

@@ -30,9 +30,11 @@ _count = struct.Struct("<I").unpack_from
 _imu = struct.Struct("<37d").unpack_from
 
 
-@attrs.frozen
+@attrs.define(eq=False)
 class JointValues:
-    """One joint state: ``stamp`` in ns; positions and efforts [names], empty where there are none."""
+    """One joint state: ``stamp`` in ns; positions and efforts [names], empty where there are none. (Not frozen, which
+    costs time in the loop; nobody changes it.)
+    """
 
     stamp: int
     names: tuple[str, ...]
@@ -40,10 +42,10 @@ class JointValues:
     effort: Array
 
 
-@attrs.frozen
+@attrs.define
 class ImuValues:
     """One IMU reading: ``stamp`` in ns; ``quat_xyzw`` None where the message marks it as not reported; rad/s, m/s², IMU
-    axes.
+    axes. (Not frozen either.)
     """
 
     stamp: int
