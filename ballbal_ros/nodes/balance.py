@@ -21,7 +21,6 @@ from ballbal_ros.nodes.balance_messages import BalanceMessages, pull_values, run
 from ballbal_ros.nodes.balance_requests import BalanceRequests
 from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
-from ballbal_ros.nodes.lock_step import is_looked_at
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
@@ -29,6 +28,7 @@ from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import WholeBody
+from ballbal_ros.simulation.timeline import is_looked_at
 
 _STATE_EVERY = BILLION // 5
 _SUCCESS, _FAILURE = TransitionCallbackReturn.SUCCESS, TransitionCallbackReturn.FAILURE

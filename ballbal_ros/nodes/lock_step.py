@@ -11,17 +11,7 @@ from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY
 from ballbal_ros.nodes.diagnostics import values_of
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.plan_report import EARLIER
-
-_LOOK_AGAIN = 20_000_000
-
-
-def is_looked_at(ns: int, period_ns: int) -> bool:
-    """Whether the tick ``ns`` is one at which ``balance`` says its state while it does not balance yet, and the stand
-    looks at it.
-
-    That is the first tick of each 20 ms.
-    """
-    return ns % _LOOK_AGAIN < period_ns
+from ballbal_ros.simulation.timeline import is_looked_at
 
 
 def text_nanoseconds(text: str) -> int:

@@ -29,7 +29,7 @@ from ballbal_ros.simulation.outside import true_wrenches
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.run_result import RunResult
-from ballbal_ros.simulation.timeline import Timeline
+from ballbal_ros.simulation.timeline import Timeline, is_looked_at
 from ballbal_ros.simulation.truth import Truth
 from ballbal_ros.weighing.standing import EVERY, StandingWatch
 
@@ -104,6 +104,7 @@ class Rehearsal:
             files.description, attrs.evolve(files.balance, compensation=way), story.posture, story.start_loads, schedule
         )
         self.loop.supported = True
+        self._period_ns = round(1e9 * self.loop.period)
         self._plan = plan if kind == "planned" else None
         self._meant: Array | None = None
         self._files, self._planning = files, timeline.lean - files.compensation.planner.allowance
@@ -144,7 +145,7 @@ class Rehearsal:
         if robot.time >= self._planning - 1e-9:
             self._offer_plan()
         effort = loop.tick(robot.measurement())
-        if robot.support and loop.guard.state == BALANCING:
+        if robot.support and loop.guard.state == BALANCING and is_looked_at(round(1e9 * robot.time), self._period_ns):
             robot.support = loop.supported = False
         self._ticks += 1
         if self._ticks % self._look_every == 0:

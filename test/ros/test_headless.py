@@ -28,8 +28,8 @@ def finished(process: subprocess.Popen[str], timeout: float = 90.0) -> tuple[int
 
 
 def test_reach_over_the_bus_is_what_the_rehearsal_says(ros_domain_id: int, tmp_path: Path) -> None:
-    """`reach`, planned, in lock-step: within 2 mm, exit 0, and the same travel as in-process to a hundredth of a
-    millimetre.
+    """`reach`, planned, in lock-step: within 2 mm, exit 0, and the same peak travel as in-process to a
+    micrometre (the end is a tick later on the bus).
     """
     plan, file = CONFIG / "plans" / "reach.yaml", tmp_path / "found.json"
     words = ("headless", str(plan), "--robot", str(SHELVER), "--compensation", "planned", "--json", str(file))
@@ -41,7 +41,7 @@ def test_reach_over_the_bus_is_what_the_rehearsal_says(ros_domain_id: int, tmp_p
     run = found["runs"][0]
     expected = rehearse(plan, SHELVER, ("planned",)).runs[0]
     assert run["ball_travel_peak_mm"] <= 2.0 and not run["fell"]
-    assert run["ball_travel_peak_mm"] == pytest.approx(expected.ball_travel_peak_mm, abs=0.01)
+    assert run["ball_travel_peak_mm"] == pytest.approx(expected.ball_travel_peak_mm, abs=1e-3)
     assert run["ball_travel_end_mm"] == pytest.approx(expected.ball_travel_end_mm, abs=0.01)
     assert set(run) == {
         *("compensation", "seed", "fell", "ball_travel_peak_mm", "ball_travel_end_mm", "lean_peak_deg"),
@@ -101,7 +101,7 @@ def test_two_robots_in_two_namespaces_do_not_meet(ros_domain_id: int, tmp_path: 
     expected = rehearse(plan, SHELVER, ("planned",), (0, 1)).runs
     for file, alone in zip(files, expected, strict=True):
         run = json.loads(file.read_text())["runs"][0]
-        assert run["ball_travel_peak_mm"] == pytest.approx(alone.ball_travel_peak_mm, abs=0.01)
+        assert run["ball_travel_peak_mm"] == pytest.approx(alone.ball_travel_peak_mm, abs=1e-3)
 
 
 def test_help_names_the_kinds_and_clocks() -> None:
