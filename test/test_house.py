@@ -25,11 +25,12 @@ STANDS_ON = {
     "robot": set(),
     "motion": {"robot"},
     "balance": {"robot", "motion"},
+    "bring_up": {"robot"},
     "weighing": {"robot", "motion", "balance"},
     "simulation": {"robot", "motion", "balance", "weighing"},
     "report": {"robot", "motion", "balance", "weighing", "simulation"},
     "nodes": {"robot", "motion", "balance", "weighing", "simulation", "report"},
-    "commands": {"robot", "motion", "balance", "weighing", "simulation", "report", "nodes"},
+    "commands": {"robot", "motion", "balance", "bring_up", "weighing", "simulation", "report", "nodes"},
 }
 MAY_KNOW_ROS = {"nodes", "commands"}
 ROS = (

@@ -18,8 +18,8 @@ from ballbal_ros.commands.checkup_files import check_files
 from ballbal_ros.commands.checkup_machine import check_bus, check_machine
 from ballbal_ros.commands.checkup_stack import Heard, check_stack
 from ballbal_ros.commands.files import write_json
-from ballbal_ros.commands.findings import LOOK, OK, WRONG, Finding
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.findings import LOOK, OK, WRONG, Finding
 from ballbal_ros.stack import checked_namespace
 
 _COLOURS = {OK: "green", LOOK: "yellow", WRONG: "bold red"}

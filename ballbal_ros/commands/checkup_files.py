@@ -15,9 +15,9 @@ import numpy as np
 from ballbal_ros.balance.gains import Requirement, design, margins, requirements
 from ballbal_ros.balance.linear_model import linear_model
 from ballbal_ros.balance.parameters import BalanceParameters
-from ballbal_ros.commands.findings import LOOK, OK, WRONG, Finding
 from ballbal_ros.declaration import load
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.findings import LOOK, OK, WRONG, Finding
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load

@@ -8,7 +8,7 @@ import shutil
 from collections.abc import Mapping
 from pathlib import Path
 
-from ballbal_ros.commands.findings import LOOK, OK, WRONG, Finding
+from ballbal_ros.findings import LOOK, OK, WRONG, Finding
 
 _MACHINE, _BUS = "machine", "bus"
 _PRIORITY = 80

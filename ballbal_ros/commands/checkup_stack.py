@@ -9,7 +9,7 @@ from collections.abc import Mapping, Sequence
 import attrs
 
 from ballbal_ros.balance.parameters import BalanceParameters
-from ballbal_ros.commands.findings import LOOK, OK, WRONG, Finding, graded
+from ballbal_ros.findings import LOOK, OK, WRONG, Finding, graded
 
 _NODES, _LOOP, _INPUT = "nodes", "loop", "input"
 NEEDED = ("balance", "arm_compensation", "whole_body_kinematics")

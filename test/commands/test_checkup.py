@@ -14,10 +14,10 @@ from ballbal_ros.commands.checkup import checkup
 from ballbal_ros.commands.checkup_files import check_files
 from ballbal_ros.commands.checkup_machine import _fifo, _governors, _load, _memory, check_bus
 from ballbal_ros.commands.checkup_stack import NEEDED, Heard, Told, check_stack
-from ballbal_ros.commands.findings import LOOK, OK, WRONG, Finding, graded
 from ballbal_ros.commands.main import main
 from ballbal_ros.declaration import load
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.findings import LOOK, OK, WRONG, Finding, graded
 from helpers.robots import CONFIG
 
 SHELVER = CONFIG / "shelver"

@@ -9,7 +9,7 @@ OK, LOOK, WRONG = "ok", "look", "wrong"
 
 @attrs.frozen
 class Finding:
-    """One line of ``ballbal checkup``: ``what`` was looked at within an ``area``, the ``verdict`` (ok, look or wrong),
+    """One line of a checkup: ``what`` was looked at within an ``area``, the ``verdict`` (ok, look or wrong),
     what was ``found``, and what to ``do`` about it; "" where nothing has to be done.
     """
 
