@@ -156,6 +156,14 @@ class SimulatedRobotNodeParameters:
         high=99,
         meaning="SCHED_FIFO priority to ask for, where the system grants it; diagnostics tell; 0: ordinary scheduling",
     )
+    hung: float = parameter(
+        "double",
+        0.0,
+        unit="m",
+        low=0.0,
+        high=1.0,
+        meaning="how far the ball hangs clear of the floor, as for checkup --gantry; 0: it stands on the floor",
+    )
     wait_for_plan: bool = parameter(
         "bool",
         False,

@@ -45,7 +45,7 @@ class SmallMoves:
         self.smallest_step = np.full(len(drive.names), np.inf)
         self.period = math.inf
         self.done, self.saying = False, "waits until all is still"
-        self._now, self._reading = -math.inf, self._none
+        self._now, self._reading, self._last = -math.inf, self._none, self._none
         self._step = self._run()
 
     def tick(self, now: float, reading: Array) -> Array:
@@ -56,15 +56,16 @@ class SmallMoves:
         if not np.isfinite(reading).all():
             raise BallbalError("drive_states", f"has the angles {reading.tolist()}", "mend the driver")
         if self.done or now <= self._now:
-            return self._none.copy()
+            # One that came before is answered as before.
+            return self._last.copy()
         if math.isfinite(self._now):
             self._look_at_steps(now, reading)
         self._now, self._reading = now, reading.copy()
         try:
-            return np.clip(next(self._step), -self._most, self._most)
+            self._last = np.clip(next(self._step), -self._most, self._most)
         except StopIteration:
-            self.done, self.saying = True, "done"
-            return self._none.copy()
+            self.done, self.saying, self._last = True, "done", self._none
+        return self._last.copy()
 
     def _look_at_steps(self, now: float, reading: Array) -> None:
         self.period = min(self.period, now - self._now)

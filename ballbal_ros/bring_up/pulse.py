@@ -92,7 +92,9 @@ def strength(record: Record, drive: Drive, ball_inertia: float, contact: int, fa
         return np.asarray((way[:, known] - turned[:, known]) / size).ravel()
 
     low, high = np.array([-np.inf, 0.0, 0.0]), np.array([np.inf, 1.0, _DELAYS[-1] / scale[2]])
-    found = least_squares(off, np.clip(start / scale, low, high), bounds=(low, high), diff_step=1e-4, max_nfev=30)
+    found = least_squares(
+        off, np.clip(start / scale, low, high), bounds=(low, high), diff_step=np.full(3, 1e-4), max_nfev=30
+    )
     return Strength(*(found.x * scale).tolist())
 
 

@@ -9,20 +9,19 @@ from typing import Annotated, Any, Optional
 
 import attrs
 import typer
-from rich import box
 from rich.console import Console
 from rich.markup import escape
-from rich.table import Table
 
 from ballbal_ros.commands.checkup_files import check_files
 from ballbal_ros.commands.checkup_machine import check_bus, check_machine
 from ballbal_ros.commands.checkup_stack import Heard, check_stack
 from ballbal_ros.commands.files import write_json
+from ballbal_ros.commands.finding_table import COLOURS, finding_table
+from ballbal_ros.commands.gantry import gantry
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.findings import LOOK, OK, WRONG, Finding
 from ballbal_ros.stack import checked_namespace
 
-_COLOURS = {OK: "green", LOOK: "yellow", WRONG: "bold red"}
 _HIGHEST_DOMAIN = 232
 
 
@@ -80,27 +79,13 @@ def as_json(done: Checkup) -> dict[str, Any]:
 
 def print_checkup(done: Checkup, console: Console) -> None:
     """Print the table of checks, for a person: what is wrong first to be seen, by colour and by word."""
-    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
-    table.add_column("", no_wrap=True)
-    table.add_column("what", style="cyan")
-    table.add_column("found, and what would do", overflow="fold")
-    area = ""
-    for finding in done.findings:
-        if finding.area != area and area:
-            table.add_section()
-        area = finding.area
-        line = escape(finding.found)
-        if finding.do:
-            line += f"\n[dim]→[/dim] {escape(finding.do)}"
-        colour = _COLOURS[finding.verdict]
-        table.add_row(f"[{colour}]{finding.verdict}[/{colour}]", escape(finding.what), line)
-    console.print(table, highlight=False)
+    console.print(finding_table(done.findings), highlight=False)
     console.print(escape(done.stack), highlight=False)
     counts = Counter(finding.verdict for finding in done.findings)
     if done.ok:
         console.print(f"{counts[OK]} checks: [green]all well[/green]", highlight=False)
         return
-    parts = [f"[{_COLOURS[v]}]{counts[v]} {v}[/{_COLOURS[v]}]" for v in (WRONG, LOOK, OK) if counts[v]]
+    parts = [f"[{COLOURS[v]}]{counts[v]} {v}[/{COLOURS[v]}]" for v in (WRONG, LOOK, OK) if counts[v]]
     console.print(f"{len(done.findings)} checks: {', '.join(parts)}", highlight=False)
 
 
@@ -122,11 +107,33 @@ def checkup_command(
     wait: Annotated[
         float, typer.Option("--wait", min=0.0, max=60.0, help="Longest time to listen to the nodes, s; 0: not at all.")
     ] = 5.0,
+    on_gantry: Annotated[
+        bool, typer.Option("--gantry", help="First power-on of a real drive, the robot hung up: asks before it moves.")
+    ] = False,
+    share: Annotated[
+        float, typer.Option("--share", help="With --gantry: share of each actuator's rated torque, never exceeded.")
+    ] = 0.05,
     json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
-    """What is wrong with files, machine, bus and running nodes, and what to do about it. Sends nothing."""
+    """What is wrong with files, machine, bus and running nodes, and what to do about it. Sends nothing, unless with
+    --gantry.
+    """
+    if on_gantry:
+        _gantry(robot, domain_of(domain), checked_namespace(namespace), share, json_file)
     done = checkup(robot, domain_of(domain), checked_namespace(namespace), wait)
     print_checkup(done, Console())
     if json_file is not None:
         write_json(json_file, as_json(done))
+    raise typer.Exit(0 if done.ok else 1)
+
+
+def _gantry(robot: Path, domain: int, namespace: str, share: float, json_file: Path | None) -> None:
+    console = Console()
+    done = gantry(robot, domain, namespace, share, console)
+    amiss = sum(finding.verdict != OK for finding in done.findings)
+    well = "[green]all in order[/green]" if done.ok else f"[bold red]{amiss} to be mended, then do it again[/bold red]"
+    console.print(f"{len(done.findings)} checks: {well}", highlight=False)
+    if json_file is not None:
+        checks = [attrs.asdict(finding) for finding in done.findings]
+        write_json(json_file, {"robot": done.robot, "checks": checks, "ok": done.ok})
     raise typer.Exit(0 if done.ok else 1)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import time
-from typing import Any
+from typing import Any, TypeVar
 
 import rclpy
 from rclpy.context import Context
@@ -23,6 +23,9 @@ _RELIABLE_ONLY = ("joint_states",)
 """Topics that our nodes want reliable, and drivers are wont to offer as best effort."""
 
 
+_Ear = TypeVar("_Ear", bound="Ear")
+
+
 class Ear:
     """A node that hears the diagnostics of one namespace. As a context it leaves the bus at the end."""
 
@@ -37,7 +40,7 @@ class Ear:
         subscribe(self.node, "/diagnostics", self._on_diagnostics)
         self._spinner.add_node(self.node)
 
-    def __enter__(self) -> Ear:
+    def __enter__(self: _Ear) -> _Ear:
         return self
 
     def __exit__(self, *_: object) -> None:

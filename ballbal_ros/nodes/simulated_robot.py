@@ -96,6 +96,8 @@ class SimulatedRobotNode(Node):
         posture = np.zeros(self.description.joint_count) if story is None else story.posture
         loads = () if story is None else story.start_loads
         robot = SimulatedRobot(self.description, parameters, posture, loads, own.seed, truth)
+        if own.hung > 0.0:
+            robot.hang(own.hung)
         self._happenings = Happenings(robot)
         if story is not None and own.plan_start >= 0.0:
             self._happenings.add_story(story, own.plan_start)
@@ -274,7 +276,12 @@ class SimulatedRobotNode(Node):
             **self._peaks.values(),
             **(self._answers.values() if self._started is not None else {}),
         }
-        return (ERROR, "fell", values) if robot.fell else (OK, "on its stand" if robot.support else "free", values)
+        return (ERROR, "fell", values) if robot.fell else (OK, self._held(), values)
+
+    def _held(self) -> str:
+        if not self._robot.support:
+            return "free"
+        return "hung up" if self._own.hung > 0.0 else "on its stand"
 
 
 def main() -> None:

@@ -22,7 +22,8 @@ class FloorMoments:
 
     Rolling: C N r against the rolling. Torsion: a bristle, as in
     :class:`~ballbal_ros.simulation.drive.SimulatedDrive`; it holds the ball up to ``torsion`` N, twisted by a
-    milliradian or two, and rubs with that moment when the ball spins.
+    milliradian or two, and rubs with that moment when the ball spins. ``clear``: whether it hangs above the
+    floor.
     """
 
     def __init__(self, parameters: SimulationParameters, radius: float, inertia: float, weight: float) -> None:
@@ -32,10 +33,11 @@ class FloorMoments:
         stiffness = self._torsion * weight / self._twist
         self._damping = 2.0 * _DAMPING * math.sqrt(stiffness * inertia) / self._step
         self._bent = 0.0
+        self.clear = False
 
     def on_ball(self, load: float, vx: float, vy: float, spin: float) -> tuple[float, float, float]:
         """The moment (3 numbers) in this physics step: load, N, velocity of the ball's centre, m/s, its spin, rad/s."""
-        load = max(load, 0.0)
+        load = 0.0 if self.clear else max(load, 0.0)
         share = self._resistance * load / math.sqrt(vx * vx + vy * vy + _CRAWL**2)
         turned = spin * self._step
         before = self._bent

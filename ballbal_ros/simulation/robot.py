@@ -223,6 +223,13 @@ class SimulatedRobot:
             self.data.eq_active[0] = 0
         mujoco.mj_step1(self._model, self.data)
 
+    def hang(self, height: float) -> None:
+        """Hang it up from its stand, the ball ``height`` m clear of the floor and free to turn in its cage."""
+        self._floor.clear = True
+        self.data.qpos[2] += height
+        self.world.hold(self.data)
+        mujoco.mj_step1(self._model, self.data)
+
     @property
     def time(self) -> float:
         """Now, s since the start."""

@@ -42,12 +42,13 @@ def environment_of(domain: int) -> dict[str, str]:
     return {**environment(domain), "PYTHONPATH": os.pathsep.join([str(ROOT), os.environ.get("PYTHONPATH", "")])}
 
 
-def ballbal(*words: str, domain: int) -> subprocess.Popen[str]:
+def ballbal(*words: str, domain: int, stdin: int = subprocess.DEVNULL) -> subprocess.Popen[str]:
     """Start the command line as a process of its own."""
     return subprocess.Popen(
         [sys.executable, "-m", "ballbal_ros.commands.main", *words],
         env=environment_of(domain),
         cwd=ROOT,
+        stdin=stdin,
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
