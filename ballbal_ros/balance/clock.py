@@ -9,6 +9,7 @@ import math
 MOST_MISSED = 0.1
 """Longest step, s, that is taken for missed ticks; a longer one is a clock that jumped."""
 _SOON = 1e-9
+_LOOK_AGAIN = 20_000_000
 _IN_ORDER = 3
 
 
@@ -47,3 +48,12 @@ class LoopClock:
             return 0
         self.now, self._in_order, self.wrong = stamp, 0, "jump"
         return 1
+
+
+def is_looked_at(ns: int, period_ns: int) -> bool:
+    """Whether the tick ``ns`` is one at which ``balance`` says its state while it does not balance yet, and the stand
+    looks at it.
+
+    That is the first tick of each 20 ms.
+    """
+    return ns % _LOOK_AGAIN < period_ns

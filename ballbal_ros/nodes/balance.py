@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from rclpy.lifecycle import LifecycleNode, TransitionCallbackReturn
 
+from ballbal_ros.balance.clock import is_looked_at
 from ballbal_ros.balance.gains import checked_design, least_margins
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.hand_force import PullWatch
@@ -28,7 +29,6 @@ from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import WholeBody
-from ballbal_ros.simulation.timeline import is_looked_at
 
 _STATE_EVERY = BILLION // 5
 _SUCCESS, _FAILURE = TransitionCallbackReturn.SUCCESS, TransitionCallbackReturn.FAILURE

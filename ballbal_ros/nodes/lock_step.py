@@ -7,11 +7,11 @@ from typing import Any
 
 from rclpy.node import Node
 
+from ballbal_ros.balance.clock import is_looked_at
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STANDBY
 from ballbal_ros.nodes.diagnostics import values_of
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.plan_report import EARLIER
-from ballbal_ros.simulation.timeline import is_looked_at
 
 
 def text_nanoseconds(text: str) -> int:

@@ -11,6 +11,7 @@ from collections.abc import Iterable
 import attrs
 import numpy as np
 
+from ballbal_ros.balance.clock import is_looked_at
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
@@ -29,7 +30,7 @@ from ballbal_ros.simulation.outside import true_wrenches
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.run_result import RunResult
-from ballbal_ros.simulation.timeline import Timeline, is_looked_at
+from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import Truth
 from ballbal_ros.weighing.standing import EVERY, StandingWatch
 

@@ -11,7 +11,6 @@ RUN_START = 2.5
 """When the ball's travel begins to count, s: the robot has been let go by its stand and stands still."""
 
 _FINDING_OUT = 2.0
-_LOOK_AGAIN = 20_000_000
 
 
 @attrs.frozen
@@ -43,12 +42,3 @@ class Timeline:
     def lead_in(self) -> float:
         """Time from the start of the lean to the start of the arms, s."""
         return self.arms - self.lean
-
-
-def is_looked_at(ns: int, period_ns: int) -> bool:
-    """Whether the tick ``ns`` is one at which ``balance`` says its state while it does not balance yet, and the stand
-    looks at it.
-
-    That is the first tick of each 20 ms.
-    """
-    return ns % _LOOK_AGAIN < period_ns
