@@ -27,7 +27,8 @@ CLOCKS = ("lock_step", "real_time")
 class NodeStart:
     """One node to start: its executable (and name), its parameter files, parameters beside them, and remapped names.
 
-    ``respawn``: where its process ends, it is started anew; the others go on without it meanwhile.
+    ``respawn``: where its process ends, it is started anew; the others go on without it meanwhile. ``enclave``: where
+    its keys are in an SROS 2 keystore, "" for nowhere.
     """
 
     executable: str
@@ -36,6 +37,12 @@ class NodeStart:
     remappings: tuple[tuple[str, str], ...] = ()
     lifecycle: bool = False
     respawn: bool = False
+    enclave: str = ""
+
+    @property
+    def ros_arguments(self) -> list[str]:
+        """What stands after ``--ros-args`` besides files, parameters and names."""
+        return ["--enclave", self.enclave] if self.enclave else []
 
     def with_parameters(self, **parameters: Any) -> NodeStart:
         """The same node with further parameters; ``__`` in a name stands for a dot."""
@@ -44,7 +51,7 @@ class NodeStart:
 
     def command(self, namespace: str = "") -> list[str]:
         """The command line that starts it with this Python."""
-        words = [sys.executable, "-m", f"{PACKAGE}.nodes.{self.executable}", "--ros-args"]
+        words = [sys.executable, "-m", f"{PACKAGE}.nodes.{self.executable}", "--ros-args", *self.ros_arguments]
         for path in self.files:
             words += ["--params-file", str(path)]
         for name, value in self.parameters.items():
@@ -88,30 +95,48 @@ class RobotFolder:
 
 def checked_namespace(namespace: str) -> str:
     """A namespace with its leading slash, or nothing; raises :class:`BallbalError` for what ROS takes for none."""
-    name = namespace.strip("/")
+    return _checked_path(namespace, "--namespace")
+
+
+def checked_enclave(enclave: str) -> str:
+    """The base of the nodes' enclaves with its leading slash, or nothing; raises :class:`BallbalError` for what is
+    none.
+    """
+    return _checked_path(enclave, "enclave")
+
+
+def _checked_path(text: str, where: str) -> str:
+    name = text.strip("/")
     parts = name.split("/") if name else []
     if any(not part.isidentifier() or not part.isascii() for part in parts):
-        raise BallbalError("--namespace", f"is {namespace!r}", "it takes letters, digits and _, parts divided by /")
+        raise BallbalError(where, f"is {text!r}", "it takes letters, digits and _, parts divided by /")
     return f"/{name}" if name else ""
 
 
 def robot_stack(
-    folder: RobotFolder, namespace: str = "", sim_time: bool = False, watch: bool = False
+    folder: RobotFolder, namespace: str = "", sim_time: bool = False, watch: bool = False, enclave: str = ""
 ) -> list[NodeStart]:
     """The nodes that run on a robot: balance (lifecycle), arm compensation, whole-body kinematics; with ``watch`` also
     config_watch, which brings edited parameter files into them.
+
+    ``enclave``: each node runs in the enclave of its name below it, where security is on (docs/security.md).
     """
     common = {"urdf": str(folder.urdf), "use_sim_time": sim_time}
     # Two robots of one domain have a clock each.
     remap = (("/clock", f"{namespace}/clock"),) if namespace and sim_time else ()
     robot = folder.file("robot.yaml")
     watcher = NodeStart("config_watch", (), {"folder": str(folder.path)})
-    return [
+    nodes = [
         NodeStart("whole_body_kinematics", (robot,), common, remap, respawn=True),
         NodeStart("arm_compensation", (robot, folder.file("compensation.yaml")), common, remap, respawn=True),
         NodeStart("balance", (robot, folder.file("balance.yaml")), common, remap, lifecycle=True),
         *([watcher] if watch else []),
     ]
+    return [_in_enclave(node, enclave) for node in nodes]
+
+
+def _in_enclave(node: NodeStart, base: str) -> NodeStart:
+    return attrs.evolve(node, enclave=f"{base}/{node.executable}") if base else node
 
 
 def headless_stack(
@@ -120,6 +145,7 @@ def headless_stack(
     namespace: str = "",
     simulated: Mapping[str, Any] | None = None,
     watch: bool = False,
+    enclave: str = "",
 ) -> list[NodeStart]:
     """The robot's nodes and the simulated robot, which gets the parameters ``simulated`` besides; see
     :func:`robot_stack`.
@@ -127,7 +153,7 @@ def headless_stack(
     if clock not in CLOCKS:
         raise BallbalError("--clock", f"is {clock!r}", f"it takes one of {', '.join(CLOCKS)}")
     nodes = []
-    for node in robot_stack(folder, namespace, sim_time=True, watch=watch):
+    for node in robot_stack(folder, namespace, sim_time=True, watch=watch, enclave=enclave):
         if node.executable != "config_watch":
             node = node.with_parameters(robot_description_wait=0.0)
         if node.executable == "balance":
@@ -137,4 +163,4 @@ def headless_stack(
     files = (folder.file("robot.yaml"), folder.file("simulation.yaml"))
     # It makes the time that the others use, and so does not listen to it.
     parameters = {"urdf": str(folder.urdf), "use_sim_time": False, "clock": clock, **(simulated or {})}
-    return [*nodes, NodeStart("simulated_robot", files, parameters, remap)]
+    return [*nodes, _in_enclave(NodeStart("simulated_robot", files, parameters, remap), enclave)]

@@ -15,7 +15,7 @@ from launch.actions import DeclareLaunchArgument, OpaqueFunction, Shutdown
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 
-from ballbal_ros.stack import PACKAGE, RobotFolder, checked_namespace, headless_stack
+from ballbal_ros.stack import PACKAGE, RobotFolder, checked_enclave, checked_namespace, headless_stack
 from launch import LaunchDescription
 
 
@@ -28,9 +28,10 @@ def _nodes(context):
     simulated = {"seed": int(given("seed")), "duration": float(given("duration"))}
     # A person may take a while to activate the balance.
     simulated["answer_timeout"] = 3600.0
+    enclave = checked_enclave(given("enclave"))
     watch = given("watch").lower() == "true"
     actions = []
-    for node in headless_stack(folder, given("clock"), namespace, simulated, watch=watch):
+    for node in headless_stack(folder, given("clock"), namespace, simulated, watch=watch, enclave=enclave):
         leaving = {"on_exit": Shutdown()} if node.executable == "simulated_robot" else {}
         actions.append(
             (LifecycleNode if node.lifecycle else Node)(
@@ -43,6 +44,7 @@ def _nodes(context):
                 output="screen",
                 respawn=node.respawn,
                 respawn_delay=0.5,
+                ros_arguments=node.ros_arguments,
                 **leaving,
             )
         )
@@ -55,6 +57,7 @@ def generate_launch_description():
         [
             DeclareLaunchArgument("robot", default_value=robot, description="folder of the robot's parameter files"),
             DeclareLaunchArgument("namespace", default_value="", description="namespace of all nodes"),
+            DeclareLaunchArgument("enclave", default_value="", description="base of the enclaves: docs/security.md"),
             DeclareLaunchArgument("watch", default_value="true", description="take edits of the parameter files in"),
             DeclareLaunchArgument("clock", default_value="lock_step", description="lock_step or real_time"),
             DeclareLaunchArgument("seed", default_value="0", description="seed of the simulated noise"),

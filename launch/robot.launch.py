@@ -14,13 +14,14 @@ from launch.actions import DeclareLaunchArgument, OpaqueFunction
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 
-from ballbal_ros.stack import PACKAGE, RobotFolder, checked_namespace, robot_stack
+from ballbal_ros.stack import PACKAGE, RobotFolder, checked_enclave, checked_namespace, robot_stack
 from launch import LaunchDescription
 
 
 def _nodes(context):
     namespace = checked_namespace(LaunchConfiguration("namespace").perform(context))
     folder = RobotFolder.checked(Path(LaunchConfiguration("robot").perform(context)), simulated=False)
+    enclave = checked_enclave(LaunchConfiguration("enclave").perform(context))
     watch = LaunchConfiguration("watch").perform(context).lower() == "true"
     return [
         (LifecycleNode if node.lifecycle else Node)(
@@ -33,8 +34,9 @@ def _nodes(context):
             output="screen",
             respawn=node.respawn,
             respawn_delay=0.5,
+            ros_arguments=node.ros_arguments,
         )
-        for node in robot_stack(folder, namespace, watch=watch)
+        for node in robot_stack(folder, namespace, watch=watch, enclave=enclave)
     ]
 
 
@@ -44,6 +46,7 @@ def generate_launch_description():
         [
             DeclareLaunchArgument("robot", default_value=robot, description="folder of the robot's parameter files"),
             DeclareLaunchArgument("namespace", default_value="", description="namespace of all nodes"),
+            DeclareLaunchArgument("enclave", default_value="", description="base of the enclaves: docs/security.md"),
             DeclareLaunchArgument("watch", default_value="true", description="take edits of the parameter files in"),
             OpaqueFunction(function=_nodes),
         ]

@@ -94,6 +94,16 @@ def test_headless_launch_adds_the_simulated_robot_whose_end_is_everybodys(launch
         assert nodes[name].keywords["remappings"] == [("/clock", "/b/clock")]
 
 
+@pytest.mark.parametrize("file", ["robot.launch.py", "headless.launch.py"])
+def test_each_node_runs_in_an_enclave_of_its_own(launched: Any, file: str) -> None:
+    """With a base given, every node is started in the enclave of its name below it; without one, in none."""
+    for name, node in launched(file, enclave="shelver/").items():
+        assert node.keywords["ros_arguments"] == ["--enclave", f"/shelver/{name}"]
+    assert all(node.keywords["ros_arguments"] == [] for node in launched(file).values())
+    with pytest.raises(BallbalError, match="enclave"):
+        launched(file, enclave="a b")
+
+
 def test_launch_with_a_wrong_folder_names_it(launched: Any, tmp_path: Path) -> None:
     """A folder without robot.yaml is refused before any node is named."""
     with pytest.raises(BallbalError, match="robot.yaml"):

@@ -44,6 +44,16 @@ def test_command_lines_carry_values_that_ros_reads_back() -> None:
     assert words[-2:] == ["-r", "__ns:=/left"]
 
 
+def test_an_enclave_stands_on_the_command_line() -> None:
+    """Each process is told its own place in the keystore, as ROS takes it; none without a base."""
+    folder = RobotFolder.checked(SHELVER, simulated=True)
+    for node in headless_stack(folder, enclave="/shelver", watch=True):
+        words = node.command()
+        assert words[words.index("--enclave") + 1] == f"/shelver/{node.executable}"
+        assert words.index("--ros-args") < words.index("--enclave")
+    assert not any("--enclave" in node.command() for node in headless_stack(folder))
+
+
 def test_in_a_namespace_all_have_a_clock_of_their_own() -> None:
     """Two simulated robots of one domain must not share /clock."""
     nodes = headless_stack(RobotFolder.checked(SHELVER, simulated=True), namespace="/left")

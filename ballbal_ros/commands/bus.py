@@ -42,6 +42,7 @@ class Bus:
 
     def __init__(self, domain: int, namespace: str, processes: Processes, timeout: float) -> None:
         self._processes, self._timeout = processes, timeout
+        process.stay_on_this_machine()
         self._context = Context()
         rclpy.init(context=self._context, domain_id=domain, signal_handler_options=SignalHandlerOptions.NO)
         self._node = rclpy.create_node("headless_runner", context=self._context, namespace=namespace or None)
