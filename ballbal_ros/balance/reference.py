@@ -105,8 +105,7 @@ class Reference:
         """The reference row of this tick."""
         tables = self._tables
         while len(tables) > 1 and tables[1][0] <= stamp + 1e-9:
-            self._move_station()
-            tables.pop(0)
+            self._give_up(tables[1][0], *tables.pop(0))
         if tables and tables[0][0] <= stamp + 1e-9:
             start, table = tables[0]
             index = int((stamp - start) / self._period + 0.5)
@@ -123,6 +122,13 @@ class Reference:
             self._hold_torque(table[-1])
             tables.pop(0)
         return self._unplanned(arm_position)
+
+    def _give_up(self, time: float, start: float, table: Array) -> None:
+        """A plan is taken over by another at a time, s: the station is where its ball is meant to be just then."""
+        index = int((time - start) / self._period + 0.5)
+        if self.plan_stamp == start:
+            self.row[4:6] = table[min(index, len(table) - 1), 4:6]
+        self._move_station()
 
     def _move_station(self) -> None:
         """Move the station to where a plan's ball is, as what follows counts from there."""

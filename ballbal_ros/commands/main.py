@@ -18,6 +18,7 @@ from ballbal_ros.commands.gains import gains_command
 from ballbal_ros.commands.headless import headless_command
 from ballbal_ros.commands.inspect import inspect_command
 from ballbal_ros.commands.rehearse import rehearse_command
+from ballbal_ros.commands.stream import stream_command
 from ballbal_ros.errors import BallbalError
 
 app = typer.Typer(
@@ -30,6 +31,7 @@ for _name, _command in (
     ("inspect", inspect_command),
     ("gains", gains_command),
     ("rehearse", rehearse_command),
+    ("stream", stream_command),
     ("headless", headless_command),
     ("faults", faults_command),
     ("checkup", checkup_command),

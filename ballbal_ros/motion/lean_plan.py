@@ -72,6 +72,15 @@ class LeanPlan:
                 f"its limit is {worst.limit:.3g} {worst.unit}: a slower or smaller motion, or more lead-in",
             )
 
+    def at(self, time: float) -> tuple[Array, Array, Array, Array]:
+        """Lean, lean rate, ball and ball rate [2] at a time, s, from the plan's start; its end holds."""
+        step, time = float(self.times[1] - self.times[0]), min(max(time, 0.0), self.duration)
+        index = np.array([min(int(time / step + 1e-9), len(self.times) - 2)])
+        s = (np.array([time]) - self.times[index]) / step
+        lean = _quintic(self.lean, self.lean_rate, self.lean_acceleration, index, s, step)
+        ball = _quintic(self.ball, self.ball_rate, self.ball_acceleration, index, s, step)
+        return lean[0][0], lean[1][0], ball[0][0], ball[1][0]
+
     def table(self, period: float, torque_ahead: float = 0.0) -> Array:
         """References [M, 17] at 0, period, 2 period … to the end: quintic between the grid's points, torque linear.
 

@@ -124,14 +124,14 @@ def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationPar
     times: Array = settings.step * np.arange(nodes, dtype=float)
     terms = terms_along(body, request, times, settings.step)
     motion = _ball_motion(request.ball, times)
-    first = _first_ball(request.start, times)
+    first = ball_to_station(request.start, times)
     turn = _turns(motion[0][:, 2] - motion[0][0, 2])
     force, moment = _wrenches(request.wrenches, times)
     given = OutsideMotion(apply(turn, motion[2][:, :2]), motion[1][:, 2], motion[2][:, 2], force, moment)
     radius, apparent_mass = description.parameters.ball.radius, description.ball_apparent_mass
     problem = LeanProblem.of(terms, given, settings.step, radius, apparent_mass).with_ball(turn, *first)
-    solution, ball = _solve(problem, request, first, turn, _relief_limits(description, parameters, terms))
-    return _plan(description, parameters, request, times, solution, ball, motion)
+    solution, ball = _solve(problem, request, first, turn, relief_limits(description, parameters, terms))
+    return made_plan(description, parameters, request.lead_in, times, solution, ball, motion)
 
 
 def _solve(
@@ -164,9 +164,10 @@ def _settled(at_start: Array, at_end: Array) -> bool:
     return bool(np.abs(at_start).max() < _SETTLED_RATE and np.abs(at_end).max() < _SETTLED_RATE)
 
 
-def _relief_limits(
+def relief_limits(
     description: RobotDescription, parameters: CompensationParameters, terms: UpperBodyTerms
 ) -> ReliefLimits:
+    """What a ball motion may ask of drive and floor, less a reserve."""
     use, floor = parameters.acceptance, description.parameters.floor
     ball, drive = description.parameters.ball, description.drive
     weight = (float(terms.mass.min()) + ball.mass) * GRAVITY
@@ -190,14 +191,14 @@ def _ball_motion(ball: BallMotion | None, times: Array) -> list[Array]:
     return [values[0], values[1] * inside, values[2] * inside]
 
 
-def _first_ball(start: StartState | None, times: Array) -> list[Array]:
-    """The ball on its way from the start's place and rate back to the station, as a quintic over 1.2 s; at rest there
+def ball_to_station(start: StartState | None, times: Array, within: float = 1.2) -> list[Array]:
+    """The ball on its way from the start's place and rate back to the station, as a quintic ``within`` s; at rest there
     without one.
     """
     out = [np.zeros((len(times), 2)) for _ in range(3)]
     if start is None or (not np.any(start.ball) and not np.any(start.ball_rate)):
         return out
-    span = min(1.2, float(times[-1]))
+    span = min(within, float(times[-1]))
     s = np.minimum(times / span, 1.0)[:, None]
     p, v = start.ball[None, :], start.ball_rate[None, :] * span
     out[0] = p * (1 - 10 * s**3 + 15 * s**4 - 6 * s**5) + v * (s - 6 * s**3 + 8 * s**4 - 3 * s**5)
@@ -222,15 +223,18 @@ def _wrenches(wrenches: Sequence[HandWrench], times: Array) -> tuple[Array, Arra
     return force, moment
 
 
-def _plan(
+def made_plan(
     description: RobotDescription,
     parameters: CompensationParameters,
-    request: PlanRequest,
+    lead_in: float,
     times: Array,
     solved: tuple[LeanProblem, LeanSolution],
     ball: list[Array],
     motion: list[Array],
 ) -> LeanPlan:
+    """The plan of a solution: ``ball`` [N, 2] added to the given ``motion`` [N, 3], each with rates and
+    accelerations.
+    """
     problem, solution = solved
     rows = solution.rows
     total = [given[:, :2] + added for given, added in zip(motion, ball, strict=True)]
@@ -239,7 +243,7 @@ def _plan(
     prediction = Prediction(torque, rows.force, problem.ball_acceleration, solution.lean, ball[0], total[1])
     return LeanPlan(
         times=times,
-        lead_in=request.lead_in,
+        lead_in=lead_in,
         lean=solution.lean,
         lean_rate=solution.lean_rate,
         lean_acceleration=solution.lean_acceleration,

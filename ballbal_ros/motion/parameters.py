@@ -53,6 +53,42 @@ class PlannerParameters:
 
 
 @attrs.frozen(kw_only=True)
+class StreamParameters:
+    """How arms are compensated that are streamed or moved by hand."""
+
+    delay: float = parameter(
+        "double",
+        0.2,
+        unit="s",
+        low=0.0,
+        high=2.0,
+        meaning="time by which the arms follow arm_stream later: the planner's preview",
+        runtime=True,
+    )
+    interval: float = parameter(
+        "double", 0.04, unit="s", low=0.01, high=0.2, meaning="time from one lean plan to the next", runtime=True
+    )
+    latency: float = parameter(
+        "double",
+        0.04,
+        unit="s",
+        low=0.0,
+        high=0.5,
+        meaning="time from what a lean plan knows to its start, for planning and for the bus",
+        runtime=True,
+    )
+    stop: float = parameter(
+        "double",
+        0.2,
+        unit="s",
+        low=0.02,
+        high=2.0,
+        meaning="time in which the arms come to rest beyond what is known of them",
+        runtime=True,
+    )
+
+
+@attrs.frozen(kw_only=True)
 class AcceptanceParameters:
     """What a plan may use of what there is; beyond it the plan is refused."""
 
@@ -104,4 +140,5 @@ class CompensationParameters:
         runtime=True,
     )
     planner: PlannerParameters = section(PlannerParameters)
+    stream: StreamParameters = section(StreamParameters)
     acceptance: AcceptanceParameters = section(AcceptanceParameters)

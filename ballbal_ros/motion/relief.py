@@ -68,18 +68,28 @@ class BallBasis:
     stride: int
 
     @classmethod
-    def on(cls, step: float, nodes: int, window: float, knot: float, *, at_end: bool = False) -> BallBasis:
+    def on(
+        cls,
+        step: float,
+        nodes: int,
+        window: float,
+        knot: float,
+        *,
+        at_end: bool = False,
+        begins_at_rest: bool = True,
+    ) -> BallBasis:
         """Splines with a knot about every ``knot`` s of a window, s, that begins at the first node or ends at the last.
 
-        They are at rest at both ends of it; ``step`` is that of the grid, s.
+        They are at rest at both ends of it; unless ``begins_at_rest``, the first may begin with an acceleration.
+        ``step`` is that of the grid, s.
         """
-        stride = max(4, min(round(knot / step), (nodes - 1) // 6))
+        stride = max(4 if begins_at_rest else 2, min(round(knot / step), (nodes - 1) // 6))
         pieces = max(6, min(round(window / (stride * step)), (nodes - 1) // stride))
         # In grid steps from the window's first node.
         inner = stride * np.arange(pieces + 1, dtype=float)
         knots = np.concatenate((inner[[0] * _DEGREE], inner, inner[[-1] * _DEGREE]))
         # Without the first and last three there is no position, rate or acceleration at the ends.
-        used = np.eye(pieces + _DEGREE)[:, 3:-3]
+        used = np.eye(pieces + _DEGREE)[:, 3 if begins_at_rest else 2 : -3]
         spline = BSpline(knots, used, _DEGREE)
         first = nodes - 1 - stride * pieces if at_end else 0
         values = np.zeros((3, nodes, used.shape[1]))
@@ -109,7 +119,7 @@ class BallRelief:
 
 
 @attrs.frozen(eq=False)
-class _Response:
+class BallResponse:
     """What a basis' motions along both axes do: lean and lean rate [N, 2, 2m]."""
 
     basis: BallBasis
@@ -117,7 +127,7 @@ class _Response:
     rate: Array
 
     @classmethod
-    def of(cls, basis: BallBasis, problem: LeanProblem, solution: LeanSolution, turn: Array) -> _Response:
+    def of(cls, basis: BallBasis, problem: LeanProblem, solution: LeanSolution, turn: Array) -> BallResponse:
         """Response about the present solution; ``turn`` [N, 2, 2] from plan axes into ``base_footprint`` axes."""
         differences, rows = problem.differences, solution.rows
         seen = rows.by_ball_acceleration @ _along_both_axes(turn, differences.acceleration(basis.position))
@@ -179,8 +189,8 @@ def ball_relief(
     """
     step, nodes = problem.differences.step, len(problem.terms)
 
-    def response(window: float, knot: float, at_end: bool) -> _Response:
-        return _Response.of(BallBasis.on(step, nodes, window, knot, at_end=at_end), problem, solution, turn)
+    def response(window: float, knot: float, at_end: bool) -> BallResponse:
+        return BallResponse.of(BallBasis.on(step, nodes, window, knot, at_end=at_end), problem, solution, turn)
 
     first = response(start_window, start_window / _FEW_PIECES, at_end=False)
     weights = first.least_squares(-mismatch_start, slice(0, 2))
@@ -201,7 +211,7 @@ def _along_both_axes(turn: Array, motion: Array) -> Array:
 
 
 def _least_travel(
-    response: _Response, present: Array, wanted: Array, torque: tuple[Array, Array], demands: Array
+    response: BallResponse, present: Array, wanted: Array, torque: tuple[Array, Array], demands: Array
 ) -> Array:
     """The weights [2m] of least largest travel with these lean rates [2] at the start, by linear programming.
 
@@ -226,7 +236,7 @@ def _least_travel(
 
 
 def _least_travel_within(
-    response: _Response, present: Array, wanted: Array, shares: list[tuple[Array, Array, Array]]
+    response: BallResponse, present: Array, wanted: Array, shares: list[tuple[Array, Array, Array]]
 ) -> Array:
     """The weights [2m] of least largest travel with |taken + share @ weights| ≤ allowed for each of ``shares``.
 
