@@ -24,6 +24,7 @@ DRIVE, ENCODER, ACTUATOR = "drive_states", "one encoder", "one actuator"
 SENSES = "imu and drive_states"
 ARMS, CLOCK, LEAN, SUPPLY = "joint_states", "clock", "lean and ball", "supply"
 PLAN, LOAD, VELOCITY, GOAL = "lean_plan", "hand_load", "cmd_vel", "goal_pose"
+ARM_PLAN, BALL_PLAN, WRENCH_PLAN, STATE = "arm_plan", "ball_plan", "hand_wrench_plan", "balance_state"
 EMERGENCY, SUPPORT, PARAMETERS, COMMAND = "emergency_stop", "support", "parameters", "drive_command"
 
 
@@ -72,7 +73,7 @@ _BALL_UNSEEN = _steps((0.0, COAST), (0.1, STOP), (2.0, TRIP))
 _ARMS_UNSEEN = _steps((0.0, HOLD))
 _ONE_LEFT_OUT = _steps((0.0, HOLD), (0.1, STOP))
 _REFUSED = _steps((0.0, REFUSE))
-_LOOP, _NODE, _PLANS = "BalanceLoop", "balance node", "check_plan"
+_LOOP, _NODE, _PLANS, _ARMS_NODE = "BalanceLoop", "balance node", "check_plan", "arm_compensation"
 
 _ROWS = (
     Answer(IMU, "silent", "no sample with a newer stamp", _BLIND, _LOOP),
@@ -210,6 +211,41 @@ _ROWS = (
         _PLANS,
     ),
     Answer(PLAN, "elsewhere", "begins further than limits.engage_lean from where the lean will be", _REFUSED, _PLANS),
+    Answer(
+        ARM_PLAN,
+        "malformed",
+        "an unknown joint, lengths or times that don't fit, numbers not finite, beyond a joint's limits",
+        _REFUSED,
+        _ARMS_NODE,
+    ),
+    Answer(ARM_PLAN, "not balancing", "came while the state is not engaging or balancing", _REFUSED, _ARMS_NODE),
+    Answer(
+        ARM_PLAN,
+        "jump",
+        "begins elsewhere than the arms will be, or leaves out a joint that moves",
+        _REFUSED,
+        _ARMS_NODE,
+    ),
+    Answer(
+        ARM_PLAN,
+        "beyond limits",
+        "the lean or torque that it needs is beyond acceptance.* of compensation.yaml",
+        _REFUSED,
+        _ARMS_NODE,
+    ),
+    Answer(
+        BALL_PLAN,
+        "malformed",
+        "found when the arm_plan comes that it goes with: both are refused",
+        _REFUSED,
+        _ARMS_NODE,
+    ),
+    Answer(
+        WRENCH_PLAN, "malformed", "an unknown hand or part, times that don't increase, not finite", _REFUSED, _ARMS_NODE
+    ),
+    Answer(
+        STATE, "silent", "no acknowledgement of a plan within answer_timeout: the arms don't move", _REFUSED, _ARMS_NODE
+    ),
     Answer(LOAD, "unknown hand", "frame_id is no hand of robot.yaml", _REFUSED, _NODE),
     Answer(
         LOAD,
@@ -227,6 +263,14 @@ _ROWS = (
     Answer(GOAL, "absurd", "wrong frame, not finite, or no unit quaternion", _REFUSED, _NODE),
     Answer(
         EMERGENCY, "true", "somebody wants it to stop; latched, false alone does not end it", _steps((0.0, STOP)), _NODE
+    ),
+    Answer(
+        EMERGENCY,
+        "true, arms moving",
+        "arms come to rest by a plan within planner.stop_time, or up to three times that where limits need it; where no such "
+        "plan can be, the one in force ends as planned",
+        _steps((0.0, STOP)),
+        _ARMS_NODE,
     ),
     Answer(
         SUPPORT, "true while stopping", "a stand or gantry holds it: torque goes away", _steps((0.0, GO_ON)), "Guard"

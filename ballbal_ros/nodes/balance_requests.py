@@ -180,7 +180,8 @@ class BalanceRequests:
             response.success = False
             response.message = "emergency_stop is still true: release it first" if self._emergency else "not configured"
             return response
-        loop.guard.reset()
+        there = loop.reset()
         self._node.say_state()
-        response.success, response.message = True, "it engages once it is upright and still"
+        told = "it engages by itself once it is upright and still" if there else f"nothing to reset: {loop.guard.state}"
+        response.success, response.message = True, told
         return response

@@ -2,10 +2,15 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 from ballbal_ros.balance.answers import ANSWERS, DEEDS, Answer
 from ballbal_ros.balance.guard import EVENTS, STATES, TRANSITIONS, State
+from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.declaration import Declaration, declarations
+from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.simulation.fault_kinds import KINDS
 
 _ABOUT = """\
@@ -16,6 +21,22 @@ Written by `python -m ballbal_ros.report.safety_page` from the tables that the l
 The balance node moves a heavy machine beside people. This page says when it sends torque, and what it does about
 everything that may be wrong with what it is told. It is no certificate: the machine's own protective stop, stand or
 gantry, and the watchdog in the drive are not replaced by it.
+"""
+_PEOPLE = """\
+## What a person has to know
+
+- **Without torque it falls.** Cutting the drive's power, ending the `balance` process, deactivating or cleaning it up
+  takes the torque away at once, whatever the state. Do that only while a stand or gantry holds it, or to save a life.
+- **To stop it**, publish `emergency_stop` true: arms and ball come to rest and it *stays balanced*, state `stopping`.
+  Bring the stand; when `support` says true, torque goes away: `released`. Without a `support` it stays balanced until
+  the battery ends: have something that senses the stand publish it.
+- **To go on**, release the emergency stop (`emergency_stop` false), see to what `reason` in `balance_state` says, then
+  `ros2 service call /balance/reset std_srvs/srv/Trigger`. From `released` and `tripped` **it then engages by itself**
+  as soon as it is upright, still and hears its senses: be clear of it before you reset it. From `stopping` it goes on
+  balancing.
+- **Tripped means that it falls**, or hangs in its gantry. Nobody belongs within its fall while it balances.
+- Where to look: `balance_state` (state and reason; `inactive` is what it says while `unconfigured`), `/diagnostics`,
+  and `ballbal checkup`, which reads them and says what to do.
 """
 _GUARD = """\
 ## The guard
@@ -54,11 +75,11 @@ _NOT_SEEN = """\
 
 def page() -> str:
     """The whole page as text."""
-    return "\n".join((_ABOUT, _GUARD, _states(), _transitions(), _LIMITS, _answers(), _NOT_SEEN))
+    return "\n".join((_ABOUT, _PEOPLE, _GUARD, _states(), _transitions(), _LIMITS, _answers(), _NOT_SEEN))
 
 
 def _states() -> str:
-    rows = [f"| `{state.name}` | {_share(state)} | {state.meaning} |" for state in STATES.values()]
+    rows = [f"| `{state.name}` | {_share(state)} | {_with_defaults(state.meaning)} |" for state in STATES.values()]
     return "\n".join(("| state | share of the torque | meaning |", "|---|---|---|", *rows, ""))
 
 
@@ -71,12 +92,15 @@ def _transitions() -> str:
     events = list(EVENTS)
     head = f"| from | {' | '.join(events)} |"
     rows = [f"| `{name}` | {' | '.join(TRANSITIONS.get((name, event), '') for event in events)} |" for name in STATES]
-    meanings = [f"- *{event}*: {meaning}." for event, meaning in EVENTS.items()]
+    meanings = [f"- *{event}*: {_with_defaults(meaning)}." for event, meaning in EVENTS.items()]
     return "\n".join((head, "|---" * (len(events) + 1) + "|", *rows, "", *meanings, ""))
 
 
 def _answers() -> str:
-    times = "Times are of the condition lasting. Where a fault is named, `ballbal faults` tries it."
+    times = (
+        "Times are of the condition lasting. Parameters stand with their default; a robot's files may say otherwise. "
+        "Where a\nfault is named, `ballbal faults` tries it."
+    )
     about = f"## Every input's answer\n\n{times}\n"
     deeds = [f"- **{deed}**: {meaning}." for deed, meaning in DEEDS.items()]
     head = "| input | what is wrong | how it is known | answer | by | fault |"
@@ -87,7 +111,28 @@ def _answers() -> str:
 def _row(answer: Answer) -> str:
     steps = ", ".join(step.deed if step.after == 0.0 else f"{step.deed} from {step.after:g} s" for step in answer.steps)
     broken = ", ".join(name for name, kind in KINDS.items() if kind.row == (answer.input, answer.wrong))
-    return f"| {answer.input} | {answer.wrong} | {answer.known} | {steps} | {answer.by} | {broken} |"
+    return f"| {answer.input} | {answer.wrong} | {_with_defaults(answer.known)} | {steps} | {answer.by} | {broken} |"
+
+
+def _declared() -> dict[str, Declaration]:
+    """Parameters that the tables name, by their dotted name."""
+    classes = (RobotParameters, BalanceParameters, CompensationParameters)
+    return {d.name: d for cls in classes for d in declarations(cls) if "." in d.name or "_" in d.name}
+
+
+def _with_defaults(text: str) -> str:
+    """A text with each parameter's name set apart, and its default beside it where it has one."""
+    known = _declared()
+    names = "|".join(re.escape(name) for name in sorted(known, key=len, reverse=True))
+
+    def told(match: re.Match[str]) -> str:
+        declared = known[match.group()]
+        if not isinstance(declared.default, (int, float)) or isinstance(declared.default, bool):
+            return f"`{declared.name}`"
+        unit = "" if declared.unit == "-" else f" {declared.unit}"
+        return f"`{declared.name}` ({declared.default:g}{unit})"
+
+    return re.sub(rf"(?<![\w.])(?:{names})(?!\w|\.\w)", told, text)
 
 
 def main() -> None:
