@@ -267,8 +267,8 @@ _ROWS = (
     Answer(
         EMERGENCY,
         "true, arms moving",
-        "arms come to rest by a plan within planner.stop_time, or up to three times that where limits need it; where no such "
-        "plan can be, the one in force ends as planned",
+        "arms come to rest by a plan within planner.stop_time, up to three times that where limits need it; where no "
+        "such plan can be, the one in force ends as planned",
         _steps((0.0, STOP)),
         _ARMS_NODE,
     ),

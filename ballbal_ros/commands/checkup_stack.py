@@ -20,7 +20,7 @@ _PURPOSE = {
 }
 _SENSORS = ("imu/data", "imu/data_raw", "drive_states", "joint_states")
 _OF_BALANCE = ("odom", "balance_state")
-_SLOW = 0.5
+_SLOW, _SLOW_IN_LOCK_STEP = 0.5, 5.0
 _LATE_SHARE = (0.25, 0.75)
 _TRIM_SHARE = (0.5, 0.9)
 _TRIM_GROWS = 0.03
@@ -68,8 +68,10 @@ def check_stack(heard: Heard, balance: BalanceParameters | None = None) -> list[
     newest = {name: told[-1] for name, told in heard.nodes.items() if told}
     found, loop = _presence(heard, newest), newest.get("balance")
     balances = loop is not None and loop.message != "inactive"
+    waits = loop is not None and loop.values.get("clock") == "lock_step"
     for name, told in newest.items():
-        found += _of_node(name, told, (*_SENSORS, *(_OF_BALANCE if balances else ())))
+        topics = (*_SENSORS, *(_OF_BALANCE if balances else ()))
+        found += _of_node(name, told, topics, _SLOW_IN_LOCK_STEP if waits else _SLOW)
     if loop is not None:
         found += _loop(loop, heard.nodes["balance"], balance, "simulated_robot" in newest)
     found += [
@@ -98,8 +100,10 @@ def _presence(heard: Heard, newest: Mapping[str, Told]) -> list[Finding]:
     return found
 
 
-def _of_node(name: str, told: Told, topics: Sequence[str]) -> list[Finding]:
-    """What one node says of itself: its state, what it refuses, which of the ``topics`` it does not hear."""
+def _of_node(name: str, told: Told, topics: Sequence[str], slow: float) -> list[Finding]:
+    """What one node says of itself: its state, what it refuses, which of the ``topics`` it has not heard for ``slow``
+    s.
+    """
     verdict = _LEVELS[min(max(told.level, 0), 3)]
     reason = told.values.get("reason", "")
     state = f"{told.message}: {reason}" if reason else told.message or "says nothing of its state"
@@ -116,7 +120,7 @@ def _of_node(name: str, told: Told, topics: Sequence[str]) -> list[Finding]:
         if age == "never":
             do = "is its publisher up, in this domain and namespace? ros2 topic info -v"
             found.append(Finding(_INPUT, f"{name}: {topic}", WRONG if running else LOOK, "never heard", do))
-        elif not told.number(f"age {topic} s") < _SLOW:
+        elif not told.number(f"age {topic} s") < slow:
             what = f"silent for {told.number(f'age {topic} s'):.1f} s"
             found.append(Finding(_INPUT, f"{name}: {topic}", WRONG if running else LOOK, what, "see to its publisher"))
     return found

@@ -332,7 +332,8 @@ def test_a_checkup_hears_the_stack_and_sends_nothing(robot: Robot, tmp_path: Pat
     found = json.loads(file.read_text())
     assert found["stack"] and "The stack is up" in printed
     verdicts = {check["what"]: check["verdict"] for check in found["checks"]}
-    assert all(verdicts[name] == "ok" for name in PUBLISHED), printed
+    # What other tests had refused is still told, and to be looked at.
+    assert all(verdicts[name] in ("ok", "look") for name in PUBLISHED), printed
     assert {"margins in force", "trim", "torque reserve"} <= set(verdicts)
     assert "wrong" not in verdicts.values(), printed
     assert robot.state == "balancing"
