@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Annotated, Any
+from typing import Annotated, Any, Optional
 
 import attrs
 import typer
@@ -114,13 +114,13 @@ def faults_command(
     trials: Annotated[int, typer.Option("--trials", min=1, help="How many trials.")] = 100,
     seed: Annotated[int, typer.Option("--seed", min=0, help="Seed of the campaign.")] = 0,
     kinds: Annotated[
-        list[str] | None,
+        Optional[list[str]],
         typer.Option("--kinds", help="A kind of fault, such as 'imu silent'; repeatable. All without it."),
     ] = None,
     wheels: Annotated[
-        list[int] | None, typer.Option("--wheels", help="How many wheels the drive has; repeatable. 3 without it.")
+        Optional[list[int]], typer.Option("--wheels", help="How many wheels the drive has; repeatable. 3 without it.")
     ] = None,
-    json_file: Annotated[Path | None, typer.Option("--json", help="File for what was found.")] = None,
+    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
     """What comes of faults on purpose, each held against what docs/safety.md says of it."""
     console = Console()

@@ -23,7 +23,8 @@ class Pace:
 
     def __init__(self) -> None:
         self.count = 0
-        self._told: dict[str, float] = {"loop rate Hz": 0.0, "late mean ms": 0.0, "late worst ms": 0.0}
+        self._told: dict[str, float] = {}
+        self._ever = False
         self._runs, self._since = 0, time.monotonic()
         self._late = self._worst = 0.0
         self._before: float | None = None
@@ -51,6 +52,10 @@ class Pace:
         """A second is over: what was counted in it is what is told, and counting begins anew."""
         now = time.monotonic()
         passed, runs = max(now - self._since, 1e-9), self._runs
+        self._ever = self._ever or runs > 0
+        if not self._ever:
+            self._since = now
+            return
         self._told = {
             "loop rate Hz": runs / passed,
             "late mean ms": 1e3 * self._late / max(runs, 1),
@@ -60,7 +65,7 @@ class Pace:
         self._late = self._worst = 0.0
 
     def values(self) -> Mapping[str, float]:
-        """Rate, mean and worst lateness of the last whole second."""
+        """Rate, mean and worst lateness of the last whole second; nothing before it first ran."""
         return self._told
 
 

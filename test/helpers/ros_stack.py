@@ -93,7 +93,7 @@ class Listener:
     """
 
     def __init__(self, domain: int, namespace: str = "") -> None:
-        self._context = Context()
+        self.context = self._context = Context()
         rclpy.init(context=self._context, domain_id=domain, signal_handler_options=SignalHandlerOptions.NO)
         self.node = rclpy.create_node("test_listener", context=self._context, namespace=namespace or None)
         self._executor = executor(self._context)

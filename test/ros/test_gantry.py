@@ -6,6 +6,7 @@ import json
 import os
 import signal
 import subprocess
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -13,7 +14,14 @@ import pytest
 
 pytest.importorskip("rclpy")
 
+import numpy as np
+import rclpy
+from sensor_msgs.msg import JointState
+
+from ballbal_ros.commands.gantry_bus import DriveLine
 from ballbal_ros.commands.processes import Processes
+from ballbal_ros.errors import BallbalError
+from ballbal_ros.nodes.messages import to_time
 from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.stack import RobotFolder, headless_stack
 from helpers.ros_stack import SHELVER, Listener, ballbal, environment_of, listening
@@ -104,3 +112,40 @@ def test_beside_another_commander_or_unconfirmed_nothing_is_sent(hung: Listener)
     assert process.returncode == 2 and "drive_command: comes from" in err, err
     assert not commands
     hung.node.destroy_publisher(other)
+
+
+@pytest.mark.parametrize("what", ["silent drive", "balance comes up"])
+def test_what_comes_between_ends_it_with_zero(what: str, ros_domain_id: int) -> None:
+    """The drive falls silent in a push, or a balance node appears: one line, and the last command is 0."""
+    with listening(ros_domain_id) as drive, DriveLine(ros_domain_id, "", ("a", "b")) as line:
+        commands, sender = drive.record("drive_command"), drive.sender("drive_states")
+        began, other = time.monotonic(), None
+
+        def done() -> bool:
+            nonlocal other
+            lasted = time.monotonic() - began
+            if what == "silent drive" and lasted > 1.5:
+                return False
+            if lasted > 1.5 and other is None:
+                other = rclpy.create_node("balance", context=drive.context)
+            message = JointState(name=["b", "a"], position=[1.0, 2.0])
+            message.header.stamp = to_time(1.0 + lasted)
+            sender.publish(message)
+            drive.turn(0.005)
+            return lasted > 15.0
+
+        seen: list[float] = []
+
+        def tick(now: float, angle: np.ndarray) -> np.ndarray:
+            seen.extend(angle.tolist())
+            return np.array([0.1, 0.0])
+
+        says = "silent for 0.2 s" if what == "silent drive" else "balance: is up"
+        with pytest.raises(BallbalError, match=says):
+            line.run(tick, done)
+        drive.turn(0.3)
+        assert seen[:2] == [2.0, 1.0]
+        assert any(command.effort[0] == 0.1 for command in commands)
+        assert list(commands[-1].effort) == [0.0, 0.0]
+        if other is not None:
+            other.destroy_node()
