@@ -131,7 +131,7 @@ def _gantry(robot: Path, domain: int, namespace: str, share: float, json_file: P
     console = Console()
     done = gantry(robot, domain, namespace, share, console)
     amiss = sum(finding.verdict != OK for finding in done.findings)
-    well = "[green]all in order[/green]" if done.ok else f"[bold red]{amiss} to be mended, then do it again[/bold red]"
+    well = "[green]all in order[/green]" if done.ok else f"[bold red]{amiss} to see to, then do it again[/bold red]"
     console.print(f"{len(done.findings)} checks: {well}", highlight=False)
     if json_file is not None:
         checks = [attrs.asdict(finding) for finding in done.findings]

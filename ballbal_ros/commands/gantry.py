@@ -78,6 +78,9 @@ def gantry(robot: Path, domain: int, namespace: str, share: float, console: Cons
             raise BallbalError("--gantry", "was not confirmed, and has sent nothing")
         encoders, said, by_hand = _turn_by_hand(line, description, console)
         console.print(finding_table(said, heading=False), highlight=False)
+        if not any(encoders.scale):
+            console.print("No encoder counts: nothing is pushed, and nothing was sent.", highlight=False)
+            return BringUp(description.name, said)
         moves = SmallMoves(description.drive, description.parameters.ball.inertia, encoders, share)
         _push(line, moves, share, description, console)
     verdict = judge_moves(encoders, moves, by_hand)
