@@ -24,7 +24,7 @@ DRIVE, ENCODER, ACTUATOR = "drive_states", "one encoder", "one actuator"
 SENSES = "imu and drive_states"
 ARMS, CLOCK, LEAN, SUPPLY = "joint_states", "clock", "lean and ball", "supply"
 PLAN, LOAD, VELOCITY, GOAL = "lean_plan", "hand_load", "cmd_vel", "goal_pose"
-ARM_PLAN, BALL_PLAN, WRENCH_PLAN, STATE = "arm_plan", "ball_plan", "hand_wrench_plan", "balance_state"
+ARM_PLAN, BALL_PLAN, WRENCH_PLAN, STATE, ODOM = "arm_plan", "ball_plan", "hand_wrench_plan", "balance_state", "odom"
 EMERGENCY, SUPPORT, PARAMETERS, COMMAND = "emergency_stop", "support", "parameters", "drive_command"
 
 
@@ -245,6 +245,9 @@ _ROWS = (
     ),
     Answer(
         STATE, "silent", "no acknowledgement of a plan within answer_timeout: the arms don't move", _REFUSED, _ARMS_NODE
+    ),
+    Answer(
+        ODOM, "absurd", "not finite, or no unit quaternion: ball plans begin where it was last", _REFUSED, _ARMS_NODE
     ),
     Answer(LOAD, "unknown hand", "frame_id is no hand of robot.yaml", _REFUSED, _NODE),
     Answer(

@@ -4,6 +4,7 @@ command.
 
 from __future__ import annotations
 
+import math
 import time
 from collections import deque
 from collections.abc import Mapping
@@ -144,6 +145,10 @@ class ArmCompensationNode(Node):
 
     def _on_odom(self, message: Any) -> None:
         place, turn = message.pose.pose.position, message.pose.pose.orientation
+        if not (math.isfinite(place.x + place.y) and abs(turn.x**2 + turn.y**2 + turn.z**2 + turn.w**2 - 1.0) < 1e-2):
+            self._diagnostics.refuse("odom", "odom: a place that is not finite, or no unit quaternion: passed over")
+            return
+        self._diagnostics.accept("odom")
         self._place = (place.x, place.y, lean_and_heading_from_quat_xyzw(turn.x, turn.y, turn.z, turn.w)[2])
 
     def _on_ball_plan(self, message: Any) -> None:

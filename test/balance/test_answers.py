@@ -40,6 +40,18 @@ def test_whatever_the_loop_calls_wrong_has_a_row():
     assert by_loop <= said | {"orientation"}
 
 
+def test_every_input_of_the_robots_nodes_has_an_answer():
+    """Whatever topic a node of the robot subscribes to stands in the table; the IMU's is named by a parameter."""
+    nodes = Path(answers.__file__).parents[1] / "nodes"
+    heard = set()
+    for path in [*nodes.glob("balance*.py"), *nodes.glob("arm_*.py"), nodes / "whole_body_kinematics.py"]:
+        for call in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+            if isinstance(call, ast.Call) and ast.unparse(call.func).endswith("subscribe"):
+                heard |= {word.value for word in call.args if isinstance(word, ast.Constant)}
+    assert {"joint_states", "lean_plan", "arm_plan", "odom"} <= heard
+    assert heard <= {row.input for row in ANSWERS.values()}
+
+
 def test_every_fault_can_be_made_and_has_a_row():
     """The campaign's kinds are those that the simulated robot can have, and each is answered by a row of the table."""
     assert {*KINDS} == {*CHANGES, *ON_DRIVE}
