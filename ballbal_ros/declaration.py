@@ -188,7 +188,8 @@ def _build(cls: type, flat: Mapping[str, Any], source: str, prefix: str) -> Any:
         if "section" in field.metadata:
             values[field.name] = _build(field.metadata["section"], flat, source, f"{prefix}{field.name}.")
         elif "sections" in field.metadata:
-            names = values[field.metadata["named_by"]]
+            # Without names given and none by default, there are no groups.
+            names = values.get(field.metadata["named_by"], ())
             member = field.metadata["sections"]
             values[field.name] = {n: _build(member, flat, source, f"{prefix}{n}.") for n in names}
         else:

@@ -19,6 +19,7 @@ from ballbal_ros.commands.headless import headless_command
 from ballbal_ros.commands.inspect import inspect_command
 from ballbal_ros.commands.rehearse import rehearse_command
 from ballbal_ros.commands.stream import stream_command
+from ballbal_ros.commands.weigh_in import weigh_in_command
 from ballbal_ros.errors import BallbalError
 
 app = typer.Typer(
@@ -35,6 +36,7 @@ for _name, _command in (
     ("headless", headless_command),
     ("faults", faults_command),
     ("checkup", checkup_command),
+    ("weigh-in", weigh_in_command),
 ):
     # typer 0.9, Ubuntu 24.04's, does not look behind annotations that are text.
     _command.__annotations__ = get_type_hints(_command, include_extras=True)

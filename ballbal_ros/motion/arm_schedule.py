@@ -192,7 +192,7 @@ class ArmSchedule:
     ) -> LeanPlan:
         command, command_start = commanded
         arm = self.description.parameters.arm
-        arms = FollowedPath.of(command, arm.servo, arm.servo_bandwidth)
+        arms = FollowedPath.of(command, arm.servo, self.description.servo_bandwidth)
         lead_in = command_start - lean_start
         if lead_in < 0.0:
             arms, lead_in = Later(arms, -lead_in), 0.0

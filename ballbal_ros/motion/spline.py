@@ -181,19 +181,22 @@ class FollowedPath:
     _values: tuple[Array, Array, Array]
 
     @classmethod
-    def of(cls, path: JointPath, servo: str, bandwidth: float) -> JointPath:
-        """What a servo of this kind and bandwidth (rad/s) makes of a path."""
+    def of(cls, path: JointPath, servo: str, bandwidth: float | Array) -> JointPath:
+        """What a servo of this kind and bandwidth (rad/s; one for all joints or one each [n]) makes of a path."""
         if servo == "ideal":
             return path
-        duration = path.duration + 12.0 / bandwidth
+        duration = path.duration + 12.0 / float(np.min(bandwidth))
         times: Array = _FINE * np.arange(int(np.ceil(duration / _FINE)) + 1, dtype=float)
         position, rate, _ = path.sample(times)
+        w = np.broadcast_to(np.asarray(bandwidth, float), position.shape[1:])
         offset = position[0]
-        pulled = bandwidth**2 * (position - offset)
+        pulled = w**2 * (position - offset)
         if servo == "position_velocity":
-            pulled += 2.0 * bandwidth * rate
-        state = _critically_damped(pulled, bandwidth)
-        acceleration = pulled - bandwidth**2 * state[:, 0] - 2.0 * bandwidth * state[:, 1]
+            pulled += 2.0 * w * rate
+        state = np.empty((len(times), 2, len(w)))
+        for each in np.unique(w):
+            state[:, :, w == each] = _critically_damped(pulled[:, w == each], float(each))
+        acceleration = pulled - w**2 * state[:, 0] - 2.0 * w * state[:, 1]
         return cls(duration, times, (state[:, 0] + offset, state[:, 1], acceleration))
 
     def sample(self, times: Array) -> tuple[Array, Array, Array]:

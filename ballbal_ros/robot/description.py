@@ -12,11 +12,12 @@ import pinocchio as pin
 from ballbal_ros.declaration import load
 from ballbal_ros.errors import ModelError, nearest
 from ballbal_ros.robot.arrays import Array, read_only
-from ballbal_ros.robot.attitude import rotation_rpy
+from ballbal_ros.robot.attitude import rotation_lean, rotation_rpy
 from ballbal_ros.robot.balance_rows import GRAVITY
 from ballbal_ros.robot.drive import Drive
 from ballbal_ros.robot.loads import check_inertia
-from ballbal_ros.robot.parameters import RobotParameters
+from ballbal_ros.robot.mass_model import weighed_urdf
+from ballbal_ros.robot.parameters import ArmParameters, MassModelParameters, RobotParameters
 
 MOVING = ("revolute", "prismatic", "continuous")
 
@@ -25,12 +26,14 @@ MOVING = ("revolute", "prismatic", "continuous")
 class RobotDescription:
     """What the robot is; everything in it has been checked.
 
-    Joint arrays are in ``joint_names``' order (the model's, depth first).
+    Joint arrays are in ``joint_names``' order (the model's, depth first). ``urdf_text`` has the masses of
+    ``mass_model`` in it, ``drawn_urdf_text`` those of the file. ``servo_bandwidth`` [n] in rad/s.
     """
 
     parameters: RobotParameters
     urdf_path: str
     urdf_text: str
+    drawn_urdf_text: str
     model: pin.Model
     drive: Drive
     joint_names: tuple[str, ...]
@@ -39,6 +42,7 @@ class RobotDescription:
     velocity_limit: Array
     effort_limit: Array
     rotation_imu_in_base: Array
+    servo_bandwidth: Array
 
     @property
     def name(self) -> str:
@@ -79,7 +83,8 @@ class RobotDescription:
     @classmethod
     def from_urdf(cls, parameters: RobotParameters, urdf_text: str, urdf: str, file: str) -> RobotDescription:
         """Make the description from checked parameters and a URDF's text; ``urdf`` and ``file`` name them in errors."""
-        text = checked_urdf(urdf_text, urdf)
+        drawn = checked_urdf(urdf_text, urdf)
+        text = weighed_urdf(drawn, parameters.mass_model, file)
         try:
             model = pin.buildModelFromXML(text, pin.JointModelFreeFlyer())
         except Exception as error:
@@ -98,6 +103,7 @@ class RobotDescription:
             parameters=parameters,
             urdf_path=urdf,
             urdf_text=text,
+            drawn_urdf_text=drawn,
             model=model,
             drive=Drive.from_parameters(parameters.drive, parameters.ball.radius, file),
             joint_names=tuple(model.names)[2:],
@@ -105,8 +111,20 @@ class RobotDescription:
             position_high=read_only(np.array(model.upperPositionLimit[7:], float)),
             velocity_limit=read_only(np.array(model.velocityLimit[6:], float)),
             effort_limit=read_only(np.array(model.effortLimit[6:], float)),
-            rotation_imu_in_base=read_only(rotation_rpy(np.array(parameters.imu.rpy))),
+            rotation_imu_in_base=read_only(
+                rotation_lean(np.array(parameters.mass_model.imu_tilt)) @ rotation_rpy(np.array(parameters.imu.rpy))
+            ),
+            servo_bandwidth=read_only(_servo_bandwidth(parameters.arm, tuple(model.names)[2:], file)),
         )
+
+    def with_mass_model(self, mass_model: MassModelParameters, file: str = "robot.yaml") -> RobotDescription:
+        """The same robot with other findings of weighing laid over its URDF; raises :class:`ModelError`."""
+        parameters = attrs.evolve(self.parameters, mass_model=mass_model)
+        return self.from_urdf(parameters, self.drawn_urdf_text, self.urdf_path, file)
+
+    def as_drawn(self) -> RobotDescription:
+        """The same robot as its URDF and imu.rpy say, without what weighing has found."""
+        return self.with_mass_model(MassModelParameters(link={}, spread=self.parameters.mass_model.spread))
 
     def joint_index(self, name: str, where: str) -> int:
         """The index of an arm joint; raises :class:`ModelError` with the known names for one that is not there."""
@@ -114,6 +132,14 @@ class RobotDescription:
             return self.joint_names.index(name)
         except ValueError as error:
             raise ModelError(where, f"unknown joint {name}", nearest(name, self.joint_names)) from error
+
+
+def _servo_bandwidth(arm: ArmParameters, joints: tuple[str, ...], file: str) -> Array:
+    for name in arm.joints:
+        if name not in joints:
+            raise ModelError(file, f"arm.joints names {name}, which is no joint of the URDF", nearest(name, joints))
+    own = arm.joint
+    return np.array([own[name].bandwidth if name in own else arm.servo_bandwidth for name in joints], float)
 
 
 def checked_urdf(text: str, urdf: str) -> str:

@@ -102,6 +102,15 @@ class HandsParameters:
 
 
 @attrs.frozen(kw_only=True)
+class JointServoParameters:
+    """One joint's servo."""
+
+    bandwidth: float = parameter(
+        "double", unit="rad/s", low=1.0, high=1000.0, meaning="bandwidth of this joint's servo"
+    )
+
+
+@attrs.frozen(kw_only=True)
 class ArmParameters:
     """The arm servos: how a commanded motion becomes the motion that happens."""
 
@@ -115,6 +124,58 @@ class ArmParameters:
     servo_bandwidth: float = parameter(
         "double", 80.0, unit="rad/s", low=1.0, high=1000.0, meaning="bandwidth of the critically damped joint servo"
     )
+    joints: list[str] = parameter(
+        "string_array", [], unit="-", meaning="joints whose servos have a bandwidth of their own"
+    )
+    joint: dict[str, JointServoParameters] = sections(JointServoParameters, named_by="joints")
+
+
+@attrs.frozen(kw_only=True)
+class LinkMassParameters:
+    """What weighing has found of one link, in place of the URDF's."""
+
+    mass: float = parameter("double", unit="kg", low=1e-6, high=1e3, meaning="mass of the link")
+    center: list[float] = parameter("double_array", unit="m", length=3, meaning="its mass centre, in the link's axes")
+    inertia: list[float] = parameter(
+        "double_array",
+        unit="kg m²",
+        length=6,
+        meaning="inertia about the mass centre in the link's axes: ixx, ixy, ixz, iyy, iyz, izz",
+    )
+
+
+@attrs.frozen(kw_only=True)
+class SpreadParameters:
+    """How far the URDF may be from the robot, as standard deviations: what weighing begins with."""
+
+    mass: float = parameter(
+        "double", 0.15, unit="-", low=1e-3, high=1.0, meaning="of a link's mass, as a share of the URDF's"
+    )
+    center: float = parameter(
+        "double", 0.01, unit="m", low=1e-4, high=0.5, meaning="of each coordinate of a link's mass centre"
+    )
+    shape: float = parameter(
+        "double", 0.1, unit="-", low=1e-3, high=1.0, meaning="of a link's radii of gyration, as a share of the URDF's"
+    )
+    imu_tilt: float = parameter(
+        "double", 0.0175, unit="rad", low=1e-4, high=0.2, meaning="of the IMU's mounting, about x and about y"
+    )
+
+
+@attrs.frozen(kw_only=True)
+class MassModelParameters:
+    """What weighing has found, laid over the URDF; ``ballbal weigh-in`` writes it."""
+
+    links: list[str] = parameter("string_array", [], unit="-", meaning="links whose masses are given here")
+    link: dict[str, LinkMassParameters] = sections(LinkMassParameters, named_by="links")
+    imu_tilt: list[float] = parameter(
+        "double_array",
+        [0.0, 0.0],
+        unit="rad",
+        length=2,
+        meaning="(roll, pitch) about base_link's axes by which the IMU sits otherwise than imu.rpy says",
+    )
+    spread: SpreadParameters = section(SpreadParameters)
 
 
 @attrs.frozen(kw_only=True)
@@ -140,4 +201,5 @@ class RobotParameters:
     imu: ImuParameters = section(ImuParameters)
     hands: HandsParameters = section(HandsParameters)
     arm: ArmParameters = section(ArmParameters)
+    mass_model: MassModelParameters = section(MassModelParameters)
     limits: LimitParameters = section(LimitParameters)

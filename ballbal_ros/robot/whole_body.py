@@ -142,6 +142,11 @@ class WholeBody:
         total = matrix @ rate
         return total[:3], total[3:]
 
+    def holding_effort(self, arm_position: Array) -> Array:
+        """Torques [n] that hold the arms against their weight, the body upright; N m (N for a slide)."""
+        self._arm[:] = arm_position
+        return np.array(pin.computeGeneralizedGravity(self._model, self._data, self._q)[6:])
+
     def hand_position(self, hand: str, arm_position: Array) -> Array:
         """Origin of a hand link [3] in ``base_link``, m."""
         self._arm[:] = arm_position

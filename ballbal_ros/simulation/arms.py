@@ -39,12 +39,14 @@ class ArmServo:
     ) -> None:
         arm = description.parameters.arm
         self._servo = arm.servo if parameters.arm_servo == "as_described" else parameters.arm_servo
-        self.bandwidth = parameters.arm_servo_bandwidth or arm.servo_bandwidth
+        given = parameters.arm_servo_bandwidth
+        # In the description's order of the joints.
+        self.bandwidth = np.full(description.joint_count, given) if given else description.servo_bandwidth
         self._period = 1.0 / parameters.loop_rate
-        if self.bandwidth * self._period > 0.5:
+        if self.bandwidth.max() * self._period > 0.5:
             raise ParameterError(
                 "simulation.yaml",
-                f"arm_servo_bandwidth is {self.bandwidth:g} rad/s at a loop_rate of {parameters.loop_rate:g} Hz",
+                f"arm_servo_bandwidth is {self.bandwidth.max():g} rad/s at a loop_rate of {parameters.loop_rate:g} Hz",
                 f"it takes at most {0.5 / self._period:g} rad/s",
             )
         self._model, self._data = world.model, data
@@ -72,7 +74,7 @@ class ArmServo:
 
         MuJoCo's rates are half a step old, as its integrator's positions and rates are staggered.
         """
-        w, period = self.bandwidth, self._period
+        w, period = self.bandwidth[self._order], self._period
         ahead, further = 0.5 * (period + step), 0.25 * period * (step + 0.5 * period)
         self._share = 1.0 / (1.0 + 2.0 * w * ahead + w * w * further)
         self._gain = w * w * self._share

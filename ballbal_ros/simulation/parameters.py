@@ -82,6 +82,13 @@ class SimulationParameters:
     arm_encoder_step: float = parameter(
         "double", 4.8e-5, unit="rad", low=0.0, high=0.1, meaning="one count of the arm joints' encoders (m for a slide)"
     )
+    built: str = parameter(
+        "string",
+        "as_described",
+        unit="-",
+        choices=("as_described", "as_drawn"),
+        meaning="masses and IMU mounting: as described, or as the URDF draws them, without robot.yaml's mass_model",
+    )
     arm_servo: str = parameter(
         "string",
         "as_described",

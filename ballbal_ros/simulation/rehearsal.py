@@ -70,7 +70,7 @@ def plan_story(files: RobotFiles, story: Story, timeline: Timeline, loads: Itera
     if ball is not None:
         ball = attrs.evolve(ball, times=ball.times + lead_in)
     request = PlanRequest(
-        arms=FollowedPath.of(story.arms, arm.servo, arm.servo_bandwidth),
+        arms=FollowedPath.of(story.arms, arm.servo, files.description.servo_bandwidth),
         lead_in=lead_in,
         loads=[(when + lead_in, load) for when, load in story.announced],
         ball=ball,

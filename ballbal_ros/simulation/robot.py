@@ -13,7 +13,7 @@ from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.errors import ModelError, nearest
 from ballbal_ros.motion.spline import JointPath
 from ballbal_ros.robot.arrays import Array, read_only
-from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw, quat_xyzw
+from ballbal_ros.robot.attitude import lean_and_heading, lean_and_heading_from_quat_xyzw, quat_xyzw, rotation_lean
 from ballbal_ros.robot.balance_rows import GRAVITY
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
@@ -35,9 +35,9 @@ class SimulatedRobot:
     """The robot of a description, as it would truly behave.
 
     It starts at rest on its stand (``support`` is true) at arm ``posture`` [n], heading 0, ball centre above odom's
-    origin, at the equilibrium lean of the **model** with ``loads``. ``truth`` says where the simulated robot differs
-    from the model. All that is random comes from ``seed``: two runs with one seed and the same calls are the same to
-    the bit.
+    origin, at the equilibrium lean of the **model** with ``loads``, as its IMU shows it. ``truth`` says where the
+    simulated robot differs from the model. All that is random comes from ``seed``: two runs with one seed and the same
+    calls are the same to the bit.
 
     Order within a tick at time t: :meth:`measurement` is that of t; :meth:`step` takes the efforts that answer it and
     goes on to t + 1/loop_rate. Positions and forces are in ``odom``, SI units, rad. Once :attr:`fell` it stays as it
@@ -55,7 +55,8 @@ class SimulatedRobot:
     ) -> None:
         self.truth = truth or Truth()
         self.parameters = self.truth.of_parameters(parameters)
-        self.description = description
+        model = description
+        description = self.description = description.as_drawn() if self.parameters.built == "as_drawn" else description
         step = self.parameters.physics_step
         self._steps = whole_steps(1.0 / self.parameters.loop_rate, step, "1 / loop_rate")
         self.world = World.build(description, self.parameters, self.truth)
@@ -64,7 +65,7 @@ class SimulatedRobot:
         for load in held:
             self._put(load)
         self._find_views()
-        self._set_start(WholeBody(description, held), np.asarray(posture, float))
+        self._set_start(WholeBody(model, held), np.asarray(posture, float))
         self._drive = SimulatedDrive(description, self.parameters, self.world.rotation_drive_in_base)
         self._floor = FloorMoments(
             self.parameters, self._radius, description.parameters.ball.inertia, self.world.mass * GRAVITY
@@ -100,8 +101,15 @@ class SimulatedRobot:
         self._half_step_to_imu = (half_step * self.description.rotation_imu_in_base.T).tolist()
 
     def _set_start(self, model_body: WholeBody, posture: Array) -> None:
-        """Stand at the model's equilibrium lean, sunk into the floor just so far that it carries all."""
+        """Stand at the model's equilibrium lean as the IMU shows it, sunk into the floor just so far that it carries
+        all.
+        """
         roll, pitch = model_body.posture(posture).equilibrium_lean
+        mounted = rotation_lean(np.array(self.truth.imu_tilt)) @ self.description.rotation_imu_in_base
+        believed = model_body.description.rotation_imu_in_base
+        if not np.array_equal(mounted, believed):
+            wanted = rotation_lean(np.array((roll, pitch))) @ believed @ mounted.T
+            roll, pitch, _ = lean_and_heading(wanted)
         x, y, z, w = quat_xyzw(roll, pitch, 0.0)
         data, radius = self.data, self.description.parameters.ball.radius
         data.qpos[3:7] = w, x, y, z
