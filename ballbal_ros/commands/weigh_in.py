@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any, Optional
@@ -57,7 +58,8 @@ def write_weighed(path: Path, robot: Path, files: RobotFiles) -> None:
     try:
         path.write_text(text, encoding="utf-8")
     except OSError as error:
-        raise BallbalError(str(path), f"can't be written: {error.strerror}", "give the path of a file to write") from error
+        what = f"can't be written: {error.strerror}"
+        raise BallbalError(str(path), what, "give the path of a file to write") from error
 
 
 @attrs.frozen(eq=False)
@@ -103,8 +105,12 @@ def _document(weighing: Weighing, worth: Worth | None) -> dict[str, Any]:
     }
     if weighing.servo is not None:
         servo = weighing.servo
-        told = [None if b != b else {"bandwidth": float(b), "left": float(e)} for b, e in zip(servo.bandwidth, servo.left)]
-        document["servo"] = {"kind": servo.kind, "joints": dict(zip(servo.names, told))}
+        joints = {
+            name: {"bandwidth": float(bandwidth), "left": float(left)}
+            for name, bandwidth, left in zip(servo.names, servo.bandwidth, servo.left, strict=True)
+            if math.isfinite(bandwidth)
+        }
+        document["servo"] = {"kind": servo.kind, "joints": joints}
     if worth is not None:
         runs = {name: getattr(worth, name) for name in ("before", "after", "likely")}
         document["plan"] = worth.plan
@@ -117,7 +123,7 @@ def weigh_in_command(
     posture: Annotated[
         Optional[Path], typer.Option("--posture", help="Plan file in whose start posture it begins, hands empty.")
     ] = None,
-    postures: Annotated[int, typer.Option("--postures", min=3, max=40, help="In how many postures it weighs.")] = 10,
+    postures: Annotated[int, typer.Option("--postures", min=3, max=40, help="In how many postures it weighs.")] = 8,
     mass: Annotated[
         Optional[float], typer.Option("--mass", min=0.1, help="Mass of all on the ball by a scale, kg.")
     ] = None,
@@ -141,9 +147,8 @@ def weigh_in_command(
     story = None if plan is None else read_story(plan, files.description)
     home = asked_posture(files.description, posture).arm_position
     with console.status("weigh-in") as status:
-        weighing = run_weighing(
-            files, home, differences, seed, mass, DesignSettings(count=postures), servo, lambda what: status.update(what)
-        )
+        design = DesignSettings(count=postures)
+        weighing = run_weighing(files, home, differences, seed, mass, design, servo=servo, told=status.update)
         worth = None if story is None else Worth.of(files, story, weighing, differences, seed)
     went = f"{weighing.seconds:.0f} s of the robot's time, ball within {1e3 * weighing.farthest:.0f} mm"
     console.print(f"[bold]{files.description.name}[/bold], {postures} postures, {went}", highlight=False)

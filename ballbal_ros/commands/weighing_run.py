@@ -52,6 +52,7 @@ def run_weighing(
     seed: int = 0,
     mass: float | None = None,
     design: DesignSettings | None = None,
+    procedure: ProcedureSettings | None = None,
     servo: bool = False,
     told: Callable[[str], None] | None = None,
 ) -> Weighing:
@@ -63,7 +64,7 @@ def run_weighing(
     drawn = files.description.as_drawn()
     chosen = choose_postures(files.description, home, design or DesignSettings())
     robot = SimulatedWeighing(files, home, seed, truth)
-    weigh(robot, chosen.postures, ProcedureSettings(), told)
+    weigh(robot, chosen.postures, procedure or ProcedureSettings(), told)
     record = robot.record
     motion = record.motion(drawn)
     evidence = Evidence(record.at_rest(motion), record.moving(motion, _SWING_RATE), mass)
@@ -74,7 +75,7 @@ def run_weighing(
 
 def rehearsed(files: RobotFiles, story: Story, truth: Truth, seed: int = 0) -> RunResult:
     """One planned run of a story."""
-    timeline = Timeline.of(story, files.compensation)
+    timeline = Timeline.of(story, files.compensation, differs=truth != Truth())
     plan = plan_story(files, story, timeline) if story.planned else None
     return Rehearsal(files, story, "planned", timeline, plan, seed, truth).run()[0]
 

@@ -27,7 +27,8 @@ def print_findings(findings: Sequence[Finding], unknown: Sequence[str], console:
             numbers = (finding.drawn, finding.found, finding.error, finding.before)
             table.add_row(finding.name, *(_short(number) for number in numbers), finding.unit)
     console.print(table)
-    console.print("[dim]<link> x, y, z: first moment of what turns with it, all it carries drawn in to its next joint[/dim]")
+    meaning = "first moment of what turns with it, all it carries drawn in to its next joint"
+    console.print(f"[dim]<link> x, y, z: {meaning}[/dim]", highlight=False)
     left = [finding.name for finding in findings if not finding.told]
     if left:
         console.print(f"hardly told better than the drawing does: {', '.join(left)}", highlight=False)

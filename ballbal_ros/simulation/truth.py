@@ -119,7 +119,7 @@ def parse_truth(items: Iterable[str], description: RobotDescription) -> Truth:
             remedy = nearest(key, [*known, *structural, "drawn"])
             raise BallbalError(WHERE, f"unknown key {key}", _KEYS if remedy.startswith("known") else remedy)
     merged = {key: {**getattr(drawn, key), **values} for key, values in found.items()}
-    return Truth(imu_tilt=tilt or drawn.imu_tilt, **merged)
+    return Truth(imu_tilt=drawn.imu_tilt if tilt is None else tilt, **merged)
 
 
 def _numbers(key: str, text: str, count: int) -> tuple[float, ...]:

@@ -45,8 +45,8 @@ class Draw:
 
 
 def findings(weighed: Weighed) -> tuple[Finding, ...]:
-    """Total mass, the body's first moment with the arms drawn in to their shoulders, the arm segments' turning moments, IMU
-    tilt, rolling resistance, lateness of the drive's angles.
+    """Total mass, the first moment of the body and of the arms' segments (see :func:`turning_moments`), IMU tilt,
+    rolling resistance, lateness of the drive's angles.
     """
     return tuple(_findings(weighed))
 

@@ -46,8 +46,9 @@ class Evidence:
 
 @attrs.frozen(eq=False)
 class Weighed:
-    """What was found. ``fit`` is over [10 links, tilt (2), rolling resistance, lateness of the drive's angles] in units of the prior's standard
-    deviations, about the ``links`` as drawn.
+    """What was found. ``fit`` is over [10 links, tilt (2), rolling resistance, lateness of the drive's angles] in units
+    of the prior's standard deviations, about the ``links`` as drawn. ``rest_error`` [rests, 2] and ``swing_error``
+    (rms): moments that are left, N m.
     """
 
     links: Links

@@ -1,4 +1,4 @@
-"""What is unknown about the links: masses, mass centres and shapes, such that whatever the numbers are, a body has them.
+"""What is unknown about the links: masses, mass centres and shapes, such that a body has them whatever they are.
 
 Each link has ten unknowns x, all 0 where the URDF is right and about 1 where it is wrong by one standard deviation:
 

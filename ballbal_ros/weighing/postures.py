@@ -24,7 +24,7 @@ class DesignSettings:
     each joint's effort limit, to hold the arm.
     """
 
-    count: int = 10
+    count: int = 8
     candidates: int = 150
     seed: int = 1
     margin: float = 0.04
@@ -36,13 +36,12 @@ class DesignSettings:
 @attrs.frozen(eq=False)
 class Design:
     """Postures [K, n] in the order to visit them. ``weakest``: smallest singular value of the scaled regressor over
-    what postures can tell at all, ``told``: how many directions that is; ``candidates``: among how many they were
-    chosen.
+    what postures can tell at all: along ``directions`` [m, unknowns]; ``candidates``: among how many they were chosen.
     """
 
     postures: Array
     weakest: float
-    told: int
+    directions: Array
     candidates: int
 
 
@@ -84,7 +83,7 @@ def choose_postures(
     chosen = _greedy(blocks, settings.count)
     chosen = _exchange(blocks, chosen)
     ordered = _tour(home, postures[chosen], clearance)
-    return Design(ordered, _weakest(blocks, chosen), len(kept), len(postures))
+    return Design(ordered, _weakest(blocks, chosen), kept, len(postures))
 
 
 def _candidates(

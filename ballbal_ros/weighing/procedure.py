@@ -7,11 +7,13 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from functools import partial
 from typing import Protocol
 
 import attrs
 import numpy as np
 
+from ballbal_ros.errors import PlanRefused
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.weighing.record import Record
@@ -19,6 +21,7 @@ from ballbal_ros.weighing.record import Record
 _LOOK = 0.25
 _STEP = 0.02
 _SWINGS = 2
+_SLOWER = (1.0, 1.4, 2.0)
 
 
 class Robot(Protocol):
@@ -56,7 +59,9 @@ class ProcedureSettings:
     swing_periods: tuple[float, ...] = (2.4, 1.4)
 
 
-def weigh(robot: Robot, postures: Array, settings: ProcedureSettings, told: Callable[[str], None] | None = None) -> None:
+def weigh(
+    robot: Robot, postures: Array, settings: ProcedureSettings, told: Callable[[str], None] | None = None
+) -> None:
     """Take the robot through postures [K, n] and back to where it began, and through the swing; the rest is in its
     record. ``told`` hears what is being done.
     """
@@ -75,15 +80,24 @@ def weigh(robot: Robot, postures: Array, settings: ProcedureSettings, told: Call
 
 
 def go(robot: Robot, posture: Array, settings: ProcedureSettings) -> None:
-    """Move the arms to a posture [n], straight and slowly."""
+    """Move the arms to a posture [n], straight and slowly; slower still where the plan would go beyond a limit.
+
+    Raises :class:`PlanRefused` where that doesn't help.
+    """
     far = float(np.abs(posture - robot.arms()).max())
     during = max(settings.least_move, 1.875 * far / settings.joint_speed)
+    for slower in _SLOWER:
+        try:
+            robot.move(partial(_straight, posture, slower * during))
+            return
+        except PlanRefused:
+            if slower == _SLOWER[-1]:
+                raise
 
-    def path(start: Array) -> ArmPath:
-        both, still = np.stack((start, posture)), np.zeros((2, len(posture)))
-        return ArmPath.through(np.array([0.0, during]), both, still, still)
 
-    robot.move(path)
+def _straight(posture: Array, during: float, start: Array) -> ArmPath:
+    both, still = np.stack((start, posture)), np.zeros((2, len(posture)))
+    return ArmPath.through(np.array([0.0, during]), both, still, still)
 
 
 def rest(robot: Robot, settings: ProcedureSettings) -> None:

@@ -37,9 +37,9 @@ _CRAWL, _SHORT = 2e-3, 0.02
 @attrs.define(eq=False)
 class Record:
     """A row every ``period`` s: time, lean as the loop shows it (roll, pitch), heading, ball x, y in ``odom``, rate and
-    specific force in IMU axes, arms as measured; SI units. ``rests``: the spans [first, last) of rows in which it stood still to
-    be weighed; ``swings``: those in which it moved and may be looked at. ``moves``: when each arm motion was commanded
-    to begin, s, and which.
+    specific force in IMU axes, arms as measured; SI units. ``rests``: the spans [first, last) of rows in which it stood
+    still to be weighed; ``swings``: those in which it moved and may be looked at. ``moves``: when each arm motion was
+    commanded to begin, s, and which.
     """
 
     period: float
@@ -116,7 +116,8 @@ class Record:
         rates = np.stack(
             (rate[:, 0] + np.tan(pitch) * turning, np.cos(roll) * rate[:, 1] - np.sin(roll) * rate[:, 2]), axis=-1
         )
-        return np.asarray(shown[0] + cumulative_trapezoid(rates, dx=self.period, axis=0, initial=0.0))
+        turned = cumulative_trapezoid(rates, dx=self.period, axis=0)
+        return np.concatenate((shown[:1], shown[0] + turned))
 
     def _drift(
         self, description: RobotDescription, lean: list[Array], turning: list[Array], ball: Array, force: Array

@@ -91,7 +91,8 @@ def balance_regressor(description: RobotDescription, motion: Motion, imu_tilt: A
     data, samples = model.createData(), len(motion)
     lean = shown_to_true(motion.lean, imu_tilt)
     rotation = rotation_lean(lean)
-    rates = body_rates(lean, motion.lean_rate, motion.lean_acceleration, motion.heading_rate, motion.heading_acceleration)
+    turning = motion.heading_rate, motion.heading_acceleration
+    rates = body_rates(lean, motion.lean_rate, motion.lean_acceleration, *turning)
     q, v, a = pin.neutral(model), np.zeros(model.nv), np.zeros(model.nv)
     by = np.empty((samples, 2, 10 * (model.njoints - 1)))
     for k in range(samples):

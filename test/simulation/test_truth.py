@@ -59,3 +59,17 @@ def test_parameter_out_of_range_is_refused() -> None:
     truth = parse_truth(["floor.friction=100"], shelver())
     with pytest.raises(BallbalError, match=r"--truth: floor.friction is 100; its range is"):
         truth.of_parameters(simulation())
+
+
+def test_a_drawn_truth_is_within_its_bounds_and_the_seeds_own() -> None:
+    """Masses within 15 %, centres within 10 mm, tilt within 1°; the same seed draws the same; what is named wins."""
+    truth = parse_truth(["drawn=3"], shelver())
+    assert len(truth.mass_factor) > 15 and set(truth.mass_factor) == set(truth.center)
+    assert all(0.85 <= factor <= 1.15 for factor in truth.mass_factor.values())
+    assert all(abs(value) <= 0.01 for center in truth.center.values() for value in center)
+    assert all(abs(value) <= 0.01746 for value in truth.imu_tilt)
+    assert truth == parse_truth(["drawn=3"], shelver()) != parse_truth(["drawn=4"], shelver())
+    named = parse_truth(["imu.tilt=0,0", "drawn=3", "battery.mass_factor=1.0"], shelver())
+    assert named.imu_tilt == (0.0, 0.0) and named.mass_factor["battery"] == 1.0
+    with pytest.raises(BallbalError, match=r"--truth: drawn is 1.5; it takes a seed"):
+        parse_truth(["drawn=1.5"], shelver())
