@@ -98,7 +98,7 @@ def _left(seen: list[tuple[float, Array, Array]], joint: int, kind: str, bandwid
     for period, commanded, measured in seen:
         command = followed = commanded[:, joint]
         if kind != "ideal":
-            above = np.array([0.0 if kind == "position" else 2.0 * bandwidth, bandwidth**2])
+            above = np.array([bandwidth**2] if kind == "position" else [2.0 * bandwidth, bandwidth**2])
             below = np.array([1.0, 2.0 * bandwidth, bandwidth**2])
             numerator, denominator, _ = signal.cont2discrete((above, below), period, method="foh")
             followed = command[0] + signal.lfilter(np.ravel(numerator), denominator, command - command[0])

@@ -59,11 +59,13 @@ def followed(kind: str, bandwidth: float) -> Record:
     record, count = Record(PERIOD), shelver().joint_count
     ends = np.stack((np.zeros(count), np.linspace(0.2, 0.6, count)))
     path = ArmPath.through(np.array([0.0, 1.0]), ends, 0.0 * ends, 0.0 * ends)
-    q, v, fine = np.zeros(count), np.zeros(count), PERIOD / 20
-    for k in range(round(1.5 / PERIOD)):
+    q, v, fine = np.zeros(count), np.zeros(count), PERIOD / 8
+    ticks = round(1.5 / PERIOD)
+    commanded, rates, _ = path.sample((np.arange(8 * ticks) + 0.5) * fine)
+    for k in range(ticks):
         record.add(k * PERIOD, (0.0, 0.0), 0.0, (0.0, 0.0), np.zeros(6), q.copy())
-        for step in range(20):
-            wanted, rate, _ = (a[0] for a in path.sample(np.array([k * PERIOD + (step + 0.5) * fine])))
+        for step in range(8 * k, 8 * k + 8):
+            wanted, rate = commanded[step], rates[step]
             pull = bandwidth**2 * (wanted - q) - 2.0 * bandwidth * (v - (rate if kind != "position" else 0.0))
             v = v + fine * pull
             q = q + fine * v
