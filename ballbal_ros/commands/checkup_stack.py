@@ -65,7 +65,8 @@ class Heard:
 
 def check_stack(heard: Heard, balance: BalanceParameters | None = None) -> list[Finding]:
     """Judge what was heard; limits are those of the parameter files, as far as they could be read."""
-    newest = {name: told[-1] for name, told in heard.nodes.items() if told}
+    names = sorted(heard.nodes, key=lambda name: (NEEDED.index(name) if name in NEEDED else len(NEEDED), name))
+    newest = {name: heard.nodes[name][-1] for name in names if heard.nodes[name]}
     found, loop = _presence(heard, newest), newest.get("balance")
     balances = loop is not None and loop.message != "inactive"
     waits = loop is not None and loop.values.get("clock") == "lock_step"
