@@ -14,12 +14,14 @@ from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
 from ballbal_ros.errors import BallbalError, nearest
 from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.learned_file import read_learned, write_learned
 from ballbal_ros.motion.story import Story, read_story
 from ballbal_ros.report.run_table import print_runs
 from ballbal_ros.simulation.rehearsal import Rehearsal, RobotFiles, Trace, plan_story
+from ballbal_ros.simulation.repeating import Repetitions
 from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet
 from ballbal_ros.simulation.timeline import Timeline
-from ballbal_ros.simulation.truth import parse_truth
+from ballbal_ros.simulation.truth import Truth, parse_truth
 
 _PICTURES = (".png", ".svg", ".pdf")
 
@@ -41,9 +43,10 @@ def rehearse(
     lead_in: float | None = None,
     console: Console | None = None,
     figure: Path | None = None,
+    learn: Path | None = None,
 ) -> RunSet:
     """Run a plan file through planner, loop and simulated robot; with ``figure`` draw the first seed's runs into that
-    file.
+    file. With ``learn`` each planned run is planned with what those before, and that file, have taught; it is written.
 
     Raises :class:`BallbalError` for wrong input or a refused plan.
     """
@@ -54,7 +57,10 @@ def rehearse(
     differences = parse_truth(truth, files.description)
     timeline = Timeline.of(story, files.compensation, lead_in, bool(truth))
     lean_plan: LeanPlan | None = None
-    if "planned" in kinds and story.planned:
+    repetitions: Repetitions | None = None
+    if learn is not None:
+        repetitions = _repetitions(files, story, timeline, differences, learn, console)
+    elif "planned" in kinds and story.planned:
         lean_plan = plan_story(files, story, timeline)
     results: list[RunResult] = []
     traces: dict[str, Trace] = {}
@@ -70,15 +76,34 @@ def rehearse(
             for seed in seeds:
                 progress.update(task, description=f"{story.name}: {kind}")
                 keep = figure is not None and kind not in traces
-                run, trace = Rehearsal(files, story, kind, timeline, lean_plan, seed, differences).run(keep)
+                if kind == "planned" and repetitions is not None:
+                    lean_plan = repetitions.plan
+                    run, trace = repetitions.run(seed, keep)
+                else:
+                    run, trace = Rehearsal(files, story, kind, timeline, lean_plan, seed, differences).run(keep)
                 results.append(run)
                 if trace is not None:
                     traces[kind] = trace
                 progress.advance(task)
+    if learn is not None and repetitions is not None and repetitions.learned is not None:
+        write_learned(learn, repetitions.learned)
     if figure is not None:
         _draw(files, story, timeline, traces, figure)
     limits = planned_limits(results, files, lean_plan)
     return RunSet(files.description.name, story.name, "in-process", tuple(results), limits)
+
+
+def _repetitions(
+    files: RobotFiles, story: Story, timeline: Timeline, truth: Truth, file: Path, console: Console | None
+) -> Repetitions:
+    """The repetitions of a story with what the file has of them; says so where that is for another plan or robot."""
+    if not story.planned:
+        raise BallbalError("--learn", f"{story.name} has nothing to plan", "learn with a plan that moves something")
+    known = read_learned(file) if file.exists() else None
+    repetitions = Repetitions(files, story, timeline, truth, known)
+    if known is not None and repetitions.learned is None and console is not None:
+        console.print(f"{file}: learnt with another model, load or plan: forgotten")
+    return repetitions
 
 
 def _draw(files: RobotFiles, story: Story, timeline: Timeline, traces: dict[str, Trace], figure: Path) -> None:
@@ -117,6 +142,10 @@ def rehearse_command(
     figure: Annotated[
         Optional[Path], typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")
     ] = None,
+    learn: Annotated[
+        Optional[Path],
+        typer.Option("--learn", help="Plan each run with what those before have taught, kept in this file."),
+    ] = None,
 ) -> None:
     """What a plan will do: ball travel, lean, torque and friction use, beside what it would cost without the plan.
 
@@ -124,9 +153,8 @@ def rehearse_command(
     practice.
     """
     console = Console()
-    runs = rehearse(
-        plan, robot, asked_kinds(compensation), range(seed, seed + repeat), tuple(truth or ()), lead_in, console, figure
-    )
+    asked, seeds = asked_kinds(compensation), range(seed, seed + repeat)
+    runs = rehearse(plan, robot, asked, seeds, tuple(truth or ()), lead_in, console, figure, learn)
     print_runs(runs, console)
     if json_file is not None:
         write_json(json_file, runs.as_json())

@@ -39,7 +39,8 @@ class LeanPlan:
     ``lean`` and its rates [N, 2] in ``base_footprint``; ``ball`` and its rates [N, 2], relative to the station at the
     start, in ``odom`` axes turned by the heading at the start; ``heading`` and its rates [N]; ``torque`` [N, 3], the
     drive torque feedforward about the axes of ``base_footprint``, N m (the rotors' inertia is in it); ``lead_in``:
-    time at which the arms start, s.
+    time at which the arms start, s. ``rotor_torque`` [N, 3]: the part of the torque that the
+    drive's own rotors and friction take.
     """
 
     times: Array
@@ -55,6 +56,7 @@ class LeanPlan:
     heading_acceleration: Array
     torque: Array
     uses: tuple[Use, ...] = ()
+    rotor_torque: Array = attrs.field(factory=lambda: np.zeros((0, 3)))
 
     @property
     def duration(self) -> float:

@@ -64,11 +64,29 @@ class BallMotion:
 
 
 @attrs.frozen(eq=False)
+class OutsideMoment:
+    """A couple on the body [N, 2] (roll, pitch), N m in ``base_footprint`` axes, at times [N], held outside; and
+    ``torque`` [N, 2], what the drive must give besides (a force makes another moment about the ball's centre than about
+    the contact, and drives have errors of their own).
+    """
+
+    times: Array
+    moment: Array
+    torque: Array
+
+    def at(self, times: Array) -> tuple[Array, Array]:
+        """Couple and torque [M, 2] at other times [M], s."""
+        both = [np.interp(times, self.times, column) for column in (*self.moment.T, *self.torque.T)]
+        return np.stack(both[:2], axis=1), np.stack(both[2:], axis=1)
+
+
+@attrs.frozen(eq=False)
 class PlanRequest:
     """What is to happen. ``arms`` is what the arms will really do (servo lag included), from ``lead_in`` s after the
     plan's start.
 
-    ``loads`` are changes (time from the plan's start, load); ``start`` None means at rest in equilibrium.
+    ``loads`` are changes (time from the plan's start, load); ``start`` None means at rest in equilibrium. ``moment``:
+    what else pulls, beside what the trim bears.
     """
 
     arms: JointPath
@@ -77,6 +95,7 @@ class PlanRequest:
     ball: BallMotion | None = None
     wrenches: Sequence[HandWrench] = ()
     start: StartState | None = None
+    moment: OutsideMoment | None = None
 
 
 def terms_along(body: WholeBody, request: PlanRequest, times: Array, step: float) -> UpperBodyTerms:
@@ -126,8 +145,7 @@ def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationPar
     motion = _ball_motion(request.ball, times)
     first = ball_to_station(request.start, times)
     turn = _turns(motion[0][:, 2] - motion[0][0, 2])
-    force, moment = _wrenches(request.wrenches, times)
-    given = OutsideMotion(apply(turn, motion[2][:, :2]), motion[1][:, 2], motion[2][:, 2], force, moment)
+    given = outside_motion(request, times, motion[2][:, :2])
     radius, apparent_mass = description.parameters.ball.radius, description.ball_apparent_mass
     problem = LeanProblem.of(terms, given, settings.step, radius, apparent_mass).with_ball(turn, *first)
     solution, ball = _solve(problem, request, first, turn, relief_limits(description, parameters, terms))
@@ -157,6 +175,19 @@ def _solve(
     if not _settled(solution.lean_rate[0] - start_rate, solution.lean_rate[-1]):
         raise PlanError("plan", "no ball motion is found that begins where the robot is", "give it more lead-in")
     return (problem, solution), ball
+
+
+def outside_motion(request: PlanRequest, times: Array, ball_acceleration: Array) -> OutsideMotion:
+    """What is given besides the arms at times [N]: the ball's acceleration [N, 2], m/s², in the plan's axes, with the
+    heading, hand forces and outside moment of the request.
+    """
+    position, rate, acceleration = _ball_motion(request.ball, times)
+    turn = _turns(position[:, 2] - position[0, 2])
+    force, moment = _wrenches(request.wrenches, times)
+    couple = None
+    if request.moment is not None:
+        couple = request.moment.at(times)[0]
+    return OutsideMotion(apply(turn, ball_acceleration), rate[:, 2], acceleration[:, 2], force, moment, couple)
 
 
 def _settled(at_start: Array, at_end: Array) -> bool:
@@ -239,7 +270,10 @@ def made_plan(
     rows = solution.rows
     total = [given[:, :2] + added for given, added in zip(motion, ball, strict=True)]
     ball_rate = apply(_turns(motion[0][:, 2] - motion[0][0, 2]), total[1])
-    torque = rows.torque + _drive_torque(description, problem, solution, ball_rate)
+    rotors = _drive_torque(description, problem, solution, ball_rate)
+    torque = rows.torque + rotors
+    if request.moment is not None:
+        torque[:, :2] += request.moment.at(times)[1]
     prediction = Prediction(torque, rows.force, problem.ball_acceleration, solution.lean, ball[0], total[1])
     return LeanPlan(
         times=times,
@@ -255,6 +289,7 @@ def made_plan(
         heading_acceleration=motion[2][:, 2],
         torque=torque,
         uses=predicted_uses(prediction, description, parameters.acceptance),
+        rotor_torque=rotors,
     )
 
 

@@ -135,6 +135,7 @@ def equilibrium_lean(problem: LeanProblem, node: int, guess: Array) -> Array:
         OutsideMotion.at_rest(1),
         hand_force=problem.outside.hand_force[[node]],
         hand_moment=problem.outside.hand_moment[[node]],
+        couple=None if problem.outside.couple is None else problem.outside.couple[[node]],
     )
     still = attrs.evolve(
         at,

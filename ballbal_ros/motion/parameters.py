@@ -119,6 +119,30 @@ class AcceptanceParameters:
 
 
 @attrs.frozen(kw_only=True)
+class RepetitionParameters:
+    """What a motion that is done again may learn from the runs before."""
+
+    moment: float = parameter(
+        "double",
+        8.0,
+        unit="N m",
+        low=0.0,
+        high=1e3,
+        meaning="greatest moment about the contact that is learnt, each axis",
+        runtime=True,
+    )
+    newest: float = parameter(
+        "double",
+        0.3,
+        unit="-",
+        low=0.0,
+        high=1.0,
+        meaning="how much the newest run counts at least; otherwise all runs count the same",
+        runtime=True,
+    )
+
+
+@attrs.frozen(kw_only=True)
 class CompensationParameters:
     """compensation.yaml as a whole."""
 
@@ -142,3 +166,4 @@ class CompensationParameters:
     planner: PlannerParameters = section(PlannerParameters)
     stream: StreamParameters = section(StreamParameters)
     acceptance: AcceptanceParameters = section(AcceptanceParameters)
+    repetition: RepetitionParameters = section(RepetitionParameters)

@@ -101,7 +101,7 @@ class OutsideMotion:
     """What is given besides the arms, at N samples, in ``base_footprint`` axes.
 
     ``ball_acceleration`` [N, 2]; heading rate and acceleration [N]; ``hand_force`` and ``hand_moment`` [N, hands, 3],
-    which the world exerts on the hands of the terms.
+    which the world exerts on the hands of the terms. ``couple`` [N, 2]: what else turns the body about x and y, N m.
     """
 
     ball_acceleration: Array
@@ -109,6 +109,7 @@ class OutsideMotion:
     heading_acceleration: Array
     hand_force: Array
     hand_moment: Array
+    couple: Array | None = None
 
     @classmethod
     def at_rest(cls, samples: int, hands: int = 0) -> OutsideMotion:
@@ -171,6 +172,8 @@ def balance_rows(
     for column, turned in enumerate(_turned(rotation, (f, n, mu), (f_f, n_f, mu_f))):
         force_by[:, :, column] += turned[0]
         torque_by[:, :, column] += turned[1] + cross(turned[2], lifted)
+    if outside.couple is not None:
+        torque[:, :2] -= outside.couple
     for hand in range(outside.hand_force.shape[1]):
         pull, at = outside.hand_force[:, hand], terms.hand_position[:, hand]
         at_f = apply(rotation, at)

@@ -20,6 +20,7 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.pulls import at_time
+from ballbal_ros.motion.repetition import Learned, Record, still_to_lean_for
 from ballbal_ros.motion.spline import FollowedPath
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array
@@ -59,24 +60,39 @@ class Trace:
     friction: Array
 
 
-def plan_story(files: RobotFiles, story: Story, timeline: Timeline, loads: Iterable[Load] | None = None) -> LeanPlan:
-    """The lean plan for a story, servo lag and announced loads included; refused where it goes beyond the limits.
-    ``loads``: what the hands hold at its start, where that is not what the story says.
-    """
+def request_of(files: RobotFiles, story: Story, timeline: Timeline) -> PlanRequest:
+    """What the planner is asked for a story: servo lag and announced loads included."""
     arm = files.description.parameters.arm
-    body = WholeBody(files.description, story.start_loads if loads is None else loads)
     lead_in = timeline.lead_in
     ball = story.ball
     if ball is not None:
         ball = attrs.evolve(ball, times=ball.times + lead_in)
-    request = PlanRequest(
+    return PlanRequest(
         arms=FollowedPath.of(story.arms, arm.servo, files.description.servo_bandwidth),
         lead_in=lead_in,
         loads=[(when + lead_in, load) for when, load in story.announced],
         ball=ball,
         wrenches=[attrs.evolve(wrench, times=wrench.times + lead_in) for wrench in story.wrenches],
     )
+
+
+def plan_story(
+    files: RobotFiles,
+    story: Story,
+    timeline: Timeline,
+    loads: Iterable[Load] | None = None,
+    learned: Learned | None = None,
+) -> LeanPlan:
+    """The lean plan for a story; refused where it goes beyond the limits. ``loads``: what the hands hold at its start,
+    where that is not what the story says; ``learned``: what runs before have taught, which must fit.
+    """
+    body = WholeBody(files.description, story.start_loads if loads is None else loads)
+    request = request_of(files, story, timeline)
     plan = plan_lean(body, request, files.compensation)
+    if learned is not None:
+        said = WholeBody(files.description, story.start_loads)
+        moment = still_to_lean_for(learned, said, body, request, plan)
+        plan = plan_lean(body, attrs.evolve(request, moment=moment), files.compensation)
     plan.refuse_beyond_limits(story.name)
     return plan
 
@@ -96,8 +112,9 @@ class Rehearsal:
         seed: int = 0,
         truth: Truth | None = None,
         schedule: GainSchedule | None = None,
+        learned: Learned | None = None,
     ) -> None:
-        """``schedule``: as :class:`BalanceLoop` takes it."""
+        """``schedule``: as :class:`BalanceLoop` takes it. ``learned``: what ``plan`` was made with."""
         self.kind, self.seed, self.timeline, self.story = kind, seed, timeline, story
         self.robot = SimulatedRobot(files.description, files.simulation, story.posture, story.start_loads, seed, truth)
         way = kind if kind in ("quasi_static", "none") else "planned"
@@ -106,14 +123,16 @@ class Rehearsal:
         )
         self.loop.supported = True
         self._period_ns = round(1e9 * self.loop.period)
-        self._plan = plan if kind == "planned" else None
+        self.plan = plan if kind == "planned" else None
         self._meant: Array | None = None
         self._files, self._planning = files, timeline.lean - files.compensation.planner.allowance
         self.watch = StandingWatch(self.loop)
         self._look_every = max(1, round(EVERY / self.loop.period))
         self._ticks, self._believes_other = 0, False
-        if self._plan is not None and story.ball is not None:
-            self._meant = self._plan.table(self.loop.period)[:, 4:6]
+        self._learned = learned
+        self._measured: list[tuple[float, ...]] | None = [] if kind == "planned" else None
+        if self.plan is not None and story.ball is not None:
+            self._meant = self.plan.table(self.loop.period)[:, 4:6]
         self._truly: list[tuple[float, Load]] = []
         if kind != "still":
             self.robot.command_arms(story.arms, timeline.arms)
@@ -149,6 +168,10 @@ class Rehearsal:
         if robot.support and loop.guard.state == BALANCING and is_looked_at(round(1e9 * robot.time), self._period_ns):
             robot.support = loop.supported = False
         self._ticks += 1
+        if self._measured is not None and robot.time >= self.timeline.lean - 1e-9:
+            row, ball = loop.reference.row, loop.controller.estimate[4:6]
+            sent = loop.torque[:2] - row[10:12]
+            self._measured.append((loop.lean[0] - row[0], loop.lean[1] - row[1], *ball, *sent))
         if self._ticks % self._look_every == 0:
             found = [load for load in self.watch.see(robot.time) if loop.adopt_load(load)]
             self.watch.adopted(found)
@@ -157,11 +180,17 @@ class Rehearsal:
 
     def _offer_plan(self) -> None:
         """Hand the plan to the loop; made anew where the robot has found other loads than it was told of."""
-        plan, self._planning = self._plan, math.inf
-        if plan is not None and self._believes_other:
-            plan = plan_story(self._files, self.story, self.timeline, self.loop.body.loads.values())
-        if plan is not None:
-            self.loop.add_plan(self.timeline.lean, plan)
+        self._planning = math.inf
+        if self.plan is not None and self._believes_other:
+            self.plan = plan_story(self._files, self.story, self.timeline, self.loop.body.loads.values(), self._learned)
+        if self.plan is not None:
+            self.loop.add_plan(self.timeline.lean, self.plan)
+
+    @property
+    def record(self) -> Record:
+        """How far a planned run was from its plan, as the robot itself measured it."""
+        measured = np.array(self._measured or np.zeros((0, 6)))
+        return Record(self.loop.period, measured[:, :2], measured[:, 2:4], measured[:, 4:])
 
     def step(self) -> None:
         """One tick of loop and robot together."""

@@ -10,7 +10,7 @@ from ballbal_ros.motion.story import Story
 RUN_START = 2.5
 """When the ball's travel begins to count, s: the robot has been let go by its stand and stands still."""
 
-_FINDING_OUT = 2.0
+_FINDING_OUT = 4.0
 
 
 @attrs.frozen

@@ -1,0 +1,172 @@
+"""A motion done again gets better: what a run shows of the moment that nobody told of is planned with the next time.
+
+A plan satisfies the balance rows. What the robot truly did, its measured lean and ball put into the same rows, leaves a
+rest: the moment d(t) about the contact that the model lacks, be it a load that is heavier than said, an arm whose mass
+centre lies elsewhere, or a cable. No torque enters, so neither does the feedback that was busy meanwhile. As the run is
+over, derivatives are taken without phase (Savitzky and Golay 1964, Anal. Chem. 36(8) 1627; scipy), which no estimator
+can do while it happens. The next plan is solved with d(t) as a known outside moment, and leans ahead of it.
+
+This is iterative learning control whose learning filter is the planner itself (Bristow, Tharayil and Alleyne 2006, IEEE
+Control Systems Magazine 26(3) 96, for the idea). It is safe by construction: what is learnt is bounded, is a mean over
+the runs, changes nothing but the plan, which is held against every limit as any other, and is forgotten when model,
+loads or plan change.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Iterable
+
+import attrs
+import numpy as np
+from scipy.signal import savgol_filter
+
+from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.lean_planner import OutsideMoment, PlanRequest, outside_motion, terms_along
+from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.robot.balance_rows import balance_rows
+from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.whole_body import WholeBody
+
+_WINDOW, _ORDER = 0.3, 3
+_SETTLING, _BLEND = 0.3, 0.1
+_DECIMALS = 4
+
+
+@attrs.frozen(eq=False)
+class Record:
+    """How far a run was from its plan, from the plan's start on: every ``period`` s the measured less the planned lean
+    [N, 2], rad, ball's place [N, 2], m, in the plan's axes, and the drive torque sent less that planned [N, 2], N m.
+    """
+
+    period: float
+    lean: Array
+    ball: Array
+    torque: Array
+
+    @property
+    def duration(self) -> float:
+        """How long it is, s."""
+        return self.period * (len(self.lean) - 1)
+
+
+@attrs.frozen(eq=False)
+class Learned:
+    """What ``runs`` of a plan have taught: every ``step`` s from the plan's start the couple [N, 2] (roll, pitch), N m,
+    that comes to what pulled before the arms began, and the drive torque [N, 2] that the model lacks. ``fits`` is the
+    mark of model, loads and plan that it holds for.
+    """
+
+    fits: str
+    runs: int
+    step: float
+    moment: Array
+    torque: Array
+
+    def outside_moment(self) -> OutsideMoment:
+        """As the planner takes it."""
+        return OutsideMoment(self.step * np.arange(len(self.moment), dtype=float), self.moment, self.torque)
+
+
+def fingerprint(
+    description: RobotDescription, loads: Iterable[Load], request: PlanRequest, parameters: CompensationParameters
+) -> str:
+    """The mark of what a plan is made of: model, loads, motion and grid. Whatever of it changes, the mark does too."""
+    arms = request.arms.sample(np.arange(0.0, request.arms.duration + 0.05, 0.05))[0]
+    held = [(x.hand, x.mass, x.center.tolist(), x.inertia.tolist()) for x in loads]
+    changes = [(when, x.hand, x.mass, x.center.tolist()) for when, x in request.loads]
+    pulls = [(w.hand, w.times.tolist(), w.force.tolist(), w.moment.tolist()) for w in request.wrenches]
+    ball = None if request.ball is None else (request.ball.times.tolist(), request.ball.position.tolist())
+    robot = attrs.asdict(description.parameters)
+    plan = (arms.round(6).tolist(), request.lead_in, parameters.planner.step, parameters.planner.tail)
+    text = json.dumps([description.urdf_text, robot, sorted(held), changes, pulls, ball, plan], default=str)
+    return hashlib.sha256(text.encode()).hexdigest()[:16]
+
+
+def lacking_along(
+    body: WholeBody, request: PlanRequest, times: Array, lean: Array, rates: tuple[Array, Array], ball: Array
+) -> tuple[Array, Array]:
+    """The couple [N, 2] that a motion must have had, and the drive torque [N, 2] that goes with it, N m, rotors and
+    friction left out: leans [N, 2] with rates and accelerations, and the ball's accelerations [N, 2] in the plan's
+    axes, at evenly spaced times [N].
+    """
+    terms = terms_along(body, request, times, float(times[1] - times[0]))
+    outside = outside_motion(attrs.evolve(request, moment=None), times, ball)
+    description = body.description
+    radius, apparent = description.parameters.ball.radius, description.ball_apparent_mass
+    rows = balance_rows(terms, outside, lean, *rates, radius, apparent)
+    return rows.residual, rows.torque[:, :2] - rows.residual
+
+
+def lacking_in_run(body: WholeBody, request: PlanRequest, plan: LeanPlan, record: Record) -> tuple[Array, Array]:
+    """Couple and drive torque [N, 2], N m, on the plan's grid, that a run shows beside what body and request know of.
+
+    Only the deviations are smoothed: the plan's own motion is fast, and known.
+    """
+    window = max(_ORDER + 2, 2 * round(0.5 * _WINDOW / record.period) + 1)
+
+    def smooth(values: Array, derivative: int) -> Array:
+        return np.asarray(savgol_filter(values, window, _ORDER, deriv=derivative, delta=record.period, axis=0))
+
+    there = plan.times <= record.duration + 1e-9
+    times = plan.times[there]
+    at = np.minimum(np.rint(times / record.period).astype(int), len(record.lean) - 1)
+    lean, rate, acceleration = (smooth(record.lean, k)[at] for k in (0, 1, 2))
+    planned = plan.lean[there], (plan.lean_rate[there], plan.lean_acceleration[there]), plan.ball_acceleration[there]
+    rates = planned[1][0] + rate, planned[1][1] + acceleration
+    moment, needed = lacking_along(
+        body, request, times, planned[0] + lean, rates, planned[2] + smooth(record.ball, 2)[at]
+    )
+    sent = smooth(record.torque, 0)[at] + plan.torque[there, :2]
+    return moment, sent - needed - plan.rotor_torque[there, :2]
+
+
+def learn(
+    before: Learned | None,
+    fits: str,
+    lacking: tuple[Array, Array],
+    request: PlanRequest,
+    parameters: CompensationParameters,
+) -> Learned:
+    """Take what a run lacked, as :func:`lacking_in_run` has it, into what was learnt ``before``.
+
+    It counts from what there was before the arms began, which the trim bears. Once the arms rest the couple goes on as
+    it is on average, and no torque: what the drive's dry friction holds then is no matter of the motion. Each run
+    counts as much as ``repetition.newest`` or an equal share of all, whichever is more.
+    """
+    settings, step = parameters.repetition, parameters.planner.step
+    new = [_change(each, request, step, held) for each, held in zip(lacking, (1.0, 0.0))]
+    runs = 1
+    if before is not None and before.fits == fits and len(before.moment) == len(new[0]):
+        runs = before.runs + 1
+        share = max(1.0 / runs, settings.newest)
+        new = [old + share * (each - old) for old, each in zip((before.moment, before.torque), new)]
+    moment, torque = (np.clip(each, -settings.moment, settings.moment).round(_DECIMALS) for each in new)
+    return Learned(fits, runs, step, moment, torque)
+
+
+def _change(values: Array, request: PlanRequest, step: float, held: float) -> Array:
+    times = step * np.arange(len(values))
+    begin, end = request.lead_in, request.lead_in + request.arms.duration + _SETTLING
+    change = values - values[times < begin].mean(axis=0)
+    rest = held * (change[times >= end].mean(axis=0) if times[-1] > end else change[-1])
+    into = np.clip((times - begin) / _BLEND, 0.0, 1.0)[:, None]
+    out = np.clip((times - end + _BLEND) / _BLEND, 0.0, 1.0)[:, None]
+    return np.asarray(into * ((1.0 - out) * change + out * rest))
+
+
+def still_to_lean_for(
+    learned: Learned, said: WholeBody, body: WholeBody, request: PlanRequest, plan: LeanPlan
+) -> OutsideMoment:
+    """What is left of what was learnt for a ``body`` that by now believes to hold other loads than were ``said`` when
+    it was learnt: ``plan`` is its plan without.
+    """
+    motion = plan.times, plan.lean, (plan.lean_rate, plan.lean_acceleration), plan.ball_acceleration
+    explained, by_said = lacking_along(said, request, *motion)
+    _, by_believed = lacking_along(body, request, *motion)
+    moment, torque = learned.outside_moment().at(plan.times)
+    moment, torque = moment - explained, torque + by_said - by_believed
+    return OutsideMoment(plan.times, moment - moment[0], torque - torque[0])
