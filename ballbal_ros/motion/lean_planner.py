@@ -149,7 +149,8 @@ def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationPar
     radius, apparent_mass = description.parameters.ball.radius, description.ball_apparent_mass
     problem = LeanProblem.of(terms, given, settings.step, radius, apparent_mass).with_ball(turn, *first)
     solution, ball = _solve(problem, request, first, turn, relief_limits(description, parameters, terms))
-    return made_plan(description, parameters, request.lead_in, times, solution, ball, motion)
+    extra = None if request.moment is None else request.moment.at(times)[1]
+    return made_plan(description, parameters, request.lead_in, times, solution, ball, motion, extra)
 
 
 def _solve(
@@ -262,9 +263,10 @@ def made_plan(
     solved: tuple[LeanProblem, LeanSolution],
     ball: list[Array],
     motion: list[Array],
+    extra_torque: Array | None = None,
 ) -> LeanPlan:
     """The plan of a solution: ``ball`` [N, 2] added to the given ``motion`` [N, 3], each with rates and
-    accelerations.
+    accelerations; ``extra_torque`` [N, 2] about x and y, N m, is what the drive must give besides.
     """
     problem, solution = solved
     rows = solution.rows
@@ -272,8 +274,8 @@ def made_plan(
     ball_rate = apply(_turns(motion[0][:, 2] - motion[0][0, 2]), total[1])
     rotors = _drive_torque(description, problem, solution, ball_rate)
     torque = rows.torque + rotors
-    if request.moment is not None:
-        torque[:, :2] += request.moment.at(times)[1]
+    if extra_torque is not None:
+        torque[:, :2] += extra_torque
     prediction = Prediction(torque, rows.force, problem.ball_acceleration, solution.lean, ball[0], total[1])
     return LeanPlan(
         times=times,

@@ -15,7 +15,8 @@ from ballbal_ros.robot.arrays import Array
 
 _KEYS = ("fits", "runs", "step", "moment_roll", "moment_pitch", "torque_x", "torque_y")
 _HEAD = """# What repetitions of a plan have taught, N m every step s from the plan's start: written by
-# 'ballbal rehearse --learn'. It holds for the model, loads and plan of the mark 'fits' alone; delete the file to begin anew.
+# 'ballbal rehearse --learn'. It holds for the model, loads and plan of the mark 'fits' alone; delete the file to
+# begin anew.
 """
 
 

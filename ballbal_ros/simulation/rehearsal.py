@@ -130,7 +130,7 @@ class Rehearsal:
         self._look_every = max(1, round(EVERY / self.loop.period))
         self._ticks, self._believes_other = 0, False
         self._learned = learned
-        self._measured: list[tuple[float, ...]] | None = [] if kind == "planned" else None
+        self._deviations: list[tuple[float, ...]] | None = [] if kind == "planned" else None
         if self.plan is not None and story.ball is not None:
             self._meant = self.plan.table(self.loop.period)[:, 4:6]
         self._truly: list[tuple[float, Load]] = []
@@ -168,15 +168,19 @@ class Rehearsal:
         if robot.support and loop.guard.state == BALANCING and is_looked_at(round(1e9 * robot.time), self._period_ns):
             robot.support = loop.supported = False
         self._ticks += 1
-        if self._measured is not None and robot.time >= self.timeline.lean - 1e-9:
+        if self._deviations is not None and robot.time >= self.timeline.lean - 1e-9:
             row, ball = loop.reference.row, loop.controller.estimate[4:6]
             sent = loop.torque[:2] - row[10:12]
-            self._measured.append((loop.lean[0] - row[0], loop.lean[1] - row[1], *ball, *sent))
+            self._deviations.append((loop.lean[0] - row[0], loop.lean[1] - row[1], *ball, *sent))
         if self._ticks % self._look_every == 0:
-            found = [load for load in self.watch.see(robot.time) if loop.adopt_load(load)]
+            found = [load for load in self.watch.see(robot.time) if self._believe(load)]
             self.watch.adopted(found)
             self._believes_other |= bool(found)
         return effort
+
+    def _believe(self, load: Load) -> bool:
+        """Take a load that the robot has found out by itself for true, where that can be now."""
+        return self.loop.adopt_load(load)
 
     def _offer_plan(self) -> None:
         """Hand the plan to the loop; made anew where the robot has found other loads than it was told of."""
@@ -189,7 +193,7 @@ class Rehearsal:
     @property
     def record(self) -> Record:
         """How far a planned run was from its plan, as the robot itself measured it."""
-        measured = np.array(self._measured or np.zeros((0, 6)))
+        measured = np.array(self._deviations or np.zeros((0, 6)))
         return Record(self.loop.period, measured[:, :2], measured[:, 2:4], measured[:, 4:])
 
     def step(self) -> None:

@@ -16,6 +16,7 @@ from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.schedule import GainSchedule
 from ballbal_ros.motion.story import Story
 from ballbal_ros.motion.stream import StreamCompensation
+from ballbal_ros.robot.loads import Load
 from ballbal_ros.simulation.rehearsal import Rehearsal, RobotFiles
 from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import Truth
@@ -55,6 +56,12 @@ class StreamedRehearsal(Rehearsal):
         self._known = [(c.time + late.story, c.load) for c in story.load_changes if c.announced]
         self._next_sample = self._next_plan = -np.inf
         self.plan_times: list[float] = []
+
+    def _believe(self, load: Load) -> bool:
+        believed = super()._believe(load)
+        if believed:
+            self._compensation.set_load(load)
+        return believed
 
     def _happen(self, now: float) -> None:
         super()._happen(now)
