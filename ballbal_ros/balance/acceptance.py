@@ -12,6 +12,7 @@ from ballbal_ros.errors import PlanRefused
 from ballbal_ros.motion.lean_plan import LeanPlan
 
 _TOPIC = "lean_plan"
+_MOST_WAITING = 8
 
 
 def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> None:
@@ -30,6 +31,8 @@ def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> N
         raise PlanRefused(
             _TOPIC, f"starts at {start:.3f} s, and it is {now:.3f} s", "give it a start that is still to come"
         )
+    if loop.reference.waiting >= _MOST_WAITING:
+        raise PlanRefused(_TOPIC, f"came while {loop.reference.waiting} plans wait for their time", "send it later")
     age, oldest = loop.senses.arms_age(now), loop.parameters.arms_timeout
     if loop.clock.now > -math.inf and age > oldest:
         raise PlanRefused(_TOPIC, f"came while joint_states are {age:.2f} s old", f"they may be {oldest:g} s old")

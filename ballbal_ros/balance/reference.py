@@ -47,6 +47,11 @@ class Reference:
         """Whether a plan is in force or waits for its time."""
         return bool(self._tables)
 
+    @property
+    def waiting(self) -> int:
+        """How many plans are in force or wait for their time."""
+        return len(self._tables)
+
     def engage(self, arm_position: Array) -> None:
         """Station here, heading zero; plans whose time is to come stay."""
         self.station, self.frame_heading = [0.0, 0.0], 0.0

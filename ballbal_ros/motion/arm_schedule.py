@@ -4,6 +4,7 @@ begins.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 
 import attrs
@@ -18,12 +19,13 @@ from ballbal_ros.motion.spline import ArmPath, FollowedPath, JointPath, check_pa
 from ballbal_ros.motion.stopping import Handover, Later, Spliced, stop_path
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
-from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.loads import Load, LoadChanges
 from ballbal_ros.robot.whole_body import WholeBody
 
 _TOPIC = "arm_plan"
 _SOON = 1e-9
 _ELSEWHERE = 0.05
+_FAR_AHEAD = 200.0
 _STOPS = (1.0, 1.5, 2.0, 3.0)
 # Planning takes a time that grows with the motion: this much for each second of it, on a slow machine.
 _PLANNING_SHARE = 0.04
@@ -81,13 +83,13 @@ class ArmSchedule:
 
     def __init__(self, description: RobotDescription, parameters: CompensationParameters) -> None:
         self.description, self.parameters = description, parameters
-        self._loads: list[tuple[float, Load]] = []
+        self._loads = LoadChanges()
         self._motion: Proposal | None = None
         self._standing: Sequence[HandWrench] = ()
 
-    def set_load(self, stamp: float, load: Load) -> None:
-        """A hand's load from ``stamp``, s, on."""
-        self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
+    def set_load(self, stamp: float, load: Load, now: float = -math.inf) -> None:
+        """A hand's load from ``stamp``, s, on; raises :class:`BallbalError` where too many come after ``now``."""
+        self._loads.add(stamp, load, now)
 
     def forget_wrenches(self) -> None:
         """Nothing pulls at a hand any more, for plans to come."""
@@ -96,7 +98,7 @@ class ArmSchedule:
     @property
     def load_changes(self) -> int:
         """How many load changes it has been told of."""
-        return len(self._loads)
+        return self._loads.count
 
     @property
     def idle(self) -> bool:
@@ -127,6 +129,9 @@ class ArmSchedule:
         """Plan a motion; raises :class:`BallbalError` in one line where it can't be done or would go beyond a limit."""
         settings = self.parameters.planner
         earliest = now + settings.allowance
+        if wanted.stamp > now + _FAR_AHEAD:
+            what = f"starts at {wanted.stamp:.3f} s, and it is {now:.3f} s"
+            raise PlanRefused(_TOPIC, what, f"send it at most {_FAR_AHEAD:g} s ahead")
         if wanted.stamp > 0.0:
             lean_start = max(wanted.stamp - settings.lead_in, earliest)
             arms_start = max(wanted.stamp, lean_start)
@@ -198,11 +203,11 @@ class ArmSchedule:
             arms, lead_in = Later(arms, -lead_in), 0.0
         handover = self._handover(lean_start)
         ball = self._ball(wanted, arms_start - lean_start, handover)
-        body = WholeBody(self.description, self._held_at(lean_start))
+        body = WholeBody(self.description, self._loads.held_at(lean_start + _SOON))
         request = PlanRequest(
             arms=arms,
             lead_in=lead_in,
-            loads=[(stamp - lean_start, load) for stamp, load in self._loads if stamp > lean_start + _SOON],
+            loads=[(stamp - lean_start, load) for stamp, load in self._loads.after(lean_start + _SOON)],
             ball=ball,
             wrenches=[attrs.evolve(w, times=w.times - lean_start) for w in wrenches],
             start=None if handover is None else handover.start,
@@ -225,6 +230,3 @@ class ArmSchedule:
                 "ball_plan", "begins while the ball still rolls by another plan", "let that one end first"
             )
         return rolling if asked is None else attrs.evolve(asked, times=asked.times + lead_in)
-
-    def _held_at(self, time: float) -> list[Load]:
-        return list({load.hand: load for stamp, load in self._loads if stamp <= time + _SOON}.values())

@@ -23,6 +23,7 @@ from ballbal_ros.robot.whole_body import WholeBody
 _FRICTION_RATE = 0.05
 _SETTLED_RATE = 1e-5
 _RELIEF_ROUNDS = 3
+_LONGEST, _LOADS_AFTER = 600.0, 60.0
 # Of each limit; the rest is for the rotors and for what is not linear, of which the spin moment has most.
 _RESERVE, _SPIN_RESERVE = 0.93, 0.85
 
@@ -133,12 +134,15 @@ def plan_lean(body: WholeBody, request: PlanRequest, parameters: CompensationPar
     """
     description, settings = body.description, parameters.planner
     length = request.lead_in + request.arms.duration + settings.tail
-    for when, _ in request.loads:
-        length = max(length, when + settings.tail)
     if request.ball is not None:
         length = max(length, float(request.ball.times[-1]) + settings.tail)
     for wrench in request.wrenches:
         length = max(length, float(wrench.times[-1]) + settings.tail)
+    if length > _LONGEST:
+        raise PlanError("plan", f"would take {length:.6g} s", f"it takes at most {_LONGEST:g} s: plan it in parts")
+    # What is announced for long after it is of no concern to this motion.
+    for when in [when for when, _ in request.loads if when < length + _LOADS_AFTER]:
+        length = max(length, when + settings.tail)
     nodes = int(np.ceil(length / settings.step - 1e-9)) + 1
     times: Array = settings.step * np.arange(nodes, dtype=float)
     terms = terms_along(body, request, times, settings.step)

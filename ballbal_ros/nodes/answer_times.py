@@ -3,8 +3,12 @@
 from __future__ import annotations
 
 import time
+from collections import deque
 
 import numpy as np
+
+# A minute at 500 Hz.
+_KEPT = 30_000
 
 
 class AnswerTimes:
@@ -12,8 +16,8 @@ class AnswerTimes:
 
     def __init__(self) -> None:
         self._asked, self._stamp = 0.0, -1
-        self._answers: list[float] = []
-        self._lateness: list[float] = []
+        self._answers: deque[float] = deque(maxlen=_KEPT)
+        self._lateness: deque[float] = deque(maxlen=_KEPT)
 
     def asked(self, stamp: int, late: float = 0.0) -> None:
         """A tick is about to go out, ``late`` s after its time by the wall clock."""

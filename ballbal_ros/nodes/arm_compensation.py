@@ -42,6 +42,7 @@ from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.parameters import RobotParameters
 
 _ATTEND = 0.05
+_MOST_WAITING = 10
 _FOLLOWING = (ENGAGING, BALANCING, STOPPING)
 
 
@@ -129,12 +130,11 @@ class ArmCompensationNode(Node):
 
     def _on_load(self, message: Any) -> None:
         try:
-            stamp, load = load_of(message, self.description)
+            self._schedule.set_load(*load_of(message, self.description), self._now)
         except BallbalError as error:
             self._diagnostics.refuse("hand_load", str(error))
             return
         self._diagnostics.accept("hand_load")
-        self._schedule.set_load(stamp, load)
 
     def _on_joint_states(self, raw: bytes) -> None:
         try:
@@ -171,6 +171,10 @@ class ArmCompensationNode(Node):
 
     def _queue(self, what: str, message: Any) -> None:
         """Plan it now, or when the one before has been answered."""
+        if len(self._waiting) >= _MOST_WAITING:
+            error = PlanRefused(what, f"came while {_MOST_WAITING} others wait", "wait for their plan_report")
+            self._reports.refuse(what, stamp_text(message.header.stamp), str(error))
+            return
         now, before = time.monotonic(), self._before
         earlier = before.may_have_heard(now)
         patience = max(self._schedule.parameters.answer_timeout, LONG_SETTLED if earlier else 0.0)

@@ -15,7 +15,7 @@ from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.nodes.lean_trajectory import lean_plan_of
 from ballbal_ros.nodes.messages import BILLION, load_of, seconds, stamp_text
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
-from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.loads import Load, LoadChanges
 
 if TYPE_CHECKING:
     from ballbal_ros.nodes.balance import BalanceNode
@@ -32,7 +32,7 @@ class BalanceRequests:
         self._answers: dict[str, str] = {}
         self._answered = 0
         self._emergency = False
-        self._loads: list[tuple[float, Load]] = []
+        self._loads = LoadChanges()
         self._goal: Goal | None = None
         self._velocity_until = -1
         inputs = node.diagnostics.inputs
@@ -56,13 +56,13 @@ class BalanceRequests:
         """What ``balance_state`` tells of requests: the plan taken up last, or refused and why; how many were
         answered.
         """
-        counts = {"plans answered": str(self._answered), "load changes": str(len(self._loads))}
+        counts = {"plans answered": str(self._answered), "load changes": str(self._loads.count)}
         return {**self._answers, **counts}
 
     def loads_at(self, now: int) -> tuple[list[Load], list[tuple[float, Load]]]:
         """What the hands hold at ``now``, in ns, and the changes to come."""
-        held = {load.hand: load for stamp, load in self._loads if stamp <= now / BILLION + 1e-9}
-        return list(held.values()), [(stamp, load) for stamp, load in self._loads if stamp > now / BILLION + 1e-9]
+        time = now / BILLION + 1e-9
+        return self._loads.held_at(time), self._loads.after(time)
 
     def go_on(self, now: int) -> None:
         """Follow the goal, or the commanded velocity until it is too old; ``now`` in ns."""
@@ -85,11 +85,11 @@ class BalanceRequests:
     def _on_load(self, message: Any) -> None:
         try:
             stamp, load = load_of(message, self._node.description)
+            self._loads.add(stamp, load, self._node.ns / BILLION)
         except BallbalError as error:
             self._refuse("hand_load", error)
             return
         self._node.diagnostics.accept("hand_load")
-        self._loads = sorted([*self._loads, (stamp, load)], key=lambda change: change[0])
         if self._node.loop is not None:
             self._node.loop.set_load(load, stamp)
         self._node.say_state()

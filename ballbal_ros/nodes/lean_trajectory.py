@@ -17,6 +17,8 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.nodes.messages import seconds, to_duration
 from ballbal_ros.robot.arrays import Array
 
+LONGEST = 300.0
+_MOST = 1e6
 LEAN_JOINTS = ("lean_roll", "lean_pitch", "heading", "ball_x", "ball_y")
 
 
@@ -38,6 +40,8 @@ class Waypoints:
         self.times = np.array([seconds(point.time_from_start) for point in message.points])
         if len(self.times) and self.times[0] < 0.0:
             raise PlanError(topic, f"time_from_start of point 0 is {self.times[0]:g} s", "it takes 0 or more")
+        if len(self.times) and self.times.max() > LONGEST:
+            raise PlanError(topic, f"lasts {self.times.max():g} s", f"it takes at most {LONGEST:g} s: send it in parts")
         self.positions = np.array([self._row(p.positions, k, "positions") for k, p in enumerate(message.points)])
         self.rates = [self._optional(p.velocities, k, "velocities") for k, p in enumerate(message.points)]
         self.accelerations = [self._optional(p.accelerations, k, "accelerations") for k, p in enumerate(message.points)]
@@ -57,6 +61,8 @@ class Waypoints:
                 f"point {point}: {what} of {name} is {row[np.argmin(np.isfinite(row))]}",
                 "give finite numbers",
             )
+        if np.abs(row).max(initial=0.0) > _MOST:
+            raise PlanError(self.topic, f"point {point}: {what} hold {np.abs(row).max():g}", f"give at most {_MOST:g}")
         return row
 
     def _optional(self, values: Sequence[float], point: int, what: str) -> Array | None:
@@ -126,7 +132,7 @@ def lean_plan_of(message: JointTrajectory) -> LeanPlan:
 
 def _torques(message: JointTrajectory, order: Sequence[int]) -> Array:
     rows = [np.array(point.effort, float) for point in message.points]
-    if any(len(row) <= max(order) for row in rows):
+    if any(row.shape != rows[0].shape or len(row) <= max(order) for row in rows):
         raise PlanError("lean_plan", "has points without effort", "give the drive torque about x, y and z in each")
     torque = np.array(rows)[:, list(order)]
     if not np.isfinite(torque).all():

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Mapping
 from typing import Any
 
@@ -13,11 +14,13 @@ from ballbal_ros.nodes.diagnostics import values_of
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.plan_report import EARLIER
 
+_KEPT = 100
+
 
 def text_nanoseconds(text: str) -> int:
     """A stamp written ``sec.nanosec`` in ns; -1 for what is none."""
     sec, dot, nanosec = text.partition(".")
-    return int(sec) * BILLION + int(nanosec) if dot and sec.isdigit() and nanosec.isdigit() else -1
+    return int(sec) * BILLION + int(nanosec) if dot and sec.isdecimal() and nanosec.isdecimal() else -1
 
 
 class LockStep:
@@ -32,8 +35,8 @@ class LockStep:
         self._node, self._period = node, period_ns
         self._plans = self._reports = 0
         self._wanted = 1 if wait_for_plan else 0
-        self._commands: set[int] = set()
-        self._announced: set[int] = set()
+        self._commands: deque[int] = deque(maxlen=_KEPT)
+        self._announced: deque[int] = deque(maxlen=_KEPT)
         self._state, self._state_stamp = "", -1
         self._on_the_way = True
 
@@ -49,13 +52,14 @@ class LockStep:
             again = EARLIER in values and self._reports >= max(self._plans, self._wanted)
             self._reports += status.name == "arm_plan" and not again
             announced = text_nanoseconds(values.get("arm_command", ""))
-            if announced >= 0 and announced not in self._commands:
-                self._announced.add(announced)
+            if announced >= 0 and announced not in self._commands and announced not in self._announced:
+                self._announced.append(announced)
 
     def arm_command_came(self, stamp: int) -> None:
         """An arm command, by its stamp in ns."""
-        self._commands.add(stamp)
-        self._announced.discard(stamp)
+        self._commands.append(stamp)
+        if stamp in self._announced:
+            self._announced.remove(stamp)
 
     def balance_state_came(self, state: str, values: Mapping[str, str]) -> None:
         """What the balance node says of itself."""

@@ -79,7 +79,10 @@ class JointReader:
         """Take a message in; True where it names any of the joints. Raises :class:`BallbalError` for lengths or numbers
         that can't be.
         """
-        values = self._reader.read(raw)
+        try:
+            values = self._reader.read(raw)
+        except BallbalError as error:
+            raise BallbalError(self._topic, f"{error.where} {error.what}", error.remedy) from error
         names = values.names
         if names is self._last and len(values.position) == len(names) and math.isfinite(values.position.sum()):
             # All of them, in order, as the message before: the common case.
@@ -89,6 +92,8 @@ class JointReader:
         order = self._order.get(names)
         if order is None:
             here = [(i, self._names.index(name)) for i, name in enumerate(names) if name in self._names]
+            if len({k for _, k in here}) < len(here):
+                raise BallbalError(self._topic, "names a joint twice", "give each joint once")
             order = np.array([i for i, _ in here], int), np.array([k for _, k in here], int)
             if len(self._order) < 64:
                 self._order[names] = order

@@ -65,13 +65,18 @@ class Senses:
 
     def on_imu(self, raw: bytes) -> None:
         """Take serialised ``imu/data``; a field that the message marks as not reported (covariance -1) is left out."""
-        values, measured = self._imu.read(raw), self.measurement
+        measured = self.measurement
+        try:
+            values = self._imu.read(raw)
+        except BallbalError as error:
+            self._refuse(str(error))
+            return
         quat = values.quat_xyzw
         if not math.isfinite(sum(values.rate) + sum(values.acceleration)):
             self._refuse("a rate or acceleration is not finite; it was passed over: mend the sensor")
         elif values.frame != self._frame:
             self._refuse(f"frame_id is {values.frame!r}; robot.yaml says {self._frame!r}")
-        elif quat is not None and not abs(quat[0] ** 2 + quat[1] ** 2 + quat[2] ** 2 + quat[3] ** 2 - 1.0) < 1e-3:
+        elif quat is not None and not abs(math.hypot(*quat) - 1.0) < 5e-4:
             self._refuse(f"orientation {quat} is no unit quaternion; it was passed over: mend the sensor")
         else:
             measured.imu_quat_xyzw = quat

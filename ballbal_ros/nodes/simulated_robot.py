@@ -115,7 +115,11 @@ class SimulatedRobotNode(Node):
         self.create_service(SetBool, "~/stand", self._on_stand)
 
     def _on_drive_command(self, raw: bytes) -> None:
-        command = self._commands.read(raw)
+        try:
+            command = self._commands.read(raw)
+        except BallbalError as error:
+            self._diagnostics.refuse("drive_command", f"drive_command: {error}")
+            return
         self._answers.answered(command.stamp)
         if command.stamp != self._ns and not (self._real_time and self._started is not None):
             return
@@ -247,11 +251,11 @@ class SimulatedRobotNode(Node):
     def _on_load(self, message: Any) -> None:
         try:
             stamp, load = load_of(message, self.description, "simulated_load")
+            self._happenings.add_load(load, stamp)
         except BallbalError as error:
             self._diagnostics.refuse("simulated_load", str(error))
             return
         self._diagnostics.accept("simulated_load")
-        self._happenings.add_load(load, stamp)
 
     def _on_push(self, message: Any) -> None:
         force, torque, link = message.wrench.force, message.wrench.torque, message.header.frame_id

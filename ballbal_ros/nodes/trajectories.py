@@ -14,11 +14,12 @@ import numpy as np
 from builtin_interfaces.msg import Time
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
+from ballbal_ros.declaration import shown
 from ballbal_ros.errors import PlanError, nearest
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
-from ballbal_ros.nodes.lean_trajectory import Waypoints, column
+from ballbal_ros.nodes.lean_trajectory import LONGEST, Waypoints, column
 from ballbal_ros.nodes.messages import seconds, to_duration
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
@@ -111,7 +112,13 @@ def hand_wrenches_of(message: JointTrajectory, hands: Sequence[str]) -> list[Han
             topic, "a point's effort is not one finite number for each name", "give N for forces, N m for torques"
         )
     if len(times) < 1 or np.any(np.diff(times) <= 0.0):
-        raise PlanError(topic, f"has the times {times.tolist()}", "times must increase")
+        raise PlanError(topic, f"has the times {shown(times.tolist())}", "times must increase")
+    if (
+        abs(times[0]) > LONGEST
+        or abs(times[-1]) > LONGEST
+        or max(np.abs(row).max(initial=0.0) for row in efforts) > 1e6
+    ):
+        raise PlanError(topic, "lasts too long, or pulls too hard", f"give at most {LONGEST:g} s and 1e6 N")
     found: dict[str, Array] = {}
     for index, name in enumerate(message.joint_names):
         hand, column = known[name]

@@ -23,7 +23,7 @@ from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.robot.attitude import rotation_lean
-from ballbal_ros.robot.loads import Load
+from ballbal_ros.robot.loads import LoadChanges
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import Posture, WholeBody
 
@@ -43,7 +43,8 @@ class WholeBodyKinematicsNode(Node):
         self._every = 0 if own.rate <= 0.0 else round(BILLION / own.rate)
         self._marker_every = round(BILLION / own.marker_rate)
         self._last = self._last_marker = -BILLION
-        self._loads: list[tuple[float, Load]] = []
+        self._loads = LoadChanges()
+        self._changed, self._next_load = False, math.inf
         self._center = PointStamped()
         self._inertia = InertiaStamped()
         self._center.header.frame_id = self._inertia.header.frame_id = "base_link"
@@ -57,12 +58,12 @@ class WholeBodyKinematicsNode(Node):
 
     def _on_load(self, message: Any) -> None:
         try:
-            change = load_of(message, self.description)
+            self._loads.add(*load_of(message, self.description), self._last / BILLION)
         except BallbalError as error:
             self._diagnostics.refuse("hand_load", str(error))
             return
         self._diagnostics.accept("hand_load")
-        self._loads = sorted([*self._loads, change], key=lambda entry: entry[0])
+        self._changed = True
 
     def _on_joint_states(self, raw: bytes) -> None:
         try:
@@ -77,8 +78,11 @@ class WholeBodyKinematicsNode(Node):
             return
         self._last = now
         self._stamp_clock.go_to(now)
-        while self._loads and self._loads[0][0] <= now / BILLION + 1e-9:
-            self._body.set_load(self._loads.pop(0)[1])
+        time = now / BILLION + 1e-9
+        if self._changed or time >= self._next_load:
+            for load in self._loads.held_at(time):
+                self._body.set_load(load)
+            self._changed, self._next_load = False, min((at for at, _ in self._loads.after(time)), default=math.inf)
         self._publish(self._body.posture(self._arms.position), now)
 
     def _publish(self, posture: Posture, now: int) -> None:

@@ -19,6 +19,7 @@ from rclpy.serialization import deserialize_message
 from rosgraph_msgs.msg import Clock
 from sensor_msgs.msg import Imu, JointState
 
+from ballbal_ros.errors import BallbalError
 from ballbal_ros.robot.arrays import Array
 
 _LITTLE_ENDIAN = b"\x00\x01"
@@ -80,7 +81,7 @@ class JointStateReader:
         self._layouts: list[_Layout] = []
 
     def read(self, raw: bytes) -> JointValues:
-        """The values in a serialised message."""
+        """The values in a serialised message; raises :class:`BallbalError` where it is none."""
         for layout in self._layouts:
             if len(raw) == layout.size and raw.startswith(layout.prefix, _STAMP_END):
                 return _fast(raw, layout)
@@ -91,15 +92,34 @@ class JointStateReader:
         return values
 
 
-def _fast(raw: bytes, layout: _Layout) -> JointValues:
+def _stamped(raw: bytes) -> int:
     sec, nanosec = _stamp(raw, _START)
+    if sec < 0:
+        raise BallbalError("header.stamp", f"is {sec} s", "give the time of the measurement")
+    return int(sec * _BILLION + nanosec)
+
+
+def _fast(raw: bytes, layout: _Layout) -> JointValues:
+    stamp = _stamped(raw)
     position = np.frombuffer(raw, float, layout.counts[0], layout.ats[0])
     effort = np.frombuffer(raw, float, layout.counts[2], layout.ats[2])
-    return JointValues(sec * _BILLION + nanosec, layout.names, position, effort)
+    return JointValues(stamp, layout.names, position, effort)
+
+
+def _decoded(raw: bytes, kind: type) -> Any:
+    """rclpy's message; raises :class:`BallbalError` for bytes that are none, or a stamp before time began."""
+    try:
+        message: Any = deserialize_message(raw, kind)
+    except Exception as error:
+        what = f"{len(raw)} bytes that are no {kind.__name__} came"
+        raise BallbalError("message", what, "see who publishes them") from error
+    if message.header.stamp.sec < 0:
+        raise BallbalError("header.stamp", f"is {message.header.stamp.sec} s", "give the time of the measurement")
+    return message
 
 
 def _slow(raw: bytes) -> JointValues:
-    message = deserialize_message(raw, JointState)
+    message = _decoded(raw, JointState)
     stamp = message.header.stamp
     return JointValues(
         stamp.sec * _BILLION + stamp.nanosec,
@@ -149,7 +169,7 @@ class ImuReader:
         self._prefix, self._frame, self._at, self._size = b"", "", 0, 0
 
     def read(self, raw: bytes) -> ImuValues:
-        """The values in a serialised message."""
+        """The values in a serialised message; raises :class:`BallbalError` where it is none."""
         if self._size == len(raw) and raw.startswith(self._prefix, _STAMP_END):
             return self._fast(raw)
         values = _slow_imu(raw)
@@ -166,13 +186,12 @@ class ImuReader:
         return values
 
     def _fast(self, raw: bytes) -> ImuValues:
-        sec, nanosec = _stamp(raw, _START)
-        v = _imu(raw, self._at)
-        return ImuValues(sec * _BILLION + nanosec, self._frame, None if v[4] < 0.0 else v[0:4], v[13:16], v[25:28])
+        stamp, v = _stamped(raw), _imu(raw, self._at)
+        return ImuValues(stamp, self._frame, None if v[4] < 0.0 else v[0:4], v[13:16], v[25:28])
 
 
 def _slow_imu(raw: bytes) -> ImuValues:
-    message = deserialize_message(raw, Imu)
+    message = _decoded(raw, Imu)
     stamp, turn, rate, force = (
         message.header.stamp,
         message.orientation,

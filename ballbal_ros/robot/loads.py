@@ -8,6 +8,8 @@ import numpy as np
 from ballbal_ros.errors import ModelError
 from ballbal_ros.robot.arrays import Array, read_only
 
+MOST_TO_COME = 200
+
 
 def _vector(value: object) -> Array:
     return read_only(np.array(value, dtype=float))
@@ -35,6 +37,33 @@ class Load:
                 where, f"center in {self.hand} is {self.center.tolist()} m", "it takes three numbers within 2 m"
             )
         check_inertia(self.inertia, where, f"inertia in {self.hand}", point_allowed=True)
+
+
+class LoadChanges:
+    """What the hands hold, change by change, each with its stamp, s. What is past is kept as far as it still holds."""
+
+    def __init__(self) -> None:
+        self._changes: list[tuple[float, Load]] = []
+        self.count = 0
+
+    def add(self, stamp: float, load: Load, now: float) -> None:
+        """A hand's load from ``stamp`` on; raises :class:`ModelError` where too many are to come yet."""
+        to_come = self.after(now)
+        if stamp > now and len(to_come) >= MOST_TO_COME:
+            what = f"would be the {len(to_come) + 1}th change that is still to come"
+            raise ModelError("hand_load", what, f"announce at most {MOST_TO_COME}")
+        held = [(at, held) for at, held in self._changes if at <= now]
+        last = list({held.hand: (at, held) for at, held in held}.values())
+        self._changes = sorted([*last, *to_come, (stamp, load)], key=lambda change: change[0])
+        self.count += 1
+
+    def held_at(self, time: float) -> list[Load]:
+        """The load of each hand at a time."""
+        return list({load.hand: load for stamp, load in self._changes if stamp <= time}.values())
+
+    def after(self, time: float) -> list[tuple[float, Load]]:
+        """The changes after a time, in order."""
+        return [(stamp, load) for stamp, load in self._changes if stamp > time]
 
 
 def check_inertia(inertia: Array, where: str, what: str, *, point_allowed: bool = False) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 
 import numpy as np
@@ -15,6 +16,8 @@ from ballbal_ros.simulation.outside import true_wrenches
 from ballbal_ros.simulation.robot import SimulatedRobot
 
 _SOON = 1e-9
+_HARDEST = 1e5
+_MOST_TO_COME = 1000
 
 
 class Happenings:
@@ -38,12 +41,21 @@ class Happenings:
 
     def add_load(self, load: Load, time: float) -> None:
         """What is truly in a hand from ``time`` on."""
+        self._check_room("simulated_load", len(self._loads))
         self._loads = sorted([*self._loads, (time, load)], key=lambda entry: entry[0])
+
+    @staticmethod
+    def _check_room(what: str, waiting: int) -> None:
+        if waiting >= _MOST_TO_COME:
+            raise BallbalError(
+                what, f"would be one more than {_MOST_TO_COME} still to come", "send it nearer to its time"
+            )
 
     def add_push(self, time: float, during: float, link: str, at: Iterable[float], force: Iterable[float]) -> None:
         """A force [3], N in ``odom``, at a point [3], m, of a link, from ``time`` for ``during`` s; it takes the
         place of one before.
         """
+        self._check_room("push", len(self._pushes))
         self._pushes = sorted(
             [*self._pushes, (time, during, link, tuple(at), tuple(force))], key=lambda entry: entry[0]
         )
@@ -62,12 +74,12 @@ class Happenings:
         if not robot.description.model.existBodyName(link):
             links = [frame.name for frame in robot.description.model.frames if frame.type.name == "BODY"]
             raise BallbalError("push", f"unknown link {link!r}", nearest(link, links))
-        size = float(f @ f)
-        if not np.isfinite(f).all() or not np.isfinite(moment).all() or abs(f @ moment) > 1e-6 * max(size, 1e-12):
+        size = float(f @ f) if np.abs(f).max() < _HARDEST else math.nan
+        if not math.isfinite(size) or not np.abs(moment).max() < _HARDEST or abs(f @ moment) > 1e-6 * max(size, 1e-12):
             raise BallbalError(
                 "push",
                 f"is {f.tolist()} N with {moment.tolist()} N m",
-                "it takes finite numbers, the torque at right angles to the force",
+                f"it takes finite numbers below {_HARDEST:g}, the torque at right angles to the force",
             )
         at = np.cross(f, moment) / size if size > 0.0 else np.zeros(3)
         rotation = robot.data.body(link).xmat.reshape(3, 3)
