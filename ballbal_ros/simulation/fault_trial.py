@@ -121,10 +121,8 @@ class FaultTrial:
                 unset = False
             told = between.measure(robot.measurement())
             if told is not None:
-                effort = loop.tick(told)
+                effort = rehearsal.answer(told)
                 commands.see(effort, loop)
-            if robot.support and loop.guard.state == BALANCING:
-                robot.support = loop.supported = False
             self._follow(robot, loop)
             if now >= RUN_START:
                 here = robot.ball_position[:2]

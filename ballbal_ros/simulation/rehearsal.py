@@ -14,6 +14,7 @@ import numpy as np
 from ballbal_ros.balance.clock import is_looked_at
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
+from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.schedule import GainSchedule
 from ballbal_ros.motion.lean_plan import LeanPlan
@@ -158,13 +159,16 @@ class Rehearsal:
         for wrench in self._pulls:
             self.robot.pull(wrench.hand, *at_time(wrench, now))
 
-    def answer(self) -> Array:
-        """One tick of the loop, after what happens then: its efforts, which the robot has still to step with."""
+    def answer(self, measured: Measurement | None = None) -> Array:
+        """One tick of the loop, after what happens then: its efforts, which the robot has still to step with.
+
+        ``measured``: what comes to the loop in place of what the robot's sensors say.
+        """
         robot, loop = self.robot, self.loop
         self._happen(robot.time)
         if robot.time >= self._planning - 1e-9:
             self._offer_plan()
-        effort = loop.tick(robot.measurement())
+        effort = loop.tick(measured or robot.measurement())
         if robot.support and loop.guard.state == BALANCING and is_looked_at(round(1e9 * robot.time), self._period_ns):
             robot.support = loop.supported = False
         self._ticks += 1
