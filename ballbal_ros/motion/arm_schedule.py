@@ -86,10 +86,18 @@ class ArmSchedule:
         self._loads = LoadChanges()
         self._motion: Proposal | None = None
         self._standing: Sequence[HandWrench] = ()
+        self._found = 0
 
     def set_load(self, stamp: float, load: Load, now: float = -math.inf) -> None:
         """A hand's load from ``stamp``, s, on; raises :class:`BallbalError` where too many come after ``now``."""
         self._loads.add(stamp, load, now)
+
+    def find_load(self, stamp: float, load: Load, now: float = -math.inf) -> None:
+        """What the robot itself found in a hand, and believes from ``stamp``, s, on; nobody told it so. Raises as
+        :meth:`set_load` does.
+        """
+        self.set_load(stamp, load, now)
+        self._found += 1
 
     def forget_wrenches(self) -> None:
         """Nothing pulls at a hand any more, for plans to come."""
@@ -98,7 +106,7 @@ class ArmSchedule:
     @property
     def load_changes(self) -> int:
         """How many load changes it has been told of."""
-        return self._loads.count
+        return self._loads.count - self._found
 
     @property
     def idle(self) -> bool:

@@ -113,6 +113,7 @@ class ArmCompensationNode(Node):
     def _listen(self) -> None:
         inputs = self._diagnostics.inputs
         inputs.subscribe("hand_load", self._on_load)
+        inputs.subscribe("hand_load_estimate", self._on_found_load)
         inputs.subscribe("joint_states", self._on_joint_states, raw=True)
         inputs.subscribe("odom", self._on_odom)
         inputs.subscribe("balance_state", self._on_balance_state)
@@ -135,6 +136,17 @@ class ArmCompensationNode(Node):
             self._diagnostics.refuse("hand_load", str(error))
             return
         self._diagnostics.accept("hand_load")
+
+    def _on_found_load(self, message: Any) -> None:
+        """What balance found in a hand and believes; with stamp zero it is for information."""
+        try:
+            stamp, load = load_of(message, self.description, "hand_load_estimate")
+        except BallbalError as error:
+            self._diagnostics.refuse("hand_load_estimate", str(error))
+            return
+        self._diagnostics.accept("hand_load_estimate")
+        if stamp > 0.0:
+            self._schedule.find_load(stamp, load)
 
     def _on_joint_states(self, raw: bytes) -> None:
         try:

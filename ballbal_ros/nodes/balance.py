@@ -22,6 +22,7 @@ from ballbal_ros.nodes.balance_messages import BalanceMessages, pull_values, run
 from ballbal_ros.nodes.balance_requests import BalanceRequests
 from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
+from ballbal_ros.nodes.hand_loads import HandLoads
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
@@ -62,6 +63,7 @@ class BalanceNode(LifecycleNode):
         self._messages = BalanceMessages(self, self.description, None if own.lock_step else own.command_lifespan)
         self.diagnostics = Diagnostics(self, self.description.name, self._report)
         self.requests = BalanceRequests(self)
+        self.hand_loads = HandLoads(self)
         self._senses = Senses(self.description, self.parameters, own.lock_step, self._tick, self.diagnostics)
         self._tuning = BalanceTuning(self, parameters)
         inputs = self.diagnostics.inputs
@@ -89,6 +91,7 @@ class BalanceNode(LifecycleNode):
             self.requests.go_on(ns)
             self._messages.odometry(ns, loop)
             self._see_pull(ns, loop)
+            self.hand_loads.see(ns, loop)
         state = loop.guard.state
         due = state != self._said or ns - self._said_at >= _STATE_EVERY
         if due or (state in ("standby", "engaging") and is_looked_at(ns, self._period_ns)):
@@ -110,7 +113,7 @@ class BalanceNode(LifecycleNode):
         """Publish ``balance_state`` now."""
         self._said = "inactive" if self.loop is None or not self.active else self.loop.guard.state
         self._said_at = self.ns
-        self._messages.state(self.ns, self.loop, self.active, self.requests.notes)
+        self._messages.state(self.ns, self.loop, self.active, {**self.requests.notes, **self.hand_loads.notes})
 
     def _make_loop(self) -> BalanceLoop:
         arms = self._senses.arms
@@ -143,6 +146,7 @@ class BalanceNode(LifecycleNode):
 
     def _watch_pull(self, loop: BalanceLoop) -> None:
         self._pull = PullWatch(loop.body, every=self._odom_every / self.parameters.loop.rate)
+        self.hand_loads.begin(loop, self.ns)
 
     def on_activate(self, state: Any) -> TransitionCallbackReturn:
         """From the next measurement on the guard may let torque out."""
@@ -204,6 +208,7 @@ class BalanceNode(LifecycleNode):
             return OK, "inactive", values
         state = loop.guard.state
         values.update(running_values(loop, self._messages.torque_limit, self._most_torque), **self.margins)
+        values.update(self.hand_loads.notes)
         values["last tick"] = max(self.ns, 0) / BILLION
         self._most_torque = 0.0
         values.update(pull_values(self._pull, self.description.parameters.hands.links))

@@ -62,6 +62,7 @@ TOPICS: dict[str, tuple[type, Kind]] = {
     "ball_plan": (JointTrajectory, PLAN),
     "hand_wrench_plan": (JointTrajectory, PLAN),
     "hand_load": (InertiaStamped, LOADS),
+    "hand_load_estimate": (InertiaStamped, PLAN),
     "arm_command": (JointTrajectory, PLAN),
     "lean_plan": (JointTrajectory, PLAN),
     "plan_report": (DiagnosticArray, PLAN),

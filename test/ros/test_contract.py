@@ -41,7 +41,7 @@ HEARD = (
 )
 PUBLISHED = {
     "simulated_robot": ("/clock", "imu/data", "joint_states", "drive_states", "support", "ground_truth"),
-    "balance": ("drive_command", "drive_effort", "odom", "balance_state"),
+    "balance": ("drive_command", "drive_effort", "odom", "balance_state", "hand_load_estimate"),
     "arm_compensation": ("lean_plan", "arm_command", "plan_report"),
     "whole_body_kinematics": ("center_of_mass", "body_inertia", "com_marker"),
 }
@@ -53,7 +53,7 @@ SUBSCRIBED = {
     ),
     "arm_compensation": (
         *("arm_plan", "ball_plan", "hand_wrench_plan", "hand_load", "joint_states", "odom", "balance_state"),
-        "emergency_stop",
+        *("emergency_stop", "hand_load_estimate"),
     ),
     "whole_body_kinematics": ("joint_states", "hand_load"),
 }
