@@ -141,12 +141,12 @@ class ArmCompensationNode(Node):
         """What balance found in a hand and believes; with stamp zero it is for information."""
         try:
             stamp, load = load_of(message, self.description, "hand_load_estimate")
+            if stamp > 0.0:
+                self._schedule.find_load(stamp, load, self._now)
         except BallbalError as error:
             self._diagnostics.refuse("hand_load_estimate", str(error))
             return
         self._diagnostics.accept("hand_load_estimate")
-        if stamp > 0.0:
-            self._schedule.find_load(stamp, load)
 
     def _on_joint_states(self, raw: bytes) -> None:
         try:
