@@ -182,6 +182,13 @@ _ROWS = (
     Answer(CLOCK, "late tick", "up to 0.1 s since the tick before", _steps((0.0, COAST)), _LOOP),
     Answer(
         CLOCK,
+        "overload",
+        "by the wall clock ticks come more than 0.05 s late, second after second (not in lock-step)",
+        _steps((0.0, GO_ON), (2.0, STOP)),
+        _NODE,
+    ),
+    Answer(
+        CLOCK,
         "jump",
         "three stamps in order from elsewhere: time goes on from there, plans are forgotten",
         _steps((0.0, STOP)),

@@ -24,6 +24,7 @@ from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
 from ballbal_ros.nodes.hand_loads import HandLoads
 from ballbal_ros.nodes.messages import BILLION
+from ballbal_ros.nodes.pace import TOO_LATE
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.senses import Senses
 from ballbal_ros.nodes.stamp_clock import StampClock
@@ -32,6 +33,7 @@ from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import WholeBody
 
 _STATE_EVERY = BILLION // 5
+_LATE_SECONDS = 2
 _SUCCESS, _FAILURE = TransitionCallbackReturn.SUCCESS, TransitionCallbackReturn.FAILURE
 
 
@@ -92,6 +94,9 @@ class BalanceNode(LifecycleNode):
             self._messages.odometry(ns, loop)
             self._see_pull(ns, loop)
             self.hand_loads.see(ns, loop)
+        if self.diagnostics.pace.late_seconds >= _LATE_SECONDS and not self._lock_step and loop.guard.sends:
+            # Nobody can balance on a machine that is busy with something else: no new motion, and it is told.
+            loop.stop(f"the loop comes late by more than {TOO_LATE:g} s each second: this computer is overloaded")
         state = loop.guard.state
         due = state != self._said or ns - self._said_at >= _STATE_EVERY
         if due or (state in ("standby", "engaging") and is_looked_at(ns, self._period_ns)):

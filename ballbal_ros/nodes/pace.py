@@ -11,6 +11,7 @@ from rclpy.node import Node
 from ballbal_ros.nodes.topics import subscribe
 
 NEVER = "never"
+TOO_LATE = 0.05
 
 
 class Pace:
@@ -18,13 +19,15 @@ class Pace:
 
     A run is late by as much as it comes longer after the one before than their times say: by the stamps that it
     answers, or by the period of a timer. In lock-step, where stamps don't go by the wall clock, that says nothing.
-    ``count`` is how often it ran in the last whole second.
+    ``count`` is how often it ran in the last whole second, ``late_seconds`` how many whole seconds on end it came late
+    by more than :data:`TOO_LATE`, s.
     """
 
     def __init__(self) -> None:
         self.count = 0
         self._told: dict[str, float] = {}
         self._ever = False
+        self.late_seconds = 0
         self._runs, self._since = 0, time.monotonic()
         self._late = self._worst = 0.0
         self._before: float | None = None
@@ -61,6 +64,7 @@ class Pace:
             "late mean ms": 1e3 * self._late / max(runs, 1),
             "late worst ms": 1e3 * self._worst,
         }
+        self.late_seconds = self.late_seconds + 1 if self._worst > TOO_LATE else 0
         self.count, self._runs, self._since = runs, 0, now
         self._late = self._worst = 0.0
 
