@@ -256,6 +256,9 @@ _ROWS = (
     Answer(
         ODOM, "absurd", "not finite, or no unit quaternion: ball plans begin where it was last", _REFUSED, _ARMS_NODE
     ),
+    Answer(
+        "hand_load_estimate", "impossible", "unknown hand, impossible mass or inertia, not finite", _REFUSED, _ARMS_NODE
+    ),
     Answer(LOAD, "unknown hand", "frame_id is no hand of robot.yaml", _REFUSED, _NODE),
     Answer(
         LOAD,
