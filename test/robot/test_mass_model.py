@@ -8,7 +8,7 @@ import pytest
 
 from ballbal_ros.commands.files import read_robot
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.parameter_files import read_values
+from ballbal_ros.parameter_files import check_may_change, edits, read_values
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.whole_body import WholeBody
 from helpers.robots import CONFIG, shelver
@@ -73,3 +73,11 @@ def test_the_reader_of_config_watch_takes_it_whole(tmp_path: Path):
     where = folder(tmp_path, HEAD.format(link="battery", inertia=POSSIBLE))
     values = read_values(where / "robot.yaml")
     assert values["mass_model.links"] == ["battery"] and values["mass_model.battery.mass"] == 12.0
+
+
+def test_a_mass_model_does_not_change_under_a_standing_robot(tmp_path: Path):
+    """While nodes run, config_watch refuses it in one line: it comes into force when they start."""
+    where = folder(tmp_path, HEAD.format(link="battery", inertia=POSSIBLE)) / "robot.yaml"
+    changes = edits(where, read_values(CONFIG / "shelver" / "robot.yaml"), read_values(where))
+    with pytest.raises(BallbalError, match=r"mass_model.battery.mass .* can't change while the nodes run"):
+        check_may_change(where, changes)
