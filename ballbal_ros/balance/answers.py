@@ -25,6 +25,7 @@ SENSES = "imu and drive_states"
 ARMS, CLOCK, LEAN, SUPPLY = "joint_states", "clock", "lean and ball", "supply"
 PLAN, LOAD, VELOCITY, GOAL = "lean_plan", "hand_load", "cmd_vel", "goal_pose"
 ARM_PLAN, BALL_PLAN, WRENCH_PLAN, STATE, ODOM = "arm_plan", "ball_plan", "hand_wrench_plan", "balance_state", "odom"
+ARM_STREAM = "arm_stream"
 EMERGENCY, SUPPORT, PARAMETERS, COMMAND = "emergency_stop", "support", "parameters", "drive_command"
 
 
@@ -249,6 +250,27 @@ _ROWS = (
     ),
     Answer(
         WRENCH_PLAN, "malformed", "an unknown hand or part, times that don't increase, not finite", _REFUSED, _ARMS_NODE
+    ),
+    Answer(
+        ARM_STREAM,
+        "malformed",
+        "an unknown joint, numbers not finite or beyond a joint's limits, a stamp far ahead: the sample is passed over",
+        _REFUSED,
+        _ARMS_NODE,
+    ),
+    Answer(
+        ARM_STREAM,
+        "jump",
+        "begins elsewhere than the arms are, or goes on further than the joint could: the sample is passed over",
+        _REFUSED,
+        _ARMS_NODE,
+    ),
+    Answer(
+        ARM_STREAM,
+        "silent",
+        "the arms come to rest within stream.stop, as the lean plan in force has it",
+        _steps((0.0, HOLD)),
+        _ARMS_NODE,
     ),
     Answer(
         STATE, "silent", "no acknowledgement of a plan within answer_timeout: the arms don't move", _REFUSED, _ARMS_NODE

@@ -103,6 +103,15 @@ class ArmSchedule:
         """Nothing pulls at a hand any more, for plans to come."""
         self._standing = ()
 
+    def held_at(self, time: float) -> list[Load]:
+        """What the hands hold at a time, s, as far as it was told of or found."""
+        return list(self._loads.held_at(time + _SOON))
+
+    @property
+    def pulled(self) -> bool:
+        """Whether a plan in force, or the last one, leaves something that pulls at a hand."""
+        return any(np.any(wrench.force[-1]) or np.any(wrench.moment[-1]) for wrench in self._standing)
+
     @property
     def load_changes(self) -> int:
         """How many load changes it has been told of."""

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import attrs
 import numpy as np
 
@@ -82,6 +84,13 @@ class LeanPlan:
         lean = _quintic(self.lean, self.lean_rate, self.lean_acceleration, index, s, step)
         ball = _quintic(self.ball, self.ball_rate, self.ball_acceleration, index, s, step)
         return lean[0][0], lean[1][0], ball[0][0], ball[1][0]
+
+    def until(self, time: float) -> LeanPlan:
+        """The plan up to a time, s."""
+        nodes = int(np.searchsorted(self.times, time + 1e-9))
+        arrays = [field.name for field in attrs.fields(LeanPlan) if field.name not in ("lead_in", "uses")]
+        cut: dict[str, Any] = {name: getattr(self, name)[:nodes] for name in arrays}
+        return attrs.evolve(self, **cut)
 
     def table(self, period: float, torque_ahead: float = 0.0) -> Array:
         """References [M, 17] at 0, period, 2 period … to the end: quintic between the grid's points, torque linear.

@@ -65,6 +65,13 @@ class StreamParameters:
         meaning="time by which the arms follow arm_stream later: the planner's preview",
         runtime=True,
     )
+    measured: bool = parameter(
+        "bool",
+        False,
+        unit="-",
+        meaning="while nothing is planned or streamed, plan the lean from joint_states: arms that are moved by hand",
+        runtime=True,
+    )
     interval: float = parameter(
         "double", 0.04, unit="s", low=0.01, high=0.2, meaning="time from one lean plan to the next", runtime=True
     )

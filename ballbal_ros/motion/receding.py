@@ -110,7 +110,9 @@ class RecedingPlanner:
         self._lean, self._before = solution.lean, now
         none = [np.zeros((nodes, 3)) for _ in range(3)]
         plan = made_plan(description, self.parameters, 0.0, times, (problem, solution), ball, none)
-        return attrs.evolve(plan, ball=plan.ball - plan.ball[0])
+        plan = attrs.evolve(plan, ball=plan.ball - plan.ball[0])
+        # Nothing moves beyond the window: the rest has only kept the lean bounded.
+        return plan.until(window + self.step)
 
     def _guess(self, times: Array, now: float) -> Array | None:
         """The plan before, carried on; None where there is none that reaches here."""

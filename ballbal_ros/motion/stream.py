@@ -16,7 +16,8 @@ from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
-_KEPT = 0.5
+_KEPT, _LONG = 0.5, 3.0
+_MOVES = 2e-3
 _ALIKE = 1e-9
 # rad, rad/s: less than this of the arms' motion needs no new plan.
 _RESTS = 1e-3
@@ -63,14 +64,29 @@ class ArmStream:
         """Time of the last sample, s; None before the first."""
         return self._rows[-1][0] if self._rows else None
 
+    @property
+    def last(self) -> Array | None:
+        """The last position [n]; None before the first."""
+        return self._rows[-1][1] if self._rows else None
+
+    @property
+    def moves(self) -> bool:
+        """Whether the arms have moved within the last seconds."""
+        return bool(self._rows) and bool(np.abs(self._rows[-1][1] - self._rows[0][1]).max() > _MOVES)
+
     def clear(self) -> None:
         """Forget all."""
         self._rows.clear()
 
     def take(self, time: float, position: Array, rate: Array | None = None) -> bool:
-        """Take a sample; without a rate it is found from its neighbours. False for one not later than the last."""
+        """Take a sample; a rate that is not there, or NaN, is found from its neighbours.
+
+        False for one that is not later than the last.
+        """
         if self._rows and time <= self._rows[-1][0] + _ALIKE:
             return False
+        while len(self._rows) > 3 and self._rows[2][0] < time - _LONG:
+            self._rows.popleft()
         self._rows.append((time, position.copy(), None if rate is None else rate.copy()))
         return True
 
@@ -84,24 +100,25 @@ class ArmStream:
         rate = np.gradient(position, times, axis=0)
         for k, row in enumerate(rows):
             if row[2] is not None:
-                rate[k] = row[2]
+                rate[k] = np.where(np.isnan(row[2]), rate[k], row[2])
         return SampledPath(times, position, rate, np.gradient(rate, times, axis=0))
 
-    def held(self, begin: float, ahead: float, stop: float) -> HeldPath:
+    def held(self, begin: float, ahead: float, longest: float, stop: float) -> HeldPath:
         """What is known from ``begin``, s, on, and a smooth stop beyond it within ``stop`` s.
 
-        Where less than ``ahead`` s are known, they are taken to go on at the last rate until then, as far as the
-        joints' limits let them.
+        Where less than ``ahead`` s are known, they are taken to go on at the last rate until then, for ``longest`` s at
+        most and as far as the joints' limits let them.
         """
         path, low, high = self.path(begin), self._description.position_low, self._description.position_high
-        more = ahead - path.duration
+        more = min(ahead - path.duration, longest)
         if more > _ALIKE:
-            goes = np.clip(path.position[-1] + more * path.rate[-1], low, high)
+            faster = path.rate[-1] + more * path.acceleration[-1]
+            goes = np.clip(path.position[-1] + 0.5 * more * (path.rate[-1] + faster), low, high)
             path = SampledPath(
-                np.append(path.times, ahead),
+                np.append(path.times, path.duration + more),
                 np.vstack((path.position, goes)),
-                np.vstack((path.rate, path.rate[-1])),
-                np.vstack((path.acceleration, 0.0 * goes)),
+                np.vstack((path.rate, faster)),
+                np.vstack((path.acceleration, path.acceleration[-1])),
             )
         return HeldPath.of(path, path.duration, stop, low, high)
 
@@ -114,14 +131,21 @@ class StreamCompensation:
         self.stream = ArmStream(description)
         self._planner = RecedingPlanner(WholeBody(description), parameters, 0.5 * parameters.stream.interval)
         self._last: tuple[float, LeanPlan, HeldPath] | None = None
+        self._before: tuple[float, LeanPlan, HeldPath] | None = None
 
     def set_load(self, load: Load) -> None:
         """What a hand holds from now on."""
         self._planner.body.set_load(load)
 
     def begin(self) -> None:
-        """The next plan begins at rest, in balance."""
+        """Forget the stream; the next plan begins at rest, in balance."""
         self._last = None
+        self._before = None
+        self.stream.clear()
+
+    def take_back(self) -> None:
+        """The last plan was refused: the one before it goes on."""
+        self._last = self._before
 
     def next(self, now: float) -> tuple[float, LeanPlan] | None:
         """Start, s, and lean plan from what is known now; None while too little is, or nothing new since the last.
@@ -132,12 +156,23 @@ class StreamCompensation:
         if len(self.stream) < 2:
             return None
         begin = now + settings.latency
-        arms = self.stream.held(begin, settings.interval, settings.stop)
+        longest = settings.latency + settings.interval
+        arms = self.stream.held(begin, settings.interval, longest, settings.stop)
         if self._nothing_new(begin, arms):
             return None
         plan = self._planner.plan(self._start(begin, arms), arms, begin)
-        self._last = begin, plan, arms
+        self._before, self._last = self._last, (begin, plan, arms)
         return begin, plan
+
+    @property
+    def until(self) -> float:
+        """When the last plan ends, s; long ago without any."""
+        return -np.inf if self._last is None else self._last[0] + self._last[1].duration
+
+    @property
+    def arms(self) -> tuple[float, HeldPath] | None:
+        """What the last plan takes the arms to do, and from when on, s."""
+        return None if self._last is None else (self._last[0], self._last[2])
 
     def _nothing_new(self, begin: float, arms: HeldPath) -> bool:
         """Whether the arms rest where the plan before took them to come to rest: then that one brings the ball back."""

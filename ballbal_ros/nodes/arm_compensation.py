@@ -24,6 +24,7 @@ from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
+from ballbal_ros.nodes.arm_streaming import ArmStreaming
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, number_of, values_of
 from ballbal_ros.nodes.lean_trajectory import lean_plan_message
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds, stamp_text, to_time
@@ -38,6 +39,7 @@ from ballbal_ros.nodes.trajectories import (
     hand_wrenches_of,
     path_message,
 )
+from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.parameters import RobotParameters
 
@@ -106,6 +108,14 @@ class ArmCompensationNode(Node):
         self._to_arms = publisher(self, "arm_command")
         self._reports = PlanReports(self, self.description.name)
         self._diagnostics = Diagnostics(self, self.description.name, self._report)
+        self._streaming = ArmStreaming(
+            self.description,
+            self._schedule,
+            self._to_balance,
+            self._to_arms,
+            self._check_stream,
+            self._diagnostics.refuse,
+        )
         self._listen()
         steady = RosClock(clock_type=ClockType.STEADY_TIME)
         self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
@@ -121,9 +131,20 @@ class ArmCompensationNode(Node):
         inputs.subscribe("hand_wrench_plan", self._on_wrench_plan)
         inputs.subscribe("emergency_stop", self._on_emergency_stop)
         inputs.subscribe("arm_plan", self._on_arm_plan)
+        inputs.subscribe("arm_stream", self._streaming.take)
 
     def _change(self, parameters: NodeParameters) -> None:
         self._schedule.parameters = parameters["compensation.yaml"]
+        self._streaming.change()
+
+    def _check_stream(self) -> Array:
+        """Where the arms are [n]; raises :class:`PlanRefused` where nothing may be streamed now."""
+        self._check_ready("arm_stream")
+        if self._asked is not None or self._schedule.busy_until(self._now) is not None:
+            raise PlanRefused("arm_stream", "came while a planned motion is in force", "let that one end first")
+        if self._schedule.pulled:
+            raise PlanRefused("arm_stream", "came while something pulls at a hand", "that is not reckoned with yet")
+        return self._arms.position.copy()
 
     @property
     def _now(self) -> float:
@@ -154,6 +175,9 @@ class ArmCompensationNode(Node):
                 self._stamp_clock.go_to(self._arms.stamp)
         except BallbalError as error:
             self._diagnostics.refuse("joint_states", str(error))
+            return
+        # Streamed arms go by the joint states' pace: theirs is the time that counts.
+        self._streaming.go_on(self._arms.stamp / BILLION, self._arms)
 
     def _on_odom(self, message: Any) -> None:
         place, turn = message.pose.pose.position, message.pose.pose.orientation
@@ -231,6 +255,8 @@ class ArmCompensationNode(Node):
         if not message.points:
             return self._stop("arm_plan")
         self._check_ready("arm_plan")
+        self._streaming.end("an arm_plan came")
+        self._streaming.check_over("arm_plan")
         waypoints = ArmWaypoints.of(message, self.description, "arm_plan")
 
         def path(state: ArmState) -> ArmPath:
@@ -299,10 +325,11 @@ class ArmCompensationNode(Node):
 
     def _on_balance_state(self, message: Any) -> None:
         values = values_of(message)
+        self._streaming.heard(values)
         self._state, self._answered = message.message, values.get("plans answered", "")
         self._before.heard(time.monotonic())
         asked = self._asked
-        if asked is None and self._schedule.idle:
+        if asked is None and self._schedule.idle and self._streaming.idle:
             self._before.until = number_of(values.get("plan ends", ""))
         if asked is None or self._answered == asked.answered:
             self._go_on()
@@ -333,6 +360,7 @@ class ArmCompensationNode(Node):
         self._emergency = bool(message.data)
         if not began:
             return
+        self._streaming.end("emergency stop")
         stamp = stamp_text(to_time(self._now))
         if self._asked is not None:
             self._give_up("arm_plan: overtaken by an emergency stop")
@@ -353,6 +381,7 @@ class ArmCompensationNode(Node):
             "balance": self._state or "not heard of",
             "arms known": bool(np.isfinite(self._arms.position).all()),
             "plans waiting": len(self._waiting) + (self._asked is not None),
+            **self._streaming.values(),
         }
         if self._emergency:
             return OK, "emergency stop: no plan is taken", values

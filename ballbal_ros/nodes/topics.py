@@ -59,6 +59,7 @@ TOPICS: dict[str, tuple[type, Kind]] = {
     "drive_command": (JointState, DRIVE_COMMAND),
     "drive_effort": (Float64MultiArray, COMMAND),
     "arm_plan": (JointTrajectory, PLAN),
+    "arm_stream": (JointState, JOINTS),
     "ball_plan": (JointTrajectory, PLAN),
     "hand_wrench_plan": (JointTrajectory, PLAN),
     "hand_load": (InertiaStamped, LOADS),

@@ -53,7 +53,7 @@ SUBSCRIBED = {
     ),
     "arm_compensation": (
         *("arm_plan", "ball_plan", "hand_wrench_plan", "hand_load", "joint_states", "odom", "balance_state"),
-        *("emergency_stop", "hand_load_estimate"),
+        *("emergency_stop", "hand_load_estimate", "arm_stream"),
     ),
     "whole_body_kinematics": ("joint_states", "hand_load"),
 }
