@@ -6,6 +6,7 @@ Whenever it pauses, or a lean plan is refused, the arms come to rest as the lean
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Callable, Mapping
 from typing import Any
 
@@ -28,7 +29,7 @@ _KNOT = 0.02
 _APART = 0.05
 _SOON = 1e-9
 _MEASURED_EVERY = 0.01
-_REFUSALS = 3
+_REFUSALS, _UNANSWERED = 3, 50
 _AHEAD = 1.0
 # s from where a stream was ended to where one may begin anew.
 _REST = 1.0
@@ -65,7 +66,9 @@ class ArmStreaming:
         self._held = []
         self._streams = self._agreed = False
         self._next = self._next_sample = -np.inf
-        self._plans, self._failed, self._asked = 0, 0, ""
+        self._plans, self._failed = 0, 0
+        # Stamps of lean plans that balance has not answered: an answer may come after the next plan is asked for.
+        self._asked: deque[str] = deque(maxlen=_UNANSWERED)
         self._why, self._again = "", -np.inf
 
     def take(self, message: Any) -> None:
@@ -172,7 +175,7 @@ class ArmStreaming:
             return
         begin, plan = made
         self._plans += 1
-        self._asked = stamp_text(to_time(begin))
+        self._asked.append(stamp_text(to_time(begin)))
         self._to_balance.publish(lean_plan_message(plan, to_time(begin)))
         if self._streams and self._agreed:
             self._command(begin)
@@ -185,16 +188,22 @@ class ArmStreaming:
 
     def heard(self, values: Mapping[str, str]) -> None:
         """What ``balance_state`` says: a plan taken up, or refused."""
-        if not self._asked:
-            return
-        if values.get("plan") == self._asked:
-            self._agreed, self._failed, self._asked = True, 0, ""
-        elif values.get("refused plan") == self._asked:
-            self._asked = ""
-            self._compensation.take_back()
+        taken, refused = values.get("plan", ""), values.get("refused plan", "")
+        if taken in self._asked:
+            self._agreed, self._failed = True, 0
+            self._forget(taken)
+        elif refused in self._asked:
+            if refused == self._asked[-1]:
+                self._compensation.take_back()
+            self._forget(refused)
             self._failed += 1
             if self._failed >= _REFUSALS:
                 self._stop(values.get("refusal", "refused by the balance node"))
+
+    def _forget(self, answered: str) -> None:
+        """This plan, and what was asked for before it, is answered."""
+        while self._asked.popleft() != answered:
+            pass
 
     def _stop(self, why: str) -> None:
         self._streams, self._why, self._again = False, why, self._now + _REST

@@ -88,7 +88,7 @@ def test_streamed_arms_follow_and_it_stays_up(ros_domain_id: int) -> None:
     How many come in the simulated second, and in time, depends on the machine, as simulated time does not wait for
     them. So what is held here is coarse; the travel itself is tested in-process.
     """
-    changes = [("arm_compensation", {"stream__delay": DELAY, "stream__latency": 0.2})]
+    changes = [("arm_compensation", {"stream__delay": DELAY, "stream__latency": 0.2, "stream__interval": 0.08})]
     with running_stack(ros_domain_id, {"duration": 0.0}, changes) as processes, listening(ros_domain_id) as listener:
         listener.watched = processes
         operator = Operator(listener)
@@ -101,14 +101,14 @@ def check(operator: Operator, begin: float, end: float) -> None:
     plans = [deserialize_message(raw, TOPICS["lean_plan"][0]) for raw in operator.plans]
     starts = np.array([seconds(plan.header.stamp) for plan in plans])
     during = starts[(starts > begin + RESTS) & (starts < begin + RESTS + MOVES)]
-    assert len(during) >= 4.0 * MOVES, report(operator)
+    assert len(during) >= 3.0 * MOVES, report(operator)
     assert operator.angle() == pytest.approx(ANGLE, abs=0.01)
     truth = [deserialize_message(raw, TOPICS["ground_truth"][0]) for raw in operator.truth]
     places = np.array([(seconds(m.header.stamp), m.pose.pose.position.x, m.pose.pose.position.y) for m in truth])
     there = places[(places[:, 0] > begin) & (places[:, 0] < end)]
     travel = 1e3 * np.hypot(*(there[:, 1:] - there[0, 1:]).T)
     assert travel.max() <= 100.0, report(operator)
-    assert operator.state == "balancing"
+    assert operator.state == "balancing", report(operator)["balance_state"]
 
 
 def report(operator: Operator) -> dict[str, Any]:
