@@ -181,7 +181,7 @@ class ArmCompensationNode(Node):
 
     def _on_odom(self, message: Any) -> None:
         place, turn = message.pose.pose.position, message.pose.pose.orientation
-        if not (math.isfinite(place.x + place.y) and abs(turn.x**2 + turn.y**2 + turn.z**2 + turn.w**2 - 1.0) < 1e-2):
+        if not (math.isfinite(place.x + place.y) and abs(math.hypot(turn.x, turn.y, turn.z, turn.w) - 1.0) < 5e-3):
             self._diagnostics.refuse("odom", "odom: a place that is not finite, or no unit quaternion: passed over")
             return
         self._diagnostics.accept("odom")
