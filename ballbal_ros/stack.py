@@ -125,7 +125,7 @@ def robot_stack(
     # Two robots of one domain have a clock each.
     remap = (("/clock", f"{namespace}/clock"),) if namespace and sim_time else ()
     robot = folder.file("robot.yaml")
-    watcher = NodeStart("config_watch", (), {"folder": str(folder.path)})
+    watcher = NodeStart("config_watch", (), {"folder": str(folder.path)}, respawn=True)
     nodes = [
         NodeStart("whole_body_kinematics", (robot,), common, remap, respawn=True),
         NodeStart("arm_compensation", (robot, folder.file("compensation.yaml")), common, remap, respawn=True),
