@@ -28,7 +28,7 @@ demo:  ## the whole stack, headless: the robot shelves a book and its ball stays
 # Lint and types hold for one set of libraries; the other set is there to run.
 test: $(if $(filter kilted,$(SET)),lint)  ## lint, types and tests, under 10 minutes
 	$(SET_UP) test
-	@$(VENV)/bin/python -m pytest -q --ignore=test/ros $(ARGS)
+	@$(VENV)/bin/python -m pytest -q -n 2 --dist loadfile --ignore=test/ros --ignore=test/benchmark $(ARGS)
 	@$(VENV)/bin/python -m pytest -q test/ros $(ARGS)
 
 lint:  ## ruff and mypy

@@ -177,7 +177,10 @@ def test_a_blend_is_between_its_two_ends_in_every_term():
     share = np.linspace(0.0, 1.0, 5)
     moment = Moment.random(9)
     outside = OutsideMotion(
-        *(np.repeat(getattr(moment.outside, f.name), 5, axis=0) for f in attrs.fields(OutsideMotion))
+        *(
+            None if (value := getattr(moment.outside, f.name)) is None else np.repeat(value, 5, axis=0)
+            for f in attrs.fields(OutsideMotion)
+        )
     )
     lean = np.repeat(moment.lean[None], 5, axis=0)
     mixed, none, whole = (rows(terms, outside, lean) for terms in (light.blend(heavy, share), light, heavy))

@@ -156,7 +156,11 @@ def test_a_slow_arm_servo_is_planned_with():
     slow = {"arm_servo": "position", "arm_servo_bandwidth": 40.0}
     parameters = files().description.parameters
     arm = attrs.evolve(parameters.arm, servo="position", servo_bandwidth=40.0)
-    aware = attrs.evolve(files().description, parameters=attrs.evolve(parameters, arm=arm))
+    aware = attrs.evolve(
+        files().description,
+        parameters=attrs.evolve(parameters, arm=arm),
+        servo_bandwidth=np.full_like(files().description.servo_bandwidth, 40.0),
+    )
     known = attrs.evolve(changed(simulation=slow), description=aware)
     (planned,), (unaware,) = (
         peaks(rehearsed(story("reach"), "planned", robot=robot)) for robot in (known, changed(simulation=slow))
