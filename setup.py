@@ -89,6 +89,7 @@ setup(
             "mypy>=1.10",
             "pytest>=8",
             "pytest-benchmark>=4",
+            "pytest-rerunfailures>=14",
             "pytest-xdist>=3",
             "ruff>=0.6",
             "scipy-stubs>=1.14; python_version >= '3.11'",
