@@ -145,13 +145,16 @@ class BalanceLoop:
         """Take a load into the mass model, at once or from a stamp to come on, s."""
         self._load_changes = sorted([*self._load_changes, (stamp, load)], key=lambda change: change[0])
 
-    def adopt_load(self, load: Load) -> bool:
+    def adopt_load(self, load: Load, ahead: float = math.inf) -> bool:
         """Believe a load that the robot has found out by itself, and stood with all the time: what the trim bore of it
         goes over to the mass model, and moves with the arms from now on, without a jump in torque. Not while a plan
-        is in force, which was made without it: False then.
+        is in force, which was made without it, or begins within ``ahead`` s: False then. A plan that waits should be
+        replaced.
         """
         reference, arms = self.reference, self.senses.arm_position
-        if reference.has_plan or not reference.follow_arms:
+        coming = reference.next_plan(self.clock.now)
+        busy = reference.has_plan and (coming is None or coming[0] - self.clock.now < ahead)
+        if busy or not reference.follow_arms:
             return False
         before = self.body.posture(arms)
         self.body.set_load(load, "found load")

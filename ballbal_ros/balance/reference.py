@@ -52,6 +52,10 @@ class Reference:
         """How many plans are in force or wait for their time."""
         return len(self._tables)
 
+    def next_plan(self, now: float) -> tuple[float, Array] | None:
+        """Stamp, s, and table of the plan that comes next, where one waits and none is in force at ``now``, s."""
+        return self._tables[0] if self._tables and self._tables[0][0] > now else None
+
     def engage(self, arm_position: Array) -> None:
         """Station here, heading zero; plans whose time is to come stay."""
         self.station, self.frame_heading = [0.0, 0.0], 0.0

@@ -58,7 +58,8 @@ class Wanted:
 @attrs.frozen(eq=False)
 class Proposal:
     """A motion ready to go: the arms' path from ``arms_start``, s, on, and the lean plan from ``lean_start`` on (or
-    none). ``wrenches``: what the world is then planned to exert on the hands, their times as ours.
+    none). ``wrenches``: what the world is then planned to exert on the hands, their times as ours. ``request``: what
+    the lean plan answers.
     """
 
     lean_start: float
@@ -68,6 +69,7 @@ class Proposal:
     command: JointPath
     command_start: float
     wrenches: Sequence[HandWrench] = ()
+    request: PlanRequest | None = None
 
     @property
     def end(self) -> float:
@@ -185,6 +187,19 @@ class ArmSchedule:
         what = "can't be cut short within the limits" + (f" ({reason.what})" if reason else "")
         raise PlanRefused("stop", what, f"the motion in force ends by itself at {self._motion.end:.3f} s")
 
+    def plan_anew(self, now: float) -> Proposal | None:
+        """The motion in force with a lean plan from what is believed by now of the loads; None where there is none, or
+        its lean begins within ``allowance`` or from another plan's. Raises as :meth:`plan` does.
+        """
+        motion = self._motion
+        if motion is None or motion.request is None or motion.request.start is not None:
+            return None
+        start = motion.lean_start
+        if start < now + self.parameters.planner.allowance:
+            return None
+        request = attrs.evolve(motion.request, loads=self._loads_after(start))
+        return attrs.evolve(motion, plan=self._answer(request, start, motion.arms_start, _TOPIC), request=request)
+
     def accept(self, proposal: Proposal) -> None:
         """Take a proposal as the motion in force."""
         self._motion, self._standing = proposal, proposal.wrenches
@@ -196,22 +211,23 @@ class ArmSchedule:
         if motion is not None and motion.end > lean_start + _SOON:
             command = Spliced(motion.command, path, arms_start - motion.command_start)
             command_start = motion.command_start
-        plan = None
+        plan = request = None
         coming = () if wanted is None else wanted.wrenches
         coming = [attrs.evolve(wrench, times=wrench.times + arms_start) for wrench in coming]
         wrenches = joined(self._standing, coming, lean_start)
         if self.parameters.compensation == "planned":
-            plan = self._lean(lean_start, arms_start, (command, command_start), wanted, wrenches)
-        return Proposal(lean_start, arms_start, path, plan, command, command_start, wrenches)
+            request = self._request(lean_start, arms_start, (command, command_start), wanted, wrenches)
+            plan = self._answer(request, lean_start, arms_start, _TOPIC if wanted is not None else "stop")
+        return Proposal(lean_start, arms_start, path, plan, command, command_start, wrenches, request)
 
-    def _lean(
+    def _request(
         self,
         lean_start: float,
         arms_start: float,
         commanded: tuple[JointPath, float],
         wanted: Wanted | None,
         wrenches: Sequence[HandWrench],
-    ) -> LeanPlan:
+    ) -> PlanRequest:
         command, command_start = commanded
         arm = self.description.parameters.arm
         arms = FollowedPath.of(command, arm.servo, self.description.servo_bandwidth)
@@ -220,17 +236,23 @@ class ArmSchedule:
             arms, lead_in = Later(arms, -lead_in), 0.0
         handover = self._handover(lean_start)
         ball = self._ball(wanted, arms_start - lean_start, handover)
-        body = WholeBody(self.description, self._loads.held_at(lean_start + _SOON))
-        request = PlanRequest(
+        return PlanRequest(
             arms=arms,
             lead_in=lead_in,
-            loads=[(stamp - lean_start, load) for stamp, load in self._loads.after(lean_start + _SOON)],
+            loads=self._loads_after(lean_start),
             ball=ball,
             wrenches=[attrs.evolve(w, times=w.times - lean_start) for w in wrenches],
             start=None if handover is None else handover.start,
         )
+
+    def _loads_after(self, start: float) -> list[tuple[float, Load]]:
+        return [(stamp - start, load) for stamp, load in self._loads.after(start + _SOON)]
+
+    def _answer(self, request: PlanRequest, lean_start: float, arms_start: float, topic: str) -> LeanPlan:
+        """The lean plan for a request, with what the hands hold at its start; refused beyond the limits."""
+        body = WholeBody(self.description, self._loads.held_at(lean_start + _SOON))
         plan = plan_lean(body, request, self.parameters)
-        plan.refuse_beyond_limits(_TOPIC if wanted is not None else "stop")
+        plan.refuse_beyond_limits(topic)
         return attrs.evolve(plan, ball=plan.ball - plan.ball[0], lead_in=arms_start - lean_start)
 
     def _handover(self, time: float) -> Handover | None:

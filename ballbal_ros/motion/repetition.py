@@ -31,8 +31,10 @@ from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
-_WINDOW, _ORDER = 0.3, 3
+_WINDOW, _ORDER = 0.2, 3
 _SETTLING, _BLEND = 0.3, 0.1
+# The body leans ahead of the arms, within two or three of its time constants as a pendulum; before that it stands.
+_LEANING, _LEANING_SHARE = 0.9, 0.7
 _DECIMALS = 4
 
 
@@ -151,9 +153,10 @@ def learn(
 def _change(values: Array, request: PlanRequest, step: float, held: float) -> Array:
     times = step * np.arange(len(values))
     begin, end = request.lead_in, request.lead_in + request.arms.duration + _SETTLING
-    change = values - values[times < begin].mean(axis=0)
+    leaning = max(begin - _LEANING, (1.0 - _LEANING_SHARE) * begin)
+    change = values - values[times <= leaning].mean(axis=0)
     rest = held * (change[times >= end].mean(axis=0) if times[-1] > end else change[-1])
-    into = np.clip((times - begin) / _BLEND, 0.0, 1.0)[:, None]
+    into = np.clip((times - leaning) / max(begin - leaning, _BLEND), 0.0, 1.0)[:, None]
     out = np.clip((times - end + _BLEND) / _BLEND, 0.0, 1.0)[:, None]
     return np.asarray(into * ((1.0 - out) * change + out * rest))
 

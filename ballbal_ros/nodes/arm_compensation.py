@@ -45,6 +45,7 @@ from ballbal_ros.robot.parameters import RobotParameters
 
 _ATTEND = 0.05
 _MOST_WAITING = 10
+_FOUND = "hand_load_estimate"
 _FOLLOWING = (ENGAGING, BALANCING, STOPPING)
 
 
@@ -100,6 +101,7 @@ class ArmCompensationNode(Node):
         self._state, self._answered = "", ""
         self._emergency = False
         self._asked: _Asked | None = None
+        self._found_other = False
         self._waiting: deque[_Sent] = deque()
         self._before = Predecessor()
         self._ball_plan: Any = None
@@ -164,10 +166,25 @@ class ArmCompensationNode(Node):
             stamp, load = load_of(message, self.description, "hand_load_estimate")
             if stamp > 0.0:
                 self._schedule.find_load(stamp, load, self._now)
+                self._found_other = True
         except BallbalError as error:
             self._diagnostics.refuse("hand_load_estimate", str(error))
             return
         self._diagnostics.accept("hand_load_estimate")
+        self._go_on()
+
+    def _plan_anew(self) -> None:
+        """A lean plan that still waits for its time is made again from what was found in the hands meanwhile."""
+        if self._asked is not None or not self._found_other:
+            return
+        self._found_other = False
+        try:
+            proposal = self._schedule.plan_anew(self._now)
+        except BallbalError as error:
+            self._reports.refuse(_FOUND, stamp_text(to_time(self._now)), f"the plan stays as it was: {error}")
+            return
+        if proposal is not None:
+            self._ask(proposal, _FOUND, stamp_text(to_time(proposal.lean_start)))
 
     def _on_joint_states(self, raw: bytes) -> None:
         try:
@@ -218,6 +235,7 @@ class ArmCompensationNode(Node):
         self._go_on()
 
     def _go_on(self) -> None:
+        self._plan_anew()
         while self._waiting and self._asked is None:
             sent, now = self._waiting[0], time.monotonic()
             unknown = not self._before.settled(now) or not self._arms.complete
@@ -317,7 +335,7 @@ class ArmCompensationNode(Node):
         proposal = asked.proposal
         self._asked = None
         self._schedule.accept(proposal)
-        if asked.what != "hand_wrench_plan":
+        if asked.what not in ("hand_wrench_plan", _FOUND):
             start = to_time(proposal.arms_start)
             self._to_arms.publish(path_message(proposal.path, self.description.joint_names, start))
         self._reports.accept_proposal(asked.what, asked.stamp, proposal, self._schedule.load_changes)
@@ -335,10 +353,11 @@ class ArmCompensationNode(Node):
             self._go_on()
             return
         stamp = stamp_text(to_time(asked.proposal.lean_start))
-        if values.get("plan") == stamp:
-            self._let_go(asked)
-        elif values.get("refused plan") == stamp:
+        # A plan that is to replace another has its stamp: when it is refused, the other's is there still.
+        if values.get("refused plan") == stamp:
             self._give_up(values.get("refusal", "refused by the balance node"))
+        elif values.get("plan") == stamp:
+            self._let_go(asked)
 
     def _give_up(self, reason: str) -> None:
         asked, self._asked = self._asked, None

@@ -10,7 +10,8 @@ from ballbal_ros.motion.story import Story
 RUN_START = 2.5
 """When the ball's travel begins to count, s: the robot has been let go by its stand and stands still."""
 
-_FINDING_OUT = 4.0
+# The ball creeps for some seconds until what the drive must bear is known to a few hundredths of a newton metre.
+_FINDING_OUT = 8.0
 
 
 @attrs.frozen

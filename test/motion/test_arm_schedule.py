@@ -172,3 +172,22 @@ def test_spliced_paths_change_over_at_their_time() -> None:
     both = Spliced(first, second, 3.0)
     assert both.sample(np.array([2.999, 3.0, 9.0]))[0][:, 0] == pytest.approx([1.0, 2.0, 2.0])
     assert both.duration == 4.0
+
+
+def test_a_lean_plan_in_waiting_is_made_anew_with_the_loads_that_were_found() -> None:
+    """Until ``allowance`` before the lean begins, the motion in force gets the very plan that it would have had, had
+    the loads been known; its times stay. Later, or without a motion, there is none.
+    """
+    wise, other = schedule(), schedule()
+    for hand in ("left_hand", "right_hand"):
+        wise.set_load(0.5, Load(hand, 2.2, [0.0, 0.0, -0.05]))
+    meant = wise.plan(swing(8.0), 1.0, STILL)
+    assert other.plan_anew(1.0) is None
+    other.accept(other.plan(swing(8.0), 1.0, STILL))
+    for hand in ("left_hand", "right_hand"):
+        other.find_load(3.0, Load(hand, 2.2, [0.0, 0.0, -0.05]), 3.0)
+    anew = other.plan_anew(3.0)
+    assert anew is not None and anew.plan is not None and meant.plan is not None
+    assert (anew.lean_start, anew.arms_start) == (meant.lean_start, meant.arms_start)
+    assert np.array_equal(anew.plan.lean, meant.plan.lean) and np.array_equal(anew.plan.torque, meant.plan.torque)
+    assert other.plan_anew(anew.lean_start - 0.5 * ALLOWANCE) is None

@@ -54,7 +54,7 @@ def test_a_load_too_heavy_shows_as_the_moment_that_it_makes():
         place, turn = body.hand_placement("left_hand", arm)
         ahead.append((rotation_lean(lean) @ (place + turn @ heavier[0].center))[0])
     assert learned.moment[-1, 1] == pytest.approx(0.4 * 9.80665 * (ahead[1] - ahead[0]), rel=0.01)
-    assert np.all(learned.moment[: int(request.lead_in / learned.step)] == 0.0)
+    assert np.all(learned.moment[: int(0.4 * request.lead_in / learned.step)] == 0.0)
 
 
 def test_what_is_learnt_is_bounded_and_a_mean_over_the_runs():
@@ -109,7 +109,7 @@ def test_the_second_time_the_ball_hardly_moves():
 @pytest.mark.prove
 def test_the_fifth_time_is_near_the_noise_floor():
     """The same over 20 series of five runs: the worst of the first and of the second repetition, and the median of the
-    fifth within three times the noise floor (twice is aimed at; 2.6 times was measured over 8 series).
+    fifth within twice the noise floor.
     """
     truth = parse_truth(HEAVIER, files().description)
     peaks: list[list[float]] = []
@@ -121,4 +121,4 @@ def test_the_fifth_time_is_near_the_noise_floor():
         peaks.append([run.ball_travel_peak_mm for run in runs])
         still.append(rehearsed(story("reach"), "still", (series,))[0].ball_travel_peak_mm)
     assert max(run[0] for run in peaks) <= 10.0 and max(run[1] for run in peaks) <= 4.0
-    assert median([run[4] for run in peaks]) <= 3.0 * median(still)
+    assert median([run[4] for run in peaks]) <= 2.0 * median(still)
