@@ -33,8 +33,10 @@ _OF_HAND = 4
 _LEAST_SCALE = 0.1
 # Speed at which rolling resistance is felt whole, m/s: a ball that rests sits in its dent (our own figure).
 _CREEP = 1e-3
-# Of a posture to the next: nearer ones have the lean's slow error in common, and count as one.
+# Of a posture to the next: nearer ones have the lean's slow error in common, and count as one. That error's share of
+# the variance of a reading (our own figure, from readings of the simulated robot).
 _SAME_POSTURE = 0.05
+_SLOW_SHARE = 0.5
 
 
 @attrs.frozen(eq=False)
@@ -104,7 +106,7 @@ class HandWeighing:
         self._most = description.parameters.hands.load_limit
         self.hands = self._body.hands
         self._moment, self._moment_covariance = np.zeros(2), parameters.body_moment**2 * np.eye(2)
-        self._readings: list[tuple[Array, Array, Array, float]] = []
+        self._readings: list[tuple[Array, Array, Array, float, float]] = []
         self._hands: dict[str, _Unknown] = {}
         for hand in self.hands:
             self._hands[hand] = self._told(Load(hand, 0.0))
@@ -144,13 +146,19 @@ class HandWeighing:
             self._readings.clear()
 
     def add(self, reading: Reading) -> None:
-        """Take a reading in. Of one posture the best counts: errors are slow, and a mean is no better."""
+        """Take a reading in. Those of one posture count as their weighted mean, its variance no less than half of what
+        the best single reading has: part of the error is slow, and the same in all.
+        """
         made = (reading.arm_position.copy(), *self._equations(reading))
         if self._readings and float(np.abs(made[0] - self._readings[-1][0]).max()) < _SAME_POSTURE:
-            if made[3] > self._readings[-1][3]:
-                return
-            self._readings.pop()
-        self._readings.append(made)
+            arms, design, moment, _, weight = self._readings.pop()
+            share = 1.0 / (1.0 + weight * made[3])
+            design, moment = design + share * (made[1] - design), moment + share * (made[2] - moment)
+            weight += 1.0 / made[3]
+            least = _SLOW_SHARE * self.parameters.reading_noise**2
+            self._readings.append((arms, design, moment, max(1.0 / weight, least), weight))
+            return
+        self._readings.append((*made, 1.0 / made[3]))
 
     def missing_moment(self, reading: Reading) -> Array:
         """What pulls or is in the hands, as a moment about the contact [2] (roll, pitch), N m."""
@@ -184,9 +192,9 @@ class HandWeighing:
         masses = [unknown.mass for unknown in self._hands.values()]
         for _ in range(3):
             prior, spread = self._prior(masses)
-            design = np.vstack([row for _, row, _, _ in self._readings]) if self._readings else np.zeros((0, size))
-            seen = np.concatenate([moment for _, _, moment, _ in self._readings]) if self._readings else np.zeros(0)
-            noise = np.diag(np.repeat([variance for *_, variance in self._readings], 2))
+            design = np.vstack([reading[1] for reading in self._readings]) if self._readings else np.zeros((0, size))
+            seen = np.concatenate([reading[2] for reading in self._readings]) if self._readings else np.zeros(0)
+            noise = np.diag(np.repeat([reading[3] for reading in self._readings], 2))
             gain = np.linalg.solve(design @ spread @ design.T + noise, design @ spread).T
             mean, covariance = prior + gain @ (seen - design @ prior), spread - gain @ design @ spread
             masses = mean[2::_OF_HAND].tolist()
