@@ -26,6 +26,9 @@ def _nodes(context):
     namespace = checked_namespace(given("namespace"))
     folder = RobotFolder.checked(Path(given("robot")), simulated=True)
     simulated = {"seed": int(given("seed")), "duration": float(given("duration"))}
+    # An empty list has no type that ROS could tell.
+    simulated |= {"truth": given("truth").split()} if given("truth") else {}
+    simulated |= {"plan": given("plan")} if given("plan") else {}
     # A person may take a while to activate the balance.
     simulated["answer_timeout"] = 3600.0
     enclave = checked_enclave(given("enclave"))
@@ -61,6 +64,8 @@ def generate_launch_description():
             DeclareLaunchArgument("watch", default_value="true", description="take edits of the parameter files in"),
             DeclareLaunchArgument("clock", default_value="lock_step", description="lock_step or real_time"),
             DeclareLaunchArgument("seed", default_value="0", description="seed of the simulated noise"),
+            DeclareLaunchArgument("truth", default_value="", description="KEY=VALUE ...: where it is unlike the model"),
+            DeclareLaunchArgument("plan", default_value="", description="plan file in whose start posture it begins"),
             DeclareLaunchArgument("duration", default_value="0.0", description="simulated time, s; 0: no end"),
             OpaqueFunction(function=_nodes),
         ]

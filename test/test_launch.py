@@ -84,11 +84,13 @@ def test_headless_launch_adds_the_simulated_robot_whose_end_is_everybodys(launch
     """Headless, the simulated robot starts too, with the clock asked for; in a namespace all have one clock of their
     own.
     """
-    nodes = launched("headless.launch.py", namespace="b", clock="real_time", seed="3")
+    nodes = launched("headless.launch.py", namespace="b", clock="real_time", seed="3", truth="drawn=3 imu.tilt=0.01,0")
     assert set(nodes) > {"whole_body_kinematics", "arm_compensation", "balance", "simulated_robot"}
     simulated = nodes["simulated_robot"].keywords
     assert type(simulated["on_exit"]).__name__ == "Shutdown"
     assert simulated["parameters"][-1]["clock"] == "real_time" and simulated["parameters"][-1]["seed"] == 3
+    assert simulated["parameters"][-1]["truth"] == ["drawn=3", "imu.tilt=0.01,0"]
+    assert "plan" not in simulated["parameters"][-1]
     assert nodes["balance"].keywords["parameters"][-1]["lock_step"] is False
     for name in ("whole_body_kinematics", "arm_compensation", "balance", "simulated_robot"):
         assert nodes[name].keywords["remappings"] == [("/clock", "/b/clock")]

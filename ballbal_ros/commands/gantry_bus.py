@@ -3,17 +3,14 @@
 from __future__ import annotations
 
 import contextlib
-import os
-import select
-import signal
-import sys
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 
 from ballbal_ros.commands.checkup_bus import Ear
+from ballbal_ros.commands.terminal import TypedLines, told_to_end
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.topics import publisher, subscribe
@@ -43,7 +40,7 @@ class DriveLine(Ear):
         self._tick: Tick | None = None
         self._wrong: BallbalError | None = None
         self.stamp, self.angle = -1, np.zeros(len(names))
-        self._came, self._looked, self._typed = 0.0, 0.0, b""
+        self._came, self._looked, self._typed = 0.0, 0.0, TypedLines()
         self._supported: bool | None = None
         self.see: Callable[[Array], None] | None = None
         subscribe(self.node, "drive_states", self._on_drive, raw=True)
@@ -124,16 +121,12 @@ class DriveLine(Ear):
         """A line from the terminal, while what comes is taken in; "" at its end. Raises where somebody else comes to
         command the drive meanwhile.
         """
-        while b"\n" not in self._typed:
+
+        def meanwhile() -> None:
             self.turn()
             self._look_around()
-            if select.select([sys.stdin], [], [], 0.0)[0]:
-                more = os.read(sys.stdin.fileno(), 1024)
-                if not more:
-                    return ""
-                self._typed += more
-        line, _, self._typed = self._typed.partition(b"\n")
-        return line.decode(errors="replace") + "\n"
+
+        return self._typed.read(meanwhile)
 
     def run(self, tick: Tick, done: Callable[[], bool]) -> None:
         """Answer every ``drive_states`` with what ``tick(stamp in s, angles)`` gives, until ``done``; then zeros.
@@ -141,7 +134,7 @@ class DriveLine(Ear):
         Ends at once, with zeros, where the drive falls silent, a balance node comes up, or somebody wants it to end
         (KeyboardInterrupt).
         """
-        with _told_to_end() as told:
+        with told_to_end() as told:
             self.check_alone()
             self._out = publisher(self.node, "drive_command", _LIFESPAN)
             self._tick, self._came = tick, time.monotonic()
@@ -164,16 +157,3 @@ class DriveLine(Ear):
             self._send(nothing)
             with contextlib.suppress(BallbalError):
                 self.turn_for(_BETWEEN)
-
-
-@contextlib.contextmanager
-def _told_to_end() -> Iterator[list[int]]:
-    """While torque may be on, Ctrl-C, SIGTERM and a closed terminal are noted, and don't come between."""
-    told: list[int] = []
-    signals = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
-    before = {number: signal.signal(number, lambda which, _: told.append(which)) for number in signals}
-    try:
-        yield told
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)

@@ -1,4 +1,4 @@
-"""``ballbal weigh-in``: the robot weighs itself; so far the simulated one, in one process."""
+"""``ballbal weigh-in``: the robot weighs itself, the simulated one in one process or that whose stack is up."""
 
 from __future__ import annotations
 
@@ -11,7 +11,9 @@ import attrs
 import typer
 from rich.console import Console
 
+from ballbal_ros.commands.checkup import domain_of
 from ballbal_ros.commands.files import read_robot, write_json
+from ballbal_ros.commands.live_weighing import live_weighing
 from ballbal_ros.commands.posture import asked_posture
 from ballbal_ros.commands.weighing_run import LONGEST, Weighing, rehearsed, remaining_cost, run_weighing
 from ballbal_ros.declaration import build, flatten, parameters_of, parse_yaml
@@ -23,6 +25,7 @@ from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.simulation.rehearsal import RobotFiles
 from ballbal_ros.simulation.run_result import RunResult
 from ballbal_ros.simulation.truth import Truth, parse_truth
+from ballbal_ros.stack import checked_namespace
 from ballbal_ros.weighing.findings import findings, not_told
 from ballbal_ros.weighing.postures import DesignSettings
 
@@ -64,7 +67,9 @@ def write_weighed(path: Path, robot: Path, files: RobotFiles) -> None:
 
 @attrs.frozen(eq=False)
 class Worth:
-    """What a weighing is worth for a plan: runs before and after, and of robots as likely as the one found."""
+    """What a weighing is worth for a plan: runs before and after, and of robots as likely as the one found. Of a robot
+    whose truth nobody knows there are the likely ones alone.
+    """
 
     plan: str
     before: list[RunResult]
@@ -72,11 +77,14 @@ class Worth:
     likely: list[RunResult]
 
     @classmethod
-    def of(cls, files: RobotFiles, story: Story, weighing: Weighing, truth: Truth, seed: int) -> Worth:
+    def of(cls, files: RobotFiles, story: Story, weighing: Weighing, truth: Truth | None, seed: int) -> Worth:
         """Rehearse them."""
         found = weighing.files(files)
+        likely = remaining_cost(found, story, weighing, _LIKELY, seed)
+        if truth is None:
+            return cls(story.name, [], [], likely)
         before, after = rehearsed(files, story, truth, seed), rehearsed(found, story, _against(truth, files), seed)
-        return cls(story.name, [before], [after], remaining_cost(found, story, weighing, _LIKELY, seed))
+        return cls(story.name, [before], [after], likely)
 
 
 def _against(truth: Truth, files: RobotFiles) -> Truth:
@@ -133,32 +141,66 @@ def weigh_in_command(
         typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
     ] = None,
     seed: Annotated[int, typer.Option("--seed", min=0, help="Seed of the noise.")] = 0,
+    live: Annotated[
+        bool, typer.Option("--live", help="Weigh the robot whose stack is up, from where its arms are; it asks first.")
+    ] = False,
+    domain: Annotated[
+        Optional[int], typer.Option("--domain", help="With --live: ROS domain; ROS_DOMAIN_ID without it.")
+    ] = None,
+    namespace: Annotated[str, typer.Option("--namespace", help="With --live: namespace of the stack.")] = "",
+    yes: Annotated[bool, typer.Option("--yes", help="With --live: don't ask; for the simulated robot alone.")] = False,
     plan: Annotated[Optional[Path], typer.Option("--plan", help="Plan file to say the gain for.")] = None,
     output: Annotated[Optional[Path], typer.Option("--output", help="File for robot.yaml as weighed.")] = None,
     json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
 ) -> None:
     """The robot weighs itself: it balances in chosen postures, and where it leans tells its mass centres.
 
-    So far the simulated robot alone. Nobody may be within its reach while it moves, and hands must be empty.
+    The simulated robot, in one process; with --live the one whose stack is up, simulated or real. Nobody may be within
+    its reach while it moves, and hands must be empty.
     """
     console = Console()
     files = read_robot(robot)
     differences = parse_truth(truth or (), files.description)
     story = None if plan is None else read_story(plan, files.description)
-    home = asked_posture(files.description, posture).arm_position
-    with console.status("weigh-in") as status:
-        design = DesignSettings(count=postures)
-        weighing = run_weighing(files, home, differences, seed, mass, design, servo=servo, told=status.update)
-        worth = None if story is None else Worth.of(files, story, weighing, differences, seed)
-    went = f"{weighing.seconds:.0f} s of the robot's time, ball within {1e3 * weighing.farthest:.0f} mm"
-    console.print(f"[bold]{files.description.name}[/bold], {postures} postures, {went}", highlight=False)
-    print_findings(findings(weighing.weighed), not_told(weighing.weighed), console)
-    if weighing.servo is not None:
-        print_servo(weighing.servo, console)
-    if worth is not None:
-        print_gain(worth.plan, worth.before, worth.after, worth.likely, console)
+    design = DesignSettings(count=postures)
+    if live:
+        _check_live(posture, truth)
+        weighing = live_weighing(
+            files,
+            domain_of(domain),
+            checked_namespace(namespace),
+            design,
+            console,
+            mass=mass,
+            servo=servo,
+            sure=yes,
+            told=lambda doing: console.print(f"  [dim]{doing}[/dim]", highlight=False),
+        )
+    else:
+        home = asked_posture(files.description, posture).arm_position
+        with console.status("weigh-in") as status:
+            weighing = run_weighing(files, home, differences, seed, mass, design, servo=servo, told=status.update)
+    worth = None if story is None else Worth.of(files, story, weighing, None if live else differences, seed)
+    _tell(files.description.name, weighing, worth, console)
     if output is not None:
         write_weighed(output, robot, weighing.files(files))
     if json_file is not None:
         write_json(json_file, _document(weighing, worth))
     raise typer.Exit(0 if weighing.seconds <= LONGEST else 1)
+
+
+def _check_live(posture: Path | None, truth: list[str] | None) -> None:
+    for option, given in (("--posture", posture), ("--truth", truth)):
+        if given:
+            what = "is for the simulated robot in one process"
+            raise BallbalError(option, what, "with --live the robot is as it is, and begins where its arms are")
+
+
+def _tell(name: str, weighing: Weighing, worth: Worth | None, console: Console) -> None:
+    went = f"{weighing.seconds:.0f} s of the robot's time, ball within {1e3 * weighing.farthest:.0f} mm"
+    console.print(f"[bold]{name}[/bold], {len(weighing.design.postures)} postures, {went}", highlight=False)
+    print_findings(findings(weighing.weighed), not_told(weighing.weighed), console)
+    if weighing.servo is not None:
+        print_servo(weighing.servo, console)
+    if worth is not None:
+        print_gain(worth.plan, worth.before, worth.after, worth.likely, console)

@@ -16,7 +16,7 @@ from ballbal_ros.simulation.truth import Truth
 from ballbal_ros.weighing.findings import draws
 from ballbal_ros.weighing.identify import Evidence, Weighed, identify
 from ballbal_ros.weighing.postures import Design, DesignSettings, choose_postures
-from ballbal_ros.weighing.procedure import ProcedureSettings, weigh
+from ballbal_ros.weighing.procedure import ProcedureSettings, Robot, weigh
 from ballbal_ros.weighing.record import Record
 from ballbal_ros.weighing.servo import Servo, identify_servo
 
@@ -61,16 +61,28 @@ def run_weighing(
     ``mass``: of all that stands on the ball, kg, if a scale has told. Raises :class:`BallbalError` where no postures
     are found, a motion is refused or the robot falls.
     """
-    drawn = files.description.as_drawn()
     chosen = choose_postures(files.description, home, design or DesignSettings())
     robot = SimulatedWeighing(files, home, seed, truth)
+    return weigh_robot(files, robot, chosen, mass, procedure, servo, told)
+
+
+def weigh_robot(
+    files: RobotFiles,
+    robot: Robot,
+    chosen: Design,
+    mass: float | None = None,
+    procedure: ProcedureSettings | None = None,
+    servo: bool = False,
+    told: Callable[[str], None] | None = None,
+) -> Weighing:
+    """Weigh a robot that stands, in the postures chosen, and work out what was found; see :func:`run_weighing`."""
     weigh(robot, chosen.postures, procedure or ProcedureSettings(), told)
-    record = robot.record
+    drawn, record, seconds = files.description.as_drawn(), robot.record, robot.time
     motion = record.motion(drawn)
     evidence = Evidence(record.at_rest(motion), record.moving(motion, _SWING_RATE), mass)
     found = identify(drawn, evidence)
     lag = identify_servo(record, files.description) if servo else None
-    return Weighing(chosen, record, found, lag, robot.time, record.farthest)
+    return Weighing(chosen, record, found, lag, seconds, record.farthest)
 
 
 def rehearsed(files: RobotFiles, story: Story, truth: Truth, seed: int = 0) -> RunResult:

@@ -92,8 +92,12 @@ def publisher(node: Node, topic: str, lifespan: float | None = None) -> Any:
     return node.create_publisher(message, topic, profile)
 
 
-def subscribe(node: Node, topic: str, callback: Callable[[Any], None], *, raw: bool = False) -> Any:
-    """A subscription to a topic of the stack; ``raw``: the callback gets the serialised message."""
+def subscribe(
+    node: Node, topic: str, callback: Callable[[Any], None], *, raw: bool = False, depth: int | None = None
+) -> Any:
+    """A subscription to a topic of the stack; ``raw``: the callback gets the serialised message; ``depth``: for one who
+    wants them all rather than the newest.
+    """
     message, kind = TOPICS[topic]
-    profile = _profile(kind.depth, reliable=not kind.lossy, kept=kind.kept)
+    profile = _profile(depth or kind.depth, reliable=not kind.lossy, kept=kind.kept)
     return node.create_subscription(message, topic, callback, profile, raw=raw)

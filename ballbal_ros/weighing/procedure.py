@@ -29,6 +29,10 @@ class Robot(Protocol):
 
     record: Record
 
+    @property
+    def time(self) -> float:
+        """How long it has run, s of its own time."""
+
     def arms(self) -> Array:
         """Arm positions [n] as measured, rad or m."""
 
