@@ -18,8 +18,8 @@ from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.weighing.record import Record
 
-GAP = 0.1
-"""The longest silence of a sense that is bridged, s."""
+GAP, LONGEST_GAP = 0.1, 1.0
+"""Silence of a sense that is bridged without loss, and that is bridged at all, s."""
 
 _SLOWLY = 3.0
 _FIRST_LOOK = 0.1
@@ -32,26 +32,31 @@ class _Series:
         self.topic = topic
         self._times: list[float] = []
         self._values: list[Array] = []
+        self.gaps: list[tuple[float, float]] = []
 
     def add(self, time: float, value: Sequence[float] | Array) -> bool:
         """Take a value in; False where it is no newer than the last."""
         last = self.last
         if last - GAP < time <= last:
             return False
-        if self._times and not last < time <= last + GAP:
+        if self._times and not last < time <= last + LONGEST_GAP:
             what = f"was silent for {time - last:.2f} s" if time > last else f"went back in time by {last - time:.2f} s"
             remedy = "weigh on a computer and a network that keep up"
             raise BallbalError(self.topic, f"{what} at {last:.2f} s", remedy)
+        if self._times and time > last + GAP:
+            self.gaps.append((last, time))
         self._times.append(time)
         self._values.append(np.array(value, float))
         return True
 
     @property
     def first(self) -> float:
+        """Time of the first value that is kept."""
         return self._times[0] if self._times else math.inf
 
     @property
     def last(self) -> float:
+        """Time of the newest value; minus infinity before the first."""
         return self._times[-1] if self._times else -math.inf
 
     def take(self, times: Array) -> Array:
@@ -65,7 +70,8 @@ class _Series:
 
 
 class Gathering:
-    """Fills a record with a row for each period, as far as all senses have told. Times are stamps, in s.
+    """Fills a record with a row for each period, as far as all senses have told. Times are stamps, in s. Where one was
+    silent for more than :data:`GAP` the record has a gap.
 
     Raises :class:`BallbalError` where a sense leaves a gap that can't be bridged, or its time goes back.
     """
@@ -76,7 +82,7 @@ class Gathering:
         self._spin_map = description.drive.spin_map
         self._radius = description.parameters.ball.radius
         self._imu, self._drive, self._arms = _Series("imu/data"), _Series("drive_states"), _Series("joint_states")
-        self._next, self._begun = -math.inf, False
+        self._start, self._next, self._begun = -math.inf, -math.inf, False
         self._lean, self._heading, self._ball = [0.0, 0.0], 0.0, [0.0, 0.0]
         self._rate, self._angle = np.zeros(3), np.zeros(len(description.drive.names))
 
@@ -102,12 +108,17 @@ class Gathering:
         series, period = (self._imu, self._drive, self._arms), self.record.period
         last = min(each.last for each in series)
         if not self._begun:
-            self._next = max(each.first for each in series)
+            self._start = self._next = max(each.first for each in series)
             if not last >= self._next + _FIRST_LOOK:
                 return
         count = math.floor((last - self._next) / period + 1e-6)
         if count < 1:
             return
+        for each in series:
+            for gap in each.gaps:
+                first, end = ((time - self._start) / period for time in gap)
+                self.record.gaps.append((math.floor(first), math.ceil(end)))
+            each.gaps.clear()
         times: Array = self._next + period * np.arange(count, dtype=float)
         self._next += count * period
         imu, drive, arms = (each.take(times) for each in series)

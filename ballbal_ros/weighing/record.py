@@ -20,6 +20,7 @@ import numpy as np
 from scipy.integrate import cumulative_trapezoid
 from scipy.ndimage import gaussian_filter1d
 
+from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.spline import JointPath
 from ballbal_ros.robot.arrays import Array, apply, cross
 from ballbal_ros.robot.attitude import body_rates, rotation_lean
@@ -30,6 +31,7 @@ from ballbal_ros.weighing.regressor import Motion
 _SMOOTHING = 0.08
 _EDGE = 4.0
 _DRIFT = 0.7
+_NEAR = 1.0
 # Below this speed, m/s, it is not told in which direction the ball rolls.
 _CRAWL, _SHORT = 2e-3, 0.02
 
@@ -39,7 +41,7 @@ class Record:
     """A row every ``period`` s: time, lean as the loop shows it (roll, pitch), heading, ball x, y in ``odom``, rate and
     specific force in IMU axes, arms as measured; SI units. ``rests``: the spans [first, last) of rows in which it stood
     still to be weighed; ``swings``: those in which it moved and may be looked at. ``moves``: when each arm motion was
-    commanded to begin, s, and which.
+    commanded to begin, s, and which. ``gaps``: spans of rows that were only interpolated, as nothing was heard.
     """
 
     period: float
@@ -48,6 +50,7 @@ class Record:
     rests: list[tuple[int, int]] = attrs.field(factory=list)
     swings: list[tuple[int, int]] = attrs.field(factory=list)
     moves: list[tuple[float, JointPath]] = attrs.field(factory=list)
+    gaps: list[tuple[int, int]] = attrs.field(factory=list)
 
     def __len__(self) -> int:
         return len(self._rows)
@@ -141,9 +144,23 @@ class Record:
         )
 
     def moving(self, motion: Motion, rate: float) -> Motion:
-        """Samples of the swings at ``rate`` Hz."""
-        step = max(1, round(1.0 / (rate * self.period)))
-        return _together([motion.at(np.arange(first, last, step)) for first, last in self.swings])
+        """Samples of the swings at ``rate`` Hz, but those near a gap, whose lean is wrong by what the gyro didn't tell.
+
+        Raises :class:`BallbalError` where hardly any are left.
+        """
+        step, near = max(1, round(1.0 / (rate * self.period))), round(_NEAR / self.period)
+        heard, count = np.ones(len(self), bool), 0
+        for first, last in self.gaps:
+            heard[max(0, first - near) : last + near] = False
+        samples = []
+        for first, last in self.swings:
+            wanted = np.arange(first, last, step)
+            samples.append(wanted[heard[wanted]])
+            count += len(wanted)
+        if sum(map(len, samples)) < 0.5 * count:
+            what = f"{len(self.gaps)} gaps in what was heard leave less than half of the swing"
+            raise BallbalError("weigh-in", what, "weigh on a computer and a network that keep up")
+        return _together([motion.at(each) for each in samples])
 
 
 def _together(motions: Sequence[Motion]) -> Motion:

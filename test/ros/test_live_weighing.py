@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import io
 import os
 import signal
@@ -30,7 +31,7 @@ from ballbal_ros.commands.weighing_run import Weighing, rehearsed
 from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.nodes.diagnostics import ERROR, key_values
-from ballbal_ros.nodes.messages import load_message, seconds, to_time
+from ballbal_ros.nodes.messages import load_message, to_time
 from ballbal_ros.robot.attitude import lean_and_heading_from_quat_xyzw
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.simulation.truth import drawn_truth
@@ -64,23 +65,30 @@ QUICK = ProcedureSettings(
 
 
 @pytest.fixture(scope="module")
-def stack(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Listener]:
+def stack(tmp_path_factory: pytest.TempPathFactory) -> Iterator[None]:
     """A robot unlike its drawing, with empty hands where `reach` begins; it balances, in lock-step."""
     plan = tmp_path_factory.mktemp("plan") / "stand.yaml"
     plan.write_text(STAND)
     simulated = {"plan": str(plan), "truth": [f"drawn={SEED}"], "seed": SEED, "answer_timeout": 300.0}
-    with running_stack(DOMAIN, simulated) as processes, listening(DOMAIN) as listener:
-        listener.watched = processes
-        listener.hear("joint_states", "balance_state", "odom")
+    with running_stack(DOMAIN, simulated):
+        with hearing() as listener:
 
-        def change(transition: int) -> bool:
-            request = ChangeState.Request(transition=Transition(id=transition))
-            return bool(listener.call(ChangeState, "balance/change_state", request).success)
+            def change(transition: int) -> bool:
+                request = ChangeState.Request(transition=Transition(id=transition))
+                return bool(listener.call(ChangeState, "balance/change_state", request).success)
 
+            listener.wait(lambda: change(Transition.TRANSITION_CONFIGURE), 30.0, "configuring")
+            assert change(Transition.TRANSITION_ACTIVATE)
+            listener.wait(lambda: state(listener) == "balancing", 30.0, "balancing")
+        yield
+
+
+@contextlib.contextmanager
+def hearing() -> Iterator[Listener]:
+    """A listener for a while: who listens all the time takes the weighing's processor."""
+    with listening(DOMAIN) as listener:
+        listener.hear("joint_states", "balance_state", "odom", "ground_truth")
         listener.wait(lambda: listener.newest("joint_states") is not None, 30.0, "a simulated robot")
-        listener.wait(lambda: change(Transition.TRANSITION_CONFIGURE), 30.0, "configuring")
-        assert change(Transition.TRANSITION_ACTIVATE)
-        listener.wait(lambda: state(listener) == "balancing", 30.0, "balancing")
         yield listener
 
 
@@ -99,36 +107,39 @@ def weighed(count: int, procedure: ProcedureSettings | None = None) -> Weighing:
     return live_weighing(files(), DOMAIN, "", design, console, mass=MASS, sure=True, procedure=procedure)
 
 
-def test_what_is_recorded_over_the_bus_is_how_it_truly_moved(stack: Listener):
-    """One posture, back, and a short swing: at each rest the lean is the simulated robot's, seen by its tilted IMU,
-    within 0.3 mrad; all along the ball is within a millimetre of the true one; and the arms are back where they began.
+def truth_now() -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """The ball's true place, m, the body's true lean, rad, and the arms' angles, at rest."""
+    with hearing() as listener:
+        raw = listener.record("ground_truth", raw=True)
+        listener.wait(lambda: len(raw) > 100 and state(listener), 20.0, "the true motion")
+        assert state(listener) == "balancing"
+        poses = [deserialize_message(each, Odometry).pose.pose for each in raw]
+        leans = [lean_and_heading_from_quat_xyzw(q.x, q.y, q.z, q.w)[:2] for q in (pose.orientation for pose in poses)]
+        place = np.mean([(pose.position.x, pose.position.y) for pose in poses], axis=0)
+        return place, np.mean(leans, axis=0), angles(listener)
+
+
+@pytest.mark.usefixtures("stack")
+def test_what_is_recorded_over_the_bus_is_how_it_truly_moved():
+    """One posture, back, and a short swing: before and after, the lean is the simulated robot's, seen by its tilted
+    IMU, within 0.5 mrad; the ball's way is the true one's within 2 mm; the arms are back where they began.
     """
-    before, tilt = angles(stack), drawn_truth(files().description, SEED).imu_tilt
-    with listening(DOMAIN) as beside:
-        raw = beside.record("ground_truth", raw=True)
-        found = weighed(1, QUICK)
-        beside.turn(0.5)
-    record, told = found.record, [deserialize_message(each, Odometry) for each in raw]
-    stack.turn(0.5)
+    (place, lean, arms), (tilt, drawn) = truth_now(), (drawn_truth(files().description, SEED).imu_tilt, files())
+    record = weighed(1, QUICK).record
     assert len(record.rests) == 3 and len(record.moves) == 2
-    assert len(record) == pytest.approx(500.0 * found.seconds, rel=0.02)
-    assert seconds(told[-1].header.stamp) > record.times[-1]
-    assert angles(stack) == pytest.approx(before, abs=2e-3) and state(stack) == "balancing"
-    poses = [(seconds(m.header.stamp), m.pose.pose.position, m.pose.pose.orientation) for m in told]
-    rows = [(t, p.x, p.y, *lean_and_heading_from_quat_xyzw(q.x, q.y, q.z, q.w)[:2]) for t, p, q in poses]
-    stamps, *columns = np.array(rows).T
-    true = np.stack([np.interp(record.times, stamps, column) for column in columns], axis=-1)
+    place_after, lean_after, arms_after = truth_now()
+    assert arms_after == pytest.approx(arms, abs=2e-3)
     gone = record.recent(1e9)[1]
-    assert np.hypot(*(gone - gone[0]).T).max() > 0.03
-    assert gone - gone[0] == pytest.approx(true[:, :2] - true[0, :2], abs=1e-3)
-    drawn = files().description.as_drawn()
-    lean = shown_to_true(record.at_rest(record.motion(drawn)).lean, np.array(tilt))
-    expected = np.array([true[first:last, 2:].mean(axis=0) for first, last in record.rests])
-    assert lean == pytest.approx(expected, abs=3e-4)
+    assert np.hypot(*(gone - gone[0]).T).max() > 0.02
+    assert gone[-1] - gone[0] == pytest.approx(place_after - place, abs=2e-3)
+    found = shown_to_true(record.at_rest(record.motion(drawn.description.as_drawn())).lean, np.array(tilt))
+    assert found[[0, -1]] == pytest.approx(np.array([lean, lean_after]), abs=5e-4)
+    assert np.abs(found[1] - found[0]).max() > 0.005
 
 
 @pytest.mark.prove
-def test_a_robot_weighed_over_the_bus_keeps_its_ball_again(stack: Listener):
+@pytest.mark.usefixtures("stack")
+def test_a_robot_weighed_over_the_bus_keeps_its_ball_again():
     """Five postures, and `reach` costs the robot less than half of what it did."""
     found, truth = weighed(5), drawn_truth(files().description, SEED)
     runs = [rehearsed(robot, story("reach"), truth, SEED) for robot in (files(), found.files(files()))]
@@ -136,27 +147,30 @@ def test_a_robot_weighed_over_the_bus_keeps_its_ball_again(stack: Listener):
     assert peaks[1] < 0.5 * peaks[0], peaks
 
 
-def test_ctrl_c_brings_arms_and_ball_to_rest(stack: Listener, tmp_path: Path):
+@pytest.mark.usefixtures("stack")
+def test_ctrl_c_brings_arms_and_ball_to_rest(tmp_path: Path):
     """In the midst of a motion: exit status 130, the arms stop on their way, and the robot goes on balancing."""
-    commands, before, file = stack.record("arm_command"), angles(stack), tmp_path / "found.json"
+    file = tmp_path / "found.json"
     words = ("weigh-in", "--live", "--yes", "--postures", "3", "--robot", str(SHELVER), "--json", str(file))
-    process = ballbal(*words, domain=DOMAIN)
-    try:
-        stack.wait(lambda: process.poll() or np.abs(angles(stack) - before).max() > 0.1, 60.0, "a motion")
-        process.send_signal(signal.SIGINT)
-        stack.wait(lambda: process.poll() is not None, 20.0, "its end")
-        _, err = process.communicate()
-    finally:
-        process.kill()
-    assert process.returncode == 130, err
-    assert len(commands) >= 2 and not file.exists()
-    goal = np.array(commands[-2].points[-1].positions)
-    stack.turn(3.0)
-    rested = angles(stack)
-    stack.turn(0.5)
-    assert angles(stack) == pytest.approx(rested, abs=5e-4) and np.abs(rested - goal).max() > 0.05
-    twist = stack.newest("odom").twist.twist.linear
-    assert state(stack) == "balancing" and abs(twist.x) + abs(twist.y) < 0.02
+    with hearing() as listener:
+        commands, before = listener.record("arm_command"), angles(listener)
+        process = ballbal(*words, domain=DOMAIN)
+        try:
+            listener.wait(lambda: process.poll() or np.abs(angles(listener) - before).max() > 0.1, 60.0, "a motion")
+            process.send_signal(signal.SIGINT)
+            listener.wait(lambda: process.poll() is not None, 20.0, "its end")
+            _, err = process.communicate()
+        finally:
+            process.kill()
+        assert process.returncode == 130, err
+        assert len(commands) >= 2 and not file.exists()
+        goal = np.array(commands[-2].points[-1].positions)
+        listener.turn(3.0)
+        rested = angles(listener)
+        listener.turn(0.5)
+        assert angles(listener) == pytest.approx(rested, abs=5e-4) and np.abs(rested - goal).max() > 0.05
+        twist = listener.newest("odom").twist.twist.linear
+        assert state(listener) == "balancing" and abs(twist.x) + abs(twist.y) < 0.02
 
 
 def test_where_nothing_balances_one_line_says_so(ros_domain_id: int, monkeypatch: pytest.MonkeyPatch):

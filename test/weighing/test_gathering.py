@@ -9,7 +9,7 @@ import pytest
 
 from ballbal_ros.commands.simulated_weighing import SimulatedWeighing
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.weighing.gathering import GAP, Gathering
+from ballbal_ros.weighing.gathering import LONGEST_GAP, Gathering
 from ballbal_ros.weighing.record import Record
 from helpers.rehearsing import files
 from helpers.robots import reach
@@ -56,13 +56,36 @@ def test_rows_show_how_it_truly_moved(lost: float):
         assert getattr(ours, name)[middle] == pytest.approx(wanted, abs=within), name
 
 
+def test_a_gap_is_marked_and_kept_out_of_the_swing():
+    """Half a second without the IMU is a gap of the rows around it, and samples of a swing near it are left out; where
+    little is left, that is told.
+    """
+    gathering, arms = Gathering(files().description, Record(0.002)), np.zeros(files().description.joint_count)
+    for k in range(5000):
+        time = 10.0 + 0.002 * k
+        if not 2000 < k <= 2250:
+            gathering.imu(time, (0.0, 0.0, 0.0), (0.0, 0.0, 9.81))
+        gathering.drive(time, np.zeros(3))
+        gathering.arms(time, arms)
+    gathering.gather()
+    record = gathering.record
+    ((first, last),) = record.gaps
+    assert (first, last) == (pytest.approx(2000, abs=1), pytest.approx(2251, abs=1)) and len(record) == 4999
+    record.swings.append((0, len(record)))
+    motion = record.motion(files().description)
+    assert len(record.moving(motion, 10.0)) == pytest.approx(75, abs=2)
+    record.swings[:] = [(1000, 3000)]
+    with pytest.raises(BallbalError, match="1 gaps in what was heard leave less than half"):
+        record.moving(motion, 10.0)
+
+
 def test_a_gap_too_long_or_a_clock_that_goes_back_is_told():
     """What can't be bridged is an error that names the topic; a message that comes twice is passed over."""
     one = Gathering(files().description, Record(0.002))
     one.drive(1.0, np.zeros(3))
     one.drive(1.0, np.ones(3))
-    one.drive(1.0 + 0.9 * GAP, np.zeros(3))
-    with pytest.raises(BallbalError, match="drive_states: was silent for 0.20 s"):
-        one.drive(1.29, np.zeros(3))
-    with pytest.raises(BallbalError, match="went back in time by 0.59 s"):
+    one.drive(1.0 + 0.9 * LONGEST_GAP, np.zeros(3))
+    with pytest.raises(BallbalError, match="drive_states: was silent for 1.10 s"):
+        one.drive(3.0, np.zeros(3))
+    with pytest.raises(BallbalError, match="went back in time by 1.40 s"):
         one.drive(0.5, np.zeros(3))
