@@ -18,7 +18,7 @@ from ballbal_ros.commands.terminal import TypedLines, told_to_end
 from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.nodes.diagnostics import OK, values_of
-from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
+from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds, stamp_text, to_time
 from ballbal_ros.nodes.plan_report import EARLIER
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.nodes.trajectories import path_message
@@ -31,7 +31,7 @@ from ballbal_ros.weighing.record import Record
 _DISCOVERY, _KEPT_COMES = 5.0, 0.5
 _NAMES_COME, _TURNS = 3.0, 50
 _SILENT, _STATE_SILENT = 10.0, 2.0
-_ANSWER = 30.0
+_ANSWER, _AGO = 30.0, 0.1
 _LEAVE = 3.0
 # Half a second of a loop at 1 kHz: enough for as long as this process looks elsewhere.
 _DEPTH = 500
@@ -74,7 +74,7 @@ class BusWeighing(Ear):
         self._told: list[int] = []
         self._ending = contextlib.ExitStack()
         self._came, self._asked, self._until, self._began = time.monotonic(), False, 0.0, 0.0
-        self._imu_topic = ""
+        self._imu_topic, self._asked_at = "", 0.0
         for topic in ("imu/data", "imu/data_raw"):
             subscribe(self.node, topic, self._guarded(self._on_imu, topic), raw=True, depth=_DEPTH)
         subscribe(self.node, "drive_states", self._guarded(self._on_drive), raw=True, depth=_DEPTH)
@@ -136,6 +136,9 @@ class BusWeighing(Ear):
         heard.state_stamp = float(values.get("stamp", "nan"))
 
     def _on_report(self, message: Any) -> None:
+        # Answers are kept on the bus: those from before it was asked are somebody else's.
+        if seconds(message.header.stamp) < self._asked_at - _AGO:
+            return
         for status in message.status:
             if self._asked and EARLIER not in values_of(status):
                 self._heard.report = status
@@ -247,7 +250,7 @@ class BusWeighing(Ear):
 
     def _ask(self, plan: JointTrajectory) -> Any:
         """Send an arm plan, and return its accepting answer."""
-        self._asked, self._heard.report = True, None
+        self._asked, self._asked_at, self._heard.report = True, self._heard.imu, None
         self._plans.publish(plan)
         until = time.monotonic() + _ANSWER
         while self._heard.report is None:
@@ -270,11 +273,11 @@ class BusWeighing(Ear):
         message.twist.linear.x, message.twist.linear.y = x, y
         self._velocity.publish(message)
 
-    def wait(self, seconds: float) -> None:
-        """Let so much of the robot's time pass, and record."""
+    def wait(self, span: float) -> None:
+        """Let so much of the robot's time pass, s, and record."""
         now = self._heard.imu
         # Waits add up to what was asked for, but what was long missed is not made up for.
-        self._until = max(self._until, now - min(seconds, 0.1)) + seconds
+        self._until = max(self._until, now - min(span, 0.1)) + span
         while self._heard.imu < self._until:
             self._go_on()
         if self._gathering is not None:
@@ -294,7 +297,7 @@ class BusWeighing(Ear):
         if self._gathering is None:
             return
         self._gathering = None
-        self._asked, self._heard.report = True, None
+        self._asked, self._asked_at, self._heard.report = True, self._heard.imu, None
         self._plans.publish(JointTrajectory())
         until = time.monotonic() + _LEAVE
         while self._heard.report is None and time.monotonic() < until:

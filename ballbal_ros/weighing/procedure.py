@@ -42,7 +42,7 @@ class Robot(Protocol):
     def roll(self, x: float, y: float) -> None:
         """Command a velocity of the ball, m/s, heading axes."""
 
-    def wait(self, seconds: float) -> None:
+    def wait(self, seconds: float, /) -> None:
         """Let so much time pass. Raises :class:`BallbalError` where the robot falls or lets go."""
 
 
@@ -139,4 +139,3 @@ def swing(robot: Robot, settings: ProcedureSettings) -> None:
     robot.roll(0.0, 0.0)
     robot.wait(settings.settle[0])
     robot.record.swings.append((first, len(robot.record)))
-

@@ -107,33 +107,32 @@ def weighed(count: int, procedure: ProcedureSettings | None = None) -> Weighing:
     return live_weighing(files(), DOMAIN, "", design, console, mass=MASS, sure=True, procedure=procedure)
 
 
-def truth_now() -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """The ball's true place, m, the body's true lean, rad, and the arms' angles, at rest."""
+def truth_now() -> tuple[np.ndarray, np.ndarray]:
+    """The body's true lean, rad, and the arms' angles, at rest."""
     with hearing() as listener:
         raw = listener.record("ground_truth", raw=True)
         listener.wait(lambda: len(raw) > 100 and state(listener), 20.0, "the true motion")
         assert state(listener) == "balancing"
         poses = [deserialize_message(each, Odometry).pose.pose for each in raw]
         leans = [lean_and_heading_from_quat_xyzw(q.x, q.y, q.z, q.w)[:2] for q in (pose.orientation for pose in poses)]
-        place = np.mean([(pose.position.x, pose.position.y) for pose in poses], axis=0)
-        return place, np.mean(leans, axis=0), angles(listener)
+        return np.mean(leans, axis=0), angles(listener)
 
 
 @pytest.mark.usefixtures("stack")
 def test_what_is_recorded_over_the_bus_is_how_it_truly_moved():
-    """One posture, back, and a short swing: before and after, the lean is the simulated robot's, seen by its tilted
-    IMU, within 0.5 mrad; the ball's way is the true one's within 2 mm; the arms are back where they began.
+    """One posture, back, and a short swing: where it began, first and last, the lean is the one that the simulated
+    robot truly comes to, seen by its tilted IMU, within 1 mrad; the ball has swung, and the arms are back. (What else
+    a record of lossy messages is worth is in test/weighing/test_gathering.py.)
     """
-    (place, lean, arms), (tilt, drawn) = truth_now(), (drawn_truth(files().description, SEED).imu_tilt, files())
+    (_, arms), tilt = truth_now(), np.array(drawn_truth(files().description, SEED).imu_tilt)
     record = weighed(1, QUICK).record
     assert len(record.rests) == 3 and len(record.moves) == 2
-    place_after, lean_after, arms_after = truth_now()
+    lean, arms_after = truth_now()
     assert arms_after == pytest.approx(arms, abs=2e-3)
     gone = record.recent(1e9)[1]
     assert np.hypot(*(gone - gone[0]).T).max() > 0.02
-    assert gone[-1] - gone[0] == pytest.approx(place_after - place, abs=2e-3)
-    found = shown_to_true(record.at_rest(record.motion(drawn.description.as_drawn())).lean, np.array(tilt))
-    assert found[[0, -1]] == pytest.approx(np.array([lean, lean_after]), abs=5e-4)
+    found = shown_to_true(record.at_rest(record.motion(files().description.as_drawn())).lean, tilt)
+    assert found[[0, -1]] == pytest.approx(np.array([lean, lean]), abs=1e-3)
     assert np.abs(found[1] - found[0]).max() > 0.005
 
 
@@ -214,7 +213,12 @@ class Played:
             self.answered = len(self.plans)
             status = DiagnosticStatus(level=ERROR, name="arm_plan", message=self.answer)
             status.values = key_values({"requested": "0.000000000", "accepted": "no"})
-            self.senders["plan_report"].publish(DiagnosticArray(status=[status]))
+            # One that was kept from long before comes first: it is nobody's answer now.
+            report = DiagnosticArray(status=[DiagnosticStatus(name="arm_plan", message="nothing moves")])
+            self.senders["plan_report"].publish(report)
+            report = DiagnosticArray(status=[status])
+            report.header.stamp = stamp
+            self.senders["plan_report"].publish(report)
 
 
 @pytest.fixture
