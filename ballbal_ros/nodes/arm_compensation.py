@@ -261,7 +261,7 @@ class ArmCompensationNode(Node):
 
     def _has_predecessor(self) -> bool:
         planned = self._schedule.parameters.compensation == "planned"
-        return self._before.was_there(self._answered, self._state, planned)
+        return self._before.was_there(self._answered, planned)
 
     def _stop(self, what: str) -> Proposal | None:
         proposal = self._schedule.stop(self._now)
@@ -345,7 +345,7 @@ class ArmCompensationNode(Node):
         values = values_of(message)
         self._streaming.heard(values)
         self._state, self._answered = message.message, values.get("plans answered", "")
-        self._before.heard(time.monotonic())
+        self._before.heard(time.monotonic(), self._state)
         asked = self._asked
         if asked is None and self._schedule.idle and self._streaming.idle:
             self._before.until = number_of(values.get("plan ends", ""))

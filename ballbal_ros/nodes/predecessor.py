@@ -20,13 +20,14 @@ class Predecessor:
     """
 
     def __init__(self) -> None:
-        self._heard_at = math.inf
+        self._heard_at, self._first_state = math.inf, ""
         self._was_there: bool | None = None
         self.until = 0.0
 
-    def heard(self, now: float) -> None:
-        """The balance node has been heard of."""
-        self._heard_at = min(self._heard_at, now)
+    def heard(self, now: float, state: str) -> None:
+        """The balance node has been heard of, and what its ``state`` is; the first time counts."""
+        if self._heard_at == math.inf:
+            self._heard_at, self._first_state = now, state
 
     def settled(self, now: float) -> bool:
         """Whether what others keep for late joiners has come."""
@@ -36,14 +37,14 @@ class Predecessor:
         """Whether what comes ``now`` may have been sent to the one before as well."""
         return now < self._heard_at + LONG_SETTLED
 
-    def was_there(self, answered: str, state: str, planned: bool) -> bool:
+    def was_there(self, answered: str, planned: bool) -> bool:
         """Whether there was one that may have answered plans; as it is found the first time, it stays.
 
         ``answered``: how many plans the balance node has been asked about. Without compensation (not ``planned``) it is
-        not asked: then it is taken to be so where the robot stood free (``state``) already.
+        not asked: then it is taken to be so where the robot stood free when it was first heard of.
         """
         if self._was_there is None:
-            self._was_there = answered not in ("", "0") or (not planned and state in (BALANCING, STOPPING))
+            self._was_there = answered not in ("", "0") or (not planned and self._first_state in (BALANCING, STOPPING))
         return self._was_there
 
     def refusal(self, topic: str) -> PlanRefused:
