@@ -111,3 +111,16 @@ def test_help_names_the_kinds_and_clocks() -> None:
     out = subprocess.run(words, cwd=ROOT, capture_output=True, text=True, check=True, env=environment).stdout
     for word in ("quasi_static", "lock-step", "real-time", "--namespace", "--truth"):
         assert word in out
+
+
+def test_what_is_not_planned_runs_too(ros_domain_id: int, tmp_path: Path) -> None:
+    """A lean that follows the measured arms, over the bus: the arms move, the ball does much more than when planned,
+    and it stays up.
+    """
+    plan, file = tmp_path / "nod.yaml", tmp_path / "found.json"
+    plan.write_text(NOD)
+    words = ("headless", str(plan), "--robot", str(SHELVER), "--compensation", "quasi_static", "--json", str(file))
+    status, _, err = finished(ballbal(*words, domain=ros_domain_id))
+    assert status == 0, err
+    run = json.loads(file.read_text())["runs"][0]
+    assert not run["fell"] and run["ball_travel_peak_mm"] > 3.0
