@@ -247,7 +247,7 @@ class ArmCompensationNode(Node):
             try:
                 proposal = self._answer(sent)
             except BallbalError as error:
-                self._reports.refuse(sent.what, stamp, str(error), sent.earlier)
+                self._reports.refuse(sent.what, stamp, str(error), sent.earlier and self._has_predecessor())
                 continue
             if proposal is None:
                 self._reports.accept(sent.what, stamp, "nothing moves: nothing to cancel")
