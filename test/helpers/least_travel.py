@@ -8,6 +8,8 @@ drive's torque is the one limit. Linearised again about the lean found, the boun
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from scipy import sparse
 from scipy.linalg import expm
@@ -22,6 +24,8 @@ from ballbal_ros.robot.whole_body import WholeBody
 
 # One node's unknowns: lean (2), lean rate (2), ball (2), ball rate (2), ball acceleration until the next node (2).
 WIDTH, STATES = 10, 8
+# Lean and ball in mrad and mm, so that the program is well scaled.
+SCALE = np.array([1e3] * STATES + [1.0] * 2)
 AFTER = 2.0  # s from the arms' end to where the robot must stand in balance again
 
 
@@ -70,19 +74,22 @@ def steps(accelerated: Array, step: float) -> Array:
     return np.stack([expm(matrix * step)[:STATES] for matrix in system])
 
 
+def program(step: Array, torque: Array) -> tuple[Any, Any]:
+    """Sparse matrices on all nodes' unknowns, scaled by :data:`SCALE`: the motion from node to node, the torque."""
+    intervals, nodes = len(step), len(step) + 1
+    advanced = step[:, :, :WIDTH] * SCALE[:STATES, None] / SCALE
+    driven = np.zeros((intervals, 2, WIDTH))
+    driven[:, :, [0, 1, 2, 3, 8, 9]] = torque[:-1, :, :6]
+    here = sparse.kron(sparse.eye(intervals, nodes), np.eye(WIDTH))
+    onward = sparse.kron(sparse.eye(intervals, nodes, k=1), np.eye(STATES, WIDTH))
+    return onward - sparse.block_diag(advanced) @ here, sparse.block_diag(driven / SCALE) @ here
+
+
 def solve(step: Array, torque: Array, static: Array, torque_limit: float) -> float:
     """The least bound on |x| and |y|, m, from rest in balance to rest in balance."""
     nodes, intervals = len(static), len(step)
-    # Lean and ball in mrad and mm, so that the program is well scaled.
-    scale = np.array([1e3] * STATES + [1.0] * 2)
-    advanced = step[:, :, :WIDTH] * scale[:STATES, None] / scale
-    driven = np.zeros((intervals, 2, WIDTH))
-    driven[:, :, [0, 1, 2, 3, 8, 9]] = torque[:-1, :, :6]
+    motion, drive = program(step, torque)
     used = sparse.eye(intervals, nodes)
-    motion = sparse.kron(sparse.eye(intervals, nodes, k=1), np.eye(STATES, WIDTH)) - sparse.block_diag(
-        advanced
-    ) @ sparse.kron(used, np.eye(WIDTH))
-    drive = sparse.block_diag(driven / scale) @ sparse.kron(used, np.eye(WIDTH))
     ball = sparse.kron(used, np.eye(2, WIDTH, k=4))
     given, one = torque[:-1, :, 6].ravel(), np.ones((2 * intervals, 1))
     within = [[drive, None], [-drive, None], [ball, -one], [-ball, -one]]
@@ -96,7 +103,7 @@ def solve(step: Array, torque: Array, static: Array, torque_limit: float) -> flo
         A_ub=sparse.bmat(within).tocsr(),
         b_ub=np.concatenate((torque_limit - given, torque_limit + given, np.zeros(4 * intervals))),
         A_eq=sparse.hstack((motion, sparse.csr_matrix((STATES * intervals, 1)))).tocsr(),
-        b_eq=(step[:, :, WIDTH] * scale[:STATES]).ravel(),
+        b_eq=(step[:, :, WIDTH] * SCALE[:STATES]).ravel(),
         bounds=np.concatenate((bounds.reshape(-1, 2), [[0.0, np.inf]])),
         method="highs-ipm",
     )

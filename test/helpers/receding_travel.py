@@ -14,7 +14,7 @@ from scipy.optimize import linprog
 from ballbal_ros.motion.spline import JointPath
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.whole_body import WholeBody
-from helpers.least_travel import AFTER, STATES, WIDTH, linear, steps
+from helpers.least_travel import AFTER, SCALE, STATES, WIDTH, linear, program, steps
 
 STOP = 0.1  # s in which arms that are taken to be held come to rest, evenly
 SETTLING = 0.6  # s after the arms' end in which the ball goes on being watched
@@ -67,15 +67,7 @@ def best_control(
     accelerated, torque = linear(body.description, terms, (static, none, none))
     step_matrices = steps(accelerated, step)
     nodes, intervals = len(static), len(step_matrices)
-    scale = np.array([1e3] * STATES + [1.0] * 2)
-    advanced = step_matrices[:, :, :WIDTH] * scale[:STATES, None] / scale
-    driven = np.zeros((intervals, 2, WIDTH))
-    driven[:, :, [0, 1, 2, 3, 8, 9]] = torque[:-1, :, :6]
-    used = sparse.eye(intervals, nodes)
-    motion = sparse.kron(sparse.eye(intervals, nodes, k=1), np.eye(STATES, WIDTH)) - sparse.block_diag(
-        advanced
-    ) @ sparse.kron(used, np.eye(WIDTH))
-    drive = sparse.block_diag(driven / scale) @ sparse.kron(used, np.eye(WIDTH))
+    motion, drive = program(step_matrices, torque)
     ball = sparse.kron(sparse.eye(nodes), np.eye(2, WIDTH, k=4))
     size, one = 2 * nodes, np.ones((2 * nodes, 1))
     each = sparse.eye(size)
@@ -99,7 +91,7 @@ def best_control(
         A_ub=sparse.bmat(within).tocsr(),
         b_ub=np.concatenate((torque_limit - given, torque_limit + given, np.zeros(3 * size))),
         A_eq=sparse.hstack((motion, sparse.csr_matrix((STATES * intervals, size + 1)))).tocsr(),
-        b_eq=(step_matrices[:, :, WIDTH] * scale[:STATES]).ravel(),
+        b_eq=(step_matrices[:, :, WIDTH] * SCALE[:STATES]).ravel(),
         bounds=free,
         method="highs-ipm",
     )
