@@ -57,7 +57,7 @@ def print_trials(trials: Sequence[Trial], console: Console) -> None:
     table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     table.add_column("fault", no_wrap=True)
     table.add_column("outcome")
-    for heading in ("ball\nmm", "effort\nN m", "react\ns", "other-\nwise"):
+    for heading in ("ball\nmm", "effort\nN m", "react\ns", "not as\ntable"):
         table.add_column(heading, justify="right")
     several = len({trial.wheels for trial in trials}) > 1
     for kind, wheels in dict.fromkeys((trial.kind, trial.wheels) for trial in trials):
@@ -65,8 +65,8 @@ def print_trials(trials: Sequence[Trial], console: Console) -> None:
         table.add_row(name, *_cells([t for t in trials if (t.kind, t.wheels) == (kind, wheels)]))
     console.print(table)
     console.print(
-        "[dim]Worst of each kind: ball travel of those that stood, commanded effort, time to react. otherwise: not as "
-        f"in docs/safety.md.{' In brackets: wheels.' if several else ''}[/dim]",
+        "[dim]Worst of each kind: ball travel of those that stood, commanded effort, time to react. The table is that "
+        f"of docs/safety.md.{' In brackets: wheels.' if several else ''}[/dim]",
         highlight=False,
     )
     wrong = [trial for trial in trials if not trial.ok]
@@ -77,8 +77,8 @@ def print_trials(trials: Sequence[Trial], console: Console) -> None:
             f"[bold red]trial {trial.number}[/bold red] {trial.kind}, {trial.wheels} wheels, {what}: {trial.why}",
             highlight=False,
         )
-    verdict = "[bold red]not as in the table[/bold red]" if wrong else "[green]all as in the table[/green]"
-    console.print(f"{len(trials)} trials, {len(wrong)} otherwise: {verdict}", highlight=False)
+    found = f"[bold red]{len(wrong)} not as in the table[/bold red]" if wrong else "[green]all as in the table[/green]"
+    console.print(f"{len(trials)} trials: {found}", highlight=False)
 
 
 def _cells(trials: list[Trial]) -> list[str]:

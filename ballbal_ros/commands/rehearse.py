@@ -155,7 +155,7 @@ def rehearse_command(
     console = Console()
     asked, seeds = asked_kinds(compensation), range(seed, seed + repeat)
     runs = rehearse(plan, robot, asked, seeds, tuple(truth or ()), lead_in, console, figure, learn)
-    print_runs(runs, console)
+    print_runs(runs, console, learning=learn is not None)
     if json_file is not None:
         write_json(json_file, runs.as_json())
     raise typer.Exit(0 if runs.ok else 1)

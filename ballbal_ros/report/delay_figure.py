@@ -33,7 +33,7 @@ def draw_delays(points: Sequence[tuple[float, float]], measured: Sequence[float]
                       textcoords="offset points", ha="right", color=_MEASURED, fontsize=9)  # fmt: skip
     axes.set_xlabel("delay of the delay line, s", color=_INK)
     axes.set_ylabel("largest ball travel, mm", color=_INK)
-    axes.set_ylim(bottom=0.0)
+    axes.set_ylim(0.0, 1.1 * axes.get_ylim()[1])
     axes.set_title(title, loc="left", color=_INK, fontsize=11)
     for side in ("top", "right"):
         axes.spines[side].set_visible(False)

@@ -16,12 +16,12 @@ MEANING = {
 }
 
 
-def print_runs(runs: RunSet, console: Console) -> None:
+def print_runs(runs: RunSet, console: Console, learning: bool = False) -> None:
     """Print one row for each kind of compensation (the median where there are several seeds), then the planned runs'
-    limits.
+    limits. ``learning``: planned runs follow from each other, and have a row each.
     """
     count = max((sum(1 for r in runs.runs if r.compensation == kind) for kind in KINDS), default=0)
-    seeds = "" if count <= 1 else f", median of {count} seeds (ball travel: worst)"
+    seeds = "" if count <= 1 or learning else f", median of {count} seeds (ball travel: worst)"
     console.print(f"[bold]{runs.robot}[/bold], plan {runs.plan}, {runs.clock}{seeds}", highlight=False)
     table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     table.add_column("compensation", no_wrap=True)
@@ -29,7 +29,10 @@ def print_runs(runs: RunSet, console: Console) -> None:
         table.add_column(heading, justify="right", no_wrap=True)
     for kind in KINDS:
         chosen = [run for run in runs.runs if run.compensation == kind]
-        if chosen:
+        if learning and kind == "planned":
+            for number, run in enumerate(chosen, 1):
+                table.add_row(f"{_name([run], kind)}, run {number}", *_cells([run]))
+        elif chosen:
             table.add_row(_name(chosen, kind), *_cells(chosen))
     console.print(table)
     for kind in dict.fromkeys(run.compensation for run in runs.runs):
