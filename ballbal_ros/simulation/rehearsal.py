@@ -21,7 +21,7 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.pulls import at_time
-from ballbal_ros.motion.repetition import Learned, Record, still_to_lean_for
+from ballbal_ros.motion.repetition import Learned, still_to_lean_for
 from ballbal_ros.motion.spline import FollowedPath
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array
@@ -131,7 +131,6 @@ class Rehearsal:
         self._look_every = max(1, round(EVERY / self.loop.period))
         self._ticks, self._believes_other = 0, False
         self._learned = learned
-        self._deviations: list[tuple[float, ...]] | None = [] if kind == "planned" else None
         if self.plan is not None and story.ball is not None:
             self._meant = self.plan.table(self.loop.period)[:, 4:6]
         self._truly: list[tuple[float, Load]] = []
@@ -172,10 +171,6 @@ class Rehearsal:
         if robot.support and loop.guard.state == BALANCING and is_looked_at(round(1e9 * robot.time), self._period_ns):
             robot.support = loop.supported = False
         self._ticks += 1
-        if self._deviations is not None and robot.time >= self.timeline.lean - 1e-9:
-            row, ball = loop.reference.row, loop.controller.estimate[4:6]
-            sent = loop.torque[:2] - row[10:12]
-            self._deviations.append((loop.lean[0] - row[0], loop.lean[1] - row[1], *ball, *sent))
         if self._ticks % self._look_every == 0:
             found = [load for load in self.watch.see(robot.time) if self._believe(load)]
             self.watch.adopted(found)
@@ -193,12 +188,6 @@ class Rehearsal:
             self.plan = plan_story(self._files, self.story, self.timeline, self.loop.body.loads.values(), self._learned)
         if self.plan is not None:
             self.loop.add_plan(self.timeline.lean, self.plan)
-
-    @property
-    def record(self) -> Record:
-        """How far a planned run was from its plan, as the robot itself measured it."""
-        measured = np.array(self._deviations or np.zeros((0, 6)))
-        return Record(self.loop.period, measured[:, :2], measured[:, 2:4], measured[:, 4:])
 
     def step(self) -> None:
         """One tick of loop and robot together."""
