@@ -59,7 +59,7 @@ class JointReader:
     def __init__(self, names: Sequence[str], topic: str) -> None:
         self._names, self._topic = tuple(names), topic
         self._order: dict[tuple[str, ...], tuple[Array, Array]] = {}
-        self._last: tuple[str, ...] = ()
+        self._last: tuple[str, ...] | None = None
         self._reader = JointStateReader()
         self.position: Array = np.full(len(self._names), np.nan)
         self.stamp = -1
