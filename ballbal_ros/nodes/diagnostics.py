@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+import contextlib
 import math
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 
 from builtin_interfaces.msg import Time
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
 from rclpy.clock import Clock, ClockType
 from rclpy.node import Node
 
+from ballbal_ros.errors import BallbalError
 from ballbal_ros.nodes.pace import Inputs, Pace
 from ballbal_ros.nodes.priority import Scheduling
 from ballbal_ros.nodes.topics import publisher
@@ -70,6 +72,16 @@ class Diagnostics:
     def accept(self, topic: str) -> None:
         """Forget what was refused on a topic, as what came now is in order."""
         self._refusals.pop(topic, None)
+
+    @contextlib.contextmanager
+    def taking(self, topic: str) -> Iterator[None]:
+        """While a message of a topic is taken in: what is wrong with it is refused, otherwise it is accepted."""
+        try:
+            yield
+        except BallbalError as error:
+            self.refuse(topic, str(error))
+        else:
+            self.accept(topic)
 
     @property
     def refusals(self) -> dict[str, str]:

@@ -50,18 +50,18 @@ def stamp_text(stamp: Time) -> str:
 
 
 class JointReader:
-    """Takes serialised joint states in, matched by name, whatever their order; others' joints are passed over.
+    """Takes serialised joint states in, matched by ``names``, whatever their order; others' joints are passed over.
 
     ``position`` [n] holds the newest of each joint, NaN before its first; rad or m. ``stamp`` is the newest message's,
     in ns.
     """
 
     def __init__(self, names: Sequence[str], topic: str) -> None:
-        self._names, self._topic = tuple(names), topic
+        self.names, self._topic = tuple(names), topic
         self._order: dict[tuple[str, ...], tuple[Array, Array]] = {}
         self._last: tuple[str, ...] | None = None
         self._reader = JointStateReader()
-        self.position: Array = np.full(len(self._names), np.nan)
+        self.position: Array = np.full(len(self.names), np.nan)
         self.stamp = -1
 
     @property
@@ -72,7 +72,7 @@ class JointReader:
     def missing(self) -> list[str]:
         """Joints that have not been heard of yet."""
         return [
-            name for name, value in zip(self._names, self.position.tolist(), strict=True) if not math.isfinite(value)
+            name for name, value in zip(self.names, self.position.tolist(), strict=True) if not math.isfinite(value)
         ]
 
     def read(self, raw: bytes) -> bool:
@@ -91,13 +91,13 @@ class JointReader:
             return True
         order = self._order.get(names)
         if order is None:
-            here = [(i, self._names.index(name)) for i, name in enumerate(names) if name in self._names]
+            here = [(i, self.names.index(name)) for i, name in enumerate(names) if name in self.names]
             if len({k for _, k in here}) < len(here):
                 raise BallbalError(self._topic, "names a joint twice", "give each joint once")
             order = np.array([i for i, _ in here], int), np.array([k for _, k in here], int)
             if len(self._order) < 64:
                 self._order[names] = order
-        if names == self._names:
+        if names == self.names:
             self._last = names
         if not len(order[0]):
             return False

@@ -8,6 +8,7 @@ from typing import Any
 
 from rclpy.node import Node
 
+from ballbal_ros.nodes.message_age import WithAge
 from ballbal_ros.nodes.topics import subscribe
 
 NEVER = "never"
@@ -82,14 +83,21 @@ class Inputs:
 
     def subscribe(self, topic: str, callback: Callable[[Any], None], *, raw: bool = False) -> None:
         """As :func:`ballbal_ros.nodes.topics.subscribe`."""
+        subscribe(self._node, topic, self._noting(topic, callback), raw=raw)
+
+    def subscribe_with_age(self, topic: str, callback: Callable[[Any, float], None]) -> None:
+        """The same; the callback is told, too, how long ago a message was sent, s."""
+        subscribe(self._node, topic, WithAge(self._noting(topic, callback)))
+
+    def _noting(self, topic: str, callback: Callable[..., None]) -> Callable[..., None]:
         came, clock = self._came, time.monotonic
         came[topic] = None
 
-        def take(message: Any) -> None:
+        def take(*message: Any) -> None:
             came[topic] = clock()
-            callback(message)
+            callback(*message)
 
-        subscribe(self._node, topic, take, raw=raw)
+        return take
 
     def values(self) -> dict[str, object]:
         """``age <topic> s`` for each: wall time since a message came, or that none did."""

@@ -93,7 +93,7 @@ def publisher(node: Node, topic: str, lifespan: float | None = None) -> Any:
 
 
 def subscribe(
-    node: Node, topic: str, callback: Callable[[Any], None], *, raw: bool = False, depth: int | None = None
+    node: Node, topic: str, callback: Callable[..., None], *, raw: bool = False, depth: int | None = None
 ) -> Any:
     """A subscription to a topic of the stack; ``raw``: the callback gets the serialised message; ``depth``: for one who
     wants them all rather than the newest.

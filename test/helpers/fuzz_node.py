@@ -11,6 +11,7 @@ import importlib
 import json
 import random
 import sys
+import time
 import traceback
 from collections import Counter
 from pathlib import Path
@@ -29,6 +30,7 @@ from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))
 
 from ballbal_ros.nodes.lean_trajectory import LEAN_JOINTS
+from ballbal_ros.nodes.message_age import WithAge
 from ballbal_ros.nodes.messages import load_message, stamp_text, to_duration, to_time
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.robot.loads import Load, LoadChanges
@@ -122,7 +124,7 @@ class Bench:
             self._bring_up()
         if self.executable == "arm_compensation":
             node._reports._publisher.publish = lambda message: self._report(message)
-            node._to_balance.publish = lambda message: self._acknowledge(message)
+            node._balance._to_balance.publish = lambda message: self._acknowledge(message)
             self.deliver("joint_states", self.sensors["joint_states"])
             self._say_balancing("0")
 
@@ -203,7 +205,7 @@ class Bench:
                 self.deliver(topic, self.sensors[topic])
         if self.executable == "balance" and self.commands == count:
             self.found["a tick without an answer"] += 1
-        if self.executable == "arm_compensation" and self.node._asked is not None:
+        if self.executable == "arm_compensation" and self.node._balance.waits:
             self._say_balancing(str(self.rng.randrange(10**6)), plan=self._asked)
         if not self.world.fell:
             self.world.step(self.effort)
@@ -217,7 +219,9 @@ class Bench:
     def deliver(self, topic: str, what: Any) -> None:
         """What the middleware hands over."""
         try:
-            self.subscriptions[topic].callback(what)
+            callback = self.subscriptions[topic].callback
+            # As the events executor calls one that wants to know more of a message.
+            callback((what, {"source_timestamp": time.time_ns()}) if isinstance(callback, WithAge) else what)
         except Exception:
             lines = traceback.format_exc().splitlines()
             self.found[f"{topic}: {lines[-1]} at {lines[-3].strip()}"] += 1
@@ -258,7 +262,7 @@ class Bench:
         if self.executable == "arm_compensation":
             wanted = self.sent["arm_plan"]
             for _ in range(200):
-                if not self.node._waiting and self.node._asked is None:
+                if not self.node._waiting and not self.node._balance.waits:
                     break
                 self.world_goes_on()
                 self.node._attend()
