@@ -351,7 +351,8 @@ def test_an_emergency_stop_is_controlled_and_latched(robot: Robot) -> None:
     robot.senders["emergency_stop"].publish(Bool(data=True))
     robot.listener.wait(lambda: robot.state == "stopping", what="stopping")
     robot.listener.wait(lambda: len(robot.reports) > count, what="the report of the stop")
-    assert robot.reports[-1].status[0].name == "emergency_stop" and robot.reports[-1].status[0].level == OK
+    assert robot.reports[-1].status[0].name == "emergency_stop"
+    assert robot.reports[-1].status[0].level == OK, robot.reports[-1].status[0].message
     robot.go_on(2.0)
     rest = robot.angle(SHOULDERS[0])
     assert robot.state == "stopping"
