@@ -20,7 +20,7 @@ from collections.abc import Iterable, Mapping
 import attrs
 import numpy as np
 
-from ballbal_ros.balance.parameters import HandLoadParameters
+from ballbal_ros.balance.hand_load_parameters import HandLoadParameters
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.balance_rows import GRAVITY

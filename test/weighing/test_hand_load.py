@@ -6,7 +6,7 @@ import attrs
 import numpy as np
 import pytest
 
-from ballbal_ros.balance.parameters import HandLoadParameters
+from ballbal_ros.balance.hand_load_parameters import HandLoadParameters
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.loads import Load
