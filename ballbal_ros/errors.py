@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import difflib
+import reprlib
 from collections.abc import Iterable
+from typing import Any
 
 
 class BallbalError(Exception):
@@ -41,3 +43,9 @@ def nearest(name: str, known: Iterable[str]) -> str:
     if close:
         return f"did you mean {close[0]}?"
     return f"known: {', '.join(names)}" if names else "none is known here"
+
+
+def shown(value: Any) -> str:
+    """A value as an error shows it: not more of it than a line has room for."""
+    text = reprlib.Repr().repr(value)
+    return text if len(text) <= 80 else f"{text[:77]}..."

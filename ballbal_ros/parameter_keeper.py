@@ -15,12 +15,13 @@ from typing import Any, Protocol
 
 import attrs
 
-from ballbal_ros.declaration import Declaration, build, declarations, flatten, parameters_of, parse_yaml
+from ballbal_ros.declaration import Declaration, build, declarations, flatten, parameters_of
 from ballbal_ros.errors import BallbalError, ParameterError
 from ballbal_ros.parameter_change import Change
 from ballbal_ros.parameter_files import FILES, READERS, ParameterSet, check_may_change, edits, read_values
 from ballbal_ros.parameter_history import ParameterHistory, write_whole
 from ballbal_ros.parameter_text import edited
+from ballbal_ros.yaml_files import parse_yaml
 
 
 class Nodes(Protocol):

@@ -12,8 +12,8 @@ from pathlib import Path
 import pytest
 import yaml
 
-from ballbal_ros.declaration import _Loader, parse_yaml
 from ballbal_ros.errors import ParameterError
+from ballbal_ros.yaml_files import _Loader, parse_yaml
 
 PACKAGE = Path(__file__).resolve().parents[1] / "ballbal_ros"
 FILES = sorted(PACKAGE.rglob("*.py"))

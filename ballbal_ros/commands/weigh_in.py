@@ -16,7 +16,7 @@ from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.live_weighing import live_weighing
 from ballbal_ros.commands.posture import asked_posture
 from ballbal_ros.commands.weighing_run import LONGEST, Weighing, rehearsed, remaining_cost, run_weighing
-from ballbal_ros.declaration import build, flatten, parameters_of, parse_yaml
+from ballbal_ros.declaration import build, flatten, parameters_of
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.story import Story, read_story
 from ballbal_ros.parameter_text import edited
@@ -28,6 +28,7 @@ from ballbal_ros.simulation.truth import Truth, parse_truth
 from ballbal_ros.stack import checked_namespace
 from ballbal_ros.weighing.findings import findings, not_told
 from ballbal_ros.weighing.postures import DesignSettings
+from ballbal_ros.yaml_files import parse_yaml
 
 _LIKELY = 5
 

@@ -8,10 +8,10 @@ from typing import Any
 
 import numpy as np
 
-from ballbal_ros.declaration import read_yaml
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.repetition import Learned
 from ballbal_ros.robot.arrays import Array
+from ballbal_ros.yaml_files import read_yaml
 
 _KEYS = ("fits", "runs", "step", "moment_roll", "moment_pitch", "torque_x", "torque_y")
 _HEAD = """# What repetitions of a plan have taught, N m every step s from the plan's start: written by

@@ -12,7 +12,6 @@ import numpy as np
 from attrs import validators
 from cattrs.v import format_exception
 
-from ballbal_ros.declaration import read_yaml
 from ballbal_ros.errors import BallbalError, PlanError, nearest
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import Pull, hand_wrenches
@@ -20,6 +19,7 @@ from ballbal_ros.motion.spline import ArmPath, check_path
 from ballbal_ros.robot.arrays import Array, read_only
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
+from ballbal_ros.yaml_files import read_yaml
 
 T = TypeVar("T")
 _ROLL_SPEED = 0.5

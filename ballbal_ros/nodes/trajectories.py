@@ -14,8 +14,7 @@ import numpy as np
 from builtin_interfaces.msg import Time
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
-from ballbal_ros.declaration import shown
-from ballbal_ros.errors import PlanError, nearest
+from ballbal_ros.errors import PlanError, nearest, shown
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints

@@ -13,13 +13,14 @@ from ballbal_ros.commands.files import read_robot
 from ballbal_ros.commands.main import app
 from ballbal_ros.commands.weigh_in import weighed_text
 from ballbal_ros.commands.weighing_run import LONGEST, Weighing, rehearsed, run_weighing
-from ballbal_ros.declaration import build, flatten, parameters_of, parse_yaml
+from ballbal_ros.declaration import build, flatten, parameters_of
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.simulation.run_result import median
 from ballbal_ros.simulation.truth import Truth, drawn_truth, parse_truth
 from ballbal_ros.simulation.world import World
 from ballbal_ros.weighing.postures import DesignSettings
 from ballbal_ros.weighing.procedure import ProcedureSettings
+from ballbal_ros.yaml_files import parse_yaml
 from helpers.rehearsing import files, story
 from helpers.robots import CONFIG, reach
 
