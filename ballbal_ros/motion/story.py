@@ -1,106 +1,35 @@
-"""Plan files: a list of steps, each one verb, read into a timeline of arm motion, loads, pushes and ball moves."""
+"""Plan files: their steps laid on a timeline of arm motion, loads, pushes, pulls and ball moves."""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from pathlib import Path
-from typing import Any, TypeVar
 
 import attrs
-import cattrs
 import numpy as np
-from attrs import validators
-from cattrs.v import format_exception
 
 from ballbal_ros.errors import BallbalError, PlanError, nearest
 from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import Pull, hand_wrenches
 from ballbal_ros.motion.spline import ArmPath, check_path
+from ballbal_ros.motion.story_steps import (
+    LoadStep,
+    Move,
+    PullStep,
+    PushStep,
+    RollStep,
+    Start,
+    Wait,
+    read_start,
+    read_step,
+)
 from ballbal_ros.robot.arrays import Array, read_only
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.yaml_files import read_yaml
 
-T = TypeVar("T")
 _ROLL_SPEED = 0.5
 _SHORTEST_ROLL = 2.0
-
-
-def _finite(_: object, attribute: attrs.Attribute[Any], value: object) -> None:
-    numbers = value.values() if isinstance(value, Mapping) else np.atleast_1d(np.asarray(value, float))
-    if not all(np.isfinite(number) for number in numbers):
-        raise ValueError(f"{attribute.name} is {value!r}; it takes finite numbers")
-
-
-_POSITIVE = [_finite, validators.gt(0.0)]
-_VECTOR: Any = [_finite, validators.min_len(3), validators.max_len(3)]
-
-
-@attrs.frozen
-class Wait:
-    """Nothing happens for ``wait`` s."""
-
-    wait: float = attrs.field(validator=[_finite, validators.ge(0.0)])
-
-
-@attrs.frozen
-class Move:
-    """The named joints go from rest to rest together, rad or m, in ``during`` s."""
-
-    move: dict[str, float] = attrs.field(validator=_finite)
-    during: float = attrs.field(validator=_POSITIVE)
-
-
-@attrs.frozen
-class LoadStep:
-    """A hand's load becomes this one, at once; mass 0 takes it away. ``announced``: the robot is told."""
-
-    hand: str
-    mass: float = attrs.field(validator=[_finite, validators.ge(0.0)])
-    center: list[float] = attrs.field(factory=lambda: [0.0, 0.0, 0.0], validator=_VECTOR)
-    announced: bool = True
-
-
-@attrs.frozen
-class PushStep:
-    """Somebody pushes: ``force`` [3] N in odom axes at ``at`` [3] m of a link, for ``during`` s."""
-
-    link: str
-    at: list[float] = attrs.field(validator=_VECTOR)
-    force: list[float] = attrs.field(validator=_VECTOR)
-    during: float = attrs.field(validator=_POSITIVE)
-
-
-@attrs.frozen
-class PullStep:
-    """What the world exerts on a hand goes to ``force`` [3] N and ``moment`` [3] N m within ``during`` s, and stays.
-
-    ``base_footprint`` axes, at the hand link's origin; ``announced``: the planner is told.
-    """
-
-    hand: str
-    during: float = attrs.field(validator=_POSITIVE)
-    force: list[float] = attrs.field(factory=lambda: [0.0, 0.0, 0.0], validator=_VECTOR)
-    moment: list[float] = attrs.field(factory=lambda: [0.0, 0.0, 0.0], validator=_VECTOR)
-    announced: bool = True
-
-
-@attrs.frozen
-class RollStep:
-    """The ball rolls from rest to rest to x, y (m) and heading (rad) from where the plan began, in ``during`` s."""
-
-    x: float = attrs.field(default=0.0, validator=_finite)
-    y: float = attrs.field(default=0.0, validator=_finite)
-    heading: float = attrs.field(default=0.0, validator=_finite)
-    during: float | None = attrs.field(default=None, validator=validators.optional(_POSITIVE))
-
-
-@attrs.frozen
-class Start:
-    """Where the plan begins: joints not named are at 0; what the hands hold."""
-
-    posture: dict[str, float] = attrs.field(factory=dict, validator=_finite)
-    loads: list[LoadStep] = attrs.field(factory=list)
 
 
 @attrs.frozen
@@ -157,38 +86,6 @@ class Story:
         return hand_wrenches((pull for pull in self.pulls if pull.announced), -self.arms_start)
 
 
-def _strict(kind: type[T]) -> Callable[[Any, Any], T]:
-    def hook(value: Any, _: Any) -> T:
-        wanted: tuple[type, ...] = (int, float) if kind is float else (kind,)
-        if isinstance(value, bool) != (kind is bool) or not isinstance(value, wanted):
-            raise ValueError(f"{value!r} is no {'number' if kind is float else kind.__name__}")
-        return kind(value)  # type: ignore[call-arg]
-
-    return hook
-
-
-_CONVERTER = cattrs.Converter(forbid_extra_keys=True, detailed_validation=True)
-for _kind in (float, str, bool):
-    _CONVERTER.register_structure_hook(_kind, _strict(_kind))
-_VERBS: dict[str, type] = {
-    "wait": Wait, "move": Move, "load": LoadStep, "push": PushStep, "pull": PullStep, "roll": RollStep
-}  # fmt: skip
-
-
-def _reason(error: BaseException, kind: type | None) -> str:
-    said = type(error) is ValueError and str(error)
-    return said or format_exception(error, kind)
-
-
-def _structure(value: Any, cls: type[T], where: str, what: str) -> T:
-    try:
-        return _CONVERTER.structure(value, cls)
-    except Exception as error:
-        reason = "; ".join(cattrs.transform_error(error, path=what, format_exception=_reason))
-        known = ", ".join(f.name for f in attrs.fields(cls))  # type: ignore[arg-type]
-        raise PlanError(where, reason or f"{what} is {value!r}", f"{what} takes {known}") from error
-
-
 def read_story(path: Path, description: RobotDescription) -> Story:
     """Read a plan file for a robot; raises :class:`PlanError` in one line that names file, step and key."""
     where = str(path)
@@ -201,26 +98,11 @@ def read_story(path: Path, description: RobotDescription) -> Story:
     steps = document.get("steps")
     if not isinstance(steps, list) or not steps:
         raise PlanError(where, f"steps is {steps!r}", "it takes a list of steps, each one verb")
-    start = _structure(document.get("start") or {}, Start, where, "start")
+    start = read_start(document.get("start") or {}, where)
     builder = _Builder(description, where, start)
     for number, step in enumerate(steps, start=1):
-        builder.add(_step(step, where, f"step {number}"), f"{where} step {number}")
+        builder.add(read_step(step, where, f"step {number}"), f"{where} step {number}")
     return builder.story(str(document.get("name", Path(path).stem)))
-
-
-def _step(step: Any, where: str, what: str) -> object:
-    if not isinstance(step, Mapping):
-        raise PlanError(where, f"{what} is {step!r}", f"each step is one verb: {', '.join(_VERBS)}")
-    verbs = [key for key in step if key in _VERBS]
-    if len(verbs) != 1:
-        unknown = next((str(key) for key in step if key not in _VERBS), "")
-        raise PlanError(where, f"{what} has the verbs {', '.join(verbs) or 'none'}", nearest(unknown, _VERBS))
-    verb, inner = verbs[0], step[verbs[0]]
-    if verb in ("wait", "move") or not isinstance(inner, Mapping):
-        return _structure(dict(step), _VERBS[verb], where, what)
-    return _structure(
-        {**inner, **{k: v for k, v in step.items() if k != verb}}, _VERBS[verb], where, f"{what} ({verb})"
-    )
 
 
 class _Builder:
