@@ -12,8 +12,9 @@ import numpy as np
 
 from ballbal_ros.errors import BallbalError, PlanRefused
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import BallMotion, HandWrench, PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import BallMotion, HandWrench, PlanRequest
 from ballbal_ros.motion.pulls import joined
 from ballbal_ros.motion.spline import ArmPath, FollowedPath, JointPath, check_path
 from ballbal_ros.motion.stopping import Handover, Later, Spliced, stop_path

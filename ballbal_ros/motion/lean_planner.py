@@ -11,13 +11,12 @@ from ballbal_ros.errors import PlanError
 from ballbal_ros.motion.lean_plan import LeanPlan, Prediction, predicted_uses
 from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, equilibrium_lean, solve_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import BallMotion, HandWrench, PlanRequest, StartState
 from ballbal_ros.motion.relief import ReliefLimits, ball_relief
-from ballbal_ros.motion.spline import JointPath
 from ballbal_ros.robot.arrays import Array, apply
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.balance_rows import GRAVITY, OutsideMotion, UpperBodyTerms
 from ballbal_ros.robot.description import RobotDescription
-from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
 _FRICTION_RATE = 0.05
@@ -26,77 +25,6 @@ _RELIEF_ROUNDS = 3
 _LONGEST, _LOADS_AFTER = 600.0, 60.0
 # Of each limit; the rest is for the rotors and for what is not linear, of which the spin moment has most.
 _RESERVE, _SPIN_RESERVE = 0.93, 0.85
-
-
-@attrs.frozen(eq=False)
-class StartState:
-    """Where a plan begins: lean and its rate [2], rad; ball relative to the station and its rate [2], m, in the
-    plan's axes.
-    """
-
-    lean: Array
-    lean_rate: Array
-    ball: Array
-    ball_rate: Array
-
-
-@attrs.frozen(eq=False)
-class HandWrench:
-    """What the world is planned to exert on one hand: force and moment [N, 3] at times [N], ``base_footprint`` axes,
-    held outside.
-    """
-
-    hand: str
-    times: Array
-    force: Array
-    moment: Array
-
-
-@attrs.frozen(eq=False)
-class BallMotion:
-    """A planned ball motion: [N, 3] (x, y in plan axes, m; heading, rad) with rates and accelerations at times [N],
-    held outside.
-    """
-
-    times: Array
-    position: Array
-    rate: Array
-    acceleration: Array
-
-
-@attrs.frozen(eq=False)
-class OutsideMoment:
-    """A couple on the body [N, 2] (roll, pitch), N m in ``base_footprint`` axes, at times [N], held outside; and
-    ``torque`` [N, 2], what the drive must give besides (a force makes another moment about the ball's centre than about
-    the contact, and drives have errors of their own).
-    """
-
-    times: Array
-    moment: Array
-    torque: Array
-
-    def at(self, times: Array) -> tuple[Array, Array]:
-        """Couple and torque [M, 2] at other times [M], s."""
-        both = [np.interp(times, self.times, column) for column in (*self.moment.T, *self.torque.T)]
-        return np.stack(both[:2], axis=1), np.stack(both[2:], axis=1)
-
-
-@attrs.frozen(eq=False)
-class PlanRequest:
-    """What is to happen. ``arms`` is what the arms will really do (servo lag included), from ``lead_in`` s after the
-    plan's start.
-
-    ``loads`` are changes (time from the plan's start, load); ``start`` None means at rest in equilibrium. ``moment``:
-    what else pulls, beside what the trim bears.
-    """
-
-    arms: JointPath
-    lead_in: float
-    loads: Sequence[tuple[float, Load]] = ()
-    ball: BallMotion | None = None
-    wrenches: Sequence[HandWrench] = ()
-    start: StartState | None = None
-    moment: OutsideMoment | None = None
 
 
 def terms_along(body: WholeBody, request: PlanRequest, times: Array, step: float) -> UpperBodyTerms:

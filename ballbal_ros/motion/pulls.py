@@ -11,7 +11,7 @@ from collections.abc import Iterable, Sequence
 import attrs
 import numpy as np
 
-from ballbal_ros.motion.lean_planner import HandWrench
+from ballbal_ros.motion.plan_request import HandWrench
 from ballbal_ros.robot.arrays import Array
 
 Vector = tuple[float, float, float]

@@ -15,9 +15,10 @@ import attrs
 import numpy as np
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import StartState, ball_to_station, made_plan, relief_limits
+from ballbal_ros.motion.lean_planner import ball_to_station, made_plan, relief_limits
 from ballbal_ros.motion.lean_solver import LeanProblem, LeanSolution, equilibrium_lean, solve_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import StartState
 from ballbal_ros.motion.relief import BallBasis, BallResponse
 from ballbal_ros.motion.spline import JointPath
 from ballbal_ros.motion.stopping import stop_path

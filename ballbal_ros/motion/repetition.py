@@ -23,8 +23,9 @@ import numpy as np
 from scipy.signal import savgol_filter
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import OutsideMoment, PlanRequest, outside_motion, terms_along
+from ballbal_ros.motion.lean_planner import outside_motion, terms_along
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import OutsideMoment, PlanRequest
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.balance_rows import balance_rows
 from ballbal_ros.robot.description import RobotDescription

@@ -8,7 +8,7 @@ import attrs
 import numpy as np
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import BallMotion, StartState
+from ballbal_ros.motion.plan_request import BallMotion, StartState
 from ballbal_ros.motion.spline import ArmPath, JointPath
 from ballbal_ros.robot.arrays import Array
 

@@ -9,7 +9,7 @@ import attrs
 import numpy as np
 
 from ballbal_ros.errors import BallbalError, PlanError, nearest
-from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
+from ballbal_ros.motion.plan_request import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import Pull, hand_wrenches
 from ballbal_ros.motion.spline import ArmPath, check_path
 from ballbal_ros.motion.story_steps import (

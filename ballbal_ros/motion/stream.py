@@ -8,8 +8,8 @@ import attrs
 import numpy as np
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import StartState
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import StartState
 from ballbal_ros.motion.receding import HeldPath, RecedingPlanner, lean_kick
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription

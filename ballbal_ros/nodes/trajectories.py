@@ -15,7 +15,7 @@ from builtin_interfaces.msg import Time
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.errors import PlanError, nearest, shown
-from ballbal_ros.motion.lean_planner import BallMotion, HandWrench
+from ballbal_ros.motion.plan_request import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
 from ballbal_ros.nodes.lean_trajectory import LONGEST, Waypoints, column

@@ -8,7 +8,7 @@ from collections.abc import Iterable
 import numpy as np
 
 from ballbal_ros.errors import BallbalError, nearest
-from ballbal_ros.motion.lean_planner import HandWrench
+from ballbal_ros.motion.plan_request import HandWrench
 from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.loads import Load

@@ -10,7 +10,7 @@ import mujoco
 import numpy as np
 
 from ballbal_ros.errors import ModelError, nearest
-from ballbal_ros.motion.lean_planner import HandWrench
+from ballbal_ros.motion.plan_request import HandWrench
 from ballbal_ros.motion.pulls import hand_wrenches
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array

@@ -18,8 +18,9 @@ from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.balance.schedule import GainSchedule
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import PlanRequest
 from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.repetition import Learned, still_to_lean_for
 from ballbal_ros.motion.spline import FollowedPath

@@ -16,7 +16,8 @@ from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.declaration import load
 from ballbal_ros.errors import PlanRefused
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import PlanRequest
 from ballbal_ros.robot.whole_body import WholeBody
 from helpers.robots import CONFIG, compensation, reach, shelver
 

@@ -8,8 +8,9 @@ import pinocchio as pin
 import pytest
 from pytest_benchmark.fixture import BenchmarkFixture
 
-from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.lean_solver import LeanProblem, equilibrium_lean, solve_lean
+from ballbal_ros.motion.plan_request import PlanRequest
 from ballbal_ros.robot.balance_rows import OutsideMotion
 from helpers.boundary_value import bounded_lean
 from helpers.robots import compensation, reach, shelver

@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 from pytest_benchmark.fixture import BenchmarkFixture
 
-from ballbal_ros.motion.lean_planner import PlanRequest, StartState, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import PlanRequest, StartState
 from ballbal_ros.motion.receding import HeldPath, RecedingPlanner
 from ballbal_ros.motion.stopping import Later
 from helpers.robots import compensation, reach, shelver

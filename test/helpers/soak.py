@@ -11,7 +11,8 @@ import numpy as np
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import PlanRequest
 from ballbal_ros.motion.spline import ArmPath, FollowedPath, path_through_waypoints
 from ballbal_ros.robot.whole_body import WholeBody
 from ballbal_ros.simulation.robot import SimulatedRobot

@@ -6,7 +6,8 @@ import pytest
 
 from ballbal_ros.errors import PlanRefused
 from ballbal_ros.motion.lean_plan import REFERENCE_WIDTH, LeanPlan, Prediction, Use, predicted_uses
-from ballbal_ros.motion.lean_planner import BallMotion, PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import BallMotion, PlanRequest
 from ballbal_ros.robot.balance_rows import GRAVITY
 from helpers.robots import compensation, reach, shelver
 

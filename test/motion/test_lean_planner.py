@@ -9,9 +9,10 @@ from numpy.typing import NDArray
 
 from ballbal_ros.errors import PlanError
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import BallMotion, HandWrench, PlanRequest, StartState, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.lean_solver import LeanProblem, equilibrium_lean, solve_lean
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_request import BallMotion, HandWrench, PlanRequest, StartState
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.balance_rows import GRAVITY, OutsideMotion, UpperBodyTerms

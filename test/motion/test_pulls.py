@@ -10,7 +10,8 @@ import pytest
 
 from ballbal_ros.errors import PlanError
 from ballbal_ros.motion.arm_schedule import ArmSchedule, Wanted
-from ballbal_ros.motion.lean_planner import HandWrench, PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import HandWrench, PlanRequest
 from ballbal_ros.motion.pulls import Pull, at_time, hand_wrenches, joined
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.robot.balance_rows import GRAVITY

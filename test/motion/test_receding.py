@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import StartState
+from ballbal_ros.motion.plan_request import StartState
 from ballbal_ros.motion.receding import HeldPath, RecedingPlanner, lean_kick, least_norm
 from ballbal_ros.motion.stopping import Later
 from ballbal_ros.motion.stream import ArmStream, StreamCompensation

@@ -2,7 +2,8 @@
 
 import pytest
 
-from ballbal_ros.motion.lean_planner import PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import PlanRequest
 from helpers.least_travel import least_travel
 from helpers.robots import compensation, reach
 

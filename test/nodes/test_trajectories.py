@@ -15,7 +15,8 @@ from builtin_interfaces.msg import Time
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.lean_planner import BallMotion, PlanRequest, plan_lean
+from ballbal_ros.motion.lean_planner import plan_lean
+from ballbal_ros.motion.plan_request import BallMotion, PlanRequest
 from ballbal_ros.motion.spline import path_through_waypoints
 from ballbal_ros.nodes.lean_trajectory import lean_plan_message, lean_plan_of
 from ballbal_ros.nodes.messages import to_duration, to_time
