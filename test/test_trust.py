@@ -105,7 +105,7 @@ def callbacks() -> set[tuple[Path, str]]:
         if path.parent.name != "nodes":
             continue
         for call in called(tree):
-            if name_of(call.func) in ("subscribe", "create_subscription"):
+            if name_of(call.func) in ("subscribe", "subscribe_with_age", "create_subscription"):
                 found |= {(path, name_of(word)) for word in call.args if isinstance(word, (ast.Attribute, ast.Name))}
     return found
 
