@@ -6,7 +6,8 @@ from collections import Counter
 
 import attrs
 
-from ballbal_ros.balance.answers import ANSWERS, GO_ON, harder
+from ballbal_ros.balance.answer_table import ANSWERS
+from ballbal_ros.balance.answers import GO_ON, harder
 
 _GOOD = 5
 

@@ -5,7 +5,8 @@ from __future__ import annotations
 import re
 from pathlib import Path
 
-from ballbal_ros.balance.answers import ANSWERS, DEEDS, Answer
+from ballbal_ros.balance.answer_table import ANSWERS
+from ballbal_ros.balance.answers import DEEDS, Answer
 from ballbal_ros.balance.guard import EVENTS, STATES, TRANSITIONS, State
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.declaration import Declaration, declarations

@@ -7,9 +7,9 @@ from collections.abc import Mapping
 import attrs
 import numpy as np
 
+from ballbal_ros.balance.answer_table import ANSWERS
 from ballbal_ros.balance.answers import (
     ACTUATOR,
-    ANSWERS,
     ARMS,
     CLOCK,
     DRIVE,

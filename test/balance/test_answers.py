@@ -7,8 +7,9 @@ from pathlib import Path
 
 import pytest
 
-from ballbal_ros.balance import answers
-from ballbal_ros.balance.answers import ANSWERS, DEEDS, GO_ON, STOP, harder
+from ballbal_ros.balance import answer_table
+from ballbal_ros.balance.answer_table import ANSWERS
+from ballbal_ros.balance.answers import DEEDS, GO_ON, STOP, harder
 from ballbal_ros.balance.watch import Watch
 from ballbal_ros.simulation.fault_kinds import KINDS
 from ballbal_ros.simulation.faults import CHANGES, ON_DRIVE
@@ -29,7 +30,7 @@ def test_an_answer_only_goes_further_with_time(key: tuple[str, str]):
 
 def test_whatever_the_loop_calls_wrong_has_a_row():
     """Each name that balance/ hands to the watch stands in the table; without a row it would be a KeyError."""
-    folder = Path(answers.__file__).parent
+    folder = Path(answer_table.__file__).parent
     known = {wrong for _, wrong in ANSWERS}
     said = set()
     for name in ("checks", "encoders", "clock", "senses", "judge"):
@@ -42,11 +43,11 @@ def test_whatever_the_loop_calls_wrong_has_a_row():
 
 def test_every_input_of_the_robots_nodes_has_an_answer():
     """Whatever topic a node of the robot subscribes to stands in the table; the IMU's is named by a parameter."""
-    nodes = Path(answers.__file__).parents[1] / "nodes"
+    nodes = Path(answer_table.__file__).parents[1] / "nodes"
     heard = set()
     for path in [*nodes.glob("balance*.py"), *nodes.glob("arm_*.py"), nodes / "whole_body_kinematics.py"]:
         for call in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
-            if isinstance(call, ast.Call) and ast.unparse(call.func).endswith("subscribe"):
+            if isinstance(call, ast.Call) and ast.unparse(call.func).endswith(("subscribe", "subscribe_with_age")):
                 heard |= {word.value for word in call.args if isinstance(word, ast.Constant)}
     assert {"joint_states", "lean_plan", "arm_plan", "odom"} <= heard
     assert heard <= {row.input for row in ANSWERS.values()}

@@ -7,7 +7,8 @@ from functools import cache
 import attrs
 import pytest
 
-from ballbal_ros.balance.answers import ANSWERS, STOP
+from ballbal_ros.balance.answer_table import ANSWERS
+from ballbal_ros.balance.answers import STOP
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.robot.drive import Drive
 from ballbal_ros.simulation.fault_campaign import asked_kinds, run_campaign

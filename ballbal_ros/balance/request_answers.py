@@ -1,0 +1,167 @@
+"""Answers to what others ask for or tell: plans, streams, loads, velocities, goals, stops, parameters."""
+
+from __future__ import annotations
+
+from ballbal_ros.balance.answers import (
+    ARM_PLAN,
+    ARM_STREAM,
+    BALL_PLAN,
+    COMMAND,
+    EMERGENCY,
+    GO_ON,
+    GOAL,
+    HOLD,
+    IN_ARMS_NODE,
+    IN_NODE,
+    IN_PLAN_CHECK,
+    LOAD,
+    ODOM,
+    PARAMETERS,
+    PLAN,
+    REFUSED,
+    STATE,
+    STOP,
+    SUPPORT,
+    TRIP,
+    VELOCITY,
+    WRENCH_PLAN,
+    Answer,
+    steps,
+)
+
+ASKED = (
+    Answer(PLAN, "malformed", "names, lengths, times, or numbers not finite", REFUSED, IN_NODE),
+    Answer(PLAN, "not balancing", "came in another state than engaging, balancing or stopping", REFUSED, IN_PLAN_CHECK),
+    Answer(PLAN, "arms unknown", "joint states are older than arms_timeout", REFUSED, IN_PLAN_CHECK),
+    Answer(PLAN, "too late", "its start is past", REFUSED, IN_PLAN_CHECK),
+    Answer(
+        PLAN,
+        "beyond limits",
+        "lean beyond limits.lean, torque beyond limits.torque, or ball beyond limits.ball_speed",
+        REFUSED,
+        IN_PLAN_CHECK,
+    ),
+    Answer(
+        PLAN, "elsewhere", "begins further than limits.engage_lean from where the lean will be", REFUSED, IN_PLAN_CHECK
+    ),
+    Answer(
+        ARM_PLAN,
+        "malformed",
+        "an unknown joint, lengths or times that don't fit, numbers not finite, beyond a joint's limits",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(ARM_PLAN, "not balancing", "came while the state is not engaging or balancing", REFUSED, IN_ARMS_NODE),
+    Answer(
+        ARM_PLAN,
+        "jump",
+        "begins elsewhere than the arms will be, or leaves out a joint that moves",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        ARM_PLAN,
+        "beyond limits",
+        "the lean or torque that it needs is beyond acceptance.* of compensation.yaml",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        BALL_PLAN,
+        "malformed",
+        "found when the arm_plan comes that it goes with: both are refused",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        WRENCH_PLAN,
+        "malformed",
+        "an unknown hand or part, times that don't increase, not finite",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        ARM_STREAM,
+        "malformed",
+        "an unknown joint, numbers not finite or beyond a joint's limits, a stamp far ahead: the sample is passed over",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        ARM_STREAM,
+        "jump",
+        "begins elsewhere than the arms are, or goes on further than the joint could: the sample is passed over",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        ARM_STREAM,
+        "silent",
+        "the arms come to rest within stream.stop, as the lean plan in force has it",
+        steps((0.0, HOLD)),
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        STATE,
+        "silent",
+        "no acknowledgement of a plan within answer_timeout: the arms don't move",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        ODOM, "absurd", "not finite, or no unit quaternion: ball plans begin where it was last", REFUSED, IN_ARMS_NODE
+    ),
+    Answer(
+        "hand_load_estimate",
+        "impossible",
+        "unknown hand, impossible mass or inertia, not finite",
+        REFUSED,
+        IN_ARMS_NODE,
+    ),
+    Answer(LOAD, "unknown hand", "frame_id is no hand of robot.yaml", REFUSED, IN_NODE),
+    Answer(
+        LOAD,
+        "impossible",
+        "mass negative or beyond hands.load_limit, inertia impossible, or not finite",
+        REFUSED,
+        IN_NODE,
+    ),
+    Answer(
+        VELOCITY,
+        "stale",
+        "0.5 s without another one: the ball comes to rest",
+        steps((0.0, GO_ON), (0.5, HOLD)),
+        IN_NODE,
+    ),
+    Answer(VELOCITY, "not balancing", "came in another state than balancing", REFUSED, IN_NODE),
+    Answer(VELOCITY, "absurd", "wrong frame, not finite, or beyond limits.ball_speed", REFUSED, IN_NODE),
+    Answer(GOAL, "not balancing", "came in another state than balancing", REFUSED, IN_NODE),
+    Answer(GOAL, "absurd", "wrong frame, not finite, or no unit quaternion", REFUSED, IN_NODE),
+    Answer(
+        EMERGENCY,
+        "true",
+        "somebody wants it to stop; latched, false alone does not end it",
+        steps((0.0, STOP)),
+        IN_NODE,
+    ),
+    Answer(
+        EMERGENCY,
+        "true, arms moving",
+        "arms come to rest by a plan within planner.stop_time, up to three times that where limits need it; where no "
+        "such plan can be, the one in force ends as planned",
+        steps((0.0, STOP)),
+        IN_ARMS_NODE,
+    ),
+    Answer(
+        SUPPORT, "true while stopping", "a stand or gantry holds it: torque goes away", steps((0.0, GO_ON)), "Guard"
+    ),
+    Answer(SUPPORT, "never true", "it stays balanced, and says so", steps((0.0, GO_ON)), "Guard"),
+    Answer(PARAMETERS, "refused", "a value out of range, or a loop without its margins", REFUSED, IN_NODE),
+    Answer(
+        COMMAND,
+        "silent",
+        "no command reaches the drive: its own watchdog cuts the torque",
+        steps((0.0, HOLD), (0.1, TRIP)),
+        "drive",
+    ),
+)
