@@ -22,7 +22,7 @@ from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds, s
 from ballbal_ros.nodes.plan_report import EARLIER
 from ballbal_ros.nodes.topics import publisher, subscribe
 from ballbal_ros.nodes.trajectories import path_message
-from ballbal_ros.nodes.wire import ImuReader
+from ballbal_ros.nodes.wire_readers import ImuReader
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.simulation.rehearsal import RobotFiles
 from ballbal_ros.weighing.gathering import Gathering

@@ -14,7 +14,8 @@ from ballbal_ros.commands.terminal import TypedLines, told_to_end
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.topics import publisher, subscribe
-from ballbal_ros.nodes.wire import JointStateReader, JointStateWriter
+from ballbal_ros.nodes.wire_readers import JointStateReader
+from ballbal_ros.nodes.wire_writers import JointStateWriter
 from ballbal_ros.robot.arrays import Array
 
 _LIFESPAN = 0.02

@@ -21,7 +21,7 @@ from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, key_values
 from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.topics import publisher
-from ballbal_ros.nodes.wire import JointStateWriter
+from ballbal_ros.nodes.wire_writers import JointStateWriter
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import quat_xyzw
 from ballbal_ros.robot.description import RobotDescription

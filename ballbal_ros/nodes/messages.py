@@ -14,7 +14,7 @@ from builtin_interfaces.msg import Duration, Time
 from geometry_msgs.msg import InertiaStamped
 
 from ballbal_ros.errors import BallbalError, nearest
-from ballbal_ros.nodes.wire import JointStateReader
+from ballbal_ros.nodes.wire_readers import JointStateReader
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load

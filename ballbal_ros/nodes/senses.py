@@ -12,7 +12,7 @@ from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.nodes.diagnostics import Diagnostics
 from ballbal_ros.nodes.messages import BILLION, JointReader
-from ballbal_ros.nodes.wire import ImuReader
+from ballbal_ros.nodes.wire_readers import ImuReader
 from ballbal_ros.robot.description import RobotDescription
 
 

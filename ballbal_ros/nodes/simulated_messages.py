@@ -10,7 +10,8 @@ from rclpy.node import Node
 
 from ballbal_ros.errors import BallbalError, nearest
 from ballbal_ros.nodes.topics import publisher
-from ballbal_ros.nodes.wire import ClockWriter, ImuWriter, JointStateWriter, JointValues, OdometryWriter
+from ballbal_ros.nodes.wire_readers import JointValues
+from ballbal_ros.nodes.wire_writers import ClockWriter, ImuWriter, JointStateWriter, OdometryWriter
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.simulation.robot import SimulatedRobot

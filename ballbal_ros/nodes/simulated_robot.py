@@ -27,7 +27,7 @@ from ballbal_ros.nodes.parameters import NodeParameters, robot_file
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.nodes.trajectories import ArmWaypoints
-from ballbal_ros.nodes.wire import JointStateReader
+from ballbal_ros.nodes.wire_readers import JointStateReader
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.simulation.happenings import Happenings

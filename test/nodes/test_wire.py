@@ -12,14 +12,8 @@ from rclpy.serialization import deserialize_message, serialize_message
 from rosgraph_msgs.msg import Clock
 from sensor_msgs.msg import Imu, JointState
 
-from ballbal_ros.nodes.wire import (
-    ClockWriter,
-    ImuReader,
-    ImuWriter,
-    JointStateReader,
-    JointStateWriter,
-    OdometryWriter,
-)
+from ballbal_ros.nodes.wire_readers import ImuReader, JointStateReader
+from ballbal_ros.nodes.wire_writers import ClockWriter, ImuWriter, JointStateWriter, OdometryWriter
 
 STAMP = 12_345_678_901
 

@@ -1,32 +1,25 @@
-"""Joint states, IMU data and odometry straight from and to their serialised form.
+"""Joint states and IMU data straight from their serialised form.
 
 The loop and the simulated robot exchange six messages a tick, and this takes a fraction of the time of whole messages.
-For reading, a layout is worked out once for each publisher (its names and frame stay the same) and held against what
-rclpy makes of the same bytes; where the two differ, rclpy's way is used for good. For writing, rclpy serialises a
-message once, and then only its numbers change.
+A layout is worked out once for each publisher (its names and frame stay the same) and held against what rclpy makes of
+the same bytes; where the two differ, rclpy's way is used for good.
 """
 
 from __future__ import annotations
 
 import struct
-from collections.abc import Sequence
 from typing import Any
 
 import attrs
 import numpy as np
-from nav_msgs.msg import Odometry
 from rclpy.serialization import deserialize_message
-from rosgraph_msgs.msg import Clock
 from sensor_msgs.msg import Imu, JointState
 
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.nodes.wire_layout import BILLION, LITTLE_ENDIAN, STAMP_END, START, aligned
 from ballbal_ros.robot.arrays import Array
 
-_LITTLE_ENDIAN = b"\x00\x01"
-_START, _STAMP_END = 4, 12
-_BILLION = 1_000_000_000
 _stamp = struct.Struct("<iI").unpack_from
-_put_stamp = struct.Struct("<iI").pack_into
 _count = struct.Struct("<I").unpack_from
 _imu = struct.Struct("<37d").unpack_from
 
@@ -70,10 +63,6 @@ class _Layout:
     size: int
 
 
-def _aligned(at: int, to: int) -> int:
-    return at + (_START - at) % to
-
-
 class JointStateReader:
     """Reads serialised ``sensor_msgs/JointState``."""
 
@@ -83,20 +72,20 @@ class JointStateReader:
     def read(self, raw: bytes) -> JointValues:
         """The values in a serialised message; raises :class:`BallbalError` where it is none."""
         for layout in self._layouts:
-            if len(raw) == layout.size and raw.startswith(layout.prefix, _STAMP_END):
+            if len(raw) == layout.size and raw.startswith(layout.prefix, STAMP_END):
                 return _fast(raw, layout)
         values = _slow(raw)
-        layout_found = _layout(raw) if raw.startswith(_LITTLE_ENDIAN) else None
+        layout_found = _layout(raw) if raw.startswith(LITTLE_ENDIAN) else None
         if layout_found is not None and len(self._layouts) < 16 and _same(values, _fast(raw, layout_found)):
             self._layouts.append(layout_found)
         return values
 
 
 def _stamped(raw: bytes) -> int:
-    sec, nanosec = _stamp(raw, _START)
+    sec, nanosec = _stamp(raw, START)
     if sec < 0:
         raise BallbalError("header.stamp", f"is {sec} s", "give the time of the measurement")
-    return int(sec * _BILLION + nanosec)
+    return int(sec * BILLION + nanosec)
 
 
 def _fast(raw: bytes, layout: _Layout) -> JointValues:
@@ -122,7 +111,7 @@ def _slow(raw: bytes) -> JointValues:
     message = _decoded(raw, JointState)
     stamp = message.header.stamp
     return JointValues(
-        stamp.sec * _BILLION + stamp.nanosec,
+        stamp.sec * BILLION + stamp.nanosec,
         tuple(message.name),
         np.array(message.position, float),
         np.array(message.effort, float),
@@ -140,19 +129,19 @@ def _same(a: JointValues, b: JointValues) -> bool:
 def _layout(raw: bytes) -> _Layout | None:
     """The layout of a little-endian joint state; None where it is not what it should be."""
     try:
-        at = _aligned(_STAMP_END + 4 + _count(raw, _STAMP_END)[0], 4)
+        at = aligned(STAMP_END + 4 + _count(raw, STAMP_END)[0], 4)
         (count,), at = _count(raw, at), at + 4
         names = []
         for _ in range(count):
-            at = _aligned(at, 4)
+            at = aligned(at, 4)
             length = _count(raw, at)[0]
             names.append(raw[at + 4 : at + 3 + length].decode())
             at += 4 + length
-        at = _aligned(at, 4)
-        prefix, places = raw[_STAMP_END : at + 4], []
+        at = aligned(at, 4)
+        prefix, places = raw[STAMP_END : at + 4], []
         for _ in range(3):
             (count,), at = _count(raw, at), at + 4
-            at = _aligned(at, 8) if count else at
+            at = aligned(at, 8) if count else at
             places.append((at, count))
             at += 8 * count
         (position_at, positions), (velocity_at, velocities), (effort_at, efforts) = places
@@ -170,15 +159,15 @@ class ImuReader:
 
     def read(self, raw: bytes) -> ImuValues:
         """The values in a serialised message; raises :class:`BallbalError` where it is none."""
-        if self._size == len(raw) and raw.startswith(self._prefix, _STAMP_END):
+        if self._size == len(raw) and raw.startswith(self._prefix, STAMP_END):
             return self._fast(raw)
         values = _slow_imu(raw)
-        if raw.startswith(_LITTLE_ENDIAN):
-            end = _STAMP_END + 4 + _count(raw, _STAMP_END)[0]
+        if raw.startswith(LITTLE_ENDIAN):
+            end = STAMP_END + 4 + _count(raw, STAMP_END)[0]
             self._prefix, self._frame, self._at, self._size = (
-                raw[_STAMP_END:end],
+                raw[STAMP_END:end],
                 values.frame,
-                _aligned(end, 8),
+                aligned(end, 8),
                 len(raw),
             )
             if self._at + 37 * 8 > len(raw) or repr(self._fast(raw)) != repr(values):
@@ -199,119 +188,9 @@ def _slow_imu(raw: bytes) -> ImuValues:
         message.linear_acceleration,
     )
     return ImuValues(
-        stamp.sec * _BILLION + stamp.nanosec,
+        stamp.sec * BILLION + stamp.nanosec,
         message.header.frame_id,
         None if message.orientation_covariance[0] < 0.0 else (turn.x, turn.y, turn.z, turn.w),
         (rate.x, rate.y, rate.z),
         (force.x, force.y, force.z),
     )
-
-
-class _Writer:
-    """A serialised message of which only the stamp and a block of numbers change. Built by hand, so that padding is
-    zero.
-
-    (rclpy leaves in it what was there before, and two runs would not be the same to the bit.) Little-endian CDR.
-    """
-
-    def __init__(self) -> None:
-        self._buffer = bytearray(_LITTLE_ENDIAN + bytes(2 + 8))
-
-    def _align(self, to: int) -> None:
-        self._buffer += bytes(_aligned(len(self._buffer), to) - len(self._buffer))
-
-    def _put_count(self, value: int) -> None:
-        self._align(4)
-        self._buffer += struct.pack("<I", value)
-
-    def _put_text(self, text: str) -> None:
-        raw = text.encode() + b"\0"
-        self._put_count(len(raw))
-        self._buffer += raw
-
-    def _put_doubles(self, count: int) -> int:
-        """Make room for so many doubles, and return where they are."""
-        if count:
-            self._align(8)
-        at = len(self._buffer)
-        self._buffer += bytes(8 * count)
-        return at
-
-    def _check(self, message: Any) -> None:
-        """Hold what was built against the message that it should be."""
-        if deserialize_message(bytes(self._buffer), type(message)) != message:
-            raise RuntimeError(f"this middleware does not serialise {type(message).__name__} as expected")
-
-    def numbers(self, at: int, count: int) -> Array:
-        """The ``count`` doubles at byte ``at``, to be written to; the message can't grow any more."""
-        return np.frombuffer(self._buffer, float, count, at)
-
-    def serialised(self, ns: int) -> bytes:
-        """The message with the stamp ``ns``, in ns."""
-        _put_stamp(self._buffer, _START, *divmod(ns, _BILLION))
-        return bytes(self._buffer)
-
-
-class ClockWriter(_Writer):
-    """Writes ``rosgraph_msgs/Clock``."""
-
-    def __init__(self) -> None:
-        super().__init__()
-        self._check(Clock())
-
-
-class JointStateWriter(_Writer):
-    """Writes ``sensor_msgs/JointState`` of fixed names: fill ``position``, ``velocity``, ``effort`` [names], as far as
-    asked for.
-    """
-
-    def __init__(
-        self, names: Sequence[str], *, position: bool = False, velocity: bool = False, effort: bool = False
-    ) -> None:
-        super().__init__()
-        self._put_text("")
-        self._put_count(len(names))
-        for name in names:
-            self._put_text(name)
-        ats, counts = [], [len(names) * wanted for wanted in (position, velocity, effort)]
-        for count in counts:
-            self._put_count(count)
-            ats.append(self._put_doubles(count))
-        message = JointState(name=list(names))
-        message.position, message.velocity, message.effort = ([0.0] * count for count in counts)
-        self._check(message)
-        self.position, self.velocity, self.effort = map(self.numbers, ats, counts)
-
-
-class ImuWriter(_Writer):
-    """Writes ``sensor_msgs/Imu``: fill ``values`` with orientation x y z w at 0, rate at 13, acceleration at 25."""
-
-    def __init__(self, frame: str, oriented: bool) -> None:
-        super().__init__()
-        self._put_text(frame)
-        at = self._put_doubles(37)
-        # rclpy's quaternion begins as one that turns nothing.
-        struct.pack_into("<2d", self._buffer, at + 24, 1.0, 0.0 if oriented else -1.0)
-        message = Imu()
-        message.header.frame_id = frame
-        message.orientation_covariance[0] = 0.0 if oriented else -1.0
-        self._check(message)
-        self.values = self.numbers(at, 37)
-
-
-class OdometryWriter(_Writer):
-    """Writes ``nav_msgs/Odometry``: fill ``pose`` [7] (x y z, quaternion x y z w) and ``twist`` [6] (linear,
-    angular).
-    """
-
-    def __init__(self, frame: str, child_frame: str) -> None:
-        super().__init__()
-        self._put_text(frame)
-        self._put_text(child_frame)
-        at = self._put_doubles(85)
-        struct.pack_into("<d", self._buffer, at + 48, 1.0)
-        message = Odometry(child_frame_id=child_frame)
-        message.header.frame_id = frame
-        self._check(message)
-        values = self.numbers(at, 85)
-        self.pose, self.twist = values[:7], values[43:49]
