@@ -23,7 +23,7 @@ from rclpy.serialization import deserialize_message
 from rich.console import Console
 from sensor_msgs.msg import Imu, JointState
 
-from ballbal_ros.commands import bus_weighing, checkup_bus
+from ballbal_ros.commands import checkup_bus, robot_ear
 from ballbal_ros.commands.bus_weighing import BusWeighing
 from ballbal_ros.commands.checkup_bus import Ear
 from ballbal_ros.commands.live_weighing import live_weighing
@@ -174,7 +174,7 @@ def test_ctrl_c_brings_arms_and_ball_to_rest(tmp_path: Path):
 
 def test_where_nothing_balances_one_line_says_so(ros_domain_id: int, monkeypatch: pytest.MonkeyPatch):
     """No stack: it is told at once what is missing."""
-    monkeypatch.setattr(bus_weighing, "_DISCOVERY", 1.0)
+    monkeypatch.setattr(robot_ear, "_DISCOVERY", 1.0)
     with pytest.raises(BallbalError, match="balance_state: silent for 1 s: no balance node balances"):
         live_weighing(files(), ros_domain_id, "", DesignSettings(), Console(file=io.StringIO()))
 
