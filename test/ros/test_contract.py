@@ -9,7 +9,6 @@ import math
 import os
 from collections.abc import Iterator
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 import pytest
@@ -17,8 +16,6 @@ import pytest
 pytest.importorskip("rclpy")
 
 from geometry_msgs.msg import TwistStamped
-from lifecycle_msgs.msg import Transition
-from lifecycle_msgs.srv import ChangeState
 from rcl_interfaces.srv import DescribeParameters, SetParameters
 from rclpy.parameter import Parameter
 from rclpy.qos import DurabilityPolicy, ReliabilityPolicy
@@ -27,94 +24,14 @@ from std_srvs.srv import SetBool, Trigger
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.nodes.diagnostics import ERROR, OK, values_of
-from ballbal_ros.nodes.messages import load_message, seconds, to_duration
+from ballbal_ros.nodes.messages import load_message, seconds
 from ballbal_ros.nodes.topics import TOPICS
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
+from helpers.contract import LISTENED, PUBLISHED, SUBSCRIBED
 from helpers.robots import shelver
-from helpers.ros_stack import Listener, ballbal, listening, running_stack
-
-SHOULDERS = ["left_shoulder_pitch", "right_shoulder_pitch"]
-HEARD = (
-    *("joint_states", "odom", "balance_state", "ground_truth", "center_of_mass", "body_inertia"),
-    *("lean_plan", "arm_command"),
-)
-PUBLISHED = {
-    "simulated_robot": ("/clock", "imu/data", "joint_states", "drive_states", "support", "ground_truth"),
-    "balance": ("drive_command", "drive_effort", "odom", "balance_state", "hand_load_estimate"),
-    "arm_compensation": ("lean_plan", "arm_command", "plan_report"),
-    "whole_body_kinematics": ("center_of_mass", "body_inertia", "com_marker"),
-}
-SUBSCRIBED = {
-    "simulated_robot": ("drive_command", "arm_command", "push", "simulated_load"),
-    "balance": (
-        *("imu/data", "drive_states", "joint_states", "hand_load", "lean_plan", "cmd_vel", "goal_pose"),
-        *("emergency_stop", "support"),
-    ),
-    "arm_compensation": (
-        *("arm_plan", "ball_plan", "hand_wrench_plan", "hand_load", "joint_states", "odom", "balance_state"),
-        *("emergency_stop", "hand_load_estimate", "arm_stream"),
-    ),
-    "whole_body_kinematics": ("joint_states", "hand_load"),
-}
-
-LISTENED = {"simulated_robot": {"balance_state", "arm_plan", "plan_report"}}
-
-
-class Robot:
-    """The running stack, as a user meets it."""
-
-    def __init__(self, listener: Listener) -> None:
-        self.listener = listener
-        listener.hear(*HEARD)
-        self.reports = listener.record("plan_report")
-        self.senders = {
-            t: listener.sender(t) for t in ("arm_plan", "hand_load", "cmd_vel", "emergency_stop", "lean_plan")
-        }
-
-    def newest(self, topic: str) -> Any:
-        return self.listener.newest(topic)
-
-    @property
-    def time(self) -> float:
-        return seconds(self.newest("joint_states").header.stamp)
-
-    @property
-    def state(self) -> str:
-        said = self.newest("balance_state")
-        return str(said.message) if said is not None else ""
-
-    def bring_up(self) -> None:
-        """Configure and activate the balance, and wait until the stand has let go."""
-
-        def change(transition: int) -> bool:
-            request = ChangeState.Request(transition=Transition(id=transition))
-            return bool(self.listener.call(ChangeState, "balance/change_state", request).success)
-
-        self.listener.wait(lambda: self.newest("joint_states") is not None, 30.0, "a simulated robot")
-        self.listener.wait(lambda: change(Transition.TRANSITION_CONFIGURE), 30.0, "configuring")
-        assert change(Transition.TRANSITION_ACTIVATE)
-        self.listener.wait(lambda: self.state == "balancing", 30.0, "balancing")
-
-    def go_on(self, span: float) -> None:
-        """Let simulated time go by, s."""
-        until = self.time + span
-        self.listener.wait(lambda: self.time >= until, 30.0, f"{span} s of simulated time")
-
-    def ask(self, message: JointTrajectory) -> Any:
-        """Send an arm plan and return the answer."""
-        count = len(self.reports)
-        self.senders["arm_plan"].publish(message)
-        self.listener.wait(lambda: len(self.reports) > count, 20.0, "plan_report")
-        return self.reports[-1].status[0]
-
-    def angle(self, joint: str) -> float:
-        states = self.newest("joint_states")
-        return float(states.position[list(states.name).index(joint)])
-
-    def ball(self) -> np.ndarray:
-        at = self.newest("ground_truth").pose.pose.position
-        return np.array((at.x, at.y))
+from helpers.ros_stack import ballbal, listening, running_stack
+from helpers.stack_robot import SHOULDERS, Robot, plan
 
 
 @pytest.fixture(scope="module")
@@ -128,12 +45,6 @@ def robot() -> Iterator[Robot]:
         made.bring_up()
         made.go_on(0.5)
         yield made
-
-
-def plan(names: list[str], *points: tuple[float, list[float]]) -> JointTrajectory:
-    """An arm plan, as soon as possible."""
-    made = [JointTrajectoryPoint(time_from_start=to_duration(time), positions=values) for time, values in points]
-    return JointTrajectory(joint_names=names, points=made)
 
 
 def test_topics_have_the_types_and_qualities_of_the_contract(robot: Robot) -> None:
