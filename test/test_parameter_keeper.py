@@ -2,93 +2,23 @@
 
 from __future__ import annotations
 
-import json
-import random
 import shutil
-from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
-from typing import Any
 
-import attrs
 import pytest
 
-from ballbal_ros.declaration import declarations, flatten, load, read_parameter_file
+from ballbal_ros.declaration import read_parameter_file
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.parameter_change import Change
-from ballbal_ros.parameter_files import FILES, ParameterSet, read_values
-from ballbal_ros.parameter_history import ParameterHistory, state_folder
+from ballbal_ros.parameter_files import FILES, read_values
+from ballbal_ros.parameter_history import ParameterHistory
 from ballbal_ros.parameter_keeper import Keeper, Taken
-from ballbal_ros.parameter_text import edited, yaml_text
+from helpers.desk import Desk, RunningNodes, again, begun
 from helpers.robots import CONFIG
-
-
-@attrs.define
-class RunningNodes:
-    """Nodes that run by what the files said when they started, and refuse what `refuses` does."""
-
-    values: dict[str, dict[str, Any]]
-    refuses: Callable[[str, Change], bool] = lambda file, change: False
-    sent: list[tuple[str, list[str]]] = attrs.field(factory=list)
-
-    def get(self, file: str, names: Sequence[str]) -> Mapping[str, Any] | None:
-        there = self.values.get(file)
-        return None if there is None else {name: there[name] for name in names if name in there}
-
-    def set(self, file: str, changes: Sequence[Change]) -> None:
-        for change in changes:
-            assert change.declared.runtime
-            if self.refuses(file, change):
-                raise BallbalError(file, f"with {change} the margins are gone", "put it back")
-        self.values[file].update({change.name: change.new for change in changes})
-        self.sent.append((file, [change.name for change in changes]))
-
-
-@attrs.define
-class Desk:
-    """A robot's folder, the nodes that run by it, and what keeps them."""
-
-    folder: Path
-    nodes: RunningNodes
-    keeper: Keeper
-
-    def write(self, file: str, old: str, new: str) -> None:
-        path = self.folder / file
-        text = path.read_text(encoding="utf-8")
-        assert text.count(old) == 1, old
-        path.write_text(text.replace(old, new), encoding="utf-8")
-
-    def taken(self, file: str, **how: Any) -> list[str]:
-        return self.keeper.take_in(file, 2.0, **how).lines()
-
-    def refused(self, file: str) -> str:
-        """The line that a file is refused with; nothing has changed anywhere."""
-        path = self.folder / file
-        before = (path.read_bytes(), json.dumps(self.nodes.values), self.keeper.in_force, self.keeper.files)
-        with pytest.raises(BallbalError) as caught:
-            self.keeper.take_in(file, 3.0)
-        assert before == (path.read_bytes(), json.dumps(self.nodes.values), self.keeper.in_force, self.keeper.files)
-        line = str(caught.value)
-        assert "\n" not in line and line.startswith(str(path)), line
-        return line
 
 
 @pytest.fixture
 def desk(tmp_path: Path) -> Desk:
     return begun(tmp_path)
-
-
-def begun(tmp_path: Path, **nodes: Any) -> Desk:
-    folder = tmp_path / "shelver"
-    shutil.copytree(CONFIG / "shelver", folder)
-    running = RunningNodes({file: read_values(folder / file) for file in FILES}, **nodes)
-    keeper = Keeper(folder, running, ParameterHistory(tmp_path / "state", 50))
-    assert keeper.begin(1.0) == []
-    return Desk(folder, running, keeper)
-
-
-def again(desk: Desk) -> Keeper:
-    """The keeper started anew, over the same nodes and the same history."""
-    return Keeper(desk.folder, desk.nodes, ParameterHistory(desk.keeper.history.folder, 50))
 
 
 def test_an_edit_is_in_force_and_is_told_as_old_and_new(desk: Desk):
@@ -251,22 +181,6 @@ def test_a_broken_file_is_not_saved_over(desk: Desk):
     assert read_values(desk.folder / "balance.yaml")["weights.lean"] == 0.012
 
 
-def test_sets_are_kept_with_time_and_checksum_and_the_oldest_go(tmp_path: Path):
-    """Each set is a file with time, source and checksum; a spoilt one is left out, no more than asked are kept."""
-    history = ParameterHistory(tmp_path / "state", 3)
-    files = {"balance.yaml": read_values(CONFIG / "shelver" / "balance.yaml")}
-    for i in range(6):
-        files = {"balance.yaml": {**files["balance.yaml"], "weights.lean": 0.01 + 0.001 * i}}
-        # The clock is set back each time: the order stays.
-        history.add(ParameterSet(files), ParameterSet(files), f"edit {i}", 1000.0 - i)
-    entries = list(history.entries())
-    assert [e.source for e in entries] == ["edit 5", "edit 4", "edit 3"]
-    assert entries[0].time.startswith("1970-01-01T00:16:35") and entries[0].in_force == ParameterSet(files)
-    newest = max((tmp_path / "state").iterdir())
-    newest.write_text(newest.read_text().replace("0.015", "0.016"))
-    assert [e.source for e in history.entries()] == ["edit 4", "edit 3"]
-
-
 def test_one_that_repeats_the_newest_is_not_kept_again(desk: Desk):
     """Restarts and saves without a change leave the history as it is."""
     count = len(list(desk.keeper.history.entries()))
@@ -284,36 +198,3 @@ def test_history_that_cannot_be_written_is_a_warning(tmp_path: Path):
     keeper = Keeper(folder, nodes, ParameterHistory(tmp_path / "state", 5))
     keeper.begin(1.0)
     assert "can't be kept" in keeper.warning
-
-
-def test_sets_are_kept_where_the_standard_says():
-    """XDG Base Directory Specification 0.8: $XDG_STATE_HOME where it is absolute, else ~/.local/state."""
-    robot = Path("config/shelver")
-    assert state_folder(robot, {"XDG_STATE_HOME": "/var/s", "HOME": "/h"}) == Path("/var/s/ballbal_ros/shelver")
-    assert state_folder(robot, {"XDG_STATE_HOME": "s", "HOME": "/h"}) == Path("/h/.local/state/ballbal_ros/shelver")
-    assert state_folder(robot, {"HOME": "/h"}) == Path("/h/.local/state/ballbal_ros/shelver")
-
-
-@pytest.mark.parametrize(
-    "value", [1e-05, 3.0, 1e300, -0.5, True, 7, "planned", "no", "a b", "1.5", "", [1.0, 2e-7], ["x"]]
-)
-def test_a_written_value_reads_as_itself(value: Any, tmp_path: Path):
-    """Whatever is written into a file comes back with its type and to the last digit."""
-    path = tmp_path / "a.yaml"
-    path.write_text(f"/**:\n  ros__parameters:\n    a: {yaml_text(value)}\n", encoding="utf-8")
-    there = read_parameter_file(path)["a"]
-    assert there == value and type(there) is type(value)
-
-
-@pytest.mark.parametrize("file", ["balance.yaml", "compensation.yaml"])
-def test_any_values_written_into_a_file_read_back(file: str, tmp_path: Path):
-    """Random values for random parameters, put into the demo robot's file one after the other, read back exactly."""
-    rng = random.Random(4)
-    path = tmp_path / file
-    shutil.copy(CONFIG / "shelver" / file, path)
-    declared = [d for d in declarations(FILES[file]) if d.kind == "double"]
-    for _ in range(40):
-        new = {d.name: rng.uniform(d.low or 0.0, d.high or 1.0) for d in rng.sample(declared, 3)}
-        wanted = {**read_values(path), **new}
-        path.write_text(edited(path.read_text(encoding="utf-8"), new, file), encoding="utf-8")
-        assert read_values(path) == wanted == flatten(load(FILES[file], path))
