@@ -148,6 +148,15 @@ class SimulatedRobotNodeParameters:
         high=10.0,
         meaning="age of the newest drive command past which the drive lets go (real time)",
     )
+    catch_up: float = parameter(
+        "double",
+        0.006,
+        unit="s",
+        low=0.0,
+        high=1e6,
+        meaning="how far simulated time may lag the wall clock and still make up for it (real time); what this process "
+        "was kept waiting for longer is left out, and told",
+    )
     realtime_priority: int = parameter(
         "integer",
         0,

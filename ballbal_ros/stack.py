@@ -6,7 +6,7 @@ from __future__ import annotations
 
 import json
 import sys
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -21,6 +21,7 @@ from ballbal_ros.simulation.parameters import SimulationParameters
 
 PACKAGE = "ballbal_ros"
 CLOCKS = ("lock_step", "real_time")
+LOOP = ("simulated_robot", "balance")
 
 
 @attrs.frozen
@@ -133,6 +134,13 @@ def robot_stack(
         *([watcher] if watch else []),
     ]
     return [_in_enclave(node, enclave) for node in nodes]
+
+
+def hurried(nodes: Iterable[NodeStart], priority: int) -> list[NodeStart]:
+    """The nodes; those of the loop ask for SCHED_FIFO with this priority (0: they don't), as by the wall clock a loop
+    must not wait for other programs.
+    """
+    return [n.with_parameters(realtime_priority=priority) if n.executable in LOOP else n for n in nodes]
 
 
 def _in_enclave(node: NodeStart, base: str) -> NodeStart:

@@ -15,7 +15,7 @@ from launch.actions import DeclareLaunchArgument, OpaqueFunction, Shutdown
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 
-from ballbal_ros.stack import PACKAGE, RobotFolder, checked_enclave, checked_namespace, headless_stack
+from ballbal_ros.stack import PACKAGE, RobotFolder, checked_enclave, checked_namespace, headless_stack, hurried
 from launch import LaunchDescription
 
 
@@ -33,8 +33,9 @@ def _nodes(context):
     simulated["answer_timeout"] = 3600.0
     enclave = checked_enclave(given("enclave"))
     watch = given("watch").lower() == "true"
+    nodes = headless_stack(folder, given("clock"), namespace, simulated, watch=watch, enclave=enclave)
     actions = []
-    for node in headless_stack(folder, given("clock"), namespace, simulated, watch=watch, enclave=enclave):
+    for node in hurried(nodes, int(given("priority")) if given("clock") == "real_time" else 0):
         leaving = {"on_exit": Shutdown()} if node.executable == "simulated_robot" else {}
         actions.append(
             (LifecycleNode if node.lifecycle else Node)(
@@ -67,6 +68,7 @@ def generate_launch_description():
             DeclareLaunchArgument("truth", default_value="", description="KEY=VALUE ...: where it is unlike the model"),
             DeclareLaunchArgument("plan", default_value="", description="plan file in whose start posture it begins"),
             DeclareLaunchArgument("duration", default_value="0.0", description="simulated time, s; 0: no end"),
+            DeclareLaunchArgument("priority", default_value="20", description="SCHED_FIFO to ask for; 0: none"),
             OpaqueFunction(function=_nodes),
         ]
     )

@@ -14,7 +14,7 @@ from launch.actions import DeclareLaunchArgument, OpaqueFunction
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 
-from ballbal_ros.stack import PACKAGE, RobotFolder, checked_enclave, checked_namespace, robot_stack
+from ballbal_ros.stack import PACKAGE, RobotFolder, checked_enclave, checked_namespace, hurried, robot_stack
 from launch import LaunchDescription
 
 
@@ -23,6 +23,7 @@ def _nodes(context):
     folder = RobotFolder.checked(Path(LaunchConfiguration("robot").perform(context)), simulated=False)
     enclave = checked_enclave(LaunchConfiguration("enclave").perform(context))
     watch = LaunchConfiguration("watch").perform(context).lower() == "true"
+    nodes = robot_stack(folder, namespace, watch=watch, enclave=enclave)
     return [
         (LifecycleNode if node.lifecycle else Node)(
             package=PACKAGE,
@@ -36,7 +37,7 @@ def _nodes(context):
             respawn_delay=0.5,
             ros_arguments=node.ros_arguments,
         )
-        for node in robot_stack(folder, namespace, watch=watch, enclave=enclave)
+        for node in hurried(nodes, int(LaunchConfiguration("priority").perform(context)))
     ]
 
 
@@ -48,6 +49,7 @@ def generate_launch_description():
             DeclareLaunchArgument("namespace", default_value="", description="namespace of all nodes"),
             DeclareLaunchArgument("enclave", default_value="", description="base of the enclaves: docs/security.md"),
             DeclareLaunchArgument("watch", default_value="true", description="take edits of the parameter files in"),
+            DeclareLaunchArgument("priority", default_value="20", description="SCHED_FIFO to ask for; 0: none"),
             OpaqueFunction(function=_nodes),
         ]
     )

@@ -96,6 +96,19 @@ def test_headless_launch_adds_the_simulated_robot_whose_end_is_everybodys(launch
         assert nodes[name].keywords["remappings"] == [("/clock", "/b/clock")]
 
 
+def test_the_loop_asks_for_the_priority_that_launch_is_given(launched: Any) -> None:
+    """On a robot, and by the wall clock; in lock-step nothing is in a hurry."""
+    for file, given, wanted in (
+        ("robot.launch.py", {}, 20),
+        ("robot.launch.py", {"priority": "80"}, 80),
+        ("headless.launch.py", {"clock": "real_time"}, 20),
+        ("headless.launch.py", {}, 0),
+    ):
+        nodes = launched(file, **given)
+        assert nodes["balance"].keywords["parameters"][-1]["realtime_priority"] == wanted
+        assert "realtime_priority" not in nodes["arm_compensation"].keywords["parameters"][-1]
+
+
 @pytest.mark.parametrize("file", ["robot.launch.py", "headless.launch.py"])
 def test_each_node_runs_in_an_enclave_of_its_own(launched: Any, file: str) -> None:
     """With a base given, every node is started in the enclave of its name below it; without one, in none."""

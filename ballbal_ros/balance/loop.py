@@ -88,6 +88,7 @@ class BalanceLoop:
         self.output = TorqueOutput(description, parameters, self.body.mass)
         self.judge = Judge(description, parameters, self.watch, self.output, posture)
         self.supported = False
+        self.held_back = ""
         self._load_changes: list[tuple[float, Load]] = []
         self._deviation = np.zeros(MEASURED)
         self._expected = Expected()
@@ -301,7 +302,7 @@ class BalanceLoop:
         return self._efforts(controller.torque(), share, reference)
 
     def _missing(self, off: tuple[float, float], off_rates: tuple[float, float]) -> str:
-        """What is missing to engage, in words; "" for nothing."""
+        """What is missing to engage, in words; "" for nothing. ``held_back`` is what its caller says to that."""
         limits, lean, rate = self.parameters.limits, math.hypot(*off), math.hypot(*off_rates)
         for there, sense in ((self.senses.imu, "IMU"), (self.senses.drive, "drive"), (self.senses.arms, "arm")):
             if not there:
@@ -314,7 +315,7 @@ class BalanceLoop:
             return f"{lean:.3f} rad off balance, limits.engage_lean is {limits.engage_lean:g}"
         if not rate < limits.engage_rate:
             return f"leans with {rate:.2f} rad/s, limits.engage_rate is {limits.engage_rate:g}"
-        return ""
+        return self.held_back
 
     def _judge(
         self, now: float, reference: list[float], off: tuple[float, float], off_rates: tuple[float, float]

@@ -153,6 +153,14 @@ SENSED = (
     ),
     Answer(
         CLOCK,
+        "overload, on the stand",
+        "by the wall clock ticks come late by more than half a loop period in the mean of a second, or more than "
+        "drive_timeout at worst (not in lock-step): it does not engage",
+        REFUSED,
+        IN_NODE,
+    ),
+    Answer(
+        CLOCK,
         "jump",
         "three stamps in order from elsewhere: time goes on from there, plans are forgotten",
         steps((0.0, STOP)),

@@ -17,10 +17,11 @@ from rclpy.context import Context
 from rclpy.serialization import deserialize_message
 from rclpy.signals import SignalHandlerOptions
 
+from ballbal_ros.balance.guard import BALANCING, STANDBY
 from ballbal_ros.commands.processes import Processes, RunFailed
 from ballbal_ros.motion.story import Story
 from ballbal_ros.nodes import process
-from ballbal_ros.nodes.diagnostics import OK, values_of
+from ballbal_ros.nodes.diagnostics import OK, number_of, values_of
 from ballbal_ros.nodes.messages import BILLION, load_message, nanoseconds, to_time
 from ballbal_ros.nodes.plan_report import EARLIER
 from ballbal_ros.nodes.topics import publisher, subscribe
@@ -38,7 +39,11 @@ _LISTENERS = {"hand_load": 3, "arm_plan": 2, "ball_plan": 1, "hand_wrench_plan":
 
 
 class Bus:
-    """A node of the runner's own in one domain and namespace. As a context it is taken down at the end."""
+    """A node of the runner's own in one domain and namespace. As a context it is taken down at the end.
+
+    ``state`` is the guard's, BALANCING since the stamp ``balances_from``, s; ``waited``: what it waited for last before
+    it engaged.
+    """
 
     def __init__(self, domain: int, namespace: str, processes: Processes, timeout: float) -> None:
         self._processes, self._timeout = processes, timeout
@@ -50,7 +55,8 @@ class Bus:
         self._namespace, self._simulator = namespace, f"{namespace}/simulated_robot"
         self._refused: dict[str, str] = {}
         self.records: list[bytes] = []
-        self.state = ""
+        self.state = self._why = self.waited = ""
+        self.balances_from = np.inf
         self._told = self._heard = 0
         self.report: Any = None
         self.peaks: dict[str, str] = {}
@@ -76,8 +82,12 @@ class Bus:
             self.records.append(raw)
 
     def _on_state(self, message: Any) -> None:
-        self.state = message.message
-        self._heard = int(values_of(message).get("load changes", "0"))
+        values = values_of(message)
+        self.state, self._why = message.message, values.get("reason", "")
+        self.waited = self._why if self.state == STANDBY else self.waited
+        if self.state == BALANCING:
+            self.balances_from = min(self.balances_from, number_of(values.get("stamp", "")))
+        self._heard = int(values.get("load changes", "0"))
 
     def _on_report(self, message: Any) -> None:
         for status in message.status:
@@ -112,8 +122,13 @@ class Bus:
         while not happened():
             self.turn()
             if time.monotonic() > until:
-                reasons = "; ".join(f"{name} says: {reason}" for name, reason in self._refused.items() if reason)
-                raise RunFailed(f"waited {self._timeout:g} s for {what}, in vain; {reasons or 'nobody says why'}")
+                why = self._reasons() or "nobody says why"
+                raise RunFailed(f"waited {self._timeout:g} s for {what}, in vain; {why}")
+
+    def _reasons(self) -> str:
+        """What the nodes have refused, and why balance is in its state."""
+        state = {f"{self._namespace}/balance is {self.state}": self._why}
+        return "; ".join(f"{who}: {why}" for who, why in {**self._refused, **state}.items() if why)
 
     def wait_for_nodes(self) -> None:
         """Wait until every node listens."""
@@ -169,7 +184,7 @@ class Bus:
         self.wait_for("balance to be configured", configured)
         if not self.change_state(Transition.TRANSITION_ACTIVATE):
             raise RunFailed("balance would not be activated")
-        self.wait_for("balance to balance", lambda: self.state == "balancing")
+        self.wait_for("balance to balance", lambda: self.state == BALANCING)
 
     def wait_for_report(self) -> None:
         """Wait for the answer to the arm plan; raises :class:`RunFailed` with its reason where it is refused."""

@@ -13,18 +13,20 @@ from ballbal_ros.commands.bus import Bus
 from ballbal_ros.commands.processes import Processes, RunFailed, environment
 from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.story import Story
+from ballbal_ros.nodes.diagnostics import number_of
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.simulation.run_result import RunResult
 from ballbal_ros.simulation.timeline import Timeline
-from ballbal_ros.stack import RobotFolder, headless_stack
+from ballbal_ros.stack import LOOP, RobotFolder, headless_stack, hurried
 
 _SIMULATOR = "simulated_robot"
 _PRIORITY = 20
-_LOOP = (_SIMULATOR, "balance")
 _SHOW_EVERY = 0.2
 _KINEMATICS_RATE = 50.0
 _LAST_WORDS = 2.0
+# Share of a run by the wall clock for which simulated time may stand still before it is worth a word.
+_HELD = 0.01
 
 
 @attrs.frozen(eq=False, kw_only=True)
@@ -78,7 +80,7 @@ class HeadlessRun:
             except RunFailed as error:
                 raise RunFailed("; ".join([str(error), *self._restarts(processes)])) from error
             end = "the plan was finished" if self.moves else "the run went on to its end"
-            self.notes = [f"{self.kind}, seed {self.seed}: {line}; {end}" for line in self._restarts(processes)]
+            self.notes += [f"{self.kind}, seed {self.seed}: {line}; {end}" for line in self._restarts(processes)]
             return result
 
     @staticmethod
@@ -93,6 +95,7 @@ class HeadlessRun:
             bus.wait_for_nodes()
             bus.send_start(setup.story)
             bus.bring_up()
+            self._check_start(bus)
             if self.moves:
                 bus.send_story(setup.story, setup.timeline, setup.description.joint_names)
                 bus.wait_for_report()
@@ -100,9 +103,25 @@ class HeadlessRun:
             self._follow(processes, bus, show)
             took = time.monotonic() - began
             truth = self._whole(bus)
+            self._note_held(bus.peaks)
             if processes.restarts and bus.state != "balancing":
                 raise RunFailed(f"the plan was not finished: balance ended {bus.state}")
             return self._result(truth, bus.peaks, (truth[-1, 0] - from_time) / max(took, 1e-9))
+
+    def _check_start(self, bus: Bus) -> None:
+        """What is told by a stamp must not be over before it balances: ticks that come late keep it from engaging."""
+        begins, balances = self.setup.timeline.count_from, bus.balances_from
+        if balances > begins:
+            why = f"it balances only from {balances:.1f} s on, and the run begins at {begins:g} s"
+            raise RunFailed(f"{why}; before, it said: {bus.waited}")
+
+    def _note_held(self, told: dict[str, str]) -> None:
+        """Where the machine was too busy for the simulated robot, its time stood still: a real one's does not."""
+        held, longest = (number_of(told.get(key, "")) for key in ("time held s", "time held at once ms"))
+        if held > _HELD * self.setup.timeline.end:
+            busy = "this machine is too busy to say how a robot's own computer would do"
+            what = f"simulated time stood still for {held:.1f} s in all, {longest:.0f} ms at once"
+            self.notes.append(f"{self.kind}, seed {self.seed}: {what}: {busy}")
 
     def _start(self, processes: Processes) -> None:
         setup, timeline = self.setup, self.setup.timeline
@@ -119,10 +138,8 @@ class HeadlessRun:
         if setup.truth:
             simulated["truth"] = list(setup.truth)
         processes.may_end = _SIMULATOR
-        for node in headless_stack(setup.folder, setup.clock, setup.namespace, simulated):
-            if node.executable in _LOOP and setup.clock == "real_time":
-                # As on a robot: a loop by the wall clock must not wait for other programs.
-                node = node.with_parameters(realtime_priority=_PRIORITY)
+        priority = _PRIORITY if setup.clock == "real_time" else 0
+        for node in hurried(headless_stack(setup.folder, setup.clock, setup.namespace, simulated), priority):
             if node.executable == "balance":
                 node = node.with_parameters(compensation=way)
             elif node.executable == "arm_compensation":
@@ -130,9 +147,9 @@ class HeadlessRun:
             elif node.executable == "whole_body_kinematics":
                 node = node.with_parameters(rate=_KINEMATICS_RATE)
             # On two cores the loop, from simulated robot to balance and back, goes before all that only listens.
-            hurried = node.executable in _LOOP
+            first = node.executable in LOOP
             words = node.command(setup.namespace)
-            processes.start(node.executable, words, environment(setup.domain), hurried, node.respawn)
+            processes.start(node.executable, words, environment(setup.domain), first, node.respawn)
 
     def _follow(self, processes: Processes, bus: Bus, show: Callable[[Glimpse], None]) -> None:
         """Until all is recorded: every tick of the run, and what the simulated robot says at its end."""

@@ -11,7 +11,7 @@ from rclpy.lifecycle import LifecycleNode, TransitionCallbackReturn
 
 from ballbal_ros.balance.clock import is_looked_at
 from ballbal_ros.balance.gains import checked_design, least_margins
-from ballbal_ros.balance.guard import BALANCING
+from ballbal_ros.balance.guard import BALANCING, STANDBY
 from ballbal_ros.balance.hand_force import PullWatch
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
@@ -24,8 +24,9 @@ from ballbal_ros.nodes.balance_tuning import BalanceTuning
 from ballbal_ros.nodes.diagnostics import ERROR, OK, WARN, Diagnostics
 from ballbal_ros.nodes.hand_loads import HandLoads
 from ballbal_ros.nodes.messages import BILLION
-from ballbal_ros.nodes.pace import TOO_LATE
+from ballbal_ros.nodes.overload import why_not_engage, why_stop
 from ballbal_ros.nodes.parameters import NodeParameters
+from ballbal_ros.nodes.priority import Scheduling
 from ballbal_ros.nodes.senses import Senses
 from ballbal_ros.nodes.stamp_clock import StampClock
 from ballbal_ros.robot.arrays import Array
@@ -33,7 +34,6 @@ from ballbal_ros.robot.parameters import RobotParameters
 from ballbal_ros.robot.whole_body import WholeBody
 
 _STATE_EVERY = BILLION // 5
-_LATE_SECONDS = 2
 _SUCCESS, _FAILURE = TransitionCallbackReturn.SUCCESS, TransitionCallbackReturn.FAILURE
 
 
@@ -85,7 +85,7 @@ class BalanceNode(LifecycleNode):
         self.ns = ns
         self._answer = loop.tick(self._senses.measurement)
         self._messages.command(ns, self._answer)
-        self.diagnostics.pace.ran(ns / BILLION)
+        self.diagnostics.pace.ran(ns / BILLION, loop.period)
         self._most_torque = max(self._most_torque, math.hypot(loop.output.sent[0], loop.output.sent[1]))
         self._ticks += 1
         if self._ticks % self._odom_every == 0:
@@ -94,13 +94,19 @@ class BalanceNode(LifecycleNode):
             self._messages.odometry(ns, loop)
             self._see_pull(ns, loop)
             self.hand_loads.see(ns, loop)
-        if self.diagnostics.pace.late_seconds >= _LATE_SECONDS and not self._lock_step and loop.guard.sends:
-            # Nobody can balance on a machine that is busy with something else: no new motion, and it is told.
-            loop.stop(f"the loop comes late by more than {TOO_LATE:g} s each second: this computer is overloaded")
+            if not self._lock_step:
+                self._look_at_pace(loop)
         state = loop.guard.state
         due = state != self._said or ns - self._said_at >= _STATE_EVERY
         if due or (state in ("standby", "engaging") and is_looked_at(ns, self._period_ns)):
             self.say_state()
+
+    def _look_at_pace(self, loop: BalanceLoop) -> None:
+        pace = self.diagnostics.pace
+        loop.held_back = why_not_engage(pace, loop.parameters, Scheduling.granted)
+        overload = why_stop(pace)
+        if overload and loop.guard.sends:
+            loop.stop(overload)
 
     def _see_pull(self, ns: int, loop: BalanceLoop) -> None:
         """Keep account of the motion that tells what pulls at a hand: the numbers alone, it is worked out on demand."""
@@ -137,6 +143,8 @@ class BalanceNode(LifecycleNode):
         for stamp, load in to_come:
             loop.set_load(load, stamp)
         loop.supported = bool(self.requests.supported)
+        if not self._lock_step:
+            self._look_at_pace(loop)
         return loop
 
     def on_configure(self, state: Any) -> TransitionCallbackReturn:
@@ -219,7 +227,8 @@ class BalanceNode(LifecycleNode):
         values.update(pull_values(self._pull, self.description.parameters.hands.links))
         if state == "tripped":
             return ERROR, state, values
-        return (WARN if ticks == 0 or state in ("stopping", "released") else OK), state, values
+        looked_at = ticks == 0 or state in ("stopping", "released") or (state == STANDBY and loop.held_back)
+        return (WARN if looked_at else OK), state, values
 
 
 def main() -> None:

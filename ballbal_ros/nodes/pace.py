@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Callable, Mapping
 from typing import Any
@@ -31,13 +32,16 @@ class Pace:
         self.late_seconds = 0
         self._runs, self._since = 0, time.monotonic()
         self._late = self._worst = 0.0
+        self._second = math.inf, math.inf
         self._before: float | None = None
         self._due = 0.0
 
-    def ran(self, due: float) -> None:
-        """The loop runs now, for the time ``due``, s, on whatever clock."""
+    def ran(self, due: float, period: float = math.inf) -> None:
+        """The loop runs now, for the time ``due``, s, on whatever clock. What it should have answered every ``period``
+        s, and passed over because something newer was there, makes it late as well.
+        """
         now, before = time.monotonic(), self._before
-        self.was_late(0.0 if before is None else (now - before) - (due - self._due))
+        self.was_late(0.0 if before is None else (now - before) - min(due - self._due, period))
         self._before, self._due = now, due
 
     def ran_after(self, period: float) -> None:
@@ -51,6 +55,14 @@ class Pace:
             self._late += late
             if late > self._worst:
                 self._worst = late
+
+    @property
+    def lateness(self) -> tuple[float, float]:
+        """How late it ran in the mean of the last second that was counted, and at worst in that and since, s;
+        infinite where it did not run in that.
+        """
+        mean, worst = self._second
+        return mean, max(worst, self._worst)
 
     def turn(self) -> None:
         """A second is over: what was counted in it is what is told, and counting begins anew."""
@@ -67,6 +79,7 @@ class Pace:
         }
         self.late_seconds = self.late_seconds + 1 if self._worst > TOO_LATE else 0
         self.count, self._runs, self._since = runs, 0, now
+        self._second = (self._late / runs, self._worst) if runs else (math.inf, math.inf)
         self._late = self._worst = 0.0
 
     def values(self) -> Mapping[str, float]:

@@ -10,9 +10,12 @@ _LOCK_ALL = 3  # MCL_CURRENT | MCL_FUTURE
 
 
 class Scheduling:
-    """What the system granted this process. ``told`` says it for diagnostics."""
+    """What the system granted this process. ``told`` says it for diagnostics; ``granted``: whether it goes before other
+    programs.
+    """
 
     told = "ordinary, memory not locked: not asked for"
+    granted = False
 
     @classmethod
     def hurry(cls, priority: int) -> None:
@@ -22,7 +25,7 @@ class Scheduling:
         try:
             for task in Path("/proc/self/task").iterdir():
                 os.sched_setscheduler(int(task.name), os.SCHED_FIFO, os.sched_param(priority))
-            scheduling = f"SCHED_FIFO {priority}"
+            cls.granted, scheduling = True, f"SCHED_FIFO {priority}"
         except (OSError, ValueError) as error:
             scheduling = f"ordinary: SCHED_FIFO {priority} was not granted ({error})"
         locked = ctypes.CDLL(None, use_errno=True).mlockall(_LOCK_ALL) == 0

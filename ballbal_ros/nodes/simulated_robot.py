@@ -27,6 +27,7 @@ from ballbal_ros.nodes.parameters import NodeParameters, robot_file
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.nodes.topics import publisher
 from ballbal_ros.nodes.trajectories import ArmWaypoints
+from ballbal_ros.nodes.wall_pace import WallPace
 from ballbal_ros.nodes.wire_readers import JointStateReader
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.parameters import RobotParameters
@@ -81,12 +82,12 @@ class SimulatedRobotNode(Node):
         self._diagnostics = Diagnostics(self, self.description.name, self._report, lambda: to_time(self._robot.time))
         self._listen()
         self._waiting_since = time.monotonic()
-        self._started: float | None = None
-        self._command_came = 0.0
+        self._wall = WallPace(self._period, self._own.catch_up)
+        self._command_at = 0.0
         self._support.publish(Bool(data=True))
         steady = RosClock(clock_type=ClockType.STEADY_TIME)
         self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
-        self._pacing = self.create_timer(self._period, self._pace, clock=steady, autostart=False)
+        self._pacing = self.create_timer(self._period, self._pace, clock=steady, autostart=self._real_time)
         self._messages.publish(self._robot, 0, again=True)
 
     def _make_robot(self, parameters: SimulationParameters) -> SimulatedRobot:
@@ -121,37 +122,37 @@ class SimulatedRobotNode(Node):
             self._diagnostics.refuse("drive_command", f"drive_command: {error}")
             return
         self._answers.answered(command.stamp)
-        if command.stamp != self._ns and not (self._real_time and self._started is not None):
+        if command.stamp != self._ns and not self._wall.began:
             return
         try:
             self._effort = self._messages.effort(command)
         except BallbalError as error:
             self._diagnostics.refuse("drive_command", str(error))
             return
-        self._command_came = time.monotonic()
+        self._command_at = self._robot.time
         self._go_on()
 
-    def _go_on(self) -> None:
-        """Step if all that belongs to this instant is here."""
-        if self._effort is None or self._started is not None or self._ended is not None:
+    def _go_on(self, in_time: bool = False) -> None:
+        """Step if all that belongs to this instant is here; by the wall clock not before it is time."""
+        if self._effort is None or self._wall.began or self._ended is not None:
+            return
+        if self._real_time and not in_time:
             return
         if self._lock.silent(self._ns, self._robot.support):
             return
         if self._real_time and not self._lock.waits_for_plan:
-            self._started = time.monotonic() - self._robot.time
-            self._pacing.reset()
+            self._wall.begin(time.monotonic(), self._robot.time)
             return
         self._step(self._effort)
         self._effort = None
 
     def _pace(self) -> None:
         """Real time: step until simulated time has come up with the wall clock."""
-        if self._started is None or self._ended is not None:
-            return
+        self._go_on(in_time=True)
         now = time.monotonic()
-        while self._robot.time + self._period <= now - self._started and self._ended is None:
-            stale = now - self._command_came > self._own.drive_watchdog
-            self._late = now - self._started - self._robot.time - self._period
+        while self._ended is None and (late := self._wall.late(now, self._robot.time)) >= 0.0:
+            self._late = late
+            stale = self._robot.time - self._command_at > self._own.drive_watchdog
             self._step(self._nothing if stale or self._effort is None else self._effort)
 
     def _step(self, effort: Any) -> None:
@@ -188,7 +189,7 @@ class SimulatedRobotNode(Node):
         if self._ended is not None:
             self._linger(*self._ended)
             return
-        if self._started is not None:
+        if self._wall.began:
             return
         if time.monotonic() - self._waiting_since > _ATTEND:
             # Somebody may have come to listen only now.
@@ -278,7 +279,8 @@ class SimulatedRobotNode(Node):
             "seed": self._own.seed,
             "ended": self._ended is not None,
             **self._peaks.values(),
-            **(self._answers.values() if self._started is not None else {}),
+            **(self._answers.values() if self._wall.began else {}),
+            **self._wall.values(),
         }
         return (ERROR, "fell", values) if robot.fell else (OK, self._held(), values)
 
