@@ -4,23 +4,16 @@ from __future__ import annotations
 
 import mujoco
 import numpy as np
-from scipy.linalg.lapack import dposv
 
 from ballbal_ros.errors import ParameterError
 from ballbal_ros.motion.spline import JointPath
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.simulation import compiled
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.world import World
 
 _OLD_MUJOCO = int(mujoco.__version__.split(".")[0]) < 4
-
-def _full_mass_matrix(model: mujoco.MjModel, data: mujoco.MjData, matrix: Array) -> None:
-    """The mass matrix [nv, nv] of now. MuJoCo 4 takes it from the data itself; before, one passed it."""
-    if _OLD_MUJOCO:
-        mujoco.mj_fullM(model, matrix, data.qM)
-    else:
-        mujoco.mj_fullM(model, data, matrix)
 
 
 class ArmServo:
@@ -50,23 +43,31 @@ class ArmServo:
                 f"it takes at most {0.5 / self._period:g} rad/s",
             )
         self._model, self._data = world.model, data
-        # The world's own order of the arm joints, in which they are neighbours: slices are faster than index lists.
+        # The world's own order of the arm joints, in which they are neighbours.
         self._order = np.argsort(world.arm_rate)
-        first, first_at, count = int(world.arm_rate.min()), int(world.arm_position.min()), len(self._order)
-        self._high = description.effort_limit[self._order]
-        self._low = -self._high
+        self._first, first_at, count = int(world.arm_rate.min()), int(world.arm_position.min()), len(self._order)
         self._position = data.qpos[first_at : first_at + count]
-        self._rate = data.qvel[first : first + count]
-        self._applied = data.qfrc_applied[first : first + count]
-        self._bias = data.qfrc_bias[first : first + count]
-        size = world.model.nv
-        self._free = np.setdiff1d(np.arange(size), np.arange(first, first + count))
-        self._free_block = self._free[:, None] * size + self._free
-        self._mass_matrix = np.zeros((size, size))
-        self._wanted, self._forces, self._outside = np.zeros(size), np.zeros(size), np.zeros(size)
-        self._wanted_arm, self._force = self._wanted[first : first + count], self._forces[first : first + count]
-        self._all_applied, self._contact, self._all_bias = data.qfrc_applied, data.qfrc_constraint, data.qfrc_bias
+        self._rate = data.qvel[self._first : self._first + count]
         self._set_gains(parameters.physics_step)
+        size = world.model.nv
+        free = np.setdiff1d(np.arange(size), np.arange(self._first, self._first + count))
+        inertia = np.zeros((size, size))
+        # MuJoCo 4 takes the inertia from the data; before, one passed it.
+        at = inertia.ctypes.data
+        full = (at, data.qM.ctypes.data) if _OLD_MUJOCO else (data._address, at)
+        highest = description.effort_limit[self._order]
+        self._before_command = (world.model._address, data._address, *full, self._first)
+        self._after_command = (
+            np.stack((self._gain, self._rate_gain, highest)),
+            free,
+            self._position,
+            self._rate,
+            data.qfrc_applied,
+            data.qfrc_bias,
+            data.qfrc_constraint,
+            np.zeros((3, size)),
+            inertia,
+        )
         self._commands: list[tuple[int, Array]] = [(0, (self._gain * self._position)[None])]
 
     def _set_gains(self, step: float) -> None:
@@ -102,20 +103,4 @@ class ArmServo:
         while len(commands) > 1 and commands[1][0] <= tick:
             del commands[0]
         first, table = commands[0]
-        model, data, free = self._model, self._data, self._free
-        wanted, outside = self._wanted_arm, self._outside
-        np.multiply(self._rate, -self._rate_gain, out=wanted)
-        wanted += table[min(tick - first, len(table) - 1)]
-        wanted -= self._gain * self._position
-        mujoco.mj_mulM(model, data, self._forces, self._wanted)
-        np.add(self._all_applied, self._contact, out=outside)
-        outside -= self._all_bias
-        outside -= self._forces
-        _full_mass_matrix(model, data, self._mass_matrix)
-        self._wanted[free] = dposv(self._mass_matrix.take(self._free_block), outside[free])[1]
-        mujoco.mj_mulM(model, data, self._forces, self._wanted)
-        self._wanted[free] = 0.0
-        force = self._force
-        force += self._bias
-        np.minimum(force, self._high, out=force)
-        np.maximum(force, self._low, out=self._applied)
+        compiled.arm_torque(*self._before_command, table[min(tick - first, len(table) - 1)], *self._after_command)

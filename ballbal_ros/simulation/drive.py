@@ -10,6 +10,7 @@ import numpy as np
 from ballbal_ros.errors import BallbalError, ParameterError
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.simulation import compiled
 from ballbal_ros.simulation.parameters import SimulationParameters
 
 _PRESLIDING_DAMPING = 0.7
@@ -43,62 +44,53 @@ class SimulatedDrive:
     ) -> None:
         drive, step = description.drive, parameters.physics_step
         self._count = len(drive.names)
-        self._limit = drive.effort_limit.tolist()
-        self._scale = parameters.drive.torque_scale
-        self._steps_a_tick = whole_steps(1.0 / parameters.loop_rate, step, "1 / loop_rate")
-        whole, self._late_steps = divmod(whole_steps(parameters.drive.delay, step, "drive.delay"), self._steps_a_tick)
-        nothing = [0.0] * self._count
-        self._commands = deque([nothing] * (whole + 2), maxlen=whole + 2)
+        steps = whole_steps(1.0 / parameters.loop_rate, step, "1 / loop_rate")
+        whole, self.late_steps = divmod(whole_steps(parameters.drive.delay, step, "drive.delay"), steps)
+        self._commands = deque([np.zeros(self._count)] * (whole + 2), maxlen=whole + 2)
         rate_map = drive.rate_map @ rotation_drive_in_base
-        self._stiffness, damping = _bristles(description, parameters)
-        self._presliding = parameters.drive.presliding
-        # Plain numbers: for so few they are several times faster than arrays.
-        self._actuators = list(
-            zip(
-                range(self._count), *(rate_map * step).T.tolist(), *rate_map.T.tolist(),
-                (drive.rate_limit * step).tolist(), self._stiffness.tolist(), (damping / step).tolist(),
-            )
+        stiffness, damping = _bristles(description, parameters)
+        self.presliding = parameters.drive.presliding
+        # What `compiled` takes: a row for each actuator; angle, turn, bristle and friction of them all.
+        scale = np.full(self._count, parameters.drive.torque_scale)
+        columns = (
+            rate_map * step,
+            rate_map,
+            drive.rate_limit * step,
+            stiffness,
+            damping / step,
+            drive.effort_limit,
+            scale,
         )
-        self.angle, self._turn, self._bristle = nothing[:], nothing[:], nothing[:]
-        self._friction = nothing[:]
-        self.torque_on_ball = (0.0, 0.0, 0.0)
+        self.actuators = np.column_stack(columns)
+        self.state = np.zeros((4, self._count))
+        self.torque_on_ball = np.zeros(3)
+
+    @property
+    def angle(self) -> Array:
+        """What the encoders would count [n], had they no steps, rad."""
+        return self.state[0]
 
     def command(self, effort: Array) -> None:
         """Take the command [n] of this tick, N m; raises :class:`BallbalError` unless it is n finite numbers."""
         given = effort.tolist()
         if len(given) != self._count or not math.isfinite(sum(given)):
             raise BallbalError("drive_effort", f"is {given}", f"it takes {self._count} finite efforts")
-        scale = self._scale
-        self._commands.append([scale * min(max(value, -most), most) for value, most in zip(given, self._limit)])
+        self._commands.append(np.array(given))
 
-    def torque(self, step_in_tick: int) -> tuple[float, float, float]:
-        """Torque (3 numbers) on the ball in this physics step of the tick, N m."""
-        efforts = self._commands[0 if step_in_tick < self._late_steps else 1]
-        turn, friction = self._turn, self._friction
-        x = y = z = 0.0
-        for i, _, _, _, torque_x, torque_y, torque_z, fastest, _, _ in self._actuators:
-            effort = efforts[i]
-            if abs(turn[i]) > fastest and effort * turn[i] > 0.0:
-                effort = 0.0
-            effort -= friction[i]
-            x += torque_x * effort
-            y += torque_y * effort
-            z += torque_z * effort
-        self.torque_on_ball = (x, y, z)
-        return self.torque_on_ball
+    @property
+    def efforts(self) -> tuple[Array, Array]:
+        """Efforts [n], N m, of this tick's first :attr:`late_steps` physics steps, and of its others."""
+        return self._commands[0], self._commands[1]
+
+    def torque(self, step_in_tick: int) -> Array:
+        """Torque [3] on the ball in this physics step of the tick, N m."""
+        effort = self._commands[0 if step_in_tick < self.late_steps else 1]
+        compiled.drive_torque(self.actuators, self.state, effort, self.torque_on_ball)
+        return self.torque_on_ball.copy()
 
     def turn(self, x: float, y: float, z: float) -> None:
         """Take the ball's rate relative to the body (3 numbers) during the physics step just done, rad/s."""
-        angles, turn, bristle, friction = self.angle, self._turn, self._bristle, self._friction
-        slides_at = self._presliding
-        for i, turn_x, turn_y, turn_z, _, _, _, _, stiffness, damping in self._actuators:
-            d = turn_x * x + turn_y * y + turn_z * z
-            turn[i] = d
-            angles[i] += d
-            before = bristle[i]
-            bent = (before + d) / (1.0 + abs(d) / slides_at)
-            bristle[i] = bent
-            friction[i] = stiffness * bent + damping * (bent - before)
+        compiled.drive_turn(self.actuators, self.state, self.presliding, x, y, z)
 
 
 def _bristles(description: RobotDescription, parameters: SimulationParameters) -> tuple[Array, Array]:

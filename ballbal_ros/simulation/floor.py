@@ -8,10 +8,12 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
+
+from ballbal_ros.robot.arrays import Array
+from ballbal_ros.simulation import compiled
 from ballbal_ros.simulation.parameters import SimulationParameters
 
-# Below this speed (m/s) the resistance falls to zero in proportion, as for a real ball that settles in its dent.
-_CRAWL = 1e-3
 # Twist (rad) of the contact at which torsion is fully built up; more where the step can't follow so stiff a spring.
 _TWIST = 2e-3
 _DAMPING = 0.7
@@ -22,27 +24,23 @@ class FloorMoments:
 
     Rolling: C N r against the rolling. Torsion: a bristle, as in
     :class:`~ballbal_ros.simulation.drive.SimulatedDrive`; it holds the ball up to ``torsion`` N, twisted by a
-    milliradian or two, and rubs with that moment when the ball spins. ``clear``: whether it hangs above the
-    floor.
+    milliradian or two, and rubs with that moment when the ball spins. Below a speed of 1 mm/s rolling meets less,
+    in proportion, as for a real ball that settles in its dent.
     """
 
     def __init__(self, parameters: SimulationParameters, radius: float, inertia: float, weight: float) -> None:
-        floor, self._step = parameters.floor, parameters.physics_step
-        self._resistance, self._torsion = floor.rolling_resistance * radius, floor.torsion
-        self._twist = max(_TWIST, self._torsion * weight * self._step**2 / (0.04 * inertia))
-        stiffness = self._torsion * weight / self._twist
-        self._damping = 2.0 * _DAMPING * math.sqrt(stiffness * inertia) / self._step
-        self._bent = 0.0
-        self.clear = False
+        floor, step = parameters.floor, parameters.physics_step
+        twist = max(_TWIST, floor.torsion * weight * step**2 / (0.04 * inertia))
+        damping = 2.0 * _DAMPING * math.sqrt(floor.torsion * weight / twist * inertia) / step
+        # What `compiled` takes: the last number is how far the contact is twisted.
+        self.values = np.array([floor.rolling_resistance * radius, floor.torsion, twist, damping, step, 0.0])
 
-    def on_ball(self, load: float, vx: float, vy: float, spin: float) -> tuple[float, float, float]:
-        """The moment (3 numbers) in this physics step: load, N, velocity of the ball's centre, m/s, its spin, rad/s."""
-        load = 0.0 if self.clear else max(load, 0.0)
-        share = self._resistance * load / math.sqrt(vx * vx + vy * vy + _CRAWL**2)
-        turned = spin * self._step
-        before = self._bent
-        bent = (before + turned) / (1.0 + abs(turned) / self._twist)
-        self._bent = bent
-        torsion = self._torsion * load
-        hold = torsion * bent / self._twist + self._damping * (bent - before)
-        return share * vy, -share * vx, -min(max(hold, -torsion), torsion)
+    def clear(self) -> None:
+        """The ball hangs above it: it does nothing from now on."""
+        self.values[[0, 1, 3]] = 0.0
+
+    def on_ball(self, load: float, vx: float, vy: float, spin: float) -> Array:
+        """The moment [3] in this physics step: load, N, velocity of the ball's centre, m/s, its spin, rad/s."""
+        moment = np.empty(3)
+        compiled.floor_moment(self.values, load, vx, vy, spin, moment)
+        return moment

@@ -12,23 +12,21 @@ import numpy as np
 from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.errors import ModelError, nearest
 from ballbal_ros.motion.spline import JointPath
-from ballbal_ros.robot.arrays import Array, read_only
+from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import lean_and_heading, lean_and_heading_from_quat_xyzw, quat_xyzw, rotation_lean
 from ballbal_ros.robot.balance_rows import GRAVITY
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
+from ballbal_ros.simulation import compiled
 from ballbal_ros.simulation.arms import ArmServo
 from ballbal_ros.simulation.drive import SimulatedDrive, whole_steps
 from ballbal_ros.simulation.floor import FloorMoments
 from ballbal_ros.simulation.outside import OutsideForces
 from ballbal_ros.simulation.parameters import SimulationParameters
-from ballbal_ros.simulation.sensors import Sample, SimulatedSensors
+from ballbal_ros.simulation.sensors import SimulatedSensors
 from ballbal_ros.simulation.truth import Truth
 from ballbal_ros.simulation.world import World
-
-_UPRIGHT = math.cos(math.radians(45.0))
-_TURNED_BACK = read_only(np.array([1.0, 0.0, 0.0, 0.0]))
 
 
 class SimulatedRobot:
@@ -64,7 +62,7 @@ class SimulatedRobot:
         held = list(loads)
         for load in held:
             self._put(load)
-        self._find_views()
+        self._radius = description.parameters.ball.radius
         self._set_start(WholeBody(model, held), np.asarray(posture, float))
         self._drive = SimulatedDrive(description, self.parameters, self.world.rotation_drive_in_base)
         self._floor = FloorMoments(
@@ -74,31 +72,52 @@ class SimulatedRobot:
         self._tick, self._fell = 0, False
         self._outside = OutsideForces(self.world, self.data)
         whole, late = divmod(whole_steps(self.parameters.sensor_delay, step, "sensor_delay"), self._steps)
-        self._look_after = self._steps - 1 - late
-        self._felt = [value * self._steps for value in self._sensed[3:6].tolist()]
-        start = self._sample()
+        self._find_views(self._steps - 1 - late)
+        start = self._look()
         self._samples = deque([start] * (whole + 1), maxlen=whole + 1)
         self._sensors = SimulatedSensors(description, self.parameters, np.random.default_rng(seed), start)
         self._measurement = self._sensors.measure(0.0, start)
 
-    def _find_views(self) -> None:
-        data, world = self.data, self.world
-        self._applied_to_ball = data.qfrc_applied[world.rolling]
-        self._ball_rate = data.qvel[world.rolling]
-        self._base_velocity = data.qvel[:6]
-        self._moment_on_ball = data.xfrc_applied[world.ball, 3:6]
-        self._drive_axes = world.rotation_drive_in_base.tolist()
-        self._radius = self.description.parameters.ball.radius
-        at = world.arm_position
-        in_order = np.array_equal(at, np.arange(at[0], at[0] + len(at)))
-        self._arm_at: slice | Array = slice(int(at[0]), int(at[0]) + len(at)) if in_order else at
-        self._ball_quat = data.qpos[world.ball_quat]
-        self._sensed, self._specific_force = data.sensordata, data.sensordata[3:6]
+    def _find_views(self, look_after: int) -> None:
+        """What MuJoCo has, and what is ours, as `compiled` takes it."""
+        data, world, drive = self.data, self.world, self._drive
         self._qpos, self._qvel, self._qfrc_constraint = data.qpos, data.qvel, data.qfrc_constraint
-        self._base_axes, self._base_up = data.xmat[world.base], data.xmat[world.base][6:9]
-        self._turning = data.qacc[3:6]
-        half_step = 0.5 * self._model.opt.timestep
-        self._half_step_to_imu = (half_step * self.description.rotation_imu_in_base.T).tolist()
+        sensed, turning = data.sensordata, data.qacc[3:6]
+        felt = sensed[3:6] * float(self._steps)
+        half_step = np.array(0.5 * self._model.opt.timestep * self.description.rotation_imu_in_base.T, order="C")
+        arms = np.array(world.arm_position, np.int64)
+        self._sampled = 10 + len(drive.angle) + len(world.arm_position)
+        self._looking = (
+            sensed,
+            felt,
+            float(self._steps),
+            turning,
+            half_step,
+            drive.state,
+            data.qpos,
+            arms,
+        )
+        at = self._steps, drive.late_steps, look_after, world.rolling.start, world.ball_quat.start
+        sizes = np.array([drive.presliding, self._radius])
+        self._before_efforts = (self._model._address, data._address, np.array(at), sizes)
+        self._after_efforts = (
+            drive.actuators,
+            drive.state,
+            drive.torque_on_ball,
+            self._floor.values,
+            data.xfrc_applied[world.ball, 3:6],
+            data.qpos,
+            data.qvel,
+            data.qfrc_applied,
+            data.qfrc_constraint,
+            sensed,
+            turning,
+            data.xmat[world.base][6:9],
+            np.array(world.rotation_drive_in_base, order="C"),
+            half_step,
+            felt,
+            arms,
+        )
 
     def _set_start(self, model_body: WholeBody, posture: Array) -> None:
         """Stand at the model's equilibrium lean as the IMU shows it, sunk into the floor just so far that it carries
@@ -136,15 +155,10 @@ class SimulatedRobot:
         true.check("load")
         self.world.set_load(true)
 
-    def _sample(self) -> Sample:
-        imu = self._sensed.tolist()
-        imu[3:6] = [value / self._steps for value in self._felt]
-        self._felt[:] = 0.0, 0.0, 0.0
-        # The integrator's rates are half a step older than its positions: a gyro's are not.
-        x, y, z = self._turning.tolist()
-        for axis, (ix, iy, iz) in enumerate(self._half_step_to_imu):
-            imu[axis] += ix * x + iy * y + iz * z
-        return Sample(imu, self._drive.angle[:], self.arm_position)
+    def _look(self) -> Array:
+        sample = np.empty(self._sampled)
+        compiled.look(*self._looking, sample)
+        return sample
 
     def measurement(self) -> Measurement:
         """What the sensors say now."""
@@ -165,37 +179,12 @@ class SimulatedRobot:
         self._measurement = self._sensors.measure(self._tick / self.parameters.loop_rate, self._samples[0])
 
     def _move(self) -> None:
-        model, data, drive, felt = self._model, self.data, self._drive, self._felt
-        torque = self._applied_to_ball
         if self._outside.there:
             self._outside.apply()
-        for step in range(self._steps):
-            torque[0], torque[1], torque[2] = drive.torque(step)
-            self._feel_floor()
-            mujoco.mj_step2(model, data)
-            x, y, z = self._specific_force.tolist()
-            felt[0] += x
-            felt[1] += y
-            felt[2] += z
-            drive.turn(*self._ball_rate.tolist())
-            # The ball has turned about this very rate, so that the rate's numbers hold in the drive's axes too.
-            self._ball_quat[:] = _TURNED_BACK
-            mujoco.mj_step1(model, data)
-            if step == self._look_after:
-                self._samples.append(self._sample())
-        standing = self._base_axes.item(8) > _UPRIGHT and abs(self._qpos.item(2) - self._radius) < self._radius
-        self._fell = not standing
-
-    def _feel_floor(self) -> None:
-        """Give the ball the floor's moments against its rolling and spinning."""
-        vx, vy, _, wx, wy, wz = self._base_velocity.tolist()
-        rx, ry, rz = self._ball_rate.tolist()
-        (xx, xy, xz), (yx, yy, yz), (zx, zy, zz) = self._drive_axes
-        ux, uy, uz = self._base_up.tolist()
-        spin = ux * (wx + xx * rx + xy * ry + xz * rz) + uy * (wy + yx * rx + yy * ry + yz * rz)
-        spin += uz * (wz + zx * rx + zy * ry + zz * rz)
-        moment = self._moment_on_ball
-        moment[0], moment[1], moment[2] = self._floor.on_ball(self._qfrc_constraint.item(2), vx, vy, spin)
+        sample = np.empty(self._sampled)
+        stands = compiled.go_on(*self._before_efforts, *self._drive.efforts, *self._after_efforts, sample)
+        self._samples.append(sample)
+        self._fell = not stands
 
     def command_arms(self, path: JointPath, start: float) -> None:
         """Have the arms follow a path from time ``start`` (s; at once where that is past) on; its end is held."""
@@ -233,7 +222,7 @@ class SimulatedRobot:
 
     def hang(self, height: float) -> None:
         """Hang it up from its stand, the ball ``height`` m clear of the floor and free to turn in its cage."""
-        self._floor.clear = True
+        self._floor.clear()
         self.data.qpos[2] += height
         self.world.hold(self.data)
         mujoco.mj_step1(self._model, self.data)
@@ -282,7 +271,7 @@ class SimulatedRobot:
     @property
     def arm_position(self) -> Array:
         """True arm positions [n], rad."""
-        return self._qpos[self._arm_at].copy()
+        return self._qpos[self.world.arm_position]
 
     @property
     def arm_rate(self) -> Array:
@@ -292,7 +281,7 @@ class SimulatedRobot:
     @property
     def drive_torque(self) -> Array:
         """Torque [3] of the actuators on the body, less friction, in ``base_link``, N m, in the last physics step."""
-        return np.asarray(-self.world.rotation_drive_in_base @ np.array(self._drive.torque_on_ball))
+        return -self.world.rotation_drive_in_base @ self._drive.torque_on_ball
 
     @property
     def floor_force(self) -> Array:

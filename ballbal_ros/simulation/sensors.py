@@ -5,31 +5,17 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 
-import attrs
 import numpy as np
 
 from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
+from ballbal_ros.simulation import compiled
 from ballbal_ros.simulation.parameters import SimulatedImuParameters, SimulationParameters
 
 _BLOCK = 1000
 
 Quaternion = tuple[float, float, float, float]
-
-
-@attrs.define(eq=False)
-class Sample:
-    """What is true at the instant that the sensors look. (Not frozen, which costs time in the loop; nobody changes it.)
-
-    ``imu``: rate (3 numbers, rad/s), mean specific force since the last sample (3, m/s²), both in IMU axes, and
-    quaternion wxyz (4) of the IMU in ``odom``. ``drive_angle`` (rad, one for each actuator) and ``arm_position`` [n]
-    in rad.
-    """
-
-    imu: list[float]
-    drive_angle: list[float]
-    arm_position: Array
 
 
 class AttitudeFilter:
@@ -41,30 +27,17 @@ class AttitudeFilter:
     """
 
     def __init__(self, quat_wxyz: Quaternion, time_constant: float, period: float) -> None:
-        self._quat, self._pull, self._half = quat_wxyz, 1.0 / time_constant, 0.5 * period
-        self._last: tuple[float, float, float] | None = None
+        # What `compiled` takes.
+        self.state = np.array([*quat_wxyz, *[math.nan] * 3], float)
+        self.filtering = np.array([1.0 / time_constant, 0.5 * period])
 
-    def update(self, gx: float, gy: float, gz: float, ax: float, ay: float, az: float) -> Quaternion:
-        """The orientation (wxyz) after a period in which the rate went from the last to this (rad/s, three numbers)."""
-        w, x, y, z = self._quat
-        last = self._last or (gx, gy, gz)
-        self._last = (gx, gy, gz)
-        pull = self._pull / math.sqrt(ax * ax + ay * ay + az * az + 1e-12)
-        vx, vy, vz = 2.0 * (x * z - w * y), 2.0 * (y * z + w * x), 1.0 - 2.0 * (x * x + y * y)
-        half = self._half
-        hx = half * (0.5 * (gx + last[0]) + pull * (ay * vz - az * vy))
-        hy = half * (0.5 * (gy + last[1]) + pull * (az * vx - ax * vz))
-        hz = half * (0.5 * (gz + last[2]) + pull * (ax * vy - ay * vx))
-        self._quat = _turned(w, x, y, z, hx, hy, hz)
-        return self._quat
-
-
-def _turned(w: float, x: float, y: float, z: float, hx: float, hy: float, hz: float) -> Quaternion:
-    """The quaternion wxyz, turned about its own axes by the small rotation vector 2 (hx, hy, hz), of unit length."""
-    nw, nx = w - x * hx - y * hy - z * hz, x + w * hx + y * hz - z * hy
-    ny, nz = y + w * hy + z * hx - x * hz, z + w * hz + x * hy - y * hx
-    scale = 1.0 / math.sqrt(nw * nw + nx * nx + ny * ny + nz * nz)
-    return nw * scale, nx * scale, ny * scale, nz * scale
+    def update(self, rate: Array, force: Array) -> Quaternion:
+        """The orientation (wxyz) after a period in which the rate [3] went from the last to this, rad/s; specific
+        force [3], m/s².
+        """
+        compiled.filter_attitude(self.state, *self.filtering, rate, np.zeros(3), force)
+        w, x, y, z = self.state[:4].tolist()
+        return w, x, y, z
 
 
 class ImuErrors:
@@ -77,9 +50,9 @@ class ImuErrors:
     def __init__(self, parameters: SimulatedImuParameters, rate: float, generator: np.random.Generator) -> None:
         self._parameters, self._rate, self._generator = parameters, rate, generator
         self._bias = parameters.gyro_bias * generator.standard_normal(3)
-        self.start_bias = tuple(self._bias.tolist())
+        self.start_bias = self._bias.copy()
 
-    def rows(self) -> Iterator[list[float]]:
+    def rows(self) -> Iterator[Array]:
         """For each tick: what to add to rate (3) and specific force (3), and half a small turn of orientation (3)."""
         p, root = self._parameters, math.sqrt(self._rate)
         scale = np.repeat([p.gyro_noise * root, p.accelerometer_noise * root, 0.5 * p.attitude_noise], 3)
@@ -89,11 +62,15 @@ class ImuErrors:
             self._bias = bias[-1]
             added = normal[:, :9] * scale
             added[:, :3] += bias
-            yield from added.tolist()
+            yield from added
 
 
 class SimulatedSensors:
     """Makes a measurement of a true sample, with the errors of the sensors.
+
+    A sample [10 + actuators + arm joints] is what is true at the instant that they look: rate (3, rad/s) and mean
+    specific force since the last sample (3, m/s²) in IMU axes, quaternion wxyz of the IMU in ``odom``, angles of the
+    actuators and positions of the arms, rad.
 
     At the start the robot has stood still on its stand: the attitude filter is right then, and knows the gyro's bias
     of then.
@@ -104,37 +81,30 @@ class SimulatedSensors:
         description: RobotDescription,
         parameters: SimulationParameters,
         generator: np.random.Generator,
-        start: Sample,
+        start: Array,
     ) -> None:
         imu, self._rate = parameters.imu, parameters.loop_rate
         errors = ImuErrors(imu, self._rate, generator)
         self._rows, self._known_bias = errors.rows(), errors.start_bias
-        w, x, y, z = start.imu[6:10]
-        self._filter: AttitudeFilter | None = None
-        if imu.attitude == "filter":
-            self._filter = AttitudeFilter((w, x, y, z), imu.attitude_time, 1.0 / self._rate)
-        self._counts = [(max(step, 1e-12), 1.0 / max(step, 1e-12)) for step in description.drive.encoder_step.tolist()]
-        self._arm_step = max(parameters.arm_encoder_step, 1e-12)
-        self._arm_counts = 1.0 / self._arm_step
-        self._last_angle = self._angle = self._counted(start.drive_angle)
+        w, x, y, z = start[6:10].tolist()
+        turning = AttitudeFilter((w, x, y, z), imu.attitude_time, 1.0 / self._rate)
+        self._attitude = turning.state
+        self._filtering = turning.filtering if imu.attitude == "filter" else np.zeros(2)
+        steps = [*description.drive.encoder_step.tolist()]
+        self._arms = 10 + len(steps)
+        steps += [parameters.arm_encoder_step] * (len(start) - self._arms)
+        self._steps = np.maximum(steps, 1e-12)
+        self._last_angle = self._angle = self._steps[: self._arms - 10] * np.rint(
+            start[10 : self._arms] / self._steps[: self._arms - 10]
+        )
 
-    def _counted(self, angle: list[float]) -> Array:
-        return np.array([step * round(value * counts) for value, (step, counts) in zip(angle, self._counts)])
-
-    def measure(self, stamp: float, sample: Sample) -> Measurement:
+    def measure(self, stamp: float, sample: Array) -> Measurement:
         """The measurement of the tick at ``stamp`` (s); to be called once a tick."""
-        gx, gy, gz, ax, ay, az, w, x, y, z = sample.imu
-        dgx, dgy, dgz, dax, day, daz, hx, hy, hz = next(self._rows)
-        gx, gy, gz, ax, ay, az = gx + dgx, gy + dgy, gz + dgz, ax + dax, ay + day, az + daz
-        if self._filter is not None:
-            bx, by, bz = self._known_bias
-            w, x, y, z = self._filter.update(gx - bx, gy - by, gz - bz, ax, ay, az)
-        w, x, y, z = _turned(w, x, y, z, hx, hy, hz)
-        self._last_angle, self._angle = self._angle, self._counted(sample.drive_angle)
-        arm = np.rint(sample.arm_position * self._arm_counts)
-        arm *= self._arm_step
-        imu = np.array((gx, gy, gz, ax, ay, az))
-        return Measurement(stamp, (x, y, z, w), imu[:3], imu[3:], self._angle, arm)
+        told, arms = np.empty(len(sample)), self._arms
+        compiled.sense(sample, next(self._rows), self._attitude, self._filtering, self._known_bias, self._steps, told)
+        w, x, y, z = told[6:10].tolist()
+        self._last_angle, self._angle = self._angle, told[10:arms]
+        return Measurement(stamp, (x, y, z, w), told[:3], told[3:6], self._angle, told[arms:])
 
     @property
     def drive_rate(self) -> Array:

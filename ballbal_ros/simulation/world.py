@@ -245,7 +245,9 @@ def _add_imu(spec: mujoco.MjSpec, base: mujoco.MjsBody, description: RobotDescri
     mujoco.mju_mat2Quat(quat_wxyz, (tilt @ description.rotation_imu_in_base).ravel())
     base.add_site(name=_IMU, pos=description.parameters.imu.position, quat=quat_wxyz)
     kinds: Iterable[mujoco.mjtSensor] = (
-        mujoco.mjtSensor.mjSENS_GYRO, mujoco.mjtSensor.mjSENS_ACCELEROMETER, mujoco.mjtSensor.mjSENS_FRAMEQUAT
+        mujoco.mjtSensor.mjSENS_GYRO,
+        mujoco.mjtSensor.mjSENS_ACCELEROMETER,
+        mujoco.mjtSensor.mjSENS_FRAMEQUAT,
     )
     for kind in kinds:
         spec.add_sensor(name=f"simulated_imu_{kind.value}", type=kind, objtype=mujoco.mjtObj.mjOBJ_SITE, objname=_IMU)

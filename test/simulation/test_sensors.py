@@ -118,7 +118,7 @@ def test_attitude_filter_tilts_under_acceleration() -> None:
     tilting = AttitudeFilter((1.0, 0.0, 0.0, 0.0), time_constant, period)
     found = []
     for _ in range(round(40.0 / period)):
-        w, x, y, z = tilting.update(0.0, 0.0, 0.0, acceleration, 0.0, GRAVITY)
+        w, x, y, z = tilting.update(np.zeros(3), np.array([acceleration, 0.0, GRAVITY]))
         found.append(lean_and_heading_from_quat_xyzw(x, y, z, w))
     final = math.atan2(acceleration, GRAVITY)
     roll, pitch, heading = found[-1]
@@ -142,9 +142,9 @@ def test_attitude_filter_follows_a_turning_body() -> None:
     ups = true.inv().apply([0.0, 0.0, GRAVITY])
     x, y, z, w = true[0].as_quat()
     follower = AttitudeFilter((w, x, y, z), 5.0, period)
-    follower.update(*rates[0], *ups[0])
+    follower.update(rates[0], ups[0])
     for rate, up in zip(rates[1:], ups[1:]):
-        w, x, y, z = follower.update(*rate, *up)
+        w, x, y, z = follower.update(rate, up)
     assert (true[-1].inv() * Rotation.from_quat([x, y, z, w])).magnitude() < 1e-3
 
 
