@@ -24,7 +24,7 @@ INTERFACES = (
     "trajectory-msgs",
     "visualization-msgs",
 )
-SIMULATION = ["matplotlib>=3.8", "mujoco>=3.3,<5", "rosbags>=0.10"]
+SIMULATION = ["matplotlib>=3.8", "mujoco>=3.3,<5", "numba>=0.61", "rosbags>=0.10"]
 
 
 def config_files() -> list[tuple[str, list[str]]]:

@@ -13,6 +13,7 @@ from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
 from ballbal_ros.errors import BallbalError, nearest
+from ballbal_ros.memory import settle_memory
 from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.learned_file import read_learned, write_learned
 from ballbal_ros.motion.story import Story, read_story
@@ -70,6 +71,7 @@ def rehearse(
         TextColumn("{task.completed}/{task.total} runs"),
         TimeRemainingColumn(),
     )
+    settle_memory()
     with Progress(*columns, console=console, transient=True) as progress:
         task = progress.add_task(story.name, total=len(kinds) * len(seeds))
         for kind in kinds:

@@ -16,6 +16,7 @@ from ballbal_ros.balance.hand_force import PullWatch
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.balance.parameters import BalanceParameters
 from ballbal_ros.errors import BallbalError
+from ballbal_ros.memory import settle_memory
 from ballbal_ros.node_parameters import BalanceNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.balance_messages import BalanceMessages, pull_values, running_values
@@ -155,7 +156,7 @@ class BalanceNode(LifecycleNode):
         self.loop = self._make_loop()
         self._watch_pull(self.loop)
         self.ns = -1
-        process.settle_memory()
+        settle_memory()
 
     def _watch_pull(self, loop: BalanceLoop) -> None:
         self._pull = PullWatch(loop.body, every=self._odom_every / self.parameters.loop.rate)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import contextlib
-import gc
 import os
 import sys
 import time
@@ -18,6 +17,7 @@ from rclpy.node import Node
 from rclpy.wait_for_message import wait_for_message
 
 from ballbal_ros.errors import BallbalError, ModelError
+from ballbal_ros.memory import settle_memory
 from ballbal_ros.nodes.parameters import robot_file
 from ballbal_ros.nodes.priority import Scheduling
 from ballbal_ros.nodes.topics import TOPICS, _profile
@@ -45,12 +45,6 @@ def stay_on_this_machine() -> None:
 def executor(context: Context | None = None) -> Any:
     """The executor that answers a message soonest with this rclpy."""
     return QuickExecutor(context=context)
-
-
-def settle_memory() -> None:
-    """Collect what set-up left behind and take the rest out of later collections, which would stop a loop for 30 ms."""
-    gc.collect()
-    gc.freeze()
 
 
 def run(make: Callable[[], Node]) -> int:

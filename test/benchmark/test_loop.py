@@ -9,6 +9,7 @@ import numpy as np
 import pinocchio as pin
 
 from ballbal_ros.balance.measurement import Measurement
+from ballbal_ros.memory import settle_memory
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.simulation.rehearsal import Rehearsal, plan_story
 from ballbal_ros.simulation.timeline import Timeline
@@ -41,6 +42,7 @@ def test_control_tick(benchmark) -> None:
         rehearsal.run()
         rounds.append(spent)
 
+    settle_memory()
     benchmark.pedantic(run, rounds=8)
     spent = min(rounds, key=mean)
     model = files().description.model
@@ -67,6 +69,7 @@ def test_rehearsal_speed(benchmark) -> None:
     what, timeline = story("reach"), Timeline.of(story("reach"), files().compensation)
     plan = plan_story(files(), what, timeline)
     factors: list[float] = []
+    settle_memory()
     benchmark.pedantic(
         lambda: factors.append(Rehearsal(files(), what, "planned", timeline, plan).run()[0].real_time_factor), rounds=8
     )

@@ -13,7 +13,8 @@ import time
 import rclpy
 from sensor_msgs.msg import Imu, JointState
 
-from ballbal_ros.nodes.process import executor, settle_memory
+from ballbal_ros.memory import settle_memory
+from ballbal_ros.nodes.process import executor
 
 
 def answer(span: float) -> None:
