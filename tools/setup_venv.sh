@@ -94,4 +94,7 @@ if ! "$venv/bin/python" -m pip install -c "constraints/$set.txt" -e ".[$extras]"
     fi
     fail "pip failed: $(grep -m 1 '^ERROR' "$log" || tail -n 1 "$log") (see $log)"
 fi
+# The simulated robot's inner loops, once for this machine: nothing has to wait for the compiler later on.
+"$venv/bin/python" -c 'import ballbal_ros.simulation.compiled' >>"$log" 2>&1 ||
+    fail "the simulated robot's inner loops can't be compiled: $(tail -n 1 "$log") (see $log)"
 stamp "$level" >"$venv/set-up-$level"

@@ -22,6 +22,7 @@ case "$*" in
     *"-m pip install"*)
         echo "pip $* user=$PIP_USER target=${{PIP_TARGET-none}}" >> {folder}/calls
         echo "{pip_says}"; exit {pip_fails} ;;
+    *"import ballbal_ros.simulation.compiled"*) echo "{compiler_says}"; exit {compiler_fails} ;;
     *) echo "not expected: $*" >&2; exit 99 ;;
 esac
 """
@@ -38,12 +39,21 @@ def tree(root: Path, tmp_path: Path) -> Path:
     return copy
 
 
-def stand_in(folder: Path, minor: int = 12, no_ensurepip: int = 0, pip_says: str = "", pip_fails: int = 0) -> Path:
+AS_IT_SHOULD_BE = {
+    "minor": 12,
+    "no_ensurepip": 0,
+    "pip_says": "",
+    "pip_fails": 0,
+    "compiler_says": "",
+    "compiler_fails": 0,
+}
+
+
+def stand_in(folder: Path, **differs: str | int) -> Path:
+    """``differs``: from :data:`AS_IT_SHOULD_BE`."""
     folder.mkdir(exist_ok=True)
     python = folder / "python3"
-    python.write_text(
-        STAND_IN.format(folder=folder, minor=minor, no_ensurepip=no_ensurepip, pip_says=pip_says, pip_fails=pip_fails)
-    )
+    python.write_text(STAND_IN.format(folder=folder, **{**AS_IT_SHOULD_BE, **differs}))
     python.chmod(0o755)
     return python
 
@@ -97,6 +107,13 @@ def test_missing_ensurepip_is_refused(tree: Path, tmp_path: Path) -> None:
     """On a Debian or Ubuntu without python3-venv, one line names that package."""
     result = set_up(tree, python=stand_in(tmp_path / "bin", no_ensurepip=1))
     assert_refused(result, "apt install python3-venv", "python3.12-venv")
+
+
+def test_a_compiler_that_fails_is_told(tree: Path, tmp_path: Path) -> None:
+    """Where the simulation can't be compiled, one line says so, and what it said; the next call tries again."""
+    python = stand_in(tmp_path / "bin", compiler_says="no room left", compiler_fails=1)
+    assert_refused(set_up(tree, python=python), "can't be compiled", "no room left")
+    assert set_up(tree, python=stand_in(tmp_path / "bin")).returncode == 0
 
 
 def test_other_machine_is_refused(tree: Path, tmp_path: Path) -> None:
