@@ -9,10 +9,12 @@ import numpy as np
 
 from ballbal_ros.balance.answers import ARMS, DRIVE, ENCODER, HEADING, IMU, ORIENTATION, SENSES
 from ballbal_ros.balance.attitude import Attitude, Triple
+from ballbal_ros.balance.ball_way import BallWay
 from ballbal_ros.balance.checks import ArmCheck, ImuCheck, unit_quaternion
 from ballbal_ros.balance.encoders import Encoders
 from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.balance.rate_doubt import RateDoubt
 from ballbal_ros.balance.tilt import TiltWitness
 from ballbal_ros.balance.watch import Watch
 from ballbal_ros.robot.arrays import Array
@@ -21,8 +23,6 @@ from ballbal_ros.robot.description import RobotDescription
 _TURNED = 0.02
 _SPIN_SHARE = 0.02
 _BRIDGED = 10
-_QUARANTINE = 10
-_ABSURD = ("jump", "not finite", "saturated")
 
 
 @attrs.define
@@ -88,22 +88,19 @@ class Senses:
         )
         self._watch = watch
         self._own = parameters.attitude == "own"
-        self._rate_jump, self._rate_start = parameters.limits.rate_jump, parameters.limits.rate_start
-        self._rate_before = (0.0, 0.0)
+        self._doubt = RateDoubt(parameters)
         self._imu = ImuCheck(description, parameters)
         self._arms = ArmCheck(description, parameters, arm_position)
         self.encoders = Encoders(description, parameters)
         self.tilt = TiltWitness(description, parameters)
         self._radius = description.parameters.ball.radius
+        self._way = BallWay(self._radius, self.period, self.attitude)
         self.imu = self.drive = self.arms = False
-        self.ball = [0.0, 0.0]
+        self.ball = self._way.ball
         self.moved = self.moved_before = (0.0, 0.0)
-        self._guessed = [0.0, 0.0]
         self._heading_zero = 0.0
         self._drive_heading = 0.0
         self._turn = (0.0, 1.0, 0.0, 1.0)
-        self._seen_lean = (0.0, 0.0)
-        self._unseen, self._quarantine, self._quarantined_for = 0, 0, ""
         self.spin_held = True
         self._spun, self._most_spun = 0.0, parameters.limits.turning * self.period
 
@@ -171,10 +168,10 @@ class Senses:
             if not self.tilt.agrees:
                 wrong = "tilt"
             elif expected is None:
-                self._rate_before = body_rate[:2]
-            elif self._jumps(body_rate, expected):
+                self._doubt.before = body_rate[:2]
+            elif self._doubt.jumps(body_rate, expected.lean_rate, attitude.pitch, self._turn):
                 wrong = "jump"
-        wrong = self._quarantined(wrong)
+        wrong = self._doubt.quarantined(wrong)
         self.imu = not wrong
         turning = body_rate[2] if self.imu or expected is None else expected.turning
         relative = None if expected is None else self._relative(expected, turning)
@@ -188,7 +185,7 @@ class Senses:
             self._attitude(measured, now, body_rate, force, expected, at_rest)
         elif expected is not None:
             heading = attitude.heading - turned[2] if self.drive else attitude.heading + self.period * expected.turning
-            if self._unseen <= _BRIDGED:
+            if self._doubt.unseen <= _BRIDGED:
                 attitude.bridge(expected.lean_rate, expected.turning)
             else:
                 attitude.coast(expected.lean, expected.lean_rate, heading, expected.turning)
@@ -223,36 +220,10 @@ class Senses:
         self.attitude.bridge(expected.lean_rate, expected.turning)
         self.tilt.restart()
 
-    def _quarantined(self, wrong: str) -> str:
-        """After absurd IMU data, good ones must come for a while before they are believed: among noise some are
-        always near.
-        """
-        if wrong in _ABSURD:
-            self._quarantine, self._quarantined_for = _QUARANTINE, wrong
-        elif self._quarantine > 0 and not wrong:
-            self._quarantine -= 1
-            wrong = self._quarantined_for
-        self._unseen = self._unseen + 1 if wrong else 0
-        return wrong
-
     @property
     def lean_known(self) -> bool:
         """Whether the lean has been measured, or no longer ago than the rates expected can bridge."""
-        return self._unseen <= _BRIDGED
-
-    def _jumps(self, body_rate: Triple, expected: Expected) -> bool:
-        """Whether the gyro is further from what is expected than anything but a fault takes it."""
-        wx, wy, wz = body_rate
-        sr, cr, _, _ = self._turn
-        roll = wx + self.attitude.pitch * wz - expected.lean_rate[0]
-        pitch = cr * wy - sr * wz - expected.lean_rate[1]
-        # A change that no push makes in a tick; and after one, only what is much nearer is believed again.
-        (bx, by), start = self._rate_before, self._rate_start
-        self._rate_before = wx, wy
-        if self._unseen == 0 and not (-start < wx - bx < start and -start < wy - by < start):
-            return True
-        most = self._rate_jump if self._quarantine == 0 else start
-        return not (-most < roll < most and -most < pitch < most)
+        return self._doubt.unseen <= _BRIDGED
 
     def _turn_by(self, roll: float, pitch: float) -> None:
         """Keep sines and cosines of the lean at the tick's beginning."""
@@ -311,35 +282,10 @@ class Senses:
         expected.
         """
         if self.drive and not self.encoders.gap:
-            self._guessed = [0.0, 0.0]
-            return self._roll(turned, before)
+            return self._way.roll(turned, before[1], self.heading)
         if expected is None:
             return 0.0, 0.0
-        ahead, aside = self.period * expected.velocity[0], self.period * expected.velocity[1]
-        sin, cos = math.sin(self.heading), math.cos(self.heading)
-        self._guessed[0] += cos * ahead - sin * aside
-        self._guessed[1] += sin * ahead + cos * aside
-        if self.drive:
-            # Whatever the encoders count, the place is as good as any: nothing is to jump.
-            self.ball[0] += self._guessed[0]
-            self.ball[1] += self._guessed[1]
-            self._guessed = [0.0, 0.0]
-            self._seen_lean = self.attitude.roll, self.attitude.pitch
-        return ahead, aside
-
-    def _roll(self, turned: Triple, before: tuple[float, float]) -> tuple[float, float]:
-        """Move the ball by what the encoders saw, and by how the body has leaned meanwhile; how far, in heading axes,
-        m.
-        """
-        attitude = self.attitude
-        seen, self._seen_lean = self._seen_lean, (attitude.roll, attitude.pitch)
-        ahead = self._radius * (turned[1] + attitude.pitch - seen[1])
-        aside = -self._radius * (turned[0] + (attitude.roll - seen[0]) * math.cos(before[1]))
-        heading = self.heading
-        sin, cos = math.sin(heading), math.cos(heading)
-        self.ball[0] += cos * ahead - sin * aside
-        self.ball[1] += sin * ahead + cos * aside
-        return ahead, aside
+        return self._way.guess(expected.velocity, self.heading, self.drive)
 
 
 def gyro_noise(parameters: BalanceParameters) -> tuple[float, float]:
