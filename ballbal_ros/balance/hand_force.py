@@ -101,6 +101,7 @@ class PullWatch:
         step = np.diff(time)[:, None]
 
         def between(values: Array) -> Array:
+            """The mean over each step of values at its two ends."""
             return np.asarray(0.5 * (values[1:] + values[:-1]))
 
         impulse = step * between(rows.residual)

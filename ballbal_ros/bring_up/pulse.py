@@ -88,6 +88,7 @@ def strength(record: Record, drive: Drive, ball_inertia: float, contact: int, fa
     scale = np.array([abs(factor), abs(record.effort), 0.01])
 
     def off(x: Array) -> Array:
+        """How far the simulated turn is from the recorded one, as a share of its size, for scaled unknowns."""
         way = _simulated(record, drive, ball_inertia, contact, *(x * scale).tolist())
         return np.asarray((way[:, known] - turned[:, known]) / size).ravel()
 

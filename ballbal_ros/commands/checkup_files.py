@@ -49,6 +49,7 @@ def check_files(folder: Path) -> tuple[FilesRead, list[Finding]]:
     found: list[Finding] = []
 
     def read(name: str, make: Callable[[], T]) -> T | None:
+        """Read one file and note what is found; None where it is wrong."""
         try:
             made = make()
         except BallbalError as error:

@@ -124,6 +124,7 @@ class DriveLine(Ear):
         """
 
         def meanwhile() -> None:
+            """Take in what has come; raises where somebody else came to command the drive."""
             self.turn()
             self._look_around()
 

@@ -190,6 +190,7 @@ def ball_relief(
     step, nodes = problem.differences.step, len(problem.terms)
 
     def response(window: float, knot: float, at_end: bool) -> BallResponse:
+        """What the lean makes of unit ball motions within ``window`` s of one end, with knots every ``knot`` s."""
         return BallResponse.of(BallBasis.on(step, nodes, window, knot, at_end=at_end), problem, solution, turn)
 
     first = response(start_window, start_window / _FEW_PIECES, at_end=False)

@@ -112,6 +112,7 @@ def lacking_in_run(body: WholeBody, request: PlanRequest, plan: LeanPlan, record
     window = max(_ORDER + 2, 2 * round(0.5 * _WINDOW / record.period) + 1)
 
     def smooth(values: Array, derivative: int) -> Array:
+        """The smoothed deviation, or its derivative in time of that order."""
         return np.asarray(savgol_filter(values, window, _ORDER, deriv=derivative, delta=record.period, axis=0))
 
     there = plan.times <= record.duration + 1e-9

@@ -57,6 +57,7 @@ def most_probable(residual: Callable[[Array], Array], by: Callable[[Array], Arra
     x, size = np.array(start, float), len(start)
 
     def cost(at: Array) -> float:
+        """The residual's square with the prior's."""
         left = residual(at)
         return float(left @ left + at @ at)
 

@@ -91,6 +91,7 @@ class Record:
         rate = 1.0 / self.period
 
         def derivative(values: Array, order: int, smoothing: float = _SMOOTHING) -> Array:
+            """The smoothed values or their derivative in time of that order; ``smoothing`` in s."""
             # Two first derivatives make the second: a truncated second derivative of a Gaussian does not add up to 0.
             width = smoothing * rate / math.sqrt(max(order, 1))
             for _ in range(max(order, 1)):
