@@ -5,11 +5,11 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable
 
-import attrs
 import numpy as np
 
 from ballbal_ros.balance.answers import CLOCK, LEAN, STOP, TRIP
 from ballbal_ros.balance.attitude import Attitude
+from ballbal_ros.balance.ball_estimate import BallEstimate
 from ballbal_ros.balance.changeover import ChangeOver, PreparedChange
 from ballbal_ros.balance.clock import LoopClock
 from ballbal_ros.balance.coasting import coasting_gain
@@ -19,7 +19,9 @@ from ballbal_ros.balance.judge import Judge
 from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.balance.output import TorqueOutput
 from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.balance.readiness import missing
 from ballbal_ros.balance.reference import Reference
+from ballbal_ros.balance.rescheduling import Rescheduling
 from ballbal_ros.balance.schedule import GainSchedule
 from ballbal_ros.balance.senses import Expected, Senses, gyro_noise
 from ballbal_ros.balance.watch import Watch
@@ -27,32 +29,16 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
-from ballbal_ros.robot.whole_body import Posture, WholeBody
+from ballbal_ros.robot.whole_body import WholeBody
 
-_RESCHEDULE = 10
-_REGION = 250
 _TURN = 2.0 * math.pi
-
-
-@attrs.frozen
-class BallEstimate:
-    """Where the loop thinks the ball is: x, y (m), heading (rad) in ``odom``; vx, vy (m/s) in ``base_footprint``;
-    heading rate (rad/s).
-    """
-
-    x: float
-    y: float
-    heading: float
-    vx: float
-    vy: float
-    heading_rate: float
 
 
 class BalanceLoop:
     """Keeps the robot on its ball. Not thread-safe; one :meth:`tick` a period, then read what is wanted.
 
     ``odom`` begins where it engages, with heading zero. What is wrong with an input is answered as the table
-    :data:`~ballbal_ros.balance.answers.ANSWERS` says; ``watch`` keeps account of it.
+    :data:`~ballbal_ros.balance.answer_table.ANSWERS` says; ``watch`` keeps account of it.
     """
 
     def __init__(
@@ -78,15 +64,12 @@ class BalanceLoop:
         )
         self._gains = ChangeOver(schedule, parameters, description.parameters.limits.drive_torque)
         self._change: PreparedChange | None = None
-        self._ticks = 0
-        # What gains and capturable region are for: arms at rest need neither anew.
-        self._scheduled: Posture | None = None
-        self._judged: tuple[Posture | None, float] = (None, 0.0)
         ahead = parameters.loop.delay + 0.5 * self.period
         self.reference = Reference(self.body, self.period, ahead, parameters.compensation != "none")
         self.senses = Senses(description, parameters, self.watch, arm_position)
         self.output = TorqueOutput(description, parameters, self.body.mass)
         self.judge = Judge(description, parameters, self.watch, self.output, posture)
+        self._rescheduling = Rescheduling(self.body, self._gains, self.controller, self.judge)
         self.supported = False
         self.held_back = ""
         self._load_changes: list[tuple[float, Load]] = []
@@ -118,15 +101,7 @@ class BalanceLoop:
     @property
     def ball(self) -> BallEstimate:
         """Estimate of ball and heading in ``odom``."""
-        deviation, row = self.controller.estimate, self.reference.row
-        return BallEstimate(
-            self.senses.ball[0],
-            self.senses.ball[1],
-            self.heading,
-            float(deviation[6] + row[6]),
-            float(deviation[7] + row[7]),
-            float(deviation[9] + row[9]),
-        )
+        return BallEstimate.of(self.senses.ball, self.heading, self.controller.estimate, self.reference.row)
 
     @property
     def schedule(self) -> GainSchedule:
@@ -152,10 +127,8 @@ class BalanceLoop:
         is in force, which was made without it, or begins within ``ahead`` s: False then. A plan that waits should be
         replaced.
         """
-        reference, arms = self.reference, self.senses.arm_position
-        coming = reference.next_plan(self.clock.now)
-        busy = reference.has_plan and (coming is None or coming[0] - self.clock.now < ahead)
-        if busy or not reference.follow_arms:
+        arms = self.senses.arm_position
+        if self.reference.has_plan_within(self.clock.now, ahead) or not self.reference.follow_arms:
             return False
         before = self.body.posture(arms)
         self.body.set_load(load, "found load")
@@ -216,8 +189,7 @@ class BalanceLoop:
         return self._answer(measured, clock.now)
 
     def _time_is_wrong(self, wrong: str) -> None:
-        now = self.clock.now
-        self.watch.see(now, CLOCK, wrong)
+        self.watch.see(self.clock.now, CLOCK, wrong)
         if wrong == "jump":
             self.watch.restart()
             self.senses.restart()
@@ -241,19 +213,7 @@ class BalanceLoop:
         senses.look_at_arms(measured, now)
         if self._change is not None:
             self._take_over()
-        self._ticks += 1
-        posture = self.body.posture(senses.arm_position) if self._ticks % _RESCHEDULE == 0 else None
-        if self._gains.under_way or (posture is not None and not posture.like(self._scheduled)):
-            self._gains.tick(self.controller, posture)
-            self._scheduled = posture or self._scheduled
-        limit = self._gains.torque_limit
-        if (
-            posture is not None
-            and self._ticks % _REGION == 0
-            and not (posture.like(self._judged[0]) and limit == self._judged[1])
-        ):
-            self.judge.use(posture, limit)
-            self._judged = posture, limit
+        self._rescheduling.tick(senses.arm_position)
         row = self.reference.update(now, senses.arm_position)
         reference: list[float] = row.tolist()
         at_rest = self.supported and self.guard.state == STANDBY
@@ -263,8 +223,7 @@ class BalanceLoop:
     def _expectation(self, reference: list[float]) -> Expected:
         """What reference and model expect at this tick."""
         before, prior = self.controller.estimate.tolist(), self.controller.prior.tolist()
-        held = self.guard.state == ENGAGING
-        self._expected.fill(reference, before, prior, self.period, held, self.output.calm)
+        self._expected.fill(reference, before, prior, self.period, self.guard.state == ENGAGING, self.output.calm)
         return self._expected
 
     def _act(self, now: float, reference: list[float]) -> Array:
@@ -277,7 +236,10 @@ class BalanceLoop:
         elif guard.state == STANDBY:
             senses.trust_arms()
         before = guard.state
-        share = guard.update(now, self._missing(off, off_rates) if before == STANDBY else "", self.supported)
+        lacking = ""
+        if before == STANDBY:
+            lacking = missing(self.parameters.limits, senses, self.watch, off, off_rates) or self.held_back
+        share = guard.update(now, lacking, self.supported)
         if before == STANDBY and guard.state == ENGAGING:
             self._engage(now)
             reference = self.reference.row.tolist()
@@ -288,7 +250,7 @@ class BalanceLoop:
             self.judge.begin()
             return self.output.none()
         if senses.lean_known or senses.drive:
-            away_x, away_y = self._off_station(reference)
+            away_x, away_y = self.reference.off_station(reference, senses.ball)
             off_heading = (senses.heading - reference[8] + math.pi) % _TURN - math.pi
             if not self.output.gives_heading:
                 # It goes where it will: nothing is asked for, so that nothing is taken from roll and pitch.
@@ -301,43 +263,17 @@ class BalanceLoop:
         controller.correct(self._deviation, senses.lean_known, senses.drive and not senses.encoders.gap)
         return self._efforts(controller.torque(), share, reference)
 
-    def _missing(self, off: tuple[float, float], off_rates: tuple[float, float]) -> str:
-        """What is missing to engage, in words; "" for nothing. ``held_back`` is what its caller says to that."""
-        limits, lean, rate = self.parameters.limits, math.hypot(*off), math.hypot(*off_rates)
-        for there, sense in ((self.senses.imu, "IMU"), (self.senses.drive, "drive"), (self.senses.arms, "arm")):
-            if not there:
-                return f"no {sense} data that can be used"
-        if not self.watch.quiet:
-            return "senses have only just come back"
-        if not self.attitude.settled:
-            return "the attitude estimate settles"
-        if not lean < limits.engage_lean:
-            return f"{lean:.3f} rad off balance, limits.engage_lean is {limits.engage_lean:g}"
-        if not rate < limits.engage_rate:
-            return f"leans with {rate:.2f} rad/s, limits.engage_rate is {limits.engage_rate:g}"
-        return self.held_back
-
     def _judge(
         self, now: float, reference: list[float], off: tuple[float, float], off_rates: tuple[float, float]
     ) -> None:
         """Stop or trip where the table says so: for what is wrong with an input, for a lean that can't be brought
         back.
         """
-        watch, guard = self.watch, self.guard
         self.judge.look(now, reference, off, off_rates, self.controller.estimate.tolist())
-        if watch.deed == TRIP:
-            guard.trip(watch.reason)
-        elif watch.deed == STOP and guard.state != STOPPING:
-            self.stop(watch.reason)
-
-    def _off_station(self, reference: list[float]) -> tuple[float, float]:
-        """Distance of the ball from where it is meant to be, in heading axes, m."""
-        frame, station, ball = self.reference.frame_heading, self.reference.station, self.senses.ball
-        sin, cos = math.sin(frame), math.cos(frame)
-        x = ball[0] - station[0] - cos * reference[4] + sin * reference[5]
-        y = ball[1] - station[1] - sin * reference[4] - cos * reference[5]
-        sin, cos = math.sin(reference[8]), math.cos(reference[8])
-        return cos * x + sin * y, cos * y - sin * x
+        if self.watch.deed == TRIP:
+            self.guard.trip(self.watch.reason)
+        elif self.watch.deed == STOP and self.guard.state != STOPPING:
+            self.stop(self.watch.reason)
 
     def _engage(self, now: float) -> None:
         """``odom`` begins here: ball at its origin, heading zero, nothing estimated yet."""

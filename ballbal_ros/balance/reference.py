@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 import numpy as np
 
@@ -55,6 +56,19 @@ class Reference:
     def next_plan(self, now: float) -> tuple[float, Array] | None:
         """Stamp, s, and table of the plan that comes next, where one waits and none is in force at ``now``, s."""
         return self._tables[0] if self._tables and self._tables[0][0] > now else None
+
+    def has_plan_within(self, now: float, ahead: float) -> bool:
+        """Whether a plan is in force at ``now``, or begins within ``ahead`` of it, s."""
+        coming = self.next_plan(now)
+        return self.has_plan and (coming is None or coming[0] - now < ahead)
+
+    def off_station(self, row: list[float], ball: Sequence[float]) -> tuple[float, float]:
+        """Distance of a ``ball`` (x, y in ``odom``, m) from where ``row`` means it to be, in heading axes, m."""
+        station, sin, cos = self.station, math.sin(self.frame_heading), math.cos(self.frame_heading)
+        x = ball[0] - station[0] - cos * row[4] + sin * row[5]
+        y = ball[1] - station[1] - sin * row[4] - cos * row[5]
+        sin, cos = math.sin(row[8]), math.cos(row[8])
+        return cos * x + sin * y, cos * y - sin * x
 
     def engage(self, arm_position: Array) -> None:
         """Station here, heading zero; plans whose time is to come stay."""
