@@ -14,6 +14,7 @@ from ballbal_ros.robot.whole_body import WholeBody
 _ACCELERATION = 0.4
 _TURNING = 0.8
 _TORQUE = 0.01
+_SAME = 1e-9
 
 
 class Reference:
@@ -103,6 +104,15 @@ class Reference:
         """Follow a plan from its stamp (s) on; of plans that wait, those that start later are replaced by it."""
         self._tables = [entry for entry in self._tables if entry[0] < stamp - 1e-9]
         self._tables.append((stamp, plan.table(self._period, self._ahead)))
+
+    def withdraw(self, stamp: float, now: float) -> bool:
+        """Forget the plan that begins at a stamp, s, and say whether there was one; one that has begun by ``now`` goes
+        on.
+        """
+        kept = [entry for entry in self._tables if entry[0] <= now or abs(entry[0] - stamp) > _SAME]
+        there = len(kept) < len(self._tables)
+        self._tables = kept
+        return there
 
     def lean_at(self, stamp: float) -> tuple[float, float]:
         """(roll, pitch) that is planned for a time to come, s; the present one where no plan reaches it, rad."""

@@ -45,6 +45,13 @@ ASKED = (
         PLAN, "elsewhere", "begins further than limits.engage_lean from where the lean will be", REFUSED, IN_PLAN_CHECK
     ),
     Answer(
+        PLAN,
+        "without points",
+        "takes back the plan of its stamp where that waits for its time; one that has begun goes on",
+        steps((0.0, GO_ON)),
+        IN_NODE,
+    ),
+    Answer(
         ARM_PLAN,
         "malformed",
         "an unknown joint, lengths or times that don't fit, numbers not finite, beyond a joint's limits",
@@ -147,8 +154,8 @@ ASKED = (
     Answer(
         EMERGENCY,
         "true, arms moving",
-        "arms come to rest by a plan within planner.stop_time, up to three times that where limits need it; where no "
-        "such plan can be, the one in force ends as planned",
+        "arms come to rest by a plan within planner.stop_time, up to three times that where limits need it; where none "
+        "can be, or balance takes none up, it is told and tried again, further ahead, until they rest",
         steps((0.0, STOP)),
         IN_ARMS_NODE,
     ),

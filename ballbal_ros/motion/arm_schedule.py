@@ -125,6 +125,10 @@ class ArmSchedule:
         """Whether it has not let any motion go yet."""
         return self._motion is None
 
+    def follows(self, proposal: Proposal) -> bool:
+        """Whether a proposal is the motion in force."""
+        return self._motion is proposal
+
     def busy_until(self, now: float) -> float | None:
         """When the arms of the motion in force come to rest, s; None where they rest already."""
         return self._motion.end if self._motion is not None and self._motion.end > now else None
@@ -162,18 +166,20 @@ class ArmSchedule:
         check_path(path, self.description, _TOPIC)
         return self._propose(lean_start, arms_start, path, wanted)
 
-    def stop(self, now: float) -> Proposal | None:
-        """Plan the arms' way to rest from the motion in force; None where there is nothing to stop.
+    def stop(self, now: float, ahead: float | None = None) -> Proposal | None:
+        """Plan the arms' way to rest from the motion in force; None where there is nothing to stop, or it ends before
+        that.
 
-        It takes ``stop_time`` from ``allowance`` s ahead, or up to three times as long where the limits need that.
+        It takes ``stop_time`` from ``ahead`` s after ``now`` (``allowance`` without it), or up to three times as long
+        where the limits need that.
 
         Raises
         :class:`PlanRefused` where none is possible: then the motion in force, which has been checked, should end as
         planned.
         """
-        if self._motion is None or self._motion.end <= now + self.parameters.planner.allowance:
+        start = now + (self.parameters.planner.allowance if ahead is None else ahead)
+        if self._motion is None or self._motion.end <= start:
             return None
-        start = now + self.parameters.planner.allowance
         state = self.arms_at(start, np.zeros(self.description.joint_count))
         reason: BallbalError | None = None
         for factor in _STOPS:

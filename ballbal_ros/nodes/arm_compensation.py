@@ -20,8 +20,9 @@ from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.arm_proposals import ArmProposals
+from ballbal_ros.nodes.arm_stop import ArmStop
 from ballbal_ros.nodes.arm_streaming import ArmStreaming
-from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, STOP, BalanceDialogue
+from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, BalanceDialogue
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, number_of, values_of
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
 from ballbal_ros.nodes.parameters import NodeParameters
@@ -59,12 +60,12 @@ class ArmCompensationNode(Node):
         self._stamp_clock = StampClock(self)
         self._arms = JointReader(self.description.joint_names, "joint_states")
         self._proposals = ArmProposals(self.description, self._schedule)
-        self._emergency = False
         self._found_other = False
         self._waiting = PlanQueue()
         to_balance, to_arms = publisher(self, "lean_plan"), publisher(self, "arm_command")
         self._reports = PlanReports(self, self.description.name)
         self._balance = BalanceDialogue(self._schedule, self._arms.names, to_balance, to_arms, self._reports)
+        self._stop = ArmStop(self._schedule, self._balance, self._reports, self._before, lambda: self._now)
         self._diagnostics = Diagnostics(self, self.description.name, self._report)
         self._streaming = ArmStreaming(
             self.description, self._schedule, to_balance, to_arms, self._check_stream, self._diagnostics.refuse
@@ -120,7 +121,7 @@ class ArmCompensationNode(Node):
 
     def _plan_anew(self) -> None:
         """A lean plan that still waits for its time is made again from what was found in the hands meanwhile."""
-        if self._balance.waits or not self._found_other:
+        if self._balance.waits or not self._found_other or self._stop.under_way:
             return
         self._found_other = False
         try:
@@ -177,6 +178,7 @@ class ArmCompensationNode(Node):
         self._go_on()
 
     def _go_on(self) -> None:
+        self._stop.go_on()
         self._plan_anew()
         while not self._balance.waits:
             now = time.monotonic()
@@ -204,15 +206,12 @@ class ArmCompensationNode(Node):
         planned = self._schedule.parameters.compensation == "planned"
         return self._before.was_there(self._balance.answered, planned)
 
-    def _stop(self, what: str) -> Proposal | None:
-        proposal = self._schedule.stop(self._now)
-        if proposal is None:
-            self._before.check_nothing_to_stop(what, self._now)
-        return proposal
-
     def _proposal(self, message: Any) -> Proposal | None:
         if not message.points:
-            return self._stop("arm_plan")
+            proposal = self._schedule.stop(self._now)
+            if proposal is None:
+                self._before.check_nothing_to_stop("arm_plan", self._now)
+            return proposal
         self._check_ready("arm_plan")
         self._streaming.end("an arm_plan came")
         self._streaming.check_over("arm_plan")
@@ -226,7 +225,7 @@ class ArmCompensationNode(Node):
         return self._proposals.pulled(message, self._now, self._arms.position.copy())
 
     def _check_ready(self, topic: str) -> None:
-        if self._emergency:
+        if self._stop.on or self._stop.under_way:
             raise PlanRefused(topic, "came during an emergency stop", "end that first, and reset the balance")
         if self._balance.state not in (ENGAGING, BALANCING):
             what = f"came while the balance is {self._balance.state or 'not there'}"
@@ -258,22 +257,9 @@ class ArmCompensationNode(Node):
 
     def _on_emergency_stop(self, message: Any) -> None:
         """Bring the arms to rest by a planned stop; what waits is refused, and nothing new is taken until a reset."""
-        began = bool(message.data) and not self._emergency
-        self._emergency = bool(message.data)
-        if not began:
-            return
-        self._streaming.end("emergency stop")
-        stamp = stamp_text(to_time(self._now))
-        self._balance.give_up("arm_plan: overtaken by an emergency stop")
-        try:
-            proposal = self._stop(STOP)
-        except BallbalError as error:
-            self._reports.refuse(STOP, stamp, str(error))
-            return
-        if proposal is None:
-            self._reports.accept(STOP, stamp, "the arms rest")
-        else:
-            self._ask(proposal, STOP, stamp)
+        if message.data:
+            self._streaming.end("emergency stop")
+        self._stop.take(bool(message.data))
         self._go_on()
 
     def _report(self) -> tuple[bytes, str, Mapping[str, object]]:
@@ -285,7 +271,7 @@ class ArmCompensationNode(Node):
             "plans waiting": len(self._waiting) + self._balance.waits,
             **self._streaming.values(),
         }
-        if self._emergency:
+        if self._stop.on:
             return OK, "emergency stop: no plan is taken", values
         return OK, "idle" if until is None else f"a motion is in force until {until:.3f} s", values
 

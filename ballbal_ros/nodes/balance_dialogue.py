@@ -13,7 +13,7 @@ import attrs
 
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STOPPING
 from ballbal_ros.motion.arm_schedule import ArmSchedule, Proposal
-from ballbal_ros.nodes.lean_trajectory import lean_plan_message
+from ballbal_ros.nodes.lean_trajectory import lean_plan_message, withdrawal_message
 from ballbal_ros.nodes.messages import stamp_text, to_time
 from ballbal_ros.nodes.plan_report import PlanReports
 from ballbal_ros.nodes.trajectories import path_message
@@ -89,7 +89,7 @@ class BalanceDialogue:
         self.state, self.answered = state, values.get("plans answered", "")
         answer = None if self._asked is None else self._asked.answer(values)
         if answer:
-            self.give_up(answer)
+            self._give_up(answer)
         elif self._asked is not None and answer is not None:
             self._let_go(self._asked)
 
@@ -97,9 +97,20 @@ class BalanceDialogue:
         """Give up on an answer that is overdue."""
         if self._asked is not None and time.monotonic() > self._asked.deadline:
             what = f"lean_plan: no acknowledgement in balance_state within {self._timeout:g} s"
-            self.give_up(f"{what}; nothing moves: is balance active?")
+            self.take_back(f"{what}; nothing moves because of it: is balance active?")
 
-    def give_up(self, reason: str) -> None:
+    def take_back(self, reason: str) -> None:
+        """Give up what is asked for, if anything is, and have the balance node forget it, should it take it up after
+        all: it must not lean for arms that stay. A plan made anew for a motion that goes ahead it may take up.
+        """
+        asked = self._asked
+        if asked is None:
+            return
+        if asked.what != FOUND_LOAD:
+            self._to_balance.publish(withdrawal_message(to_time(asked.proposal.lean_start)))
+        self._give_up(reason)
+
+    def _give_up(self, reason: str) -> None:
         """Forget what is asked for, if anything is, and report why; nothing moves because of it."""
         asked, self._asked = self._asked, None
         if asked is not None:

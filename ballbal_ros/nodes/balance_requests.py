@@ -95,8 +95,13 @@ class BalanceRequests:
         self._node.say_state()
 
     def _on_lean_plan(self, message: Any) -> None:
-        """Take a plan, and acknowledge it by its stamp in ``balance_state``; or say there why not."""
+        """Take a plan, and acknowledge it by its stamp in ``balance_state``; or say there why not. One without points
+        takes back the plan of its stamp, where that waits still.
+        """
         node, start = self._node, stamp_text(message.header.stamp)
+        if not message.points:
+            self._withdraw(seconds(message.header.stamp), start)
+            return
         try:
             if node.loop is None or not node.active:
                 raise PlanRefused("lean_plan", "came while balance is not active", "activate it first")
@@ -112,6 +117,17 @@ class BalanceRequests:
             self._goal = None
         self._answered += 1
         node.say_state()
+
+    def _withdraw(self, stamp: float, start: str) -> None:
+        loop, now = self._node.loop, max(self._node.ns, 0) / BILLION
+        if loop is None or not loop.reference.withdraw(stamp, now):
+            what = f"takes back the plan of {start}, and none of that stamp waits"
+            self._refuse("lean_plan", PlanRefused("lean_plan", what, "one that has begun goes on"))
+            return
+        if self._answers.get("plan") == start:
+            del self._answers["plan"], self._answers["plan ends"]
+        self._node.diagnostics.accept("lean_plan")
+        self._node.say_state()
 
     def _loop_that_balances(self, topic: str) -> BalanceLoop | None:
         loop = self._node.loop

@@ -96,6 +96,13 @@ def lean_plan_message(plan: LeanPlan, start: Time) -> JointTrajectory:
     return message
 
 
+def withdrawal_message(start: Time) -> JointTrajectory:
+    """A ``lean_plan`` without points: it takes back the one with this start, should it still wait for its time."""
+    message = JointTrajectory(joint_names=list(LEAN_JOINTS))
+    message.header.stamp, message.header.frame_id = start, "odom"
+    return message
+
+
 def lean_plan_of(message: JointTrajectory) -> LeanPlan:
     """The lean plan of a ``lean_plan``; raises :class:`PlanError` unless it is complete, finite and on a uniform
     grid.

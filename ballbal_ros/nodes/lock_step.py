@@ -26,7 +26,8 @@ def text_nanoseconds(text: str) -> int:
 class LockStep:
     """Keeps a run independent of when messages come: an instant ends only when all that belongs to it is here.
 
-    That is, besides the drive command: an answer to each arm plan and the arm command it announces; while the stand
+    That is, besides the drive command: an answer to each arm plan and the arm command it announces, and to an emergency
+    stop where somebody answers plans at all; while the stand
     holds the robot and at certain instants, the guard's state of that very instant (without a balance node that tells
     it, the stand stays).
     """
@@ -34,6 +35,8 @@ class LockStep:
     def __init__(self, node: Node, period_ns: int, wait_for_plan: bool) -> None:
         self._node, self._period = node, period_ns
         self._plans = self._reports = 0
+        self._pressed = self._stop_open = self._stop_ahead = False
+        self._stop_told = ""
         self._wanted = 1 if wait_for_plan else 0
         self._commands: deque[int] = deque(maxlen=_KEPT)
         self._announced: deque[int] = deque(maxlen=_KEPT)
@@ -44,6 +47,13 @@ class LockStep:
         """Somebody wants an arm motion: time waits for the answer."""
         self._plans += 1
 
+    def emergency_stop_came(self, pressed: bool) -> None:
+        """Somebody wants it to stop: time waits until it is said how the arms do."""
+        if pressed and not self._pressed:
+            # The answer may be here first.
+            self._stop_open, self._stop_ahead = not self._stop_ahead, False
+        self._pressed = pressed
+
     def plan_report_came(self, message: Any) -> None:
         """An answer to an arm plan; it may announce an arm command by its stamp."""
         for status in message.status:
@@ -51,9 +61,16 @@ class LockStep:
             # Of a plan that is answered already, a node that is started anew may say so once more.
             again = EARLIER in values and self._reports >= max(self._plans, self._wanted)
             self._reports += status.name == "arm_plan" and not again
+            if status.name == "emergency_stop":
+                self._stop_answered(values.get("requested", ""))
             announced = text_nanoseconds(values.get("arm_command", ""))
             if announced >= 0 and announced not in self._commands and announced not in self._announced:
                 self._announced.append(announced)
+
+    def _stop_answered(self, requested: str) -> None:
+        # A stop that is tried again is told of again, with the same stamp.
+        self._stop_ahead = self._stop_ahead or (not self._stop_open and requested != self._stop_told)
+        self._stop_open, self._stop_told = False, requested
 
     def arm_command_came(self, stamp: int) -> None:
         """An arm command, by its stamp in ns."""
@@ -80,6 +97,8 @@ class LockStep:
         """What is still missing at ``now``, in ns, and who should say it; empty when nothing is."""
         if self._reports < self._plans:
             return "plan_report: arm_compensation is silent"
+        if self._stop_open and self._node.count_publishers("plan_report") > 0:
+            return "plan_report of the emergency stop: arm_compensation is silent"
         if self._announced:
             return "the arm_command that plan_report announced: arm_compensation is silent"
         if not support or not self._on_the_way or not is_looked_at(now, self._period):

@@ -113,6 +113,7 @@ class SimulatedRobotNode(Node):
         inputs.subscribe("simulated_load", self._on_load)
         inputs.subscribe("arm_plan", self._on_arm_plan)
         inputs.subscribe("plan_report", self._on_plan_report)
+        inputs.subscribe("emergency_stop", lambda message: self._lock.emergency_stop_came(bool(message.data)))
         self.create_service(SetBool, "~/stand", self._on_stand)
 
     def _on_drive_command(self, raw: bytes) -> None:

@@ -21,4 +21,4 @@ SUBSCRIBED = {
     "whole_body_kinematics": ("joint_states", "hand_load"),
 }
 
-LISTENED = {"simulated_robot": {"balance_state", "arm_plan", "plan_report"}}
+LISTENED = {"simulated_robot": {"balance_state", "arm_plan", "plan_report", "emergency_stop"}}

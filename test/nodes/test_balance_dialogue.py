@@ -12,7 +12,7 @@ pytest.importorskip("rclpy")
 
 from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
-from ballbal_ros.nodes.balance_dialogue import STOP, BalanceDialogue
+from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, STOP, BalanceDialogue
 from ballbal_ros.nodes.messages import stamp_text, to_time
 from helpers.robots import compensation, shelver
 
@@ -26,7 +26,8 @@ class Ear:
     said: list[str] = attrs.field(factory=list)
 
     def publish(self, message: Any) -> None:
-        self.said.append("lean_plan" if "lean_roll" in message.joint_names else "arm_command")
+        what = "lean_plan" if "lean_roll" in message.joint_names else "arm_command"
+        self.said.append(what if message.points else f"no {what} of {stamp_text(message.header.stamp)}")
 
     def refuse(self, what: str, stamp: str, reason: str) -> None:
         self.said.append(f"{what} of {stamp} refused: {reason}")
@@ -102,6 +103,16 @@ def test_no_answer_is_a_refusal() -> None:
         had.dialogue.check_time()
         assert had.dialogue.waits is waits
         assert ("no acknowledgement" in had.ear.said[-1]) is not waits and "arm_command" not in had.ear.said
+        # Should it be taken up after all, it must not lean for arms that stay.
+        assert (f"no lean_plan of {had.stamp}" in had.ear.said) is not waits
+
+
+def test_a_plan_made_anew_is_not_taken_back() -> None:
+    """It has the stamp of the one that it was to replace, whose arms go: either may be followed."""
+    had = talk(timeout=-1.0)
+    had.dialogue.ask(had.proposal, FOUND_LOAD, "0")
+    had.dialogue.check_time()
+    assert not had.dialogue.waits and not any(said.startswith("no lean_plan") for said in had.ear.said)
 
 
 @pytest.mark.parametrize(("kind", "state", "what"), [("none", "balancing", "arm_plan"), ("planned", "tripped", STOP)])

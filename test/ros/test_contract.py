@@ -24,7 +24,7 @@ from std_srvs.srv import SetBool, Trigger
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.nodes.diagnostics import ERROR, OK, values_of
-from ballbal_ros.nodes.messages import load_message, seconds
+from ballbal_ros.nodes.messages import load_message, seconds, to_time
 from ballbal_ros.nodes.topics import TOPICS
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
@@ -248,6 +248,26 @@ def test_a_checkup_hears_the_stack_and_sends_nothing(robot: Robot, tmp_path: Pat
     assert {"margins in force", "trim", "torque reserve"} <= set(verdicts)
     assert "wrong" not in verdicts.values(), printed
     assert robot.state == "balancing"
+
+
+def test_a_lean_plan_that_waits_is_taken_back_by_one_without_points(robot: Robot) -> None:
+    """Nothing leans for arms that were told to stay; one that does not wait is refused in words."""
+    told = robot.listener.record("/diagnostics")
+    wanted = plan(SHOULDERS, (1.0, [-0.3, -0.3]))
+    wanted.header.stamp = to_time(robot.time + 100.0)
+    lean = values_of(robot.ask(wanted))["lean_plan"]
+    assert values_of(robot.newest("balance_state"))["plan"] == lean
+    nothing = JointTrajectory(header=robot.newest("lean_plan").header)
+    for _ in range(2):
+        robot.senders["lean_plan"].publish(nothing)
+        robot.listener.wait(lambda: "plan" not in values_of(robot.newest("balance_state")), what="no plan")
+
+    def refusals() -> list[str]:
+        found = [values_of(s).get("refused lean_plan", "") for a in told for s in a.status if s.name == "/balance"]
+        return [text for text in found if f"the plan of {lean}, and none of that stamp waits" in text]
+
+    robot.listener.wait(refusals, what="a refusal in words")
+    assert robot.ask(plan([])).level == OK and robot.state == "balancing"
 
 
 def test_an_emergency_stop_is_controlled_and_latched(robot: Robot) -> None:
