@@ -120,13 +120,14 @@ class BalanceRequests:
 
     def _withdraw(self, stamp: float, start: str) -> None:
         loop, now = self._node.loop, max(self._node.ns, 0) / BILLION
-        if loop is None or not loop.reference.withdraw(stamp, now):
+        if loop is not None and loop.reference.withdraw(stamp, now):
+            if self._answers.get("plan") == start:
+                del self._answers["plan"], self._answers["plan ends"]
+            self._node.diagnostics.accept("lean_plan")
+        else:
             what = f"takes back the plan of {start}, and none of that stamp waits"
             self._refuse("lean_plan", PlanRefused("lean_plan", what, "one that has begun goes on"))
-            return
-        if self._answers.get("plan") == start:
-            del self._answers["plan"], self._answers["plan ends"]
-        self._node.diagnostics.accept("lean_plan")
+        self._answered += 1
         self._node.say_state()
 
     def _loop_that_balances(self, topic: str) -> BalanceLoop | None:
