@@ -20,8 +20,9 @@ class Senses:
     """Gathers IMU, drive and arm data, and calls ``tick(stamp in ns)`` when :attr:`measurement` is complete.
 
     In lock-step that is when all three carry one stamp, in whatever order they come. Otherwise it is when IMU data
-    come, with the newest of the others: drive data older than ``drive_timeout`` are left out (NaN), so that the loop
-    coasts on its model.
+    come, with the newest of the others. Arm data keep their own stamp, as they may well come less often; drive data
+    count as of the tick until they are older than ``drive_timeout``, and then keep theirs too, so that the loop knows
+    that it hears nothing new and coasts.
     """
 
     def __init__(
@@ -44,7 +45,6 @@ class Senses:
         self.measurement = Measurement(
             0.0, None, np.zeros(3), np.zeros(3), np.zeros(drives), np.zeros(description.joint_count)
         )
-        self._unknown = np.full(drives, np.nan)
 
     def on_arms(self, raw: bytes) -> None:
         """Take serialised ``joint_states``."""
@@ -96,7 +96,9 @@ class Senses:
         elif drive.stamp < 0 or arms.stamp < 0:
             return
         measured.stamp = ns / BILLION
-        stale = not self._lock_step and ns - drive.stamp > self._stale
-        measured.drive_angle = self._unknown if stale else drive.position.copy()
-        measured.arm_position = arms.position.copy()
+        measured.drive_angle, measured.arm_position = drive.position.copy(), arms.position.copy()
+        if not self._lock_step:
+            measured.drive_stamp = drive.stamp / BILLION if ns - drive.stamp > self._stale else None
+            # One from a clock that is ahead must not make all that follow look old.
+            measured.arm_stamp = min(arms.stamp, ns) / BILLION
         self._tick(ns)
