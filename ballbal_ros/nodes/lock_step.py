@@ -15,12 +15,15 @@ from ballbal_ros.nodes.messages import BILLION
 from ballbal_ros.nodes.plan_report import EARLIER
 
 _KEPT = 100
+# Digits of a stamp, and more; int() refuses thousands of them.
+_LONGEST = 30
 
 
 def text_nanoseconds(text: str) -> int:
     """A stamp written ``sec.nanosec`` in ns; -1 for what is none."""
     sec, dot, nanosec = text.partition(".")
-    return int(sec) * BILLION + int(nanosec) if dot and sec.isdecimal() and nanosec.isdecimal() else -1
+    known = dot and sec.isdecimal() and nanosec.isdecimal() and len(text) <= _LONGEST
+    return int(sec) * BILLION + int(nanosec) if known else -1
 
 
 class LockStep:

@@ -15,7 +15,21 @@ FLOATS = [
     *(0.1, -0.4, 9.81, 2.5, 60.0),
 ]
 INTEGERS = [0, 1, -1, 2, 5, 2**15, 2**31 - 1, -(2**31), 2**32 - 1, 999_999_999, 1_000_000_000, 10**12]
-TEXTS = ["", " ", "x", "left_hand", "base_link", "odom", "left_shoulder_pitch", "ü" * 9, "²", "a" * 4000, "%s{}", "-1"]
+TEXTS = [
+    "",
+    " ",
+    "x",
+    "left_hand",
+    "base_link",
+    "odom",
+    "left_shoulder_pitch",
+    "ü" * 9,
+    "²",
+    "a" * 4000,
+    "%s{}",
+    "-1",
+    "9" * 5000 + ".0",
+]
 
 LENGTHS = [b"\xff\xff\xff\xff", b"\0\0\0\0", b"\xff\xff\xff\x7f", b"\x10\0\0\0", b"\0\1\0\0"]
 

@@ -12,7 +12,7 @@ from types import SimpleNamespace
 
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
 
-from ballbal_ros.nodes.lock_step import LockStep
+from ballbal_ros.nodes.lock_step import LockStep, text_nanoseconds
 
 
 def lock(answered_by: int = 1) -> LockStep:
@@ -55,3 +55,17 @@ def test_without_anybody_who_answers_plans_time_goes_on() -> None:
     step = lock(answered_by=0)
     step.emergency_stop_came(True)
     assert not waits(step)
+
+
+@pytest.mark.parametrize(
+    ("text", "stamp"),
+    [
+        ("7.000000001", 7_000_000_001),
+        ("2147483647.999999999", 2_147_483_647_999_999_999),
+        *((text, -1) for text in ("", "none", "7", "7.", ".5", "-1.000000000", "7.0e1", "²." + "0" * 9)),
+        ("9" * 5000 + ".0", -1),
+    ],
+)
+def test_a_stamp_in_words_is_read_or_is_none(text: str, stamp: int) -> None:
+    """``sec.nanosec`` in ns; -1 for anything else, however long it is."""
+    assert text_nanoseconds(text) == stamp
