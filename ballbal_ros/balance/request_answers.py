@@ -143,7 +143,7 @@ ASKED = (
     Answer(VELOCITY, "not balancing", "came in another state than balancing", REFUSED, IN_NODE),
     Answer(VELOCITY, "absurd", "wrong frame, not finite, or beyond limits.ball_speed", REFUSED, IN_NODE),
     Answer(GOAL, "not balancing", "came in another state than balancing", REFUSED, IN_NODE),
-    Answer(GOAL, "absurd", "wrong frame, not finite, or no unit quaternion", REFUSED, IN_NODE),
+    Answer(GOAL, "absurd", "wrong frame, no place within 10 km, or no unit quaternion", REFUSED, IN_NODE),
     Answer(
         EMERGENCY,
         "true",

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from ballbal_ros.nodes.balance import BalanceNode
 
 _VELOCITY_LASTS = BILLION // 2
+_FARTHEST = 1e4
 
 
 class BalanceRequests:
@@ -165,11 +166,11 @@ class BalanceRequests:
         values = (place.x, place.y, turn.x, turn.y, turn.z, turn.w)
         if self._loop_that_balances("goal_pose") is None:
             return
-        if frame != "odom" or not all(map(math.isfinite, values)) or abs(sum(v * v for v in values[2:]) - 1.0) > 1e-2:
+        far = not math.hypot(place.x, place.y) <= _FARTHEST
+        if frame != "odom" or far or not abs(sum(v * v for v in values[2:]) - 1.0) <= 1e-2:
             what = f"is {values} in frame {frame!r}"
-            self._refuse(
-                "goal_pose", BallbalError("goal_pose", what, "it takes a finite place and a unit quaternion in odom")
-            )
+            remedy = f"it takes a place within {_FARTHEST:g} m and a unit quaternion in odom"
+            self._refuse("goal_pose", BallbalError("goal_pose", what, remedy))
             return
         self._node.diagnostics.accept("goal_pose")
         self._goal = Goal(place.x, place.y, lean_and_heading_from_quat_xyzw(turn.x, turn.y, turn.z, turn.w)[2])
