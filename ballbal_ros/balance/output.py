@@ -142,11 +142,18 @@ class TorqueOutput:
 
     def _without_step(self, effort: list[float], x: float, y: float, lean: tuple[float, float]) -> list[float]:
         """Where actuators' limits turned the torque aside, go no further from the last (x, y), N m, than a tick may."""
-        change = math.hypot(self.sent[0] - x, self.sent[1] - y)
-        if change <= self._step * _ROUNDING:
+        ahead = self.sent[0] - x, self.sent[1] - y
+        if math.hypot(*ahead) <= self._step * _ROUNDING:
             return effort
-        share = self._step / change
-        near = [before + share * (e - before) for e, before in zip(effort, self.effort.tolist())]
+        last = self.effort.tolist()
+        # What the last efforts give now is not quite what they gave: the body has leaned meanwhile.
+        here = self._level(last, lean)
+        off = here[0] - x, here[1] - y
+        way = ahead[0] - off[0], ahead[1] - off[1]
+        square, along = way[0] ** 2 + way[1] ** 2, off[0] * way[0] + off[1] * way[1]
+        room = max(along**2 - square * (off[0] ** 2 + off[1] ** 2 - self._step**2), 0.0)
+        share = min(max((math.sqrt(room) - along) / square, 0.0), 1.0)
+        near = [before + share * (e - before) for e, before in zip(effort, last)]
         self.sent = self._level(near, lean)
         return near
 

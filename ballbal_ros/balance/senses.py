@@ -102,6 +102,7 @@ class Senses:
         self._drive_heading = 0.0
         self._turn = (0.0, 1.0, 0.0, 1.0)
         self.spin_held = True
+        self._turning, self._rate_start = 0.0, parameters.limits.rate_start
         self._spun, self._most_spun = 0.0, parameters.limits.turning * self.period
 
     @property
@@ -204,10 +205,13 @@ class Senses:
         ball's spin.
 
         Not ``calm``: an actuator that gives nothing might make the others spin the ball, so that nothing new is
-        learnt.
+        learnt; unless the gyro says that the body began to turn at once, of which the drive would show something.
         """
-        if calm:
-            self._spun += _SPIN_SHARE * (self.period * body_rate[2] + turned - self._spun)
+        off, before, self._turning = self.period * body_rate[2] + turned, self._turning, body_rate[2]
+        if abs(body_rate[2] - before) > self._rate_start:
+            self._spun = off
+        elif calm:
+            self._spun += _SPIN_SHARE * (off - self._spun)
         wrong = "" if abs(self._spun) < self._most_spun else "turning"
         if wrong or not self._watch.quiet:
             self._watch.see(now, HEADING, wrong)

@@ -70,6 +70,9 @@ _NOT_SEEN = """\
 - A joint encoder that steps by less than it may move within a tick is believed.
 - Two faults at once are answered one by one; that it keeps standing through both is not promised. A hard push on a
   machine with three wheels, one of them dead, may bring it down.
+- How the ball turns can't be told from two encoders where nothing holds its spin: a machine with three wheels, one of
+  which slides on the ball for a good part of a second and is given up, may fall where no stand takes hold. With four it
+  stays.
 - A drive that gives less torque than it is sent, all actuators alike, is not measured: the loop's gain margin bears it.
 """
 

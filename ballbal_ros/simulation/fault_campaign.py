@@ -55,7 +55,8 @@ class _Scene:
             files = attrs.evolve(files, balance=attrs.evolve(files.balance, attitude="imu"))
         begin = (max(RUN_START + 0.2, self.timeline.lean), self.timeline.arms + self.story.arms.duration)
         fault = drawn(kind, number, self.seed, begin)
-        stand = number % 2 == 1
+        # Not by the number: kinds come in turn, and each would always have one, or never.
+        stand = fault.seed % 2 == 1
         plan, schedule = self.plan(wheels), self.schedule(wheels)
         return FaultTrial(files, self.story, self.timeline, plan, fault, number, stand, schedule).run()
 

@@ -38,6 +38,7 @@ class Kind:
 
     ``may_end``: the outcomes that will do. Without it they follow from the row and the duration, and so does the time
     to react. With it, it is no matter of time alone whether the fault is told from noise, a push or a motion.
+    ``three_may_fall``: nothing survives it for sure with three wheels alone.
     """
 
     row: tuple[str, str]
@@ -45,11 +46,12 @@ class Kind:
     sizes: tuple[float, ...] = (0.0,)
     may_end: tuple[str, ...] = ()
     signed: bool = False
+    three_may_fall: bool = False
 
-    def outcomes(self, fault: Fault) -> tuple[str, ...]:
-        """The outcomes that will do for a fault of this kind."""
+    def outcomes(self, fault: Fault, wheels: int) -> tuple[str, ...]:
+        """The outcomes that will do for a fault of this kind, with so many wheels."""
         if self.may_end:
-            return self.may_end
+            return (*self.may_end, FELL) if self.three_may_fall and wheels == 3 else self.may_end
         deed = ANSWERS[self.row].deed(fault.duration)
         return (FELL,) if deed == TRIP else STOPS if deed == STOP else STANDS
 
@@ -85,7 +87,8 @@ KINDS: Mapping[str, Kind] = {
     "encoder step": Kind((ENCODER, "jump"), (LASTING,), (0.01, 0.2, 1.0), STANDS, signed=True),
     "encoder stuck": Kind((ENCODER, "stuck"), (0.05, 0.5, 2.0), (0.0,), STANDS_OR_STOPS),
     "actuator dead": Kind((ACTUATOR, "dead, without a spare"), (LASTING,), (0.0,), STANDS_OR_STOPS),
-    "wheel slips": Kind((ENCODER, "slip"), _SPANS, (0.3, 1.0, 4.0), STANDS_OR_STOPS),
+    "wheel slips": Kind((ENCODER, "slip"), _SPANS, (1.0, 4.0), STANDS_OR_STOPS),
+    "wheel slides": Kind((ENCODER, "slip"), _SPANS, (0.3,), STANDS_OR_STOPS, three_may_fall=True),
     "torque sags": Kind((SUPPLY, "sags"), (LASTING,), (0.9, 0.7, 0.6), STANDS),
     "battery sags": Kind((SUPPLY, "sags"), (LASTING,), (0.9, 0.7, 0.6), STANDS),
     "joints silent": Kind((ARMS, "silent"), (0.05, 0.3, 1.0), (0.0,), STANDS_OR_STOPS),

@@ -156,7 +156,9 @@ class FaultTrial:
 
     def _verdict(self, robot: SimulatedRobot, loop: BalanceLoop, commands: _Commands, travel_mm: float) -> Trial:
         fault, kind = self._fault, KINDS[self._fault.kind]
-        outcome, wanted, latest = self._outcome(robot, loop), kind.outcomes(fault), kind.latest(fault)
+        outcome, latest = self._outcome(robot, loop), kind.latest(fault)
+        wheels = len(self._files.description.drive.names)
+        wanted = kind.outcomes(fault, wheels)
         why = []
         if outcome not in wanted:
             why.append(f"{outcome}, where the table says {' or '.join(wanted)}")
@@ -166,7 +168,7 @@ class FaultTrial:
             why.append(f"{commands.wrong} commands that may not be sent")
         return Trial(
             kind=fault.kind,
-            wheels=len(self._files.description.drive.names),
+            wheels=wheels,
             number=self._number,
             fault=fault,
             outcome=outcome,

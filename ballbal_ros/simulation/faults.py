@@ -288,4 +288,5 @@ ON_DRIVE: dict[str, Callable[[FaultyRobot, Array], Array]] = {
     "torque sags": lambda f, e: f._weak(e),
     "battery sags": lambda f, e: f._bounded(e),
     "wheel slips": lambda f, e: f._slips(e),
+    "wheel slides": lambda f, e: f._slips(e),
 }

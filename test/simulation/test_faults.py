@@ -41,8 +41,9 @@ def held_to_the_table(trials: list[Trial]) -> None:
     assert [f"{t.kind} {t.fault}: {t.why}" for t in trials if not t.ok] == []
     assert sum(t.wrong_commands for t in trials) == 0
     for trial in trials:
+        kind = KINDS[trial.kind]
         if trial.outcome == FELL:
-            assert ANSWERS[KINDS[trial.kind].row].falls
+            assert ANSWERS[kind.row].falls or (kind.three_may_fall and trial.wheels == 3)
 
 
 def test_a_small_campaign_over_all_kinds_ends_as_the_table_says():
@@ -63,6 +64,20 @@ def test_an_imu_that_falls_silent_is_answered_as_the_table_says(silent: float):
     stops = ANSWERS["imu", "silent"].deed(silent - 0.002) == STOP
     assert trial.outcome == (STOPPED if stops else HELD) and trial.wrong_commands == 0
     assert trial.ball_travel_mm <= (10.0 if silent <= 0.05 else 50.0)
+
+
+@pytest.mark.parametrize("size", [-1.0, 1.0])
+def test_a_gyro_that_turns_at_once_is_not_believed(size: float):
+    """Of a step about z the drive would show something: it is left out however hard the drive works just then."""
+    trial = tried(wheels=4, kind="gyro step", start=4.208, duration=60.0, size=size, which=8)
+    assert trial.outcome in (HELD, STOPPED) and trial.wrong_commands == 0
+    assert trial.ball_travel_mm <= 20.0
+
+
+def test_a_wheel_that_slides_makes_no_step_in_torque():
+    """Two wheels that are left, at their limits while the body leans: still no step beyond `limits.torque_rate`."""
+    trial = tried(kind="wheel slides", start=3.262, duration=1.0, size=0.3, which=5)
+    assert trial.worst_effort_nm > 10.0 and trial.wrong_commands == 0
 
 
 @pytest.mark.parametrize("which", [0, 1, 2])
