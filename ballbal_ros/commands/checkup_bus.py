@@ -8,19 +8,16 @@ from typing import Any, TypeVar
 
 import rclpy
 from rclpy.context import Context
-from rclpy.qos import ReliabilityPolicy
 from rclpy.signals import SignalHandlerOptions
 
 from ballbal_ros.commands.checkup_stack import NEEDED, Heard, Told
 from ballbal_ros.nodes import process
 from ballbal_ros.nodes.diagnostics import values_of
-from ballbal_ros.nodes.topics import subscribe
+from ballbal_ros.nodes.topics import TOPICS, subscribe, why_unheard
 
 _TURN = 0.05
 _TWICE = 2
 _DISCOVERY = 1.5
-_RELIABLE_ONLY = ("joint_states",)
-"""Topics that our nodes want reliable, and drivers are wont to offer as best effort."""
 
 
 _Ear = TypeVar("_Ear", bound="Ear")
@@ -88,10 +85,11 @@ class Ear:
 
     def _unheard(self) -> dict[str, str]:
         found = {}
-        for topic in _RELIABLE_ONLY:
+        for topic in (name for name in TOPICS if not name.startswith("/")):
             for info in self._publishers(topic):
-                if info.qos_profile.reliability == ReliabilityPolicy.BEST_EFFORT:
-                    found[topic] = f"{info.node_name} publishes it best effort"
+                why = why_unheard(topic, info.qos_profile)
+                if why:
+                    found[topic] = f"nothing is heard of {info.node_name}: {why}"
         return found
 
 

@@ -48,7 +48,7 @@ class Told:
 @attrs.frozen
 class Heard:
     """What was heard of a stack: per node (its bare name) what it told, oldest first; node names as the graph has them;
-    who publishes ``drive_command``; topics that a publisher offers in a way that our nodes can't take, by topic.
+    who publishes ``drive_command``; why a publisher of a topic is not heard by our nodes, by topic.
     """
 
     nodes: Mapping[str, Sequence[Told]]
@@ -76,7 +76,7 @@ def check_stack(heard: Heard, balance: BalanceParameters | None = None) -> list[
     if loop is not None:
         found += _loop(loop, heard.nodes["balance"], balance, "simulated_robot" in newest)
     found += [
-        Finding(_INPUT, topic, WRONG, why, "have it published reliable: a best-effort one is not heard")
+        Finding(_INPUT, topic, WRONG, why, "have it published with the quality of service that our nodes ask for")
         for topic, why in heard.unheard.items()
     ]
     return found

@@ -20,7 +20,7 @@ from ballbal_ros.errors import BallbalError, ModelError
 from ballbal_ros.memory import settle_memory
 from ballbal_ros.nodes.parameters import robot_file
 from ballbal_ros.nodes.priority import Scheduling
-from ballbal_ros.nodes.topics import TOPICS, _profile
+from ballbal_ros.nodes.topics import TOPICS, wanted
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.parameters import RobotParameters
 
@@ -136,13 +136,9 @@ def describe(node: Node, parameters: RobotParameters, wait: float) -> RobotDescr
 
 
 def _published(node: Node) -> str:
-    message, kind = TOPICS["robot_description"]
+    topic = "robot_description"
     came, found = wait_for_message(
-        message,
-        node,
-        "robot_description",
-        qos_profile=_profile(kind.depth, kept=True),
-        time_to_wait=_DESCRIPTION_TIMEOUT,
+        TOPICS[topic][0], node, topic, qos_profile=wanted(topic), time_to_wait=_DESCRIPTION_TIMEOUT
     )
     if not came or found is None:
         raise ModelError(

@@ -11,7 +11,7 @@ from geometry_msgs.msg import InertiaStamped, PointStamped, PoseStamped, TwistSt
 from nav_msgs.msg import Odometry
 from rclpy.duration import Duration
 from rclpy.node import Node
-from rclpy.qos import DurabilityPolicy, QoSProfile, ReliabilityPolicy
+from rclpy.qos import DurabilityPolicy, QoSCompatibility, QoSProfile, ReliabilityPolicy, qos_check_compatible
 from rosgraph_msgs.msg import Clock
 from sensor_msgs.msg import Imu, JointState
 from std_msgs.msg import Bool, Float64MultiArray, String
@@ -98,6 +98,16 @@ def subscribe(
     """A subscription to a topic of the stack; ``raw``: the callback gets the serialised message; ``depth``: for one who
     wants them all rather than the newest.
     """
-    message, kind = TOPICS[topic]
-    profile = _profile(depth or kind.depth, reliable=not kind.lossy, kept=kind.kept)
-    return node.create_subscription(message, topic, callback, profile, raw=raw)
+    return node.create_subscription(TOPICS[topic][0], topic, callback, wanted(topic, depth), raw=raw)
+
+
+def wanted(topic: str, depth: int | None = None) -> QoSProfile:
+    """The quality of service that a subscriber to a topic of the stack asks for."""
+    kind = TOPICS[topic][1]
+    return _profile(depth or kind.depth, reliable=not kind.lossy, kept=kind.kept)
+
+
+def why_unheard(topic: str, offered: QoSProfile) -> str:
+    """Why a subscriber to a topic of the stack hears nothing of a publisher that offers it so; "" where it does."""
+    verdict, reason = qos_check_compatible(offered, wanted(topic))
+    return reason.removeprefix("ERROR: ").rstrip("; ") if verdict == QoSCompatibility.ERROR else ""

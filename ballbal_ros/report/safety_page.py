@@ -30,7 +30,8 @@ _PEOPLE = """\
   takes the torque away at once, whatever the state. Do that only while a stand or gantry holds it, or to save a life.
 - **To stop it**, publish `emergency_stop` true: arms and ball come to rest and it *stays balanced*, state `stopping`.
   Bring the stand; when `support` says true, torque goes away: `released`. Without a `support` it stays balanced until
-  the battery ends: have something that senses the stand publish it.
+  the battery ends: have something that senses the stand publish it. Both are heard only from publishers that are
+  reliable and transient local, which is not a publisher's default in ROS; `ballbal checkup` says who is not heard.
 - **To go on**, release the emergency stop (`emergency_stop` false), see to what `reason` in `balance_state` says, then
   `ros2 service call /balance/reset std_srvs/srv/Trigger`. From `released` and `tripped` **it then engages by itself**
   as soon as it is upright, still and hears its senses: be clear of it before you reset it. From `stopping` it goes on
