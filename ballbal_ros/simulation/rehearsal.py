@@ -21,7 +21,6 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.plan_request import PlanRequest
-from ballbal_ros.motion.pulls import at_time
 from ballbal_ros.motion.repetition import Learned, still_to_lean_for
 from ballbal_ros.motion.spline import FollowedPath
 from ballbal_ros.motion.story import Story
@@ -29,7 +28,7 @@ from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
-from ballbal_ros.simulation.outside import true_wrenches
+from ballbal_ros.simulation.happenings import Happenings
 from ballbal_ros.simulation.parameters import SimulationParameters
 from ballbal_ros.simulation.robot import SimulatedRobot
 from ballbal_ros.simulation.run_result import RunResult
@@ -134,30 +133,17 @@ class Rehearsal:
         self._learned = learned
         if self.plan is not None and story.ball is not None:
             self._meant = self.plan.table(self.loop.period)[:, 4:6]
-        self._truly: list[tuple[float, Load]] = []
+        self._happenings = Happenings(self.robot)
         if kind != "still":
             self.robot.command_arms(story.arms, timeline.arms)
-            self._truly = [(c.time + timeline.story, c.load) for c in story.load_changes]
+            self._happenings.add_story(story, timeline.story)
             for change in story.load_changes:
                 if change.announced:
                     self.loop.set_load(change.load, change.time + timeline.story)
-        self._pushes = [] if kind == "still" else sorted(story.pushes, key=lambda push: push.time)
-        self._pushing: float | None = None
-        self._pulls = () if kind == "still" else true_wrenches(story, self.robot.truth, timeline.story)
 
     def _happen(self, now: float) -> None:
-        """Loads and pushes whose time has come."""
-        while self._truly and self._truly[0][0] <= now + 1e-9:
-            self.robot.set_load(self._truly.pop(0)[1])
-        if self._pushing is not None and now >= self._pushing - 1e-9:
-            self.robot.release_push()
-            self._pushing = None
-        while self._pushes and self._pushes[0].time + self.timeline.story <= now + 1e-9:
-            push = self._pushes.pop(0)
-            self.robot.push(push.link, push.at, push.force)
-            self._pushing = push.time + push.during + self.timeline.story
-        for wrench in self._pulls:
-            self.robot.pull(wrench.hand, *at_time(wrench, now))
+        """What is due at ``now``, s."""
+        self._happenings.come_to(now)
 
     def answer(self, measured: Measurement | None = None) -> Array:
         """One tick of the loop, after what happens then: its efforts, which the robot has still to step with.
