@@ -33,6 +33,9 @@ def write_json(path: Path, document: Any) -> None:
     """Write a document as JSON; raises :class:`BallbalError` where it can't be written or holds a NaN."""
     try:
         path.write_text(json.dumps(document, indent=2, allow_nan=False) + "\n", encoding="utf-8")
+    except ValueError as error:
+        what = "can't be written: something that was measured is not a number"
+        raise BallbalError(str(path), what, "a robot that fell before its run began has no figures") from error
     except OSError as error:
         raise BallbalError(
             str(path), f"can't be written: {error.strerror}", "give the path of a file to write"
