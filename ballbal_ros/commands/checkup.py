@@ -12,6 +12,7 @@ import typer
 from rich.console import Console
 from rich.markup import escape
 
+from ballbal_ros.commands import options
 from ballbal_ros.commands.checkup_files import check_files
 from ballbal_ros.commands.checkup_machine import check_bus, check_machine
 from ballbal_ros.commands.checkup_stack import Heard, check_stack
@@ -99,7 +100,7 @@ def domain_of(asked: int | None) -> int:
 
 
 def checkup_command(
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
+    robot: options.Robot = options.ROBOT,
     domain: Annotated[
         Optional[int], typer.Option("--domain", help="ROS domain of the stack; ROS_DOMAIN_ID without it.")
     ] = None,
@@ -113,7 +114,7 @@ def checkup_command(
     share: Annotated[
         float, typer.Option("--share", help="With --gantry: share of each actuator's rated torque, never exceeded.")
     ] = 0.05,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    json_file: options.Json = None,
 ) -> None:
     """What is wrong with files, machine, bus and running nodes, and what to do about it. Sends nothing, unless with
     --gantry.

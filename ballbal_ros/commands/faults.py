@@ -13,6 +13,7 @@ from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 from rich.table import Table
 
+from ballbal_ros.commands import options
 from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.story import read_story
@@ -107,7 +108,7 @@ def as_json(robot: str, seed: int, trials: Sequence[Trial]) -> dict[str, Any]:
 
 
 def faults_command(
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
+    robot: options.Robot = options.ROBOT,
     plan: Annotated[Path, typer.Option("--plan", help="Plan file; faults come while its arms move.")] = Path(
         "config/plans/reach.yaml"
     ),
@@ -120,7 +121,7 @@ def faults_command(
     wheels: Annotated[
         Optional[list[int]], typer.Option("--wheels", help="How many wheels the drive has; repeatable. 3 without it.")
     ] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    json_file: options.Json = None,
 ) -> None:
     """What comes of faults on purpose, each held against what docs/safety.md says of it."""
     console = Console()

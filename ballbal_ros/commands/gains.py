@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import Annotated, Any, Optional
+from typing import Any
 
 import attrs
 import typer
@@ -15,6 +15,7 @@ from ballbal_ros.balance.gains import Gains, Requirement, design, margins, poles
 from ballbal_ros.balance.linear_model import STATES, LinearModel
 from ballbal_ros.balance.margins import Margins
 from ballbal_ros.balance.parameters import BalanceParameters
+from ballbal_ros.commands import options
 from ballbal_ros.commands.files import write_json
 from ballbal_ros.commands.posture import AskedPosture, asked_posture
 from ballbal_ros.declaration import declarations, flatten, load
@@ -197,15 +198,11 @@ def run_gains(
 
 
 def gains_command(
-    robot: Annotated[Path, typer.Option("--robot", help="Folder with robot.yaml and balance.yaml.")] = Path(
-        "config/shelver"
-    ),
-    posture: Annotated[
-        Optional[Path], typer.Option("--posture", help="Plan file whose start gives posture and loads.")
-    ] = None,
-    joint: Annotated[Optional[list[str]], typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
-    load: Annotated[Optional[list[str]], typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    robot: options.Robot = options.ROBOT,
+    posture: options.Posture = None,
+    joint: options.Joints = None,
+    load: options.Loads = None,
+    json_file: options.Json = None,
 ) -> None:
     """Weights to gains, closed-loop poles, margins, and what delay the loop can bear."""
     raise typer.Exit(run_gains(robot, posture, tuple(joint or ()), tuple(load or ()), json_file))

@@ -13,6 +13,7 @@ import typer
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn
 
+from ballbal_ros.commands import options
 from ballbal_ros.commands.domains import own_domain
 from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
@@ -115,20 +116,12 @@ def _progress(console: Console | None, end: float) -> Iterator[tuple[Progress, A
 
 def headless_command(
     plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/shelve.yaml.")],
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
-    compensation: Annotated[
-        Optional[list[str]],
-        typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it."),
-    ] = None,
-    seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
-    repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
-    truth: Annotated[
-        Optional[list[str]],
-        typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
-    ] = None,
-    lead_in: Annotated[
-        Optional[float], typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
-    ] = None,
+    robot: options.Robot = options.ROBOT,
+    compensation: options.Compensation = None,
+    seed: options.Seed = 0,
+    repeat: options.Repeat = 1,
+    truth: options.Truth = None,
+    lead_in: options.LeadIn = None,
     clock: Annotated[
         str, typer.Option("--clock", help="lock-step: as fast as it goes, the same to the bit; real-time.")
     ] = "lock-step",
@@ -136,7 +129,7 @@ def headless_command(
     domain: Annotated[
         Optional[int], typer.Option("--domain", min=0, help="ROS domain; ROS_DOMAIN_ID, or one of its own, without it.")
     ] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    json_file: options.Json = None,
 ) -> None:
     """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this
     machine only.

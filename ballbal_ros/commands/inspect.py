@@ -4,15 +4,15 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import Annotated, Any, Optional
+from typing import Any
 
 import attrs
-import typer
 from rich import box
 from rich.console import Console
 from rich.table import Table
 
 from ballbal_ros.balance.linear_model import LinearModel, linear_model
+from ballbal_ros.commands import options
 from ballbal_ros.commands.files import write_json
 from ballbal_ros.commands.gains import rates_as_data
 from ballbal_ros.commands.posture import AskedPosture, asked_posture
@@ -168,13 +168,11 @@ def _reserve_rows(found: Inspection) -> list[tuple[str, str]]:
 
 
 def inspect_command(
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
-    posture: Annotated[
-        Optional[Path], typer.Option("--posture", help="Plan file whose start gives posture and loads.")
-    ] = None,
-    joint: Annotated[Optional[list[str]], typer.Option("--joint", help="NAME=VALUE: an arm joint, rad or m.")] = None,
-    load: Annotated[Optional[list[str]], typer.Option("--load", help="HAND=MASS: what a hand holds, kg.")] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    robot: options.Robot = options.ROBOT,
+    posture: options.Posture = None,
+    joint: options.Joints = None,
+    load: options.Loads = None,
+    json_file: options.Json = None,
 ) -> None:
     """What this robot is, at a posture: masses, mass centre, how fast it falls, and what it has in reserve."""
     found = inspect_robot(robot, posture, tuple(joint or ()), tuple(load or ()))

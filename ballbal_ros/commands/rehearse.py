@@ -10,8 +10,10 @@ import typer
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 
+from ballbal_ros.commands import options
 from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
+from ballbal_ros.commands.pictures import check_picture, drawing
 from ballbal_ros.errors import BallbalError, nearest
 from ballbal_ros.memory import settle_memory
 from ballbal_ros.motion.lean_plan import LeanPlan
@@ -23,8 +25,6 @@ from ballbal_ros.simulation.repeating import Repetitions
 from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet
 from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import Truth, parse_truth
-
-_PICTURES = (".png", ".svg", ".pdf")
 
 
 def asked_kinds(asked: Sequence[str] | None) -> tuple[str, ...]:
@@ -51,8 +51,7 @@ def rehearse(
 
     Raises :class:`BallbalError` for wrong input or a refused plan.
     """
-    if figure is not None and figure.suffix.lower() not in _PICTURES:
-        raise BallbalError("--figure", f"{figure} is no picture's name", f"let it end in {', '.join(_PICTURES)}")
+    check_picture(figure)
     files = read_robot(robot)
     story = read_story(plan, files.description)
     differences = parse_truth(truth, files.description)
@@ -109,38 +108,22 @@ def _repetitions(
 
 
 def _draw(files: RobotFiles, story: Story, timeline: Timeline, traces: dict[str, Trace], figure: Path) -> None:
-    try:
-        from ballbal_ros.report.lean_figure import draw_motion
-    except ImportError as error:
-        raise BallbalError(
-            "--figure", f"needs matplotlib, which is not there ({error})", "install the headless extra"
-        ) from error
     title = f"{files.description.name}, plan {story.name}, rehearsed: times from the start of the arms"
-    try:
+    with drawing(figure):
+        from ballbal_ros.report.lean_figure import draw_motion
+
         draw_motion(files.description, story.start_loads, timeline, traces, figure, title)
-    except OSError as error:
-        raise BallbalError(
-            str(figure), f"can't be written: {error.strerror}", "give the path of a file to write"
-        ) from error
 
 
 def rehearse_command(
     plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/reach.yaml.")],
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
-    compensation: Annotated[
-        Optional[list[str]],
-        typer.Option("--compensation", help="planned, quasi_static, none or still; repeatable. All without it."),
-    ] = None,
-    seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
-    repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
-    truth: Annotated[
-        Optional[list[str]],
-        typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
-    ] = None,
-    lead_in: Annotated[
-        Optional[float], typer.Option("--lead-in", min=0.0, help="Lead-in, s, in place of the parameter's.")
-    ] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    robot: options.Robot = options.ROBOT,
+    compensation: options.Compensation = None,
+    seed: options.Seed = 0,
+    repeat: options.Repeat = 1,
+    truth: options.Truth = None,
+    lead_in: options.LeadIn = None,
+    json_file: options.Json = None,
     figure: Annotated[
         Optional[Path], typer.Option("--figure", help="Picture of the motion: a .png, .svg or .pdf file.")
     ] = None,

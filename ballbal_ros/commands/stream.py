@@ -13,8 +13,10 @@ from rich import box
 from rich.console import Console
 from rich.table import Table
 
+from ballbal_ros.commands import options
 from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
+from ballbal_ros.commands.pictures import check_picture, drawing
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.story import read_story
 from ballbal_ros.simulation.run_result import LimitCheck, RunResult, median
@@ -23,7 +25,6 @@ from ballbal_ros.simulation.truth import parse_truth
 
 DELAYS = (0.0, 0.1, 0.2, 0.3, 0.5)
 _LONGEST = 2.0
-_PICTURES = (".png", ".svg", ".pdf")
 
 
 @attrs.frozen
@@ -74,7 +75,7 @@ def delay_text(delay: float | None) -> str:
 
 def stream_command(
     plan: Annotated[Path, typer.Argument(help="Plan file, such as config/plans/reach.yaml.")],
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
+    robot: options.Robot = options.ROBOT,
     delay: Annotated[
         Optional[list[float]], typer.Option("--delay", help="Of the delay line, s; repeatable. 0 to 0.5 without it.")
     ] = None,
@@ -84,13 +85,10 @@ def stream_command(
     latency: Annotated[
         Optional[float], typer.Option("--latency", help="From what a plan knows to its start, s; else the parameter's.")
     ] = None,
-    seed: Annotated[int, typer.Option("--seed", min=0, help="First seed of the noise.")] = 0,
-    repeat: Annotated[int, typer.Option("--repeat", min=1, help="How many seeds.")] = 1,
-    truth: Annotated[
-        Optional[list[str]],
-        typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
-    ] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    seed: options.Seed = 0,
+    repeat: options.Repeat = 1,
+    truth: options.Truth = None,
+    json_file: options.Json = None,
     figure: Annotated[
         Optional[Path], typer.Option("--figure", help="Picture of travel against delay: a .png, .svg or .pdf file.")
     ] = None,
@@ -101,8 +99,7 @@ def stream_command(
     practice.
     """
     console = Console()
-    if figure is not None and figure.suffix.lower() not in _PICTURES:
-        raise BallbalError("--figure", f"{figure} is no picture's name", f"let it end in {', '.join(_PICTURES)}")
+    check_picture(figure)
     delays: list[float | None] = list(delay or DELAYS)
     runs = stream(
         plan, robot, [*delays, None] if measured else delays, range(seed, seed + repeat), tuple(truth or ()), latency
@@ -143,16 +140,12 @@ def _print(runs: Sequence[StreamedRun], limits: Sequence[LimitCheck], name: str,
 
 
 def _draw(runs: Sequence[StreamedRun], path: Path, title: str) -> None:
-    try:
-        from ballbal_ros.report.delay_figure import draw_delays
-    except ImportError as error:
-        raise BallbalError("--figure", f"needs matplotlib ({error})", "install the headless extra") from error
     points = [(run.delay, run.result.ball_travel_peak_mm) for run in runs if run.delay is not None]
     measured = [run.result.ball_travel_peak_mm for run in runs if run.delay is None]
-    try:
+    with drawing(path):
+        from ballbal_ros.report.delay_figure import draw_delays
+
         draw_delays(points, measured, path, title)
-    except OSError as error:
-        raise BallbalError(str(path), f"can't be written: {error.strerror}", "give the path of a file") from error
 
 
 def _document(

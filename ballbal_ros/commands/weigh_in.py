@@ -11,6 +11,7 @@ import attrs
 import typer
 from rich.console import Console
 
+from ballbal_ros.commands import options
 from ballbal_ros.commands.checkup import domain_of
 from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.live_weighing import live_weighing
@@ -128,7 +129,7 @@ def _document(weighing: Weighing, worth: Worth | None) -> dict[str, Any]:
 
 
 def weigh_in_command(
-    robot: Annotated[Path, typer.Option("--robot", help="The robot's folder.")] = Path("config/shelver"),
+    robot: options.Robot = options.ROBOT,
     posture: Annotated[
         Optional[Path], typer.Option("--posture", help="Plan file in whose start posture it begins, hands empty.")
     ] = None,
@@ -137,10 +138,7 @@ def weigh_in_command(
         Optional[float], typer.Option("--mass", min=0.1, help="Mass of all on the ball by a scale, kg.")
     ] = None,
     servo: Annotated[bool, typer.Option("--servo", help="Tell the arm servos' lag as well.")] = False,
-    truth: Annotated[
-        Optional[list[str]],
-        typer.Option("--truth", help="KEY=VALUE: where the simulated robot differs from the model; repeatable."),
-    ] = None,
+    truth: options.Truth = None,
     seed: Annotated[int, typer.Option("--seed", min=0, help="Seed of the noise.")] = 0,
     live: Annotated[
         bool, typer.Option("--live", help="Weigh the robot whose stack is up, from where its arms are; it asks first.")
@@ -152,7 +150,7 @@ def weigh_in_command(
     yes: Annotated[bool, typer.Option("--yes", help="With --live: don't ask; for the simulated robot alone.")] = False,
     plan: Annotated[Optional[Path], typer.Option("--plan", help="Plan file to say the gain for.")] = None,
     output: Annotated[Optional[Path], typer.Option("--output", help="File for robot.yaml as weighed.")] = None,
-    json_file: Annotated[Optional[Path], typer.Option("--json", help="File for what was found.")] = None,
+    json_file: options.Json = None,
 ) -> None:
     """The robot weighs itself: it balances in chosen postures, and where it leans tells its mass centres.
 
