@@ -58,6 +58,9 @@ class Bench:
             *self.robot_files.description.drive.names,
             *LEAN_JOINTS,
         ]
+        left_out = self.subscriptions.keys() - good_messages(self.robot_files, 0.0).keys() - {"imu/data"}
+        if left_out:
+            raise RuntimeError(f"nothing hostile is known for {', '.join(sorted(left_out))}")
         self._set_up()
 
     def _set_up(self) -> None:

@@ -41,11 +41,15 @@ def good_messages(robot: RobotFiles, now: float) -> dict[str, Any]:
     twist, goal, push = TwistStamped(), PoseStamped(), WrenchStamped()
     twist.header.frame_id, goal.header.frame_id, push.header.frame_id = "base_footprint", "odom", "base_link"
     twist.twist.linear.x, push.wrench.force.x = 0.1, 1.0
+    streamed = JointState(name=moved, position=[0.0, 0.0], velocity=[0.0, 0.0])
+    streamed.header.stamp = to_time(now)
     return {
+        "arm_stream": streamed,
         "joint_states": JointState(name=arms, position=[0.0] * len(arms)),
         "drive_states": JointState(name=drives, position=[0.0] * len(drives)),
         "drive_command": JointState(name=drives, effort=[0.0] * len(drives)),
         "hand_load": load_message(Load("left_hand", 0.5, [0.0, 0.0, -0.05]), now + 0.5),
+        "hand_load_estimate": load_message(Load("right_hand", 0.4, [0.0, 0.0, -0.05]), now + 0.5),
         "simulated_load": load_message(Load("left_hand", 0.5, [0.0, 0.0, -0.05]), now + 0.5),
         "arm_plan": trajectory(moved, [-0.2, -0.2], now),
         "arm_command": trajectory(moved, [-0.2, -0.2], now, full=True),
