@@ -17,6 +17,8 @@ from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
 _KEPT, _LONG = 0.5, 3.0
+# s: nearer samples say more of noise than of rates; and for how long steps are added up.
+_NEAREST, _ADDED_UP = 4.9e-3, 0.2
 _MOVES = 2e-3
 _ALIKE = 1e-9
 # rad, rad/s: less than this of the arms' motion needs no new plan.
@@ -81,23 +83,37 @@ class ArmStream:
     def take(self, time: float, position: Array, rate: Array | None = None) -> bool:
         """Take a sample; a rate that is not there, or NaN, is found from its neighbours.
 
-        False for one that is not later than the last.
+        False for one that is not later than the last by 5 ms: it is passed over.
         """
-        if self._rows and time <= self._rows[-1][0] + _ALIKE:
+        if self._rows and time <= self._rows[-1][0] + _NEAREST:
             return False
         while len(self._rows) > 3 and self._rows[2][0] < time - _LONG:
             self._rows.popleft()
         self._rows.append((time, position.copy(), None if rate is None else rate.copy()))
         return True
 
+    def beyond(self, time: float, position: Array) -> Array:
+        """How much further [n] each joint would go to ``position`` [n] at a time, s, than its velocity limit lets it
+        from any sample of the last 0.2 s, or the last: many small steps count as one.
+        """
+        rows = list(self._rows)
+        recent = [row for row in rows if row[0] > time - _ADDED_UP] or rows[-1:]
+        passed = np.array([min(time - row[0], _ADDED_UP) for row in recent])
+        steps = np.abs(position - np.array([row[1] for row in recent]))
+        return np.asarray((steps - passed[:, None] * self._description.velocity_limit).max(axis=0))
+
     def path(self, begin: float) -> SampledPath:
-        """What is known, its times counted from ``begin``, s; what is long past is forgotten. Two samples at least."""
+        """What is known, its times counted from ``begin``, s; what is long past is forgotten. Two samples at least.
+
+        Rates that nobody gave are within the joints' velocity limits.
+        """
         rows = self._rows
         while len(rows) > 3 and rows[2][0] < begin - _KEPT:
             rows.popleft()
         times = np.array([row[0] for row in rows]) - begin
         position = np.array([row[1] for row in rows])
-        rate = np.gradient(position, times, axis=0)
+        fastest = self._description.velocity_limit
+        rate = np.clip(np.gradient(position, times, axis=0), -fastest, fastest)
         for k, row in enumerate(rows):
             if row[2] is not None:
                 rate[k] = np.where(np.isnan(row[2]), rate[k], row[2])

@@ -104,13 +104,13 @@ class ArmStreaming:
     def _check_step(self, time: float, position: Array) -> None:
         """A stream that jumps is refused; one that goes on after a pause has rested meanwhile."""
         stream = self._compensation.stream
-        if stream.last is None or stream.known_until is None:
+        if stream.last is None or stream.known_until is None or time <= stream.known_until:
             return
-        pause = time - stream.known_until
-        step = np.abs(position - stream.last)
-        if np.any(step > min(pause, _PAUSE) * self._description.velocity_limit + _STEP):
-            name = self._description.joint_names[int(np.argmax(step))]
-            raise PlanError(_TOPIC, f"jumps by {step.max():.3f} rad at {name}", "stream at 20 Hz or more, without gaps")
+        pause, beyond = time - stream.known_until, stream.beyond(time, position)
+        if beyond.max() > _STEP:
+            joint = int(np.argmax(beyond))
+            name, step = self._description.joint_names[joint], abs(position - stream.last)[joint]
+            raise PlanError(_TOPIC, f"jumps by {step:.3f} rad at {name}", "stream at 20 Hz or more, without gaps")
         if pause > _PAUSE:
             stream.take(time - _PAUSE, stream.last, np.zeros_like(position))
 

@@ -13,11 +13,13 @@ pytest.importorskip("rclpy")
 from sensor_msgs.msg import JointState
 
 from ballbal_ros.motion.arm_schedule import ArmSchedule
+from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.nodes.arm_streaming import ArmStreaming
 from ballbal_ros.nodes.messages import JointReader, seconds, stamp_text, to_time
 from helpers.robots import compensation, shelver
 
 JOINT = "left_shoulder_pitch"
+FIELDS = ("positions", "velocities", "accelerations")
 INTERVAL, LATENCY = compensation().stream.interval, compensation().stream.latency
 
 
@@ -122,6 +124,30 @@ def test_a_stream_that_jumps_is_refused() -> None:
     line.run(0.5, 1.2)
     line.send(1.2, -1.0)
     assert len(line.refused) == 1 and "jumps" in line.refused[0]
+
+
+@pytest.mark.parametrize("apart", [1e-6, 5e-4, 2e-3, 6e-3])
+def test_many_small_steps_are_no_way_past_the_velocity_limit(apart: float) -> None:
+    """Steps that each are small, however near to each other: the arms are commanded to go faster than the joint can by
+    no more than a step of 5 mrad at once makes, and why samples are passed over is told.
+    """
+    line = Line()
+    line.run(0.5, 1.05)
+    commands = len(line.arms)
+    fastest = float(shelver().velocity_limit[list(shelver().joint_names).index(JOINT)])
+    for k in range(1, 101):
+        line.go_on(1.05 + apart * k)
+        line.send(1.05 + apart * k, -0.0045 * k - fastest * apart * k)
+        if len(line.arms) > commands:
+            line.answer()
+    for now in np.arange(1.06 + 100.0 * apart, 2.0, 0.01).tolist():
+        line.go_on(now)
+    assert len(line.arms) > commands and "jumps" in line.refused[0]
+    for message in line.arms[commands:]:
+        times = np.array([seconds(point.time_from_start) for point in message.points])
+        table = [np.array([getattr(p, name) for p in message.points]) for name in FIELDS]
+        rate = ArmPath.through(times, *table).sample(np.arange(0.0, times[-1], 1e-3))[1]
+        assert np.abs(rate).max() <= 1.6 * fastest
 
 
 def test_arms_moved_by_hand_are_planned_for() -> None:
