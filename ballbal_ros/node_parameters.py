@@ -56,6 +56,14 @@ class BalanceNodeParameters(DescriptionParameters):
 class ArmCompensationNodeParameters(DescriptionParameters):
     """What the arm compensation node needs besides robot.yaml and compensation.yaml."""
 
+    memory: str = parameter(
+        "string",
+        "",
+        unit="-",
+        meaning="file that keeps what is under way, for the node that is started anew; empty: "
+        "motion_<ROS domain><namespace>.json in ballbal_ros/<robot> of XDG_STATE_HOME (~/.local/state)",
+    )
+
 
 @attrs.frozen(kw_only=True)
 class KinematicsNodeParameters(DescriptionParameters):

@@ -29,6 +29,14 @@ def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
                 item.add_marker(mark)
 
 
+@pytest.fixture(scope="session", autouse=True)
+def state_home(tmp_path_factory: pytest.TempPathFactory) -> Iterator[None]:
+    """What nodes keep between runs goes to a folder of the tests, not to the user's."""
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("XDG_STATE_HOME", str(tmp_path_factory.mktemp("state")))
+        yield
+
+
 @pytest.fixture
 def ros_domain_id(monkeypatch: pytest.MonkeyPatch) -> Iterator[int]:
     """A ROS domain that no other test on this machine has while this one runs; ROS_DOMAIN_ID is set to it.

@@ -17,7 +17,7 @@ from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.plan_request import BallMotion, HandWrench, PlanRequest
 from ballbal_ros.motion.pulls import joined
 from ballbal_ros.motion.spline import ArmPath, FollowedPath, JointPath, check_path
-from ballbal_ros.motion.stopping import Handover, Later, Spliced, stop_path
+from ballbal_ros.motion.stopping import Handover, Later, Motion, Spliced, stop_path
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load, LoadChanges
@@ -26,6 +26,8 @@ from ballbal_ros.robot.whole_body import WholeBody
 _TOPIC = "arm_plan"
 _SOON = 1e-9
 _ELSEWHERE = 0.05
+# Arms come after their command by their servos' lag, and their measurement by the bus: at most this long, s.
+_LAG = 0.2
 _FAR_AHEAD = 200.0
 _STOPS = (1.0, 1.5, 2.0, 3.0)
 # Planning takes a time that grows with the motion: this much for each second of it, on a slow machine.
@@ -211,13 +213,32 @@ class ArmSchedule:
         """Take a proposal as the motion in force."""
         self._motion, self._standing = proposal, proposal.wrenches
 
-    def _propose(self, lean_start: float, arms_start: float, path: ArmPath, wanted: Wanted | None) -> Proposal:
-        command: JointPath = path
-        command_start = arms_start
+    def take_over(self, motions: Sequence[Motion], now: float, measured: Array) -> bool:
+        """Take motions for those in force that another schedule let go of, in its order; False, and nothing is taken,
+        where they are over, or the arms are elsewhere than they would be (``measured`` [n]).
+        """
+        before = self._motion, self._standing
+        for motion in motions:
+            lean_start, arms_start, path = motion.lean_start, motion.arms_start, motion.path
+            command = self._commanded(lean_start, arms_start, path)
+            self.accept(Proposal(lean_start, arms_start, path, motion.plan, *command, motion.wrenches))
+        if self.busy_until(now) is not None and self._motion is not None:
+            since = np.array([now - self._motion.command_start])
+            position, rate, _ = (a[0] for a in self._motion.command.sample(since))
+            if (np.abs(position - measured) <= _ELSEWHERE + _LAG * np.abs(rate)).all():
+                return True
+        self._motion, self._standing = before
+        return False
+
+    def _commanded(self, lean_start: float, arms_start: float, path: ArmPath) -> tuple[JointPath, float]:
+        """What the arms are commanded to do once this path is let go, and from when on, s."""
         motion = self._motion
         if motion is not None and motion.end > lean_start + _SOON:
-            command = Spliced(motion.command, path, arms_start - motion.command_start)
-            command_start = motion.command_start
+            return Spliced(motion.command, path, arms_start - motion.command_start), motion.command_start
+        return path, arms_start
+
+    def _propose(self, lean_start: float, arms_start: float, path: ArmPath, wanted: Wanted | None) -> Proposal:
+        command, command_start = self._commanded(lean_start, arms_start, path)
         plan = request = None
         coming = () if wanted is None else wanted.wrenches
         coming = [attrs.evolve(wrench, times=wrench.times + arms_start) for wrench in coming]

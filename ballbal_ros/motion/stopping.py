@@ -3,17 +3,36 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 
 import attrs
 import numpy as np
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.plan_request import BallMotion, StartState
+from ballbal_ros.motion.plan_request import BallMotion, HandWrench, StartState
 from ballbal_ros.motion.spline import ArmPath, JointPath
 from ballbal_ros.robot.arrays import Array
 
 _FINE = 0.001
 _MOVING = 1e-4
+
+
+@attrs.frozen(eq=False)
+class Motion:
+    """A motion that was let go: the arms' ``path`` from ``arms_start``, s, on, and the lean ``plan`` from
+    ``lean_start`` on; ``wrenches``: what the world is planned to exert on the hands, their times as ours.
+    """
+
+    lean_start: float
+    arms_start: float
+    path: ArmPath
+    plan: LeanPlan
+    wrenches: Sequence[HandWrench] = ()
+
+    @property
+    def end(self) -> float:
+        """When the arms come to rest, s."""
+        return self.arms_start + self.path.duration
 
 
 @attrs.frozen(eq=False)

@@ -25,6 +25,7 @@ from ballbal_ros.nodes.arm_streaming import ArmStreaming
 from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, BalanceDialogue
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, number_of, values_of
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
+from ballbal_ros.nodes.motion_memory import memory_of
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_queue import PlanQueue, Sent
 from ballbal_ros.nodes.plan_report import PlanReports
@@ -39,7 +40,8 @@ _ATTEND = 0.05
 
 class ArmCompensationNode(Node):
     """Plans, asks the balance node, and only then lets the arms go. One plan after the other; an emergency stop goes
-    first. Started anew while a motion is under way, it leaves that one to its end and begins no second one.
+    first. Started anew while a motion is under way, it goes on from that one where it can be sure of it, else it leaves
+    it to its end and begins no second one.
     """
 
     def __init__(self) -> None:
@@ -64,8 +66,13 @@ class ArmCompensationNode(Node):
         self._waiting = PlanQueue()
         to_balance, to_arms = publisher(self, "lean_plan"), publisher(self, "arm_command")
         self._reports = PlanReports(self, self.description.name)
-        self._balance = BalanceDialogue(self._schedule, self._arms.names, to_balance, to_arms, self._reports)
-        self._stop = ArmStop(self._schedule, self._balance, self._reports, self._before, lambda: self._now)
+        self._memory, self._recalled, self._followed = memory_of(self, self.description, own.memory), False, ""
+        self._balance = BalanceDialogue(
+            self._schedule, self._arms.names, to_balance, to_arms, self._reports, self._memory.keep
+        )
+        self._stop = ArmStop(
+            self._schedule, self._balance, self._reports, self._before, lambda: self._now, lambda: self._recalled
+        )
         self._diagnostics = Diagnostics(self, self.description.name, self._report)
         self._streaming = ArmStreaming(
             self.description, self._schedule, to_balance, to_arms, self._check_stream, self._diagnostics.refuse
@@ -73,6 +80,18 @@ class ArmCompensationNode(Node):
         self._listen()
         steady = RosClock(clock_type=ClockType.STEADY_TIME)
         self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
+
+    def _recall(self) -> None:
+        """Once all that is kept for late joiners is here: go on from the motion that the node before let go of."""
+        if self._recalled or not (self._before.settled(time.monotonic()) and self._arms.complete):
+            return
+        self._recalled = True
+        if not self._schedule.idle or not self._streaming.idle:
+            return
+        with self._diagnostics.taking("motion memory"):
+            motions = self._memory.recall(self._followed)
+            if motions and self._schedule.take_over(motions, self._now, self._arms.position):
+                self._before.until = 0.0
 
     def _listen(self) -> None:
         inputs = self._diagnostics.inputs
@@ -245,6 +264,7 @@ class ArmCompensationNode(Node):
         values = values_of(message)
         self._streaming.heard(values)
         self._before.heard(time.monotonic(), message.message)
+        self._followed = values.get("plan", "")
         if not self._balance.waits and self._schedule.idle and self._streaming.idle:
             self._before.until = number_of(values.get("plan ends", ""))
         self._balance.hear(message.message, values)
@@ -253,6 +273,8 @@ class ArmCompensationNode(Node):
     def _attend(self) -> None:
         self._diagnostics.pace.ran_after(_ATTEND)
         self._balance.check_time()
+        self._memory.write_down()
+        self._recall()
         self._go_on()
 
     def _on_emergency_stop(self, message: Any) -> None:
@@ -270,6 +292,7 @@ class ArmCompensationNode(Node):
             "arms known": bool(np.isfinite(self._arms.position).all()),
             "plans waiting": len(self._waiting) + self._balance.waits,
             **self._streaming.values(),
+            **({"motion memory": self._memory.warning} if self._memory.warning else {}),
         }
         if self._stop.on:
             return OK, "emergency stop: no plan is taken", values

@@ -13,11 +13,13 @@ from ballbal_ros.nodes.plan_report import PlanReports
 from ballbal_ros.nodes.predecessor import Predecessor
 
 _AGAIN = 0.2
+_PATIENCE = 5.0
 _MOST_DOUBLED = 3
 
 
 class ArmStop:
-    """Asks for a stop, and again while none was taken up and the arms move. ``now`` gives the stamp that it is, s.
+    """Asks for a stop, and again while none was taken up and the arms move. ``now`` gives the stamp that it is, s;
+    ``ready``: whether it is known what was under way when this node started, for which it has some patience.
 
     ``on``: the emergency stop is pressed; ``under_way``: the arms have not been brought to rest yet. A stop that the
     balance node refused, or did not answer, may have come too late for it, as planning takes time: the next one begins
@@ -31,13 +33,14 @@ class ArmStop:
         reports: PlanReports,
         before: Predecessor,
         now: Callable[[], float],
+        ready: Callable[[], bool],
     ) -> None:
         self._schedule, self._balance, self._reports = schedule, balance, reports
-        self._before, self._now = before, now
+        self._before, self._now, self._ready = before, now, ready
         self.on = self.under_way = False
         self._asked: Proposal | None = None
         self._failed = 0
-        self._next = 0.0
+        self._next = self._patience = 0.0
         self._stamp = self._told = ""
 
     def take(self, pressed: bool) -> None:
@@ -46,7 +49,8 @@ class ArmStop:
         if not began:
             return
         self._stamp, self._told = stamp_text(to_time(self._now())), ""
-        self._asked, self._failed, self._next, self.under_way = None, 0, 0.0, True
+        self._asked, self._failed, self.under_way = None, 0, True
+        self._next, self._patience = 0.0, time.monotonic() + _PATIENCE
         self._balance.take_back("arm_plan: overtaken by an emergency stop")
         self.go_on()
 
@@ -57,9 +61,10 @@ class ArmStop:
         if self._asked is not None and self._schedule.follows(self._asked):
             self.under_way = False
             return
-        if time.monotonic() >= self._next:
+        now = time.monotonic()
+        if now >= self._next and (self._ready() or now >= self._patience):
             self._failed += self._asked is not None
-            self._asked, self._next = None, time.monotonic() + _AGAIN
+            self._asked, self._next = None, now + _AGAIN
             self._try()
 
     def _try(self) -> None:

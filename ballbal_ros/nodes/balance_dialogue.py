@@ -6,7 +6,7 @@ Times are of the steady clock, s, but in proposals, which have stamps.
 from __future__ import annotations
 
 import time
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
 import attrs
@@ -52,13 +52,20 @@ class BalanceDialogue:
     """Asks for one plan at a time, and answers with a report whoever wanted it.
 
     ``state`` of the balance node, empty before it was heard of; ``answered``: how many plans it has answered, as told.
-    ``to_balance`` and ``to_arms`` publish ``lean_plan`` and ``arm_command`` of the joints ``names``.
+    ``to_balance`` and ``to_arms`` publish ``lean_plan`` and ``arm_command`` of the joints ``names``; what is let go is
+    handed to ``keep``.
     """
 
     def __init__(
-        self, schedule: ArmSchedule, names: Sequence[str], to_balance: Any, to_arms: Any, reports: PlanReports
+        self,
+        schedule: ArmSchedule,
+        names: Sequence[str],
+        to_balance: Any,
+        to_arms: Any,
+        reports: PlanReports,
+        keep: Callable[[Proposal], None],
     ) -> None:
-        self._schedule, self._names, self._reports = schedule, names, reports
+        self._schedule, self._names, self._reports, self._keep = schedule, names, reports, keep
         self._to_balance, self._to_arms = to_balance, to_arms
         self._asked: _Asked | None = None
         self.state, self.answered = "", ""
@@ -122,4 +129,6 @@ class BalanceDialogue:
         self._schedule.accept(proposal)
         if asked.what not in (PULL, FOUND_LOAD):
             self._to_arms.publish(path_message(proposal.path, self._names, to_time(proposal.arms_start)))
+        # Only once it is under way: what did not go must not be taken for what did.
+        self._keep(proposal)
         self._reports.accept_proposal(asked.what, asked.stamp, proposal, self._schedule.load_changes)

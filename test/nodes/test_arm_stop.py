@@ -38,9 +38,9 @@ class Bench:
         self.now, self.schedule, self.count = now, schedule, 0
         self.said: list[str] = []
         self.leans: list[Any] = []
-        self.dialogue = BalanceDialogue(schedule, shelver().joint_names, self, self, self)  # type: ignore[arg-type]
+        self.dialogue = BalanceDialogue(schedule, shelver().joint_names, self, self, self, lambda _: None)  # type: ignore[arg-type]
         self.before = Predecessor(0.0)
-        self.stop = ArmStop(schedule, self.dialogue, self, self.before, lambda: self.now)  # type: ignore[arg-type]
+        self.stop = ArmStop(schedule, self.dialogue, self, self.before, lambda: self.now, lambda: True)  # type: ignore[arg-type]
         self.hear()
 
     def publish(self, message: Any) -> None:

@@ -29,6 +29,9 @@ class Ear:
         what = "lean_plan" if "lean_roll" in message.joint_names else "arm_command"
         self.said.append(what if message.points else f"no {what} of {stamp_text(message.header.stamp)}")
 
+    def keep(self, proposal: Proposal) -> None:
+        self.said.append("kept")
+
     def refuse(self, what: str, stamp: str, reason: str) -> None:
         self.said.append(f"{what} of {stamp} refused: {reason}")
 
@@ -65,7 +68,7 @@ def talk(kind: str = "planned", timeout: float = 60.0) -> Talk:
     made = Talk(
         ear,
         schedule,
-        BalanceDialogue(schedule, names, ear, ear, ear),  # type: ignore[arg-type]
+        BalanceDialogue(schedule, names, ear, ear, ear, ear.keep),  # type: ignore[arg-type]
         schedule.plan(Wanted(0.0, 0.8, nod), 1.0, STILL),
     )
     made.answer("2")
@@ -82,7 +85,7 @@ def test_the_arms_go_once_the_lean_plan_is_taken_up() -> None:
     had.answer("3", plan="1.000000000")
     assert had.ear.said == ["lean_plan"] and had.dialogue.waits and had.schedule.idle
     had.answer("4", plan=had.stamp)
-    assert had.ear.said == ["lean_plan", "arm_command", "arm_plan of 0 accepted"]
+    assert had.ear.said == ["lean_plan", "arm_command", "kept", "arm_plan of 0 accepted"]
     assert not had.dialogue.waits and not had.schedule.idle
 
 
@@ -121,4 +124,4 @@ def test_nobody_is_asked_where_nobody_follows(kind: str, state: str, what: str) 
     had = talk(kind)
     had.dialogue.hear(state, {})
     had.dialogue.ask(had.proposal, what, "0")
-    assert had.ear.said == ["arm_command", f"{what} of 0 accepted"] and not had.dialogue.waits
+    assert had.ear.said == ["arm_command", "kept", f"{what} of 0 accepted"] and not had.dialogue.waits

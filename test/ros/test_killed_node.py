@@ -10,16 +10,22 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 
 pytest.importorskip("rclpy")
 
+from std_msgs.msg import Bool
+
+from ballbal_ros.commands.processes import Processes
 from ballbal_ros.nodes.diagnostics import ERROR, OK, values_of
 from ballbal_ros.nodes.messages import seconds
 from ballbal_ros.nodes.plan_report import EARLIER
 from helpers.robots import CONFIG
-from helpers.ros_stack import NOD, Listener, ballbal, children_of, listening
+from helpers.ros_stack import NOD, Listener, ballbal, children_of, listening, running_stack
+from helpers.stack_robot import Robot, plan
 
+SHOULDERS = ["left_shoulder_pitch", "right_shoulder_pitch"]
 # The arms' motion, a second swing, and time for a node to come back in: some 13 s of simulated time.
 LONG_NOD = NOD + "  - move: {left_shoulder_pitch: 0.0, right_shoulder_pitch: 0.0}\n    during: 0.8\n  - wait: 6.0\n"
 
@@ -96,6 +102,53 @@ def test_a_killed_node_comes_back_and_the_plan_is_finished(
     # What the node that was started anew finds waiting is either planned for the first time or refused in words.
     again = [EARLIER in values_of(r) for r in reports if r.level == ERROR]
     assert again == ([True] if len(kills) == 2 else [])
+
+
+def killed_while_the_arms_move(robot: Robot, processes: Processes) -> None:
+    """arm_compensation is killed one second into a motion of four, and the emergency stop is pressed."""
+    report = robot.ask(plan(SHOULDERS, (4.0, [-1.2, -1.2])))
+    assert report.level == OK, report.message
+    arms = float(values_of(report)["arm_command"])
+    robot.listener.wait(lambda: robot.time > arms + 1.0, 30.0, "the arms' start")
+    killed = next(child for child in processes._children if child.name == "arm_compensation")
+    killed.process.kill()
+    killed.process.wait()
+    # Time stands still until somebody answers it.
+    robot.senders["emergency_stop"].publish(Bool(data=True))
+
+@pytest.mark.parametrize("remembers", [True, False])
+def test_an_emergency_stop_after_a_restart_stops_the_arms(
+    remembers: bool, ros_domain_id: int, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Pressed while arm_compensation is down: the one that is started anew knows the motion in force, and brings the
+    arms to rest by a compensated stop. Where the file is gone, it says that it can't, again once it can do something,
+    and the arms come to their planned end. The ball stays within 30 mm in both.
+    """
+    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path))
+    simulated = {"seed": 1, "answer_timeout": 60.0}
+    with running_stack(ros_domain_id, simulated) as processes, listening(ros_domain_id) as listener:
+        robot = Robot(listener)
+        robot.bring_up()
+        robot.go_on(0.5)
+        station = robot.ball()
+        killed_while_the_arms_move(robot, processes)
+        if not remembers:
+            next(tmp_path.rglob("motion_*.json")).unlink()
+        child = next(child for child in processes._children if child.name == "arm_compensation")
+        child.process = child.start()
+
+        def told_of_the_stop() -> list[Any]:
+            return [status for array in robot.reports for status in array.status if status.name == "emergency_stop"]
+
+        told = listener.wait(told_of_the_stop, 40.0, "the report of the stop")
+        assert (told[0].level == OK) is remembers, told[0].message
+        robot.go_on(5.0)
+        travel, angle = 1e3 * float(np.hypot(*(robot.ball() - station))), robot.angle(SHOULDERS[0])
+        print(f"ball {travel:.2f} mm; shoulders at {angle:.3f} rad; {told[0].message}")
+        assert robot.state == "stopping" and travel <= 30.0
+        assert -1.0 < angle < -0.02 if remembers else angle == pytest.approx(-1.2, abs=0.02)
+        assert told_of_the_stop()[-1].level == OK
+        assert remembers or "can't cut short" in told[0].message
 
 
 @pytest.mark.prove
