@@ -93,8 +93,8 @@ class SimulatedMessages:
             raise BallbalError(
                 "drive_command", f"has {len(names)} names and {len(values)} efforts", "give one for each actuator"
             )
-        found = dict(zip(names, values.tolist(), strict=True))
-        self._effort[:] = [found[name] for name in self._drives]
-        if not math.isfinite(self._effort.sum()):
-            raise BallbalError("drive_command", f"has the efforts {self._effort.tolist()}", "give finite numbers")
+        if not math.isfinite(values.sum()):
+            raise BallbalError("drive_command", f"has the efforts {values.tolist()}", "give finite numbers")
+        # What is in force is changed by a good command only.
+        self._effort[:] = values if names == self._drives else [values[names.index(name)] for name in self._drives]
         return self._effort
