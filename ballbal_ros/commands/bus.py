@@ -87,7 +87,7 @@ class Bus:
         self.waited = self._why if self.state == STANDBY else self.waited
         if self.state == BALANCING:
             self.balances_from = min(self.balances_from, number_of(values.get("stamp", "")))
-        self._heard = int(values.get("load changes", "0"))
+        self._heard = int(number_of(values.get("load changes", "")))
 
     def _on_report(self, message: Any) -> None:
         for status in message.status:

@@ -14,7 +14,7 @@ from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.commands.checkup_bus import Ear
 from ballbal_ros.commands.terminal import told_to_end
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.nodes.diagnostics import values_of
+from ballbal_ros.nodes.diagnostics import number_of, values_of
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, seconds
 from ballbal_ros.nodes.plan_report import EARLIER
 from ballbal_ros.nodes.topics import subscribe
@@ -118,7 +118,7 @@ class RobotEar(Ear):
     def _on_state(self, message: Any) -> None:
         values, heard = values_of(message), self._heard
         heard.state, heard.reason = message.message, values.get("reason", "")
-        heard.state_stamp = float(values.get("stamp", "nan"))
+        heard.state_stamp = number_of(values.get("stamp", ""))
 
     def _on_report(self, message: Any) -> None:
         # Answers are kept on the bus: those from before it was asked are somebody else's.

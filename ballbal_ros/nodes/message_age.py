@@ -8,7 +8,7 @@ import time
 from collections.abc import Callable
 from typing import Any
 
-_BILLION = 1_000_000_000
+from ballbal_ros.nodes.wire_layout import BILLION
 
 
 class WithAge:
@@ -29,4 +29,4 @@ class WithAge:
         # rclpy's events executor hands over the pair as one, its other executors one by one.
         message, info = given[0] if len(given) == 1 else given
         sent = info["source_timestamp"]
-        self._callback(message, (time.time_ns() - sent) / _BILLION if sent > 0 else math.inf)
+        self._callback(message, (time.time_ns() - sent) / BILLION if sent > 0 else math.inf)

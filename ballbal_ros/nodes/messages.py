@@ -14,12 +14,11 @@ from builtin_interfaces.msg import Duration, Time
 from geometry_msgs.msg import InertiaStamped
 
 from ballbal_ros.errors import BallbalError, nearest
+from ballbal_ros.nodes.wire_layout import BILLION as BILLION
 from ballbal_ros.nodes.wire_readers import JointStateReader
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
-
-BILLION = 1_000_000_000
 
 
 def nanoseconds(stamp: Time | Duration) -> int:

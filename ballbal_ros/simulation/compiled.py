@@ -21,8 +21,11 @@ from ballbal_ros.robot.arrays import Array
 _CRAWL = 1e-3
 _UPRIGHT = math.cos(math.radians(45.0))
 
-for _library in Path(mujoco.__file__).parent.glob("libmujoco.so*"):
-    load_library_permanently(str(_library))
+_libraries = sorted(Path(mujoco.__file__).parent.glob("libmujoco.so*"))
+if not _libraries:
+    # Without it the compiler would end the process at the first function that calls it.
+    raise ImportError(f"no libmujoco.so beside {mujoco.__file__}: the simulated robot needs MuJoCo's wheel for Linux")
+load_library_permanently(str(_libraries[0]))
 # MuJoCo's C functions: model, data and arrays are addresses.
 _step1 = types.ExternalFunction("mj_step1", types.void(types.intp, types.intp))
 _step2 = types.ExternalFunction("mj_step2", types.void(types.intp, types.intp))
