@@ -1,4 +1,4 @@
-"""Weighted least squares with known covariance, and the same with a prior for what is not linear."""
+"""Least squares with a prior, for what is not linear."""
 
 from __future__ import annotations
 
@@ -20,32 +20,6 @@ class Fit:
     estimate: Array
     covariance: Array
     chi_square: float
-
-    @property
-    def standard_error(self) -> Array:
-        """Standard error of each [n]."""
-        return np.sqrt(np.diag(self.covariance))
-
-
-def weighted_least_squares(design: Array, observed: Array, covariance: Array) -> Fit:
-    """The best linear unbiased estimate of x in ``observed = design x + noise``, noise of known covariance (Aitken
-    1935, Proc. R. Soc. Edinburgh 55, 42; written down from memory).
-
-    ``design`` [m, n], ``observed`` [m], ``covariance`` [m, m] or the variances [m]. The noise is made white by the
-    covariance's Cholesky factor, and the white problem solved by QR.
-    """
-    if covariance.ndim == 1:
-        scale = np.sqrt(covariance)
-        white, seen = design / scale[:, None], observed / scale
-    else:
-        lower = np.linalg.cholesky(covariance)
-        white = linalg.solve_triangular(lower, design, lower=True)
-        seen = linalg.solve_triangular(lower, observed, lower=True)
-    orthogonal, upper = linalg.qr(white, mode="economic")
-    estimate = linalg.solve_triangular(upper, orthogonal.T @ seen)
-    inverse = linalg.solve_triangular(upper, np.eye(len(upper)))
-    left = seen - white @ estimate
-    return Fit(np.asarray(estimate), np.asarray(inverse @ inverse.T), float(left @ left))
 
 
 def most_probable(residual: Callable[[Array], Array], by: Callable[[Array], Array], start: Array) -> Fit:
