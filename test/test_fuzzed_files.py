@@ -15,17 +15,12 @@ from ballbal_ros.commands.files import read_robot
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.story import read_story
 from helpers.fuzz_files import spoilt_bytes, spoilt_xml, spoilt_yaml
+from helpers.resident import resident
 from helpers.robots import CONFIG, shelver
 
 FILES = ("robot.yaml", "balance.yaml", "compensation.yaml", "simulation.yaml", "shelver.urdf")
-PLANS = ("reach.yaml", "shelve.yaml", "push.yaml", "still.yaml")
+PLANS = tuple(sorted(path.name for path in (CONFIG / "plans").glob("*.yaml")))
 GROWS = 10.0
-
-
-def resident() -> float:
-    """Resident memory of this process, MB."""
-    with open("/proc/self/status", encoding="ascii") as file:
-        return next(int(line.split()[1]) for line in file if line.startswith("VmRSS")) / 1024.0
 
 
 def spoilt(rng: random.Random, original: bytes, name: str) -> bytes:

@@ -120,9 +120,3 @@ def spoilt_bytes(rng: random.Random, raw: bytes) -> bytes:
         for _ in range(rng.choice((1, 2, 8))):
             data[rng.randrange(len(data))] = rng.randrange(256)
     return bytes(data)
-
-
-def resident() -> float:
-    """Resident memory of this process, MB."""
-    with open("/proc/self/status", encoding="ascii") as file:
-        return next(int(line.split()[1]) for line in file if line.startswith("VmRSS")) / 1024.0

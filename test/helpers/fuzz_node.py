@@ -31,9 +31,10 @@ from ballbal_ros.nodes.messages import stamp_text, to_time
 from ballbal_ros.nodes.simulated_messages import SimulatedMessages
 from ballbal_ros.robot.loads import LoadChanges
 from ballbal_ros.simulation.robot import SimulatedRobot
-from helpers.fuzz import resident, spoilt, spoilt_bytes
+from helpers.fuzz import spoilt, spoilt_bytes
 from helpers.good_messages import good_messages
 from helpers.rehearsing import files
+from helpers.resident import resident
 
 ASKS_FOR_A_CHANGE = ("emergency_stop", "imu/data", "drive_states", "joint_states")
 WARM_UP = 0.3

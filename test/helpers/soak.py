@@ -17,6 +17,7 @@ from ballbal_ros.motion.spline import ArmPath, FollowedPath, path_through_waypoi
 from ballbal_ros.robot.whole_body import WholeBody
 from ballbal_ros.simulation.robot import SimulatedRobot
 from helpers.rehearsing import files, story
+from helpers.resident import resident
 from helpers.robots import reach
 
 _SETTLED = 3.0
@@ -29,12 +30,6 @@ class Soaked:
     fell: bool
     rests: list[float]
     grown: float
-
-
-def resident() -> float:
-    """Resident memory of this process, MB."""
-    with open("/proc/self/status", encoding="ascii") as file:
-        return next(int(line.split()[1]) for line in file if line.startswith("VmRSS")) / 1024.0
 
 
 def _swing(first: np.ndarray, last: np.ndarray) -> tuple[ArmPath, LeanPlan, float]:

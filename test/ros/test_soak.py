@@ -15,6 +15,7 @@ import pytest
 pytest.importorskip("rclpy")
 
 from ballbal_ros.nodes.diagnostics import values_of
+from helpers.resident import resident
 from helpers.robots import CONFIG
 from helpers.ros_stack import NOD, alive, ballbal, children_of, listening, without_priority
 from helpers.watched_stack import WatchedStack
@@ -27,12 +28,6 @@ def shared_memory(domain: int) -> set[str]:
     mine = 7400 + 250 * domain
     ports = {f"fastrtps_port{mine + k}" for k in range(250)}
     return {f.name for f in SHARED.iterdir() if f.name.split("_el")[0].removesuffix("_mutex") in ports}
-
-
-def memory(pid: int) -> float:
-    """Resident memory, MB."""
-    lines = Path(f"/proc/{pid}/status").read_text(encoding="ascii").splitlines()
-    return next(int(line.split()[1]) for line in lines if line.startswith("VmRSS")) / 1024.0
 
 
 def test_a_run_leaves_no_process_and_no_shared_memory(ros_domain_id: int, tmp_path: Path) -> None:
@@ -70,9 +65,9 @@ def swings(home: Path, domain: int, span: float, warm_up: float) -> None:
             stack.turn(0.1)
             del stack.bus.records[:-1]
             if not before and now > warm_up:
-                before = [memory(pid) for pid in pids]
+                before = [resident(pid) for pid in pids]
             assert stack.bus.state == "balancing"
-        grown = {n: memory(pid) - b for n, pid, b in zip(names, pids, before, strict=True)}
+        grown = {n: resident(pid) - b for n, pid, b in zip(names, pids, before, strict=True)}
     print(f"{len(rests)} rests, worst {max(rests):.2f} mm; memory grew by {grown}")
     assert max(rests) <= 5.0 and max(grown.values()) <= 5.0
     assert not [pid for pid in pids if alive(pid)] and shared_memory(domain) == set()
