@@ -7,7 +7,9 @@ from __future__ import annotations
 import math
 
 MOST_MISSED = 0.1
-"""Longest step, s, that is taken for missed ticks; a longer one is a clock that jumped."""
+"""Longest step, s, that is taken for missed ticks; a longer one is not bridged by the model."""
+MOST_STALLED = 0.4
+"""Longest step ahead, s, that is taken for a process that got no time; a longer one, or one back, is a clock's jump."""
 _SOON = 1e-9
 _LOOK_AGAIN = 20_000_000
 _IN_ORDER = 3
@@ -28,7 +30,7 @@ class LoopClock:
         """Periods (at least 1) from the last tick to this one; 0 where the stamp is refused, and no tick is to be made.
 
         A stamp elsewhere (behind, or far ahead) is refused, until others have followed in order from there: then it
-        is the clock that jumped, and time goes on from it.
+        is a process that got no time, or the clock that jumped, and time goes on from it.
         """
         passed = stamp - self.now
         if _SOON < passed <= MOST_MISSED or self.now == -math.inf and math.isfinite(stamp):
@@ -46,7 +48,8 @@ class LoopClock:
         if self._in_order < _IN_ORDER:
             self.wrong = "backwards" if not passed > 0.0 else "ahead"
             return 0
-        self.now, self._in_order, self.wrong = stamp, 0, "jump"
+        self.now, self._in_order = stamp, 0
+        self.wrong = "stall" if MOST_MISSED < passed <= MOST_STALLED else "jump"
         return 1
 
 

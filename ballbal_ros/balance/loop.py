@@ -190,10 +190,12 @@ class BalanceLoop:
 
     def _time_is_wrong(self, wrong: str) -> None:
         self.watch.see(self.clock.now, CLOCK, wrong)
-        if wrong == "jump":
+        if wrong in ("jump", "stall"):
             self.watch.restart()
             self.senses.restart()
-            self.reference.cancel_plans(self.senses.arm_position)
+            if wrong == "jump":
+                # Nobody knows whether the arms' clock has jumped, too; after a stall they are where the plan has them.
+                self.reference.cancel_plans(self.senses.arm_position)
             if self.guard.sends:
                 self.stop(f"{CLOCK}: {wrong}")
 

@@ -161,6 +161,13 @@ SENSED = (
     ),
     Answer(
         CLOCK,
+        "stall",
+        "three stamps in order from 0.1 to 0.4 s ahead: the process got no time; plans go on, senses begin anew",
+        steps((0.0, STOP)),
+        IN_LOOP,
+    ),
+    Answer(
+        CLOCK,
         "jump",
         "three stamps in order from elsewhere: time goes on from there, plans are forgotten",
         steps((0.0, STOP)),
