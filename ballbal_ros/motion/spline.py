@@ -14,6 +14,8 @@ from ballbal_ros.errors import PlanError
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 
+LONGEST = 300.0
+"""The longest motion that is planned at once, s."""
 _FINE = 0.001
 
 

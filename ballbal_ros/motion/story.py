@@ -11,7 +11,7 @@ import numpy as np
 from ballbal_ros.errors import BallbalError, PlanError, nearest
 from ballbal_ros.motion.plan_request import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import Pull, hand_wrenches
-from ballbal_ros.motion.spline import ArmPath, check_path
+from ballbal_ros.motion.spline import LONGEST, ArmPath, check_path
 from ballbal_ros.motion.story_steps import (
     LoadStep,
     Move,
@@ -176,6 +176,8 @@ class _Builder:
 
     def story(self, name: str) -> Story:
         """The timeline as a whole, its arm motion checked against the joints' limits."""
+        if self.now > LONGEST:
+            raise PlanError(self.where, f"lasts {self.now:g} s", f"it takes at most {LONGEST:g} s: make two of it")
         begins = (
             [time for time, _ in self.knots]
             + [c.time for c in self.changes if c.announced]

@@ -14,10 +14,10 @@ from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.errors import PlanError
 from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.spline import LONGEST
 from ballbal_ros.nodes.messages import seconds, to_duration
 from ballbal_ros.robot.arrays import Array
 
-LONGEST = 300.0
 _MOST = 1e6
 LEAN_JOINTS = ("lean_roll", "lean_pitch", "heading", "ball_x", "ball_y")
 

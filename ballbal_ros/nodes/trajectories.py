@@ -17,8 +17,8 @@ from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 from ballbal_ros.errors import PlanError, nearest, shown
 from ballbal_ros.motion.plan_request import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import at_time
-from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
-from ballbal_ros.nodes.lean_trajectory import LONGEST, Waypoints, column
+from ballbal_ros.motion.spline import LONGEST, ArmPath, path_through_waypoints
+from ballbal_ros.nodes.lean_trajectory import Waypoints, column
 from ballbal_ros.nodes.messages import seconds, to_duration
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription

@@ -38,6 +38,7 @@ WRONG: dict[str, tuple[Callable[[Path], None], str]] = {
     "a missing joint": (_edit("nod.yaml", "{left_shoulder_pitch", "{left_shoulder_pich"), "left_shoulder_pich"),
     "a NaN in the plan": (_edit("nod.yaml", "-0.4, right", ".nan, right"), "nan"),
     "a plan beyond a joint's limits": (_edit("nod.yaml", "-0.4, right", "-9.0, right"), "its limits are"),
+    "a plan without end": (_edit("nod.yaml", "during: 0.8", "during: 1e9"), "at most 300 s"),
     "a negative load": (_edit("nod.yaml", "mass: 1.0", "mass: -1.0"), "mass"),
     "too heavy a load": (_edit("nod.yaml", "mass: 1.0", "mass: 100.0"), "100"),
 }
