@@ -19,8 +19,8 @@ def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> N
     """Raise :class:`PlanRefused` in one line unless the loop can follow the plan from ``start`` (s) on; ``now`` is its
     last tick.
 
-    Refused: while it does not balance, a start that is past, a lean beyond ``limits.lean``, a torque beyond what it may
-    command, and a lean that begins elsewhere than where the reference will be.
+    Refused: while it does not balance, a start that is past, a lean, speed or turning beyond robot.yaml's ``limits``,
+    a torque beyond what it may command, and a lean that begins elsewhere than where the reference will be.
     """
     guard, limits = loop.guard, loop.description.parameters.limits
     if guard.state not in (ENGAGING, BALANCING, STOPPING):
@@ -39,6 +39,10 @@ def check_plan(plan: LeanPlan, start: float, now: float, loop: BalanceLoop) -> N
     speed = float(np.hypot(*plan.ball_rate.T).max())
     if speed > limits.ball_speed:
         raise PlanRefused(_TOPIC, f"rolls with {speed:.3g} m/s", f"limits.ball_speed is {limits.ball_speed:g} m/s")
+    turning = float(np.abs(plan.heading_rate).max())
+    if turning > limits.heading_rate:
+        what = f"turns with {turning:.3g} rad/s"
+        raise PlanRefused(_TOPIC, what, f"limits.heading_rate is {limits.heading_rate:g} rad/s")
     lean = float(np.hypot(*plan.lean.T).max())
     if lean > limits.lean:
         raise PlanRefused(_TOPIC, f"leans {lean:.3f} rad", f"limits.lean is {limits.lean:g} rad")

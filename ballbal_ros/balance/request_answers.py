@@ -37,7 +37,8 @@ ASKED = (
     Answer(
         PLAN,
         "beyond limits",
-        "lean beyond limits.lean, torque beyond limits.torque, or ball beyond limits.ball_speed",
+        "lean beyond limits.lean, torque beyond limits.torque, ball beyond limits.ball_speed, or turning beyond "
+        "limits.heading_rate",
         REFUSED,
         IN_PLAN_CHECK,
     ),
@@ -141,7 +142,13 @@ ASKED = (
         IN_NODE,
     ),
     Answer(VELOCITY, "not balancing", "came in another state than balancing", REFUSED, IN_NODE),
-    Answer(VELOCITY, "absurd", "wrong frame, not finite, or beyond limits.ball_speed", REFUSED, IN_NODE),
+    Answer(
+        VELOCITY,
+        "absurd",
+        "wrong frame, not finite, or beyond limits.ball_speed or limits.heading_rate",
+        REFUSED,
+        IN_NODE,
+    ),
     Answer(GOAL, "not balancing", "came in another state than balancing", REFUSED, IN_NODE),
     Answer(GOAL, "absurd", "wrong frame, no place within 10 km, or no unit quaternion", REFUSED, IN_NODE),
     Answer(

@@ -30,6 +30,7 @@ from ballbal_ros.yaml_files import read_yaml
 
 _ROLL_SPEED = 0.5
 _SHORTEST_ROLL = 2.0
+_TURN_SHARE = 0.9
 
 
 @attrs.frozen
@@ -163,8 +164,10 @@ class _Builder:
             self.now += step.during
         elif isinstance(step, RollStep):
             before = self.rolls[-1][2] if self.rolls else RollStep()
-            far = float(np.hypot(step.x - before.x, step.y - before.y)) + 0.3 * abs(step.heading - before.heading)
-            during = step.during or max(_SHORTEST_ROLL, 1.875 * far / _ROLL_SPEED)
+            far = float(np.hypot(step.x - before.x, step.y - before.y))
+            turning = _TURN_SHARE * self.description.parameters.limits.heading_rate
+            slowest = max(far / _ROLL_SPEED, abs(step.heading - before.heading) / turning)
+            during = step.during or max(_SHORTEST_ROLL, 1.875 * slowest)
             self.rolls.append((self.now, self.now + during, step))
             self.now += during
 

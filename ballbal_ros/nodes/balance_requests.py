@@ -143,19 +143,15 @@ class BalanceRequests:
     def _on_velocity(self, message: Any) -> None:
         twist, frame = message.twist, message.header.frame_id
         wanted = (twist.linear.x, twist.linear.y, twist.angular.z)
-        fastest = self._node.description.parameters.limits.ball_speed
+        limits = self._node.description.parameters.limits
         loop = self._loop_that_balances("cmd_vel")
         if loop is None:
             return
-        if (
-            frame not in ("", "base_footprint")
-            or not math.hypot(wanted[0], wanted[1]) <= fastest
-            or not math.isfinite(wanted[2])
-        ):
+        within = math.hypot(wanted[0], wanted[1]) <= limits.ball_speed and abs(wanted[2]) <= limits.heading_rate
+        if frame not in ("", "base_footprint") or not within:
+            most = f"at most {limits.ball_speed:g} m/s and {limits.heading_rate:g} rad/s"
             what = f"is {wanted} in frame {frame!r}"
-            self._refuse(
-                "cmd_vel", BallbalError("cmd_vel", what, f"it takes base_footprint and at most {fastest:g} m/s")
-            )
+            self._refuse("cmd_vel", BallbalError("cmd_vel", what, f"it takes base_footprint and {most}"))
             return
         self._node.diagnostics.accept("cmd_vel")
         self._goal, self._velocity_until = None, self._node.ns + _VELOCITY_LASTS

@@ -57,6 +57,7 @@ _LIMITS = """\
 | effort of each actuator | `drive.<name>.effort_limit`: the heading gives way first, then all alike |
 | power of the drive | `limits.drive_power` |
 | speed of the ball | beyond `limits.ball_speed` plans are refused; 0.5 s of it is a controlled stop |
+| turning on the spot | beyond `limits.heading_rate` plans and `cmd_vel` are refused |
 
 Torque goes off by itself when the lean is beyond the *capturable region*: the unstable part of lean and lean rate,
 φ + φ'/p, against what the drive's torque, the floor's friction and the drive's speed can still bring back, less

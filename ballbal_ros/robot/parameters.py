@@ -187,6 +187,9 @@ class LimitParameters:
         "double", 40.0, unit="N m", low=0.1, high=1e3, meaning="greatest drive torque about any axis"
     )
     ball_speed: float = parameter("double", 1.5, unit="m/s", low=0.01, high=10.0, meaning="greatest speed of the ball")
+    heading_rate: float = parameter(
+        "double", 1.0, unit="rad/s", low=0.01, high=10.0, meaning="greatest rate of the heading that it is asked for"
+    )
 
 
 @attrs.frozen(kw_only=True)

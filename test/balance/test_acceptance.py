@@ -51,6 +51,7 @@ def test_a_plan_to_come_is_taken_while_it_balances(state: str) -> None:
         ("came while the balance is tripped", TRIPPED, 0.0, {}),
         ("starts at 2.000 s, and it is 2.100 s", BALANCING, 2.1, {}),
         ("limits.lean", BALANCING, 0.0, {"lean": plan().lean + 0.5}),
+        ("turns with 2.5 rad/s; limits.heading_rate is 1", BALANCING, 0.0, {"heading_rate": plan().heading_rate - 2.5}),
         ("limits.drive_torque", BALANCING, 0.0, {"torque": plan().torque + 100.0}),
         ("rad from where the lean will be", BALANCING, 0.0, {"lean": plan().lean + 0.1}),
     ],

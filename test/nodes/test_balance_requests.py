@@ -9,10 +9,11 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from geometry_msgs.msg import PoseStamped
+from geometry_msgs.msg import PoseStamped, TwistStamped
 
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.nodes.balance_requests import BalanceRequests
+from helpers.robots import shelver
 
 
 class Node:
@@ -31,7 +32,7 @@ class Node:
             station=[0.0, 0.0], frame_heading=0.6, set_velocity=lambda *wanted: self.asked.append(wanted)
         )
         self.loop = SimpleNamespace(guard=SimpleNamespace(state=BALANCING), reference=reference)
-        self.active = True
+        self.active, self.ns, self.description = True, 0, shelver()
 
     def create_service(self, *_: Any) -> None:
         """There is none."""
@@ -60,3 +61,17 @@ def test_a_goal_that_is_no_place_is_refused(wrong: tuple[float, ...]) -> None:
     node.callbacks["goal_pose"](goal(1.0, -0.5))
     requests.go_on(0)
     assert node.refused == {} and len(node.asked) == 1
+
+
+@pytest.mark.parametrize("wrong", [(0.0, 1.1), (0.0, -3.0), (0.0, float("nan")), (2.0, 0.0), (float("nan"), 0.0)])
+def test_a_velocity_that_it_could_not_stand_is_refused(wrong: tuple[float, float]) -> None:
+    """Faster than the limits, rolling or turning, or not finite: nothing is asked of the loop."""
+    node = Node()
+    BalanceRequests(node)  # type: ignore[arg-type]
+    message = TwistStamped()
+    message.twist.linear.x, message.twist.angular.z = wrong
+    node.callbacks["cmd_vel"](message)
+    assert "at most 1.5 m/s and 1 rad/s" in node.refused["cmd_vel"] and node.asked == []
+    message.twist.linear.x, message.twist.angular.z = 0.2, -1.0
+    node.callbacks["cmd_vel"](message)
+    assert node.refused == {} and node.asked == [(0.2, 0.0, -1.0)]
