@@ -71,7 +71,7 @@ class HandLoadEstimate:
     def load(self) -> Load:
         """The load as the mass model takes it: a point mass, and none where it can't be told from nothing."""
         held = self.mass > 2.0 * self.mass_error
-        return Load(self.hand, min(self.mass, self.limit) if held else 0.0, self.center)
+        return Load(self.hand, min(self.mass, self.limit), self.center) if held else Load(self.hand, 0.0)
 
 
 def good_enough(estimate: HandLoadEstimate, parameters: HandLoadParameters) -> bool:
@@ -243,7 +243,8 @@ class HandWeighing:
         unknown = self._hands[hand]
         k = 2 + _OF_HAND * self.hands.index(hand)
         mass, error = float(mean[k]), np.sqrt(np.maximum(np.diag(covariance)[k : k + _OF_HAND], 0.0))
-        scale = max(abs(mass), 1e-3)
+        # As in the prior: next to nothing has no centre that could be told.
+        scale = max(abs(mass), _LEAST_SCALE)
         return HandLoadEstimate(
             hand,
             max(mass, 0.0),

@@ -112,3 +112,21 @@ def test_an_estimate_is_used_by_its_standard_error_alone():
     assert good_enough(estimate(2.0, 0.1), GIVEN) and not good_enough(estimate(2.0, 0.11), GIVEN)
     assert not good_enough(estimate(2.0, 0.05, before=0.06), GIVEN)
     assert estimate(0.01, 0.02).load.mass == 0.0 and estimate(3.2, 0.02).load.mass == 3.0
+
+
+def test_an_empty_hand_makes_no_load_that_can_not_be():
+    """Something was put down, and nobody said so: what is found then, next to nothing, has no centre metres away. (Such
+    a load is refused by the mass model, in the middle of a tick.)
+    """
+    body, balance, rng, used = WholeBody(files().description), files().balance.hand_load, np.random.default_rng(0), 0
+    for _ in range(60):
+        weighing = HandWeighing(files().description, balance, [Load(HAND, 1.0, [0.0, 0.0, -0.05])])
+        weighing.open(HAND)
+        for _ in range(4):
+            position = rng.uniform(-0.8, 0.3, files().description.joint_count)
+            weighing.add(at_rest(body, position, np.zeros(2), rng.normal(0.0, 0.06, 2)))
+        found = weighing.estimate(HAND)
+        used += good_enough(found, balance)
+        found.load.check("found load", found.limit)
+        assert np.abs(found.center).max() < 0.5
+    assert used > 30
