@@ -95,7 +95,8 @@ def test_a_minute_beside_two_hogs(granted: bool, ros_domain_id: int, tmp_path: P
         with listening(ros_domain_id) as listener:
             heard = listener.record("/diagnostics")
             run = ballbal(*words, domain=ros_domain_id, first=None if granted else without_priority)
-            listener.wait(lambda: run.poll() is not None, 180.0, "the run's end")
+            # Simulated time stands still while it is kept waiting.
+            listener.wait(lambda: run.poll() is not None, 600.0, "the run's end")
             for status in [status for array in heard for status in array.status]:
                 told[status.name] = values_of(status)
     finally:
