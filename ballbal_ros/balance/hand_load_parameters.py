@@ -25,7 +25,7 @@ class HandLoadParameters:
         unit="N m",
         low=1e-3,
         high=1e2,
-        meaning="error of the moment read in one posture at rest, each axis: lean, rolling resistance, arms",
+        meaning="error of a moment read at rest, each axis: that of the lean, as slow as the attitude, times m g c_z",
     )
     rolling_moment: float = parameter(
         "double",
@@ -33,7 +33,7 @@ class HandLoadParameters:
         unit="N m",
         low=0.0,
         high=1e2,
-        meaning="moment with which the floor resists rolling: what a reading may be off by while the ball creeps",
+        meaning="moment with which the floor resists rolling; half of it counts as unknown while the ball creeps",
     )
     said_share: float = parameter(
         "double",

@@ -7,9 +7,15 @@ it is taken to be, e: how far it is from there), each posture gives two equation
 
     g S R μ(q) + b + g S R Σ_h [ (p_h + R_h a_h) m_h + R_h (m e)_h ] = noise,    S = [[0, -1, 0], [1, 0, 0]]
 
-for the masses m_h, the moments (m e)_h and b, what else is wrong or pulls, which is the same in all postures. Where
-the ball is not quite at rest, the moment that its mean acceleration takes is counted too. The unknown have priors: a
-load that was told is as told, but for a share of its mass; an unknown one is anything that the hand can hold.
+for the masses m_h, the moments (m e)_h and b, what else is wrong or pulls, which is the same in all postures. Ball and
+body are never quite at rest: the moment that their mean accelerations take is counted too, and that by which the floor
+resists a ball that creeps. The unknown have priors: a load that was told is as told, but for a share of its mass; an
+unknown one is anything that the hand can hold.
+
+The error of a reading has two parts. The lean's is slow: the attitude forgets it within its time constant, so that
+readings one after the other have it in common (a first-order Markov process), and is new in the next posture. That of
+the rolling resistance comes and goes with the ball's creeping: how stiff a floor is, is known by half (common practice,
+no source).
 """
 
 from __future__ import annotations
@@ -31,24 +37,26 @@ from ballbal_ros.robot.whole_body import WholeBody
 _LEVEL = np.array([[0.0, -1.0, 0.0], [1.0, 0.0, 0.0]])
 _OF_HAND = 4
 _LEAST_SCALE = 0.1
-# Speed at which rolling resistance is felt whole, m/s: a ball that rests sits in its dent (our own figure).
-_CREEP = 1e-3
-# Of a posture to the next: nearer ones have the lean's slow error in common, and count as one. That error's share of
-# the variance of a reading (our own figure, from readings of the simulated robot).
+# Of a posture to the next: nearer ones count as one.
 _SAME_POSTURE = 0.05
-_SLOW_SHARE = 0.5
+# So many readings of one posture tell of its lean; what further ones add, an IMU's slow drift takes away (our own
+# figure).
+_MOST = 10
+_ROLLING_SHARE = 0.5
 
 
 @attrs.frozen(eq=False)
 class Reading:
-    """The robot at rest in one posture: arm position [n]; mean lean [2], rad; mean acceleration of the ball [2], m/s²,
-    ``base_footprint`` axes, and its mean speed, m/s, which are small.
+    """The robot at rest in one posture, as means over about a second, in ``base_footprint`` axes: arm position [n];
+    lean [2], rad; accelerations of the ball [2], m/s², and of the lean [2], rad/s², which are small; and which way the
+    ball creeps [2], 1 where it rolls that way all the time, so that the floor's resistance is felt whole.
     """
 
     arm_position: Array
     lean: Array
     ball_acceleration: Array
-    speed: float = 0.0
+    lean_acceleration: Array = attrs.field(factory=lambda: np.zeros(2))
+    creep: Array = attrs.field(factory=lambda: np.zeros(2))
 
 
 @attrs.frozen(eq=False)
@@ -94,19 +102,57 @@ class _Unknown:
     center_deviation: float
 
 
+@attrs.define(eq=False)
+class _Rests:
+    """The readings of one posture: weighted mean of their ``design`` [2, n] and ``moment`` [2]; by axis the sum of
+    their weights [2], and what their rolling resistance adds to the variance, weighted [2].
+    """
+
+    arms: Array
+    design: Array
+    moment: Array
+    weight: Array
+    rolling: Array
+    count: int = 1
+
+    def take(self, other: _Rests) -> None:
+        """Take one more reading in."""
+        self.weight = self.weight + other.weight
+        share = (other.weight / self.weight)[:, None]
+        self.design = self.design + share * (other.design - self.design)
+        self.moment = self.moment + share[:, 0] * (other.moment - self.moment)
+        self.rolling = self.rolling + other.rolling
+        self.count += 1
+
+    def variance(self, lean: float, kept: float) -> Array:
+        """Of the mean, by axis [2]: ``lean`` is one reading's variance by the lean, of whose error the next one has
+        the share ``kept``, the one after that its square and so on.
+        """
+        n = min(self.count, _MOST)
+        common = ((1.0 + kept) / (1.0 - kept) - 2.0 * kept * (1.0 - kept**n) / (n * (1.0 - kept) ** 2)) / n
+        return np.asarray(lean * common + self.rolling / self.weight**2)
+
+
 class HandWeighing:
-    """Weighs what the hands hold; see the module. ``parameters`` as in balance.yaml's ``hand_load``."""
+    """Weighs what the hands hold; see the module. ``parameters`` as in balance.yaml's ``hand_load``; ``attitude_time``,
+    s: that within which the attitude forgets an error of the lean, a reading taking one second.
+    """
 
     def __init__(
-        self, description: RobotDescription, parameters: HandLoadParameters, loads: Iterable[Load] = ()
+        self,
+        description: RobotDescription,
+        parameters: HandLoadParameters,
+        loads: Iterable[Load] = (),
+        attitude_time: float = 3.0,
     ) -> None:
         self.parameters = parameters
+        self._kept = math.exp(-1.0 / attitude_time)
         self._body = WholeBody(description)
         self._radius, self._apparent = description.parameters.ball.radius, description.ball_apparent_mass
         self._most = description.parameters.hands.load_limit
         self.hands = self._body.hands
         self._moment, self._moment_covariance = np.zeros(2), parameters.body_moment**2 * np.eye(2)
-        self._readings: list[tuple[Array, Array, Array, float, float]] = []
+        self._readings: list[_Rests] = []
         self._hands: dict[str, _Unknown] = {}
         for hand in self.hands:
             self._hands[hand] = self._told(Load(hand, 0.0))
@@ -146,19 +192,12 @@ class HandWeighing:
             self._readings.clear()
 
     def add(self, reading: Reading) -> None:
-        """Take a reading in. Those of one posture count as their weighted mean, its variance no less than half of what
-        the best single reading has: part of the error is slow, and the same in all.
-        """
-        made = (reading.arm_position.copy(), *self._equations(reading))
-        if self._readings and float(np.abs(made[0] - self._readings[-1][0]).max()) < _SAME_POSTURE:
-            arms, design, moment, _, weight = self._readings.pop()
-            share = 1.0 / (1.0 + weight * made[3])
-            design, moment = design + share * (made[1] - design), moment + share * (made[2] - moment)
-            weight += 1.0 / made[3]
-            least = _SLOW_SHARE * self.parameters.reading_noise**2
-            self._readings.append((arms, design, moment, max(1.0 / weight, least), weight))
-            return
-        self._readings.append((*made, 1.0 / made[3]))
+        """Take a reading in. Those of one posture, one after the other, count as their weighted mean."""
+        made = self._equations(reading)
+        if self._readings and float(np.abs(made.arms - self._readings[-1].arms).max()) < _SAME_POSTURE:
+            self._readings[-1].take(made)
+        else:
+            self._readings.append(made)
 
     def missing_moment(self, reading: Reading) -> Array:
         """What pulls or is in the hands, as a moment about the contact [2] (roll, pitch), N m."""
@@ -167,7 +206,14 @@ class HandWeighing:
         mu = turn @ (posture.mass * posture.center)
         lever = float(mu[2]) + self._radius * (posture.mass + self._apparent)
         x, y = reading.ball_acceleration.tolist()
-        return -GRAVITY * (_LEVEL @ mu) + lever * np.array([-y, x])
+        inertia = posture.inertia_about_ball[:2, :2] + self._radius * float(mu[2]) * np.eye(2)
+        moving = lever * np.array([-y, x]) + inertia @ reading.lean_acceleration
+        return -GRAVITY * (_LEVEL @ mu) + moving - self._resistance(reading)
+
+    def _resistance(self, reading: Reading) -> Array:
+        """Moment [2], N m, by which the floor resists the ball's creeping."""
+        x, y = reading.creep.tolist()
+        return self.parameters.rolling_moment * np.array([y, -x])
 
     def lever(self, reading: Reading, hand: str) -> Array:
         """Moment about the contact [2, 4], N m, by a load's mass, kg, where its centre is taken to be, and by its mass
@@ -178,23 +224,24 @@ class HandWeighing:
         at = self._hands[hand].at
         return GRAVITY * _LEVEL @ turn @ np.column_stack((place + hand_turn @ at, hand_turn))
 
-    def _equations(self, reading: Reading) -> tuple[Array, Array, float]:
-        """Design [2, n], moment [2] and its variance. A ball that creeps is held back by the floor."""
+    def _equations(self, reading: Reading) -> _Rests:
         columns = [np.eye(2), *(self.lever(reading, hand) for hand in self.hands)]
-        given = self.parameters
-        held_back = given.rolling_moment * min(1.0, reading.speed / _CREEP)
-        return np.hstack(columns), self.missing_moment(reading), given.reading_noise**2 + held_back**2
+        rolling = (_ROLLING_SHARE * self._resistance(reading)) ** 2
+        weight = 1.0 / (self.parameters.reading_noise**2 + rolling)
+        arms, moment = reading.arm_position.copy(), self.missing_moment(reading)
+        return _Rests(arms, np.hstack(columns), moment, weight, weight**2 * rolling)
 
     def _solve(self) -> tuple[Array, Array]:
         """Mean and covariance of [b; (m, m e) of each hand]; twice, as the prior of m e scales with m."""
         size = 2 + _OF_HAND * len(self.hands)
         mean, covariance = np.zeros(size), np.zeros((size, size))
         masses = [unknown.mass for unknown in self._hands.values()]
+        lean, kept = self.parameters.reading_noise**2, self._kept
         for _ in range(3):
             prior, spread = self._prior(masses)
-            design = np.vstack([reading[1] for reading in self._readings]) if self._readings else np.zeros((0, size))
-            seen = np.concatenate([reading[2] for reading in self._readings]) if self._readings else np.zeros(0)
-            noise = np.diag(np.repeat([reading[3] for reading in self._readings], 2))
+            design = np.vstack([np.zeros((0, size)), *(rests.design for rests in self._readings)])
+            seen = np.concatenate([np.zeros(0), *(rests.moment for rests in self._readings)])
+            noise = np.diag(np.concatenate([np.zeros(0), *(rests.variance(lean, kept) for rests in self._readings)]))
             gain = np.linalg.solve(design @ spread @ design.T + noise, design @ spread).T
             mean, covariance = prior + gain @ (seen - design @ prior), spread - gain @ design @ spread
             masses = mean[2::_OF_HAND].tolist()
@@ -227,7 +274,7 @@ class HandWeighing:
                 k = _OF_HAND * index
                 off[k] -= held.mass
                 off[k + 1 : k + _OF_HAND] -= held.mass * (held.center - self._hands[hand].at)
-        design = self._readings[-1][1][:, 2:]
+        design = self._readings[-1].design[:, 2:]
         moment = design @ off
         spread = design @ covariance[2:, 2:] @ design.T + 1e-6 * np.eye(2)
         return float(moment @ np.linalg.solve(spread, moment))

@@ -13,6 +13,7 @@ from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.weighing.hand_load import HandLoadEstimate, HandWeighing, Reading, good_enough
+from ballbal_ros.weighing.resting import resting
 
 EVERY = 0.02
 """How often the watch wants to look, s."""
@@ -50,7 +51,8 @@ class StandingWatch:
     def __init__(self, loop: BalanceLoop) -> None:
         self._loop = loop
         self._given = loop.parameters.hand_load
-        self.weighing = HandWeighing(loop.description, self._given, loop.body.loads.values())
+        time = loop.parameters.attitude_time
+        self.weighing = HandWeighing(loop.description, self._given, loop.body.loads.values(), time)
         self.estimates: dict[str, HandLoadEstimate] = {}
         self.events: list[HandEvent] = []
         self.readings = 0
@@ -62,9 +64,7 @@ class StandingWatch:
         self._begin()
 
     def _begin(self) -> None:
-        self._count = 0
-        self._lean = np.zeros(2)
-        self._places: list[tuple[float, float]] = []
+        self._looks: list[tuple[float, ...]] = []
 
     def see(self, now: float) -> tuple[Load, ...]:
         """Look at the loop at ``now``, s; the loads that were found and are good enough to be used from now on."""
@@ -82,25 +82,12 @@ class StandingWatch:
         if not rests or math.hypot(vx, vy) > _REST_SPEED or math.hypot(roll_rate, pitch_rate) > _REST_LEAN_RATE:
             self._begin()
             return ()
-        if self._count % (_LOOKS // 2) == 0:
-            self._places.append((ball.x, ball.y))
-        self._count += 1
-        self._lean += loop.lean
-        if self._count <= _LOOKS:
+        self._looks.append((now, *loop.lean, ball.x, ball.y, ball.vx, ball.vy))
+        if len(self._looks) <= _LOOKS:
             return ()
-        reading = self._reading()
+        reading = resting(self._arms.copy(), np.array(self._looks), loop.heading)
         self._begin()
         return self._take(now, reading)
-
-    def _reading(self) -> Reading:
-        """From the window's mean lean, and from where the ball was at its beginning, middle and end."""
-        first, middle, last = (np.array(place) for place in self._places)
-        half = 0.5 * EVERY * _LOOKS
-        sin, cos = math.sin(self._loop.heading), math.cos(self._loop.heading)
-        x, y = ((last - 2.0 * middle + first) / half**2).tolist()
-        acceleration = np.array((cos * x + sin * y, cos * y - sin * x))
-        speed = float(np.hypot(*(last - first))) / (2.0 * half)
-        return Reading(self._arms.copy(), self._lean / self._count, acceleration, speed)
 
     def _planned_at_rest(self) -> bool:
         """Whether no plan leans the body just now, before the arms begin or after they have come to rest."""

@@ -5,6 +5,7 @@ from __future__ import annotations
 import attrs
 import numpy as np
 import pytest
+from scipy.linalg import solve_discrete_are, solve_discrete_lyapunov
 
 from ballbal_ros.balance.hand_load_parameters import HandLoadParameters
 from ballbal_ros.robot.arrays import Array
@@ -66,6 +67,59 @@ def test_the_standard_error_is_honest(mass: float):
     within = sum(abs(each.mass - mass) <= 1.96 * each.mass_error for each in found)
     assert 90 <= within <= 99
     assert all(each.mass_error <= 0.06 for each in found)
+
+
+def test_the_noise_of_a_reading_is_what_the_attitude_leaves():
+    """shelver's ``reading_noise`` within 5 %: the stationary error of the attitude's two-state Kalman filter (lean and
+    gyro bias), whose gains reckon with balance.yaml's noise while gyro and accelerometer have simulation.yaml's
+    (discrete Riccati and Lyapunov equations, SciPy), times m g c_z; and that of the lean's acceleration under Hann's
+    window of T = 1 s, √(2 π² / T³) of the gyro's density, times the inertia about the contact.
+    """
+    given, imu, body = files().balance, files().simulation.imu, WholeBody(files().description)
+    period = given.loop.period
+    density = given.estimator.rate_noise * np.sqrt(period)
+    step, see = np.array([[1.0, -period], [0.0, 1.0]]), np.array([[1.0, 0.0]])
+    growth = np.diag([density**2 * period, given.estimator.rate_walk**2 * period])
+    noise = (density * given.attitude_time) ** 2 / period
+    known = solve_discrete_are(step.T, see.T, growth, [[noise]])
+    gain = known @ see.T / (known[0, 0] + noise)
+    left = np.eye(2) - gain @ see
+    true = left @ np.diag([imu.gyro_noise**2 * period, imu.gyro_walk**2 * period]) @ left.T
+    true += gain @ gain.T * (imu.accelerometer_noise / GRAVITY) ** 2 / period
+    lean = np.sqrt(solve_discrete_lyapunov(left @ step, true)[0, 0])
+    at = body.posture(posture(*POSES[0]))
+    inertia = at.inertia_about_ball[1, 1] + files().description.parameters.ball.radius * at.mass * at.center[2]
+    by_lean = lean * GRAVITY * at.mass * at.center[2]
+    by_acceleration = imu.gyro_noise * np.sqrt(2.0 * np.pi**2) * inertia
+    assert given.hand_load.reading_noise == pytest.approx(np.hypot(by_lean, by_acceleration), rel=0.05)
+
+
+def test_readings_of_one_posture_count_for_what_they_add():
+    """Four readings in each of three postures, a second apart: the attitude forgets their common error within 3 s, and
+    the ball creeps on a floor that is known by half. The errors are as large as the covariance says (300 draws;
+    root mean square of both, 10 %), and less than with one reading each.
+    """
+    random = np.random.default_rng(5)
+    body, kept = WholeBody(files().description), np.exp(-1.0 / 3.0)
+    rests = [at_rest(body, posture(*pose), np.zeros(2), np.zeros(2)) for pose in POSES]
+    slope = [GRAVITY * at.mass * at.center[2] for at in (body.posture(rest.arm_position) for rest in rests)]
+    errors, said = [], []
+    for _ in range(300):
+        weighing = HandWeighing(files().description, GIVEN, attitude_time=3.0)
+        resists = GIVEN.rolling_moment * (1.0 + 0.5 * random.standard_normal())
+        for rest, by_lean in zip(rests, slope):
+            slow = random.standard_normal(2)
+            for _ in range(4):
+                creep = random.uniform(-0.4, 0.4, 2)
+                moment = GIVEN.reading_noise * slow + resists * np.array([creep[1], -creep[0]])
+                weighing.add(attrs.evolve(rest, lean=rest.lean - moment / by_lean, creep=creep))
+                slow = kept * slow + np.sqrt(1.0 - kept**2) * random.standard_normal(2)
+        moment, error = weighing.outside_moment()
+        errors.append(moment)
+        said.append(error)
+    measured = float(np.sqrt(np.mean(np.square(errors))))
+    assert measured == pytest.approx(float(np.sqrt(np.mean(np.square(said)))), rel=0.1)
+    assert measured < 0.9 * GIVEN.reading_noise / np.sqrt(3.0)
 
 
 def test_a_hand_calculation_of_one_kilogram():

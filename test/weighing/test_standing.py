@@ -2,14 +2,21 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Iterable
 from pathlib import Path
+from xml.etree import ElementTree
 
+import attrs
 import numpy as np
 import pytest
 
+from ballbal_ros.robot.balance_rows import GRAVITY
 from ballbal_ros.simulation.rehearsal import Rehearsal, plan_story
 from ballbal_ros.simulation.timeline import Timeline
-from ballbal_ros.weighing.standing import PULLED, TAKEN
+from ballbal_ros.simulation.truth import parse_truth
+from ballbal_ros.weighing.hand_load import HandLoadEstimate
+from ballbal_ros.weighing.standing import TAKEN
 from helpers.rehearsing import files, story, story_of
 
 POSTURE = (
@@ -26,14 +33,14 @@ MOVES = """
 """
 
 
-def taken(mass: float, center: list[float], folder: Path, seed: int, moves: str = MOVES) -> Rehearsal:
+def taken(mass: float, center: list[float], folder: Path, seed: int, truth: Iterable[str] = ()) -> Rehearsal:
     """A load is put into the left hand, and nobody says so; then the arm goes to two more postures."""
     load = f"{{hand: left_hand, mass: {mass}, center: {center}, announced: false}}"
-    text = f"start: {{posture: {POSTURE}}}\nsteps:\n - wait: 3.0\n - load: {load}\n - wait: 6.0\n{moves}"
+    text = f"start: {{posture: {POSTURE}}}\nsteps:\n - wait: 3.0\n - load: {load}\n - wait: 6.0\n{MOVES}"
     told = story_of(text, folder)
     timeline = Timeline.of(told, files().compensation)
     plan = plan_story(files(), told, timeline) if told.planned else None
-    run = Rehearsal(files(), told, "planned", timeline, plan, seed)
+    run = Rehearsal(files(), told, "planned", timeline, plan, seed, parse_truth(truth, files().description))
     result, _ = run.run()
     assert not result.fell
     return run
@@ -76,20 +83,62 @@ def test_a_load_found_goes_from_the_trim_to_the_model_without_a_jump():
     assert loop.outside_moment[1] - moment == pytest.approx(-0.1 * 9.19, abs=0.05)
 
 
-@pytest.mark.prove
-@pytest.mark.parametrize("mass", [0.2, 0.5, 1.0, 2.0, 3.0])
-def test_any_load_is_weighed_within_three_postures_over_twenty_seeds(mass: float, tmp_path: Path):
-    """0.2 to 3 kg, their centres anywhere in the hand: within 30 g or 3 % (nine tenths of them; a tenth more all), and
-    the standard error covers the truth in 90 to 99 of 100.
+@attrs.frozen
+class Weighed:
+    """A load of ``mass`` kg, and what was found."""
+
+    mass: float
+    found: HandLoadEstimate
+
+    @property
+    def off(self) -> float:
+        """Error over what is allowed: 30 g or 3 %, whichever is more."""
+        return abs(self.found.mass - self.mass) / max(0.03, 0.03 * self.mass)
+
+    @property
+    def covered(self) -> bool:
+        """Whether the truth is within 1.96 standard errors: 95 % of a normal distribution."""
+        return abs(self.found.mass - self.mass) <= 1.96 * self.found.mass_error
+
+
+def drawn(seed: int, folder: Path) -> Weighed:
+    """All that the robot doesn't know is drawn from what it takes it for: a mass of 0.2 to 3 kg with its centre
+    ``unknown_center`` from the hand's origin, a body that is off by ``body_moment``, and a floor that is harder or
+    softer than ``rolling_moment`` by half (negative: none).
     """
-    errors, within = [], []
-    for seed in range(20):
-        center = (0.03 * np.random.default_rng(seed).standard_normal(3)).round(4).tolist()
-        run = taken(mass, center, tmp_path, seed)
-        found = run.watch.estimates["left_hand"]
-        assert PULLED not in [event.what for event in run.watch.events]
-        errors.append(abs(found.mass - mass))
-        within.append(errors[-1] <= 1.96 * found.mass_error)
-    most = max(0.03, 0.03 * mass)
-    assert np.quantile(errors, 0.9) <= most and max(errors) <= 2.0 * most
-    assert sum(within) >= 18
+    random, given = np.random.default_rng([seed, 0x3001]), files().balance.hand_load
+    mass = round(float(random.uniform(0.2, 3.0)), 3)
+    center = (given.unknown_center * random.standard_normal(3)).round(4).tolist()
+    roll, pitch = (given.body_moment * random.standard_normal(2)).tolist()
+    description = files().description
+    link = ElementTree.fromstring(description.urdf_text).find("link[@name='base_link']/inertial/mass")
+    base = float(link.get("value")) if link is not None else math.nan
+    weight = GRAVITY * (sum(inertia.mass for inertia in description.model.inertias) + description.parameters.ball.mass)
+    resistance = given.rolling_moment * max(0.0, 1.0 + 0.5 * float(random.standard_normal()))
+    off = f"base_link.center={pitch / GRAVITY / base:.6f},{-roll / GRAVITY / base:.6f},0"
+    floor = f"floor.rolling_resistance={resistance / weight / description.parameters.ball.radius:.6f}"
+    run = taken(mass, center, folder, seed, (off, floor))
+    assert [(event.what, event.hand) for event in run.watch.events] == [(TAKEN, "left_hand")]
+    assert run.watch.estimates["left_hand"].postures == 3
+    return Weighed(mass, run.watch.estimates["left_hand"])
+
+
+def test_any_load_is_weighed_within_three_postures(tmp_path: Path):
+    """Two seeds beside those of the campaign below: within 30 g or 3 %, and within three standard errors."""
+    for seed in (300, 301):
+        weighed = drawn(seed, tmp_path)
+        assert weighed.off <= 1.0
+        assert abs(weighed.found.mass - weighed.mass) <= 3.0 * weighed.found.mass_error
+
+
+@pytest.mark.prove
+def test_any_load_is_weighed_within_three_postures_over_a_hundred_seeds(tmp_path: Path):
+    """0.2 to 3 kg: within 30 g or 3 % in 95 of 100 and more, none further than half as much again; the standard error
+    covers the truth in 90 to 99 of 100; on average they are off by less than 0.4 standard errors, and by less than 8 g.
+    """
+    weighed = [drawn(seed, tmp_path) for seed in range(100)]
+    assert sum(each.off <= 1.0 for each in weighed) >= 95 and max(each.off for each in weighed) <= 1.5
+    assert 90 <= sum(each.covered for each in weighed) <= 99
+    errors = np.array([each.found.mass - each.mass for each in weighed])
+    scaled = errors / np.array([each.found.mass_error for each in weighed])
+    assert abs(scaled.mean()) < 0.4 and abs(errors.mean()) < 0.008
