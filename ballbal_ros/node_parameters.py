@@ -63,6 +63,12 @@ class ArmCompensationNodeParameters(DescriptionParameters):
         meaning="file that keeps what is under way, for the node that is started anew; empty: "
         "motion_<ROS domain><namespace>.json in ballbal_ros/<robot> of XDG_STATE_HOME (~/.local/state)",
     )
+    learned: str = parameter(
+        "string",
+        "",
+        unit="-",
+        meaning="file of what runs of a plan have taught, or folder of such (*.learned.yaml); empty: none is used",
+    )
 
 
 @attrs.frozen(kw_only=True)

@@ -191,9 +191,13 @@ class Bus:
         self.wait_for("a plan_report", lambda: self.report is not None)
         if self.report.level != OK:
             raise RunFailed(f"the plan was refused: {self.report.message}")
-        heard = values_of(self.report).get("load changes")
+        heard = self.reported("load changes")
         if heard != str(self._told):
             raise RunFailed(f"arm_compensation planned with {heard} of {self._told} hand_load: the bus lost some")
+
+    def reported(self, key: str) -> str:
+        """What the report on the arm plan says of something; "" for nothing."""
+        return "" if self.report is None else values_of(self.report).get(key, "")
 
     def place(self) -> tuple[float, float, float]:
         """(time, x, y) of the newest true ball centre; zeros before the first."""

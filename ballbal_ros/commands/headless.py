@@ -19,9 +19,13 @@ from ballbal_ros.commands.files import read_robot, write_json
 from ballbal_ros.commands.limits import planned_limits
 from ballbal_ros.commands.rehearse import asked_kinds
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.story import read_story
+from ballbal_ros.motion.lean_plan import LeanPlan
+from ballbal_ros.motion.learned_file import read_learned
+from ballbal_ros.motion.plan_mark import plan_mark
+from ballbal_ros.motion.repetition import Learned
+from ballbal_ros.motion.story import Story, read_story
 from ballbal_ros.report.run_table import print_runs
-from ballbal_ros.simulation.rehearsal import plan_story
+from ballbal_ros.simulation.rehearsal import RobotFiles, plan_story, request_of
 from ballbal_ros.simulation.run_result import KINDS, RunResult, RunSet
 from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import parse_truth
@@ -42,8 +46,10 @@ def headless(
     namespace: str = "",
     domain: int | None = None,
     console: Console | None = None,
+    learned: Path | None = None,
 ) -> RunSet:
-    """Run a plan file through the stack. Everything is checked, and planned once, before anything starts.
+    """Run a plan file through the stack. Everything is checked, and planned once, before anything starts. ``learned``:
+    the file of what rehearsals of the plan have taught, which ``arm_compensation`` plans with.
 
     Raises :class:`BallbalError` for wrong input or a refused plan, :class:`~ballbal_ros.commands.processes.RunFailed`
     for a run that did not come to its end.
@@ -57,7 +63,8 @@ def headless(
     story = read_story(plan, files.description)
     parse_truth(truth, files.description)
     timeline = Timeline.of(story, files.compensation, lead_in, bool(truth))
-    lean_plan = plan_story(files, story, timeline) if "planned" in kinds and story.planned else None
+    known = None if learned is None else read_learned(learned)
+    lean_plan = planned_once(files, story, timeline, known) if "planned" in kinds and story.planned else None
     results: list[RunResult] = []
     notes: list[str] = []
     with own_domain(domain) as number, interruptible(), _progress(console, timeline.end) as (progress, task):
@@ -74,6 +81,7 @@ def headless(
             domain=number,
             rate=files.balance.loop.rate,
             timeout=_TIMEOUT,
+            learned=learned,
         )
         for kind in kinds:
             for seed in seeds:
@@ -87,6 +95,12 @@ def headless(
                 notes += run.notes
     limits = planned_limits(results, files, lean_plan)
     return RunSet(files.description.name, story.name, clock, tuple(results), limits, tuple(notes))
+
+
+def planned_once(files: RobotFiles, story: Story, timeline: Timeline, known: Learned | None) -> LeanPlan:
+    """The lean plan that ``arm_compensation`` will make, with what is ``known`` from runs where it fits."""
+    mark = plan_mark(files.description, story.start_loads, request_of(files, story, timeline), files.compensation)
+    return plan_story(files, story, timeline, learned=known if known is not None and known.mark == mark else None)
 
 
 def _check_can_run(clock: str) -> None:
@@ -130,6 +144,10 @@ def headless_command(
         Optional[int], typer.Option("--domain", min=0, help="ROS domain; ROS_DOMAIN_ID, or one of its own, without it.")
     ] = None,
     json_file: options.Json = None,
+    learned: Annotated[
+        Optional[Path],
+        typer.Option("--learned", help="Plan with what rehearsals have taught (rehearse --learn); a file."),
+    ] = None,
 ) -> None:
     """Run a plan by the whole stack, without a robot: the nodes start as processes and meet a simulated robot, on this
     machine only.
@@ -153,6 +171,7 @@ def headless_command(
             namespace,
             domain,
             console,
+            learned,
         )
     except RunFailed as error:
         print(f"ballbal headless: {error}", file=sys.stderr)

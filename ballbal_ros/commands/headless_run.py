@@ -32,7 +32,7 @@ _HELD = 0.01
 @attrs.frozen(eq=False, kw_only=True)
 class HeadlessSetup:
     """What all runs of one call share. ``rate``: of the loop, Hz; ``timeout``: wall time for which anybody may stay
-    silent, s.
+    silent, s; ``learned``: file of what rehearsals have taught.
     """
 
     folder: RobotFolder
@@ -47,6 +47,7 @@ class HeadlessSetup:
     domain: int
     rate: float
     timeout: float
+    learned: Path | None = None
 
 
 @attrs.frozen
@@ -99,6 +100,8 @@ class HeadlessRun:
             if self.moves:
                 bus.send_story(setup.story, setup.timeline, setup.description.joint_names)
                 bus.wait_for_report()
+                if setup.learned is not None and self.kind == "planned":
+                    self.notes.append(f"planned, seed {self.seed}: learnt before: {bus.reported('learned')}")
             began, from_time = time.monotonic(), bus.place()[0]
             self._follow(processes, bus, show)
             took = time.monotonic() - began
@@ -144,6 +147,8 @@ class HeadlessRun:
                 node = node.with_parameters(compensation=way)
             elif node.executable == "arm_compensation":
                 node = node.with_parameters(compensation=way, planner__lead_in=timeline.lead_in)
+                if setup.learned is not None:
+                    node = node.with_parameters(learned=str(setup.learned.resolve()))
             elif node.executable == "whole_body_kinematics":
                 node = node.with_parameters(rate=_KINEMATICS_RATE)
             # On two cores the loop, from simulated robot to balance and back, goes before all that only listens.

@@ -18,6 +18,7 @@ from ballbal_ros.motion.plan_request import BallMotion, HandWrench, PlanRequest
 from ballbal_ros.motion.pulls import joined
 from ballbal_ros.motion.spline import ArmPath, FollowedPath, JointPath, check_path
 from ballbal_ros.motion.stopping import Handover, Later, Motion, Spliced, stop_path
+from ballbal_ros.motion.taught import LearnedBy, taught
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load, LoadChanges
@@ -62,7 +63,7 @@ class Wanted:
 class Proposal:
     """A motion ready to go: the arms' path from ``arms_start``, s, on, and the lean plan from ``lean_start`` on (or
     none). ``wrenches``: what the world is then planned to exert on the hands, their times as ours. ``request``: what
-    the lean plan answers.
+    the lean plan answers. ``learned``: what runs before have taught it, in words, or why nothing; "" for nothing known.
     """
 
     lean_start: float
@@ -73,6 +74,7 @@ class Proposal:
     command_start: float
     wrenches: Sequence[HandWrench] = ()
     request: PlanRequest | None = None
+    learned: str = ""
 
     @property
     def end(self) -> float:
@@ -86,23 +88,26 @@ class ArmSchedule:
     A motion becomes the one in force by :meth:`accept` only; a refused one leaves all as it was.
     """
 
-    def __init__(self, description: RobotDescription, parameters: CompensationParameters) -> None:
-        self.description, self.parameters = description, parameters
-        self._loads = LoadChanges()
+    def __init__(
+        self, description: RobotDescription, parameters: CompensationParameters, learned: LearnedBy | None = None
+    ) -> None:
+        """``learned``: where to ask what runs of a plan have taught."""
+        self.description, self.parameters, self._learned = description, parameters, learned
+        # What the robot found by itself is in the one, and not in the other.
+        self._loads, self._told = LoadChanges(), LoadChanges()
         self._motion: Proposal | None = None
         self._standing: Sequence[HandWrench] = ()
-        self._found = 0
 
     def set_load(self, stamp: float, load: Load, now: float = -math.inf) -> None:
         """A hand's load from ``stamp``, s, on; raises :class:`BallbalError` where too many come after ``now``."""
         self._loads.add(stamp, load, now)
+        self._told.add(stamp, load, now)
 
     def find_load(self, stamp: float, load: Load, now: float = -math.inf) -> None:
         """What the robot itself found in a hand, and believes from ``stamp``, s, on; nobody told it so. Raises as
         :meth:`set_load` does.
         """
-        self.set_load(stamp, load, now)
-        self._found += 1
+        self._loads.add(stamp, load, now)
 
     def forget_wrenches(self) -> None:
         """Nothing pulls at a hand any more, for plans to come."""
@@ -120,7 +125,7 @@ class ArmSchedule:
     @property
     def load_changes(self) -> int:
         """How many load changes it has been told of."""
-        return self._loads.count - self._found
+        return self._told.count
 
     @property
     def idle(self) -> bool:
@@ -207,7 +212,8 @@ class ArmSchedule:
         if start < now + self.parameters.planner.allowance:
             return None
         request = attrs.evolve(motion.request, loads=self._loads_after(start))
-        return attrs.evolve(motion, plan=self._answer(request, start, motion.arms_start, _TOPIC), request=request)
+        plan, learned = self._answer(request, start, motion.arms_start, _TOPIC)
+        return attrs.evolve(motion, plan=plan, request=request, learned=learned)
 
     def accept(self, proposal: Proposal) -> None:
         """Take a proposal as the motion in force."""
@@ -239,14 +245,14 @@ class ArmSchedule:
 
     def _propose(self, lean_start: float, arms_start: float, path: ArmPath, wanted: Wanted | None) -> Proposal:
         command, command_start = self._commanded(lean_start, arms_start, path)
-        plan = request = None
+        plan, request, learned = None, None, ""
         coming = () if wanted is None else wanted.wrenches
         coming = [attrs.evolve(wrench, times=wrench.times + arms_start) for wrench in coming]
         wrenches = joined(self._standing, coming, lean_start)
         if self.parameters.compensation == "planned":
             request = self._request(lean_start, arms_start, (command, command_start), wanted, wrenches)
-            plan = self._answer(request, lean_start, arms_start, _TOPIC if wanted is not None else "stop")
-        return Proposal(lean_start, arms_start, path, plan, command, command_start, wrenches, request)
+            plan, learned = self._answer(request, lean_start, arms_start, _TOPIC if wanted is not None else "stop")
+        return Proposal(lean_start, arms_start, path, plan, command, command_start, wrenches, request, learned)
 
     def _request(
         self,
@@ -276,12 +282,19 @@ class ArmSchedule:
     def _loads_after(self, start: float) -> list[tuple[float, Load]]:
         return [(stamp - start, load) for stamp, load in self._loads.after(start + _SOON)]
 
-    def _answer(self, request: PlanRequest, lean_start: float, arms_start: float, topic: str) -> LeanPlan:
-        """The lean plan for a request, with what the hands hold at its start; refused beyond the limits."""
-        body = WholeBody(self.description, self._loads.held_at(lean_start + _SOON))
-        plan = plan_lean(body, request, self.parameters)
-        plan.refuse_beyond_limits(topic)
-        return attrs.evolve(plan, ball=plan.ball - plan.ball[0], lead_in=arms_start - lean_start)
+    def _answer(self, request: PlanRequest, lean_start: float, arms_start: float, topic: str) -> tuple[LeanPlan, str]:
+        """The lean plan for a request, with what the hands hold at its start and what runs before have taught, and the
+        latter in words; refused beyond the limits.
+        """
+        now, words = lean_start + _SOON, ""
+        body = WholeBody(self.description, self._loads.held_at(now))
+        plan, better = plan_lean(body, request, self.parameters), None
+        if self._learned is not None:
+            better, words = taught(self._learned, body, request, plan, self._told, now, self.parameters)
+        if better is None:
+            plan.refuse_beyond_limits(topic)
+        plan = better or plan
+        return attrs.evolve(plan, ball=plan.ball - plan.ball[0], lead_in=arms_start - lean_start), words
 
     def _handover(self, time: float) -> Handover | None:
         motion = self._motion

@@ -14,22 +14,17 @@ loads or plan change.
 
 from __future__ import annotations
 
-import hashlib
-import json
-from collections.abc import Iterable
-
 import attrs
 import numpy as np
 from scipy.signal import savgol_filter
 
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.lean_planner import outside_motion, terms_along
+from ballbal_ros.motion.lean_planner import outside_motion, plan_lean, terms_along
 from ballbal_ros.motion.parameters import CompensationParameters
+from ballbal_ros.motion.plan_mark import PlanMark
 from ballbal_ros.motion.plan_request import OutsideMoment, PlanRequest
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.balance_rows import balance_rows
-from ballbal_ros.robot.description import RobotDescription
-from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
 
 _WINDOW, _ORDER = 0.2, 3
@@ -59,34 +54,20 @@ class Record:
 @attrs.frozen(eq=False)
 class Learned:
     """What ``runs`` of a plan have taught: every ``step`` s from the plan's start the couple [N, 2] (roll, pitch), N m,
-    that comes to what pulled before the arms began, and the drive torque [N, 2] that the model lacks. ``fits`` is the
-    mark of model, loads and plan that it holds for.
+    that comes to what pulled before the arms began, and the drive torque [N, 2] that the model lacks. ``mark``: of the
+    plan that it holds for.
     """
 
-    fits: str
+    mark: PlanMark
     runs: int
     step: float
     moment: Array
     torque: Array
 
-    def outside_moment(self) -> OutsideMoment:
-        """As the planner takes it."""
-        return OutsideMoment(self.step * np.arange(len(self.moment), dtype=float), self.moment, self.torque)
-
-
-def fingerprint(
-    description: RobotDescription, loads: Iterable[Load], request: PlanRequest, parameters: CompensationParameters
-) -> str:
-    """The mark of what a plan is made of: model, loads, motion and grid. Whatever of it changes, the mark does too."""
-    arms = request.arms.sample(np.arange(0.0, request.arms.duration + 0.05, 0.05))[0]
-    held = [(x.hand, x.mass, x.center.tolist(), x.inertia.tolist()) for x in loads]
-    changes = [(when, x.hand, x.mass, x.center.tolist()) for when, x in request.loads]
-    pulls = [(w.hand, w.times.tolist(), w.force.tolist(), w.moment.tolist()) for w in request.wrenches]
-    ball = None if request.ball is None else (request.ball.times.tolist(), request.ball.position.tolist())
-    robot = attrs.asdict(description.parameters)
-    plan = (arms.round(6).tolist(), request.lead_in, parameters.planner.step, parameters.planner.tail)
-    text = json.dumps([description.urdf_text, robot, sorted(held), changes, pulls, ball, plan], default=str)
-    return hashlib.sha256(text.encode()).hexdigest()[:16]
+    def outside_moment(self, most: float) -> OutsideMoment:
+        """As the planner takes it, nothing of it beyond ``most``, N m."""
+        moment, torque = (np.clip(each, -most, most) for each in (self.moment, self.torque))
+        return OutsideMoment(self.step * np.arange(len(moment), dtype=float), moment, torque)
 
 
 def lacking_along(
@@ -130,7 +111,7 @@ def lacking_in_run(body: WholeBody, request: PlanRequest, plan: LeanPlan, record
 
 def learn(
     before: Learned | None,
-    fits: str,
+    mark: PlanMark,
     lacking: tuple[Array, Array],
     request: PlanRequest,
     parameters: CompensationParameters,
@@ -144,12 +125,12 @@ def learn(
     settings, step = parameters.repetition, parameters.planner.step
     new = [_change(each, request, step, held) for each, held in zip(lacking, (1.0, 0.0))]
     runs = 1
-    if before is not None and before.fits == fits and len(before.moment) == len(new[0]):
+    if before is not None and before.mark == mark and len(before.moment) == len(new[0]):
         runs = before.runs + 1
         share = max(1.0 / runs, settings.newest)
         new = [old + share * (each - old) for old, each in zip((before.moment, before.torque), new)]
     moment, torque = (np.clip(each, -settings.moment, settings.moment).round(_DECIMALS) for each in new)
-    return Learned(fits, runs, step, moment, torque)
+    return Learned(mark, runs, step, moment, torque)
 
 
 def _change(values: Array, request: PlanRequest, step: float, held: float) -> Array:
@@ -163,15 +144,34 @@ def _change(values: Array, request: PlanRequest, step: float, held: float) -> Ar
     return np.asarray(into * ((1.0 - out) * change + out * rest))
 
 
-def still_to_lean_for(
-    learned: Learned, said: WholeBody, body: WholeBody, request: PlanRequest, plan: LeanPlan
-) -> OutsideMoment:
-    """What is left of what was learnt for a ``body`` that by now believes to hold other loads than were ``said`` when
-    it was learnt: ``plan`` is its plan without.
+def plan_with_learned(
+    learned: Learned,
+    said: WholeBody,
+    body: WholeBody,
+    request: PlanRequest,
+    plan: LeanPlan,
+    parameters: CompensationParameters,
+) -> LeanPlan:
+    """The plan for a request with what runs before have taught, for a ``body`` that by now may believe to hold other
+    loads than were ``said`` when it was learnt: ``plan`` is its plan without. Within ``repetition.moment``.
     """
-    motion = plan.times, plan.lean, (plan.lean_rate, plan.lean_acceleration), plan.ball_acceleration
-    explained, by_said = lacking_along(said, request, *motion)
-    _, by_believed = lacking_along(body, request, *motion)
-    moment, torque = learned.outside_moment().at(plan.times)
-    moment, torque = moment - explained, torque + by_said - by_believed
-    return OutsideMoment(plan.times, moment - moment[0], torque - torque[0])
+    left = learned.outside_moment(parameters.repetition.moment)
+    if not _alike(said, body):
+        motion = plan.times, plan.lean, (plan.lean_rate, plan.lean_acceleration), plan.ball_acceleration
+        explained, by_said = lacking_along(said, request, *motion)
+        _, by_believed = lacking_along(body, request, *motion)
+        moment, torque = left.at(plan.times)
+        moment, torque = moment - explained, torque + by_said - by_believed
+        left = OutsideMoment(plan.times, moment - moment[0], torque - torque[0])
+    return plan_lean(body, attrs.evolve(request, moment=left), parameters)
+
+
+def _alike(one: WholeBody, other: WholeBody) -> bool:
+    """Whether both hold the same."""
+    loads, others = one.loads, other.loads
+    return loads.keys() == others.keys() and all(
+        held.mass == others[hand].mass
+        and np.array_equal(held.center, others[hand].center)
+        and np.array_equal(held.inertia, others[hand].inertia)
+        for hand, held in loads.items()
+    )

@@ -6,6 +6,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -24,6 +25,7 @@ from ballbal_ros.nodes.arm_stop import ArmStop
 from ballbal_ros.nodes.arm_streaming import ArmStreaming
 from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, BalanceDialogue
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, number_of, values_of
+from ballbal_ros.nodes.learned_plans import LearnedPlans
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
 from ballbal_ros.nodes.motion_memory import memory_of
 from ballbal_ros.nodes.parameters import NodeParameters
@@ -57,7 +59,8 @@ class ArmCompensationNode(Node):
         )
         own: ArmCompensationNodeParameters = parameters["node"]
         self.description = process.describe(self, parameters["robot.yaml"], own.robot_description_wait)
-        self._schedule = ArmSchedule(self.description, parameters["compensation.yaml"])
+        learned = LearnedPlans(Path(own.learned)) if own.learned else None
+        self._schedule = ArmSchedule(self.description, parameters["compensation.yaml"], learned)
         parameters.declare(self._change)
         self._stamp_clock = StampClock(self)
         self._arms = JointReader(self.description.joint_names, "joint_states")

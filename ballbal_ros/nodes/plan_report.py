@@ -50,6 +50,8 @@ class PlanReports:
             name = f"{use.name} {use.unit}".strip()
             values[name] = use.value
             values[f"{name} limit"] = use.limit
+        if proposal.learned:
+            values["learned"] = proposal.learned
         way = "without a lean plan" if plan is None else f"leans from {proposal.lean_start:.3f} s on"
         self.accept(what, stamp, f"{way}, arms move from {proposal.arms_start:.3f} to {proposal.end:.3f} s", values)
 

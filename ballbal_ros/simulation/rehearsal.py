@@ -21,7 +21,7 @@ from ballbal_ros.motion.lean_plan import LeanPlan
 from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.motion.plan_request import PlanRequest
-from ballbal_ros.motion.repetition import Learned, still_to_lean_for
+from ballbal_ros.motion.repetition import Learned, plan_with_learned
 from ballbal_ros.motion.spline import FollowedPath
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array
@@ -92,8 +92,7 @@ def plan_story(
     plan = plan_lean(body, request, files.compensation)
     if learned is not None:
         said = WholeBody(files.description, story.start_loads)
-        moment = still_to_lean_for(learned, said, body, request, plan)
-        plan = plan_lean(body, attrs.evolve(request, moment=moment), files.compensation)
+        plan = plan_with_learned(learned, said, body, request, plan, files.compensation)
     plan.refuse_beyond_limits(story.name)
     return plan
 

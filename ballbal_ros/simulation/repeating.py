@@ -6,7 +6,8 @@ import numpy as np
 
 from ballbal_ros.balance.measurement import Measurement
 from ballbal_ros.motion.lean_plan import LeanPlan
-from ballbal_ros.motion.repetition import Learned, Record, fingerprint, lacking_in_run, learn
+from ballbal_ros.motion.plan_mark import plan_mark
+from ballbal_ros.motion.repetition import Learned, Record, lacking_in_run, learn
 from ballbal_ros.motion.story import Story
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.whole_body import WholeBody
@@ -63,8 +64,8 @@ class Repetitions:
         self._files, self._story, self._timeline, self._truth = files, story, timeline, truth
         self._request = request_of(files, story, timeline)
         self._said = WholeBody(files.description, story.start_loads)
-        self.fits = fingerprint(files.description, story.start_loads, self._request, files.compensation)
-        self.learned = learned if learned is not None and learned.fits == self.fits else None
+        self.mark = plan_mark(files.description, story.start_loads, self._request, files.compensation)
+        self.learned = learned if learned is not None and learned.mark == self.mark else None
         self.plan = plan_story(files, story, timeline, learned=self.learned)
 
     def run(self, seed: int, trace: bool = False, learning: bool = True) -> tuple[RunResult, Trace | None]:
@@ -74,6 +75,6 @@ class Repetitions:
         result, seen = rehearsal.run(trace)
         if learning and not result.fell and rehearsal.plan is not None:
             lacking = lacking_in_run(self._said, self._request, rehearsal.plan, rehearsal.record)
-            self.learned = learn(self.learned, self.fits, lacking, self._request, files.compensation)
+            self.learned = learn(self.learned, self.mark, lacking, self._request, files.compensation)
             self.plan = plan_story(files, self._story, self._timeline, learned=self.learned)
         return result, seen

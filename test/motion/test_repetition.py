@@ -10,7 +10,8 @@ import pytest
 
 from ballbal_ros.errors import BallbalError
 from ballbal_ros.motion.learned_file import read_learned, write_learned
-from ballbal_ros.motion.repetition import Learned, Record, fingerprint, lacking_in_run, learn
+from ballbal_ros.motion.plan_mark import PlanMark, plan_mark
+from ballbal_ros.motion.repetition import Learned, Record, lacking_in_run, learn
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
@@ -21,6 +22,7 @@ from ballbal_ros.simulation.timeline import Timeline
 from ballbal_ros.simulation.truth import parse_truth
 from helpers.rehearsing import changed, files, rehearsed, story
 
+X = PlanMark("x", "abc")
 HEAVIER = ("left_hand.load=2.2", "right_hand.load=2.2")
 
 
@@ -47,7 +49,7 @@ def test_a_load_too_heavy_shows_as_the_moment_that_it_makes():
     heavier = [Load(load.hand, 1.1 * load.mass, load.center) for load in story("reach").start_loads]
     plan = plan_story(files(), story("reach"), timeline(), heavier)
     body = WholeBody(files().description, story("reach").start_loads)
-    learned = learn(None, "x", lacking_in_run(body, request, plan, still_record(plan)), request, files().compensation)
+    learned = learn(None, X, lacking_in_run(body, request, plan, still_record(plan)), request, files().compensation)
     arms = request.arms.sample(np.array([0.0, 10.0]))[0]
     ahead = []
     for arm, lean in zip(arms, plan.lean[[0, -1]]):
@@ -62,34 +64,34 @@ def test_what_is_learnt_is_bounded_and_a_mean_over_the_runs():
     request, parameters = request_of(files(), story("reach"), timeline()), files().compensation
     wild = np.zeros((400, 2))
     wild[200:] = 1e3
-    first = learn(None, "x", (wild, wild), request, parameters)
+    first = learn(None, X, (wild, wild), request, parameters)
     assert np.abs(first.moment).max() == parameters.repetition.moment == np.abs(first.torque).max()
-    second = learn(first, "x", (0.0 * wild, 0.0 * wild), request, parameters)
+    second = learn(first, X, (0.0 * wild, 0.0 * wild), request, parameters)
     assert second.runs == 2 and np.allclose(second.moment, 0.5 * first.moment, atol=1e-3)
-    assert learn(first, "y", (wild, wild), request, parameters).runs == 1
+    assert learn(first, PlanMark("x", "y"), (wild, wild), request, parameters).runs == 1
 
 
 def test_another_load_plan_or_model_makes_another_mark():
     """The mark changes with a gram in a hand, the plan's grid, and the robot's parameters; else it is the same."""
     request, given = request_of(files(), story("reach"), timeline()), files().compensation
     loads = story("reach").start_loads
-    mark = fingerprint(files().description, loads, request, given)
-    assert mark == fingerprint(files().description, loads, request, given)
+    mark = plan_mark(files().description, loads, request, given)
+    assert mark == plan_mark(files().description, loads, request, given)
     heavier = [attrs.evolve(loads[0], mass=2.001), loads[1]]
-    assert fingerprint(files().description, heavier, request, given) != mark
+    assert plan_mark(files().description, heavier, request, given) != mark
     finer = changed(compensation={"planner.step": 0.005}).compensation
-    assert fingerprint(files().description, loads, request, finer) != mark
+    assert plan_mark(files().description, loads, request, finer) != mark
     other = attrs.evolve(files().description, urdf_text=files().description.urdf_text + " ")
-    assert fingerprint(other, loads, request, given) != mark
+    assert plan_mark(other, loads, request, given) != mark
 
 
 def test_what_was_learnt_is_read_back_and_anything_else_is_refused(tmp_path: Path):
     """The file gives back what was written; a file that holds something else is refused in one line that names it."""
     values = np.round(np.random.default_rng(0).standard_normal((50, 2)), 4)
     path = tmp_path / "reach.learned.yaml"
-    write_learned(path, Learned("abc", 3, 0.01, values, 2.0 * values))
+    write_learned(path, Learned(X, 3, 0.01, values, 2.0 * values))
     back = read_learned(path)
-    assert (back.fits, back.runs, back.step) == ("abc", 3, 0.01)
+    assert (back.mark, back.runs, back.step) == (X, 3, 0.01)
     assert np.array_equal(back.moment, values) and np.array_equal(back.torque, 2.0 * values)
     for text in ("name: x", path.read_text(encoding="utf-8").replace("[", "[.nan, ", 1), "fits: [", "- 1"):
         path.write_text(text, encoding="utf-8")
