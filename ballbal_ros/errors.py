@@ -7,17 +7,26 @@ import reprlib
 from collections.abc import Iterable
 from typing import Any
 
+_MOST = 420
+
+
+def _one_line(text: str) -> str:
+    """A text in one line, and no more of it than one reads."""
+    line = " ".join(text.split())
+    return line if len(line) <= _MOST else f"{line[: _MOST - 20]} … and so on"
+
 
 class BallbalError(Exception):
     """Something given to the program is wrong, or can't be done.
 
     ``where`` names the file, topic or object; ``what`` the key and what was found; ``remedy`` what would do.
-    ``str()`` is one line: *where: what; remedy*.
+    ``str()`` is one line: *where: what; remedy*, the latter two no longer than one reads.
     """
 
     def __init__(self, where: str, what: str, remedy: str = "") -> None:
         self.where, self.what, self.remedy = where, what, remedy
-        super().__init__(" ".join(f"{where}: {what}{'; ' + remedy if remedy else ''}".split()))
+        words = (" ".join(where.split()), _one_line(what), _one_line(remedy))
+        super().__init__(f"{words[0]}: {words[1]}{'; ' + words[2] if words[2] else ''}")
 
 
 class ParameterError(BallbalError):

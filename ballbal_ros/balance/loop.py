@@ -123,9 +123,8 @@ class BalanceLoop:
 
     def adopt_load(self, load: Load, ahead: float = math.inf) -> bool:
         """Believe a load that the robot has found out by itself, and stood with all the time: what the trim bore of it
-        goes over to the mass model, and moves with the arms from now on, without a jump in torque. Not while a plan
-        is in force, which was made without it, or begins within ``ahead`` s: False then. A plan that waits should be
-        replaced.
+        goes over to the mass model, and moves with the arms from now on, without a jump in torque. False while a plan
+        is in force, which was made without it, or begins within ``ahead`` s. One that waits should be replaced.
         """
         arms = self.senses.arm_position
         if self.reference.has_plan_within(self.clock.now, ahead) or not self.reference.follow_arms:
@@ -290,9 +289,8 @@ class BalanceLoop:
         output, (x, y, z) = self.output, reference[10:13]
         self.judge.sent()
         wx, wy, wz = wanted.tolist()
-        encoders, limit = self.senses.encoders, self._gains.torque_limit
-        tx, ty, tz = share * (x + wx), share * (y + wy), share * (z + wz)
-        effort = output.send(tx, ty, tz, limit, self.lean, encoders.moved, encoders.passed)
+        encoders, tx, ty, tz = self.senses.encoders, share * (x + wx), share * (y + wy), share * (z + wz)
+        effort = output.send(tx, ty, tz, self._gains.torque_limit, self.lean, encoders.moved, encoders.passed)
         if effort is None:
             self.guard.trip(f"{LEAN}: torque not a number")
             self.torque[:] = 0.0

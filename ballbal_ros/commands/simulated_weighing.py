@@ -9,7 +9,8 @@ import numpy as np
 from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Wanted
+from ballbal_ros.motion.arm_motion import ArmState, Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.simulation.rehearsal import RobotFiles

@@ -8,7 +8,7 @@ from pathlib import Path
 import attrs
 import numpy as np
 
-from ballbal_ros.errors import BallbalError, PlanError, nearest
+from ballbal_ros.errors import BallbalError, PlanError, nearest, shown
 from ballbal_ros.motion.plan_request import BallMotion, HandWrench
 from ballbal_ros.motion.pulls import Pull, hand_wrenches
 from ballbal_ros.motion.spline import LONGEST, ArmPath, check_path
@@ -98,7 +98,7 @@ def read_story(path: Path, description: RobotDescription) -> Story:
             raise PlanError(where, f"unknown key {key}", nearest(str(key), ("name", "start", "steps")))
     steps = document.get("steps")
     if not isinstance(steps, list) or not steps:
-        raise PlanError(where, f"steps is {steps!r}", "it takes a list of steps, each one verb")
+        raise PlanError(where, f"steps is {shown(steps)}", "it takes a list of steps, each one verb")
     start = read_start(document.get("start") or {}, where)
     builder = _Builder(description, where, start)
     for number, step in enumerate(steps, start=1):
@@ -221,6 +221,8 @@ class _Builder:
             if time - first > times[-1] + 1e-9:
                 times.append(time - first)
                 points.append(point)
+        if len(times) < 2:
+            raise PlanError(self.where, "moves the arms in no time", "give a move a time to be made in")
         both = np.array(points)
         return ArmPath.through(np.array(times), both, 0.0 * both, 0.0 * both)
 

@@ -11,7 +11,7 @@ import numpy as np
 from attrs import validators
 from cattrs.v import format_exception
 
-from ballbal_ros.errors import PlanError, nearest
+from ballbal_ros.errors import PlanError, nearest, shown
 
 T = TypeVar("T")
 
@@ -19,7 +19,7 @@ T = TypeVar("T")
 def _finite(_: object, attribute: attrs.Attribute[Any], value: object) -> None:
     numbers = value.values() if isinstance(value, Mapping) else np.atleast_1d(np.asarray(value, float))
     if not all(np.isfinite(number) for number in numbers):
-        raise ValueError(f"{attribute.name} is {value!r}; it takes finite numbers")
+        raise ValueError(f"{attribute.name} is {shown(value)}; it takes finite numbers")
 
 
 _POSITIVE = [_finite, validators.gt(0.0)]
@@ -97,7 +97,7 @@ def _strict(kind: type[T]) -> Callable[[Any, Any], T]:
     def hook(value: Any, _: Any) -> T:
         wanted: tuple[type, ...] = (int, float) if kind is float else (kind,)
         if isinstance(value, bool) != (kind is bool) or not isinstance(value, wanted):
-            raise ValueError(f"{value!r} is no {'number' if kind is float else kind.__name__}")
+            raise ValueError(f"{shown(value)} is no {'number' if kind is float else kind.__name__}")
         return kind(value)  # type: ignore[call-arg]
 
     return hook
@@ -112,6 +112,9 @@ _VERBS: dict[str, type] = {
 
 
 def _reason(error: BaseException, kind: type | None) -> str:
+    if isinstance(error, AttributeError):
+        # What cattrs says of a text or a number where keys should be is about Python, not about the file.
+        return "is no mapping of keys to values"
     said = type(error) is ValueError and str(error)
     return said or format_exception(error, kind)
 
@@ -122,7 +125,7 @@ def _structure(value: Any, cls: type[T], where: str, what: str) -> T:
     except Exception as error:
         reason = "; ".join(cattrs.transform_error(error, path=what, format_exception=_reason))
         known = ", ".join(f.name for f in attrs.fields(cls))  # type: ignore[arg-type]
-        raise PlanError(where, reason or f"{what} is {value!r}", f"{what} takes {known}") from error
+        raise PlanError(where, reason or f"{what} is {shown(value)}", f"{what} takes {known}") from error
 
 
 def read_start(start: Any, where: str) -> Start:
@@ -133,7 +136,7 @@ def read_start(start: Any, where: str) -> Start:
 def read_step(step: Any, where: str, what: str) -> object:
     """One step as its verb's class; raises :class:`PlanError` that names file ``where`` and step ``what``."""
     if not isinstance(step, Mapping):
-        raise PlanError(where, f"{what} is {step!r}", f"each step is one verb: {', '.join(_VERBS)}")
+        raise PlanError(where, f"{what} is {shown(step)}", f"each step is one verb: {', '.join(_VERBS)}")
     verbs = [key for key in step if key in _VERBS]
     if len(verbs) != 1:
         unknown = next((str(key) for key in step if key not in _VERBS), "")

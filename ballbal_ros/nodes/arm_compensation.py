@@ -1,6 +1,4 @@
-"""Node ``arm_compensation``: what somebody wants the arms to do becomes a lean plan and, once that is taken up, an arm
-command.
-"""
+"""Node ``arm_compensation``: a wanted arm motion becomes a lean plan and, once that is taken up, an arm command."""
 
 from __future__ import annotations
 
@@ -16,7 +14,8 @@ from rclpy.node import Node
 
 from ballbal_ros.balance.guard import BALANCING, ENGAGING
 from ballbal_ros.errors import BallbalError, PlanRefused
-from ballbal_ros.motion.arm_schedule import ArmSchedule, Proposal
+from ballbal_ros.motion.arm_motion import Proposal
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.parameters import CompensationParameters
 from ballbal_ros.node_parameters import ArmCompensationNodeParameters
 from ballbal_ros.nodes import process
@@ -27,7 +26,7 @@ from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, BalanceDialogue
 from ballbal_ros.nodes.diagnostics import OK, Diagnostics, number_of, values_of
 from ballbal_ros.nodes.learned_plans import LearnedPlans
 from ballbal_ros.nodes.messages import BILLION, JointReader, load_of, stamp_text, to_time
-from ballbal_ros.nodes.motion_memory import memory_of
+from ballbal_ros.nodes.motion_memory import Recall, memory_of
 from ballbal_ros.nodes.parameters import NodeParameters
 from ballbal_ros.nodes.plan_queue import PlanQueue, Sent
 from ballbal_ros.nodes.plan_report import PlanReports
@@ -69,12 +68,13 @@ class ArmCompensationNode(Node):
         self._waiting = PlanQueue()
         to_balance, to_arms = publisher(self, "lean_plan"), publisher(self, "arm_command")
         self._reports = PlanReports(self, self.description.name)
-        self._memory, self._recalled, self._followed = memory_of(self, self.description, own.memory), False, ""
+        self._memory = memory_of(self, self.description, own.memory)
+        self._recall = Recall(self._memory, self._schedule, self._before, self._arms)
         self._balance = BalanceDialogue(
             self._schedule, self._arms.names, to_balance, to_arms, self._reports, self._memory.keep
         )
         self._stop = ArmStop(
-            self._schedule, self._balance, self._reports, self._before, lambda: self._now, lambda: self._recalled
+            self._schedule, self._balance, self._reports, self._before, lambda: self._now, lambda: self._recall.done
         )
         self._diagnostics = Diagnostics(self, self.description.name, self._report)
         self._streaming = ArmStreaming(
@@ -83,18 +83,6 @@ class ArmCompensationNode(Node):
         self._listen()
         steady = RosClock(clock_type=ClockType.STEADY_TIME)
         self._attending = self.create_timer(_ATTEND, self._attend, clock=steady)
-
-    def _recall(self) -> None:
-        """Once all that is kept for late joiners is here: go on from the motion that the node before let go of."""
-        if self._recalled or not (self._before.settled(time.monotonic()) and self._arms.complete):
-            return
-        self._recalled = True
-        if not self._schedule.idle or not self._streaming.idle:
-            return
-        with self._diagnostics.taking("motion memory"):
-            motions = self._memory.recall(self._followed)
-            if motions and self._schedule.take_over(motions, self._now, self._arms.position):
-                self._before.until = 0.0
 
     def _listen(self) -> None:
         inputs = self._diagnostics.inputs
@@ -267,7 +255,7 @@ class ArmCompensationNode(Node):
         values = values_of(message)
         self._streaming.heard(values)
         self._before.heard(time.monotonic(), message.message)
-        self._followed = values.get("plan", "")
+        self._recall.followed = values.get("plan", "")
         if not self._balance.waits and self._schedule.idle and self._streaming.idle:
             self._before.until = number_of(values.get("plan ends", ""))
         self._balance.hear(message.message, values)
@@ -277,7 +265,7 @@ class ArmCompensationNode(Node):
         self._diagnostics.pace.ran_after(_ATTEND)
         self._balance.check_time()
         self._memory.write_down()
-        self._recall()
+        self._recall.look(self._streaming.idle, self._now, self._diagnostics)
         self._go_on()
 
     def _on_emergency_stop(self, message: Any) -> None:

@@ -8,7 +8,8 @@ import math
 from typing import Any
 
 from ballbal_ros.errors import BallbalError, PlanRefused
-from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_motion import ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.spline import ArmPath
 from ballbal_ros.nodes.messages import seconds
 from ballbal_ros.nodes.trajectories import ArmWaypoints, ball_motion_of, hand_wrenches_of

@@ -6,7 +6,8 @@ import time
 from collections.abc import Callable
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.arm_schedule import ArmSchedule, Proposal
+from ballbal_ros.motion.arm_motion import Proposal
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.nodes.balance_dialogue import STOP, BalanceDialogue
 from ballbal_ros.nodes.messages import stamp_text, to_time
 from ballbal_ros.nodes.plan_report import PlanReports

@@ -94,7 +94,8 @@ class BalanceNode(LifecycleNode):
             self.requests.go_on(ns)
             self._messages.odometry(ns, loop)
             self._see_pull(ns, loop)
-            self.hand_loads.see(ns, loop)
+            with self.diagnostics.taking("hand_load_estimate"):
+                self.hand_loads.see(ns, loop)
             if not self._lock_step:
                 self._look_at_pace(loop)
         state = loop.guard.state

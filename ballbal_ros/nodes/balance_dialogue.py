@@ -12,7 +12,8 @@ from typing import Any
 import attrs
 
 from ballbal_ros.balance.guard import BALANCING, ENGAGING, STOPPING
-from ballbal_ros.motion.arm_schedule import ArmSchedule, Proposal
+from ballbal_ros.motion.arm_motion import Proposal
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.nodes.lean_trajectory import lean_plan_message, withdrawal_message
 from ballbal_ros.nodes.messages import stamp_text, to_time
 from ballbal_ros.nodes.plan_report import PlanReports

@@ -8,6 +8,7 @@ from __future__ import annotations
 import json
 import math
 import os
+import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
@@ -18,12 +19,15 @@ from rclpy.node import Node
 from trajectory_msgs.msg import JointTrajectory, JointTrajectoryPoint
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.arm_schedule import Proposal
+from ballbal_ros.motion.arm_motion import Proposal
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.plan_request import HandWrench
 from ballbal_ros.motion.stopping import Motion
+from ballbal_ros.nodes.diagnostics import Diagnostics
 from ballbal_ros.nodes.lean_trajectory import lean_plan_message, lean_plan_of
-from ballbal_ros.nodes.messages import seconds, stamp_text, to_duration, to_time
+from ballbal_ros.nodes.messages import JointReader, seconds, stamp_text, to_duration, to_time
 from ballbal_ros.nodes.parameters import robot_file
+from ballbal_ros.nodes.predecessor import Predecessor
 from ballbal_ros.nodes.trajectories import ArmWaypoints, path_message
 from ballbal_ros.parameter_history import state_folder, write_whole
 from ballbal_ros.robot.description import RobotDescription
@@ -94,6 +98,30 @@ class MotionMemory:
         return motions
 
 
+class Recall:
+    """Goes on, once, from the motion that the node before let go of. ``followed``: the stamp of the plan that the
+    balance node follows; ``done``: whether it has looked.
+    """
+
+    def __init__(self, memory: MotionMemory, schedule: ArmSchedule, before: Predecessor, arms: JointReader) -> None:
+        self._memory, self._schedule, self._before, self._arms = memory, schedule, before, arms
+        self.done, self.followed = False, ""
+
+    def look(self, idle: bool, now: float, diagnostics: Diagnostics) -> None:
+        """Look, if all that is kept for late joiners is here and nothing moves yet (``idle``: nothing is streamed);
+        ``now`` is the stamp, s. A file that can't be read is told of in ``diagnostics``.
+        """
+        if self.done or not (self._before.settled(time.monotonic()) and self._arms.complete):
+            return
+        self.done = True
+        if not self._schedule.idle or not idle:
+            return
+        with diagnostics.taking(_TOPIC):
+            motions = self._memory.recall(self.followed)
+            if motions and self._schedule.take_over(motions, now, self._arms.position):
+                self._before.until = 0.0
+
+
 def memory_of(node: Node, description: RobotDescription, file: str) -> MotionMemory:
     """A node's memory: in ``file``, or, where that is empty, in one of its ROS domain and namespace among the robot's
     state.
@@ -148,14 +176,14 @@ def _message(data: dict[str, Any]) -> JointTrajectory:
         raise ValueError(f"starts at {start}")
     message = JointTrajectory(joint_names=[str(name) for name in data["joints"]])
     message.header.stamp = to_time(start)
-    for time, positions, velocities, accelerations, effort in data["points"]:
+    for since, positions, velocities, accelerations, effort in data["points"]:
         message.points.append(
             JointTrajectoryPoint(
                 positions=positions,
                 velocities=velocities,
                 accelerations=accelerations,
                 effort=effort,
-                time_from_start=to_duration(float(time)),
+                time_from_start=to_duration(float(since)),
             )
         )
     return message

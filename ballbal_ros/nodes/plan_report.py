@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus
 from rclpy.node import Node
 
-from ballbal_ros.motion.arm_schedule import Proposal
+from ballbal_ros.motion.arm_motion import Proposal
 from ballbal_ros.nodes.diagnostics import ERROR, OK, key_values
 from ballbal_ros.nodes.messages import stamp_text, to_time
 from ballbal_ros.nodes.topics import publisher

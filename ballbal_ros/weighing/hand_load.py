@@ -33,6 +33,7 @@ from ballbal_ros.robot.balance_rows import GRAVITY
 from ballbal_ros.robot.description import RobotDescription
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
+from ballbal_ros.weighing.reading import Reading
 
 _LEVEL = np.array([[0.0, -1.0, 0.0], [1.0, 0.0, 0.0]])
 _OF_HAND = 4
@@ -43,20 +44,6 @@ _SAME_POSTURE = 0.05
 # figure).
 _MOST = 10
 _ROLLING_SHARE = 0.5
-
-
-@attrs.frozen(eq=False)
-class Reading:
-    """The robot at rest in one posture, as means over about a second, in ``base_footprint`` axes: arm position [n];
-    lean [2], rad; accelerations of the ball [2], m/s², and of the lean [2], rad/s², which are small; and which way the
-    ball creeps [2], 1 where it rolls that way all the time, so that the floor's resistance is felt whole.
-    """
-
-    arm_position: Array
-    lean: Array
-    ball_acceleration: Array
-    lean_acceleration: Array = attrs.field(factory=lambda: np.zeros(2))
-    creep: Array = attrs.field(factory=lambda: np.zeros(2))
 
 
 @attrs.frozen(eq=False)

@@ -18,7 +18,7 @@ import math
 import numpy as np
 
 from ballbal_ros.robot.arrays import Array
-from ballbal_ros.weighing.hand_load import Reading
+from ballbal_ros.weighing.reading import Reading
 
 # Speed at which rolling resistance is felt by 0.7, m/s: a ball that rests sits in its dent (our own figure).
 _CREEP = 1e-3

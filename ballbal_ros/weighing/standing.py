@@ -12,7 +12,8 @@ from ballbal_ros.balance.guard import BALANCING
 from ballbal_ros.balance.loop import BalanceLoop
 from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.loads import Load
-from ballbal_ros.weighing.hand_load import HandLoadEstimate, HandWeighing, Reading, good_enough
+from ballbal_ros.weighing.hand_load import HandLoadEstimate, HandWeighing, good_enough
+from ballbal_ros.weighing.reading import Reading
 from ballbal_ros.weighing.resting import resting
 
 EVERY = 0.02

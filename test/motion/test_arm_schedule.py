@@ -7,7 +7,8 @@ import numpy as np
 import pytest
 
 from ballbal_ros.errors import PlanError, PlanRefused
-from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_motion import ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.plan_request import BallMotion
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
 from ballbal_ros.motion.stopping import Spliced, stop_path

@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 
 from ballbal_ros.errors import PlanError
-from ballbal_ros.motion.arm_schedule import ArmSchedule, Wanted
+from ballbal_ros.motion.arm_motion import Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.lean_planner import plan_lean
 from ballbal_ros.motion.plan_request import HandWrench, PlanRequest
 from ballbal_ros.motion.pulls import Pull, at_time, hand_wrenches, joined

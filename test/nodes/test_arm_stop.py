@@ -12,7 +12,8 @@ import pytest
 pytest.importorskip("rclpy")
 
 from ballbal_ros.errors import PlanRefused
-from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Wanted
+from ballbal_ros.motion.arm_motion import ArmState, Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
 from ballbal_ros.nodes import arm_stop
 from ballbal_ros.nodes.arm_stop import ArmStop

@@ -10,7 +10,8 @@ import pytest
 
 pytest.importorskip("rclpy")
 
-from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_motion import ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
 from ballbal_ros.nodes.balance_dialogue import FOUND_LOAD, STOP, BalanceDialogue
 from ballbal_ros.nodes.messages import stamp_text, to_time

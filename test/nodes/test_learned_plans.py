@@ -11,7 +11,8 @@ import pytest
 pytest.importorskip("rclpy")
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.arm_schedule import ArmSchedule, Proposal
+from ballbal_ros.motion.arm_motion import Proposal
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.learned_file import write_learned
 from ballbal_ros.motion.plan_mark import PlanMark, plan_mark
 from ballbal_ros.motion.repetition import Learned

@@ -13,7 +13,8 @@ import pytest
 pytest.importorskip("rclpy")
 
 from ballbal_ros.errors import BallbalError
-from ballbal_ros.motion.arm_schedule import ArmSchedule, ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_motion import ArmState, Proposal, Wanted
+from ballbal_ros.motion.arm_schedule import ArmSchedule
 from ballbal_ros.motion.plan_request import HandWrench
 from ballbal_ros.motion.spline import ArmPath, path_through_waypoints
 from ballbal_ros.nodes.messages import stamp_text, to_time

@@ -1,6 +1,4 @@
-"""What the stack promises to others: topics, types, qualities of service, answers, stops. One stack, in lock-step, for
-all.
-"""
+"""What the stack promises to others: topics, types, qualities, answers, stops. One stack, in lock-step, for all."""
 
 from __future__ import annotations
 
@@ -59,12 +57,10 @@ def test_topics_have_the_types_and_qualities_of_the_contract(robot: Robot) -> No
                 found = [end for end in info(topic) if end.node_name == name]
                 assert found, f"{name} does not have {topic}"
                 message, kind = TOPICS[topic]
-                package, _, kind_of_message = message.__module__.partition(".")[0], None, message.__name__
-                assert found[0].topic_type == f"{package}/msg/{kind_of_message}", topic
-                kept = found[0].qos_profile.durability == DurabilityPolicy.TRANSIENT_LOCAL
-                assert kept == kind.kept, topic
-                reliable = found[0].qos_profile.reliability == ReliabilityPolicy.RELIABLE
-                assert reliable or endpoints is SUBSCRIBED, topic
+                assert found[0].topic_type == f"{message.__module__.partition('.')[0]}/msg/{message.__name__}"
+                quality = found[0].qos_profile
+                assert (quality.durability == DurabilityPolicy.TRANSIENT_LOCAL) == kind.kept, topic
+                assert quality.reliability == ReliabilityPolicy.RELIABLE or endpoints is SUBSCRIBED, topic
 
 
 def test_each_command_answers_a_tick_by_its_stamp(robot: Robot) -> None:

@@ -12,7 +12,8 @@ from ballbal_ros.robot.arrays import Array
 from ballbal_ros.robot.attitude import rotation_lean
 from ballbal_ros.robot.loads import Load
 from ballbal_ros.robot.whole_body import WholeBody
-from ballbal_ros.weighing.hand_load import HandLoadEstimate, HandWeighing, Reading, good_enough
+from ballbal_ros.weighing.hand_load import HandLoadEstimate, HandWeighing, good_enough
+from ballbal_ros.weighing.reading import Reading
 from helpers.rehearsing import files, story
 
 GRAVITY = 9.80665
