@@ -40,6 +40,7 @@ class _Heard:
     state: str = ""
     reason: str = ""
     state_stamp: float = -math.inf
+    state_came: float = -math.inf
     supported: bool | None = None
     held: dict[str, float] = attrs.field(factory=dict)
     report: Any = None
@@ -118,7 +119,9 @@ class RobotEar(Ear):
     def _on_state(self, message: Any) -> None:
         values, heard = values_of(message), self._heard
         heard.state, heard.reason = message.message, values.get("reason", "")
-        heard.state_stamp = number_of(values.get("stamp", ""))
+        # One from before the node was active, which the bus has kept, has none.
+        heard.state_stamp = number_of(values.get("stamp", "")) or math.nan
+        heard.state_came = time.monotonic()
 
     def _on_report(self, message: Any) -> None:
         # Answers are kept on the bus: those from before it was asked are somebody else's.

@@ -118,7 +118,11 @@ def rest(robot: Robot, settings: ProcedureSettings) -> None:
 
 
 def rests(record: Record, speed: float) -> bool:
-    """Whether the ball has gone less in the last half second than it would at ``speed``, m/s."""
+    """Whether the ball has gone less in the last half second than it would at ``speed``, m/s; no while nothing was
+    heard of it.
+    """
+    if len(record) < 2:
+        return False
     _, ball = record.recent(0.5)
     half = len(ball) // 2
     return bool(np.hypot(*(ball[half:].mean(axis=0) - ball[:half].mean(axis=0))) < 0.25 * speed)

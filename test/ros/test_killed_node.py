@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import signal
@@ -33,7 +34,9 @@ LONG_NOD = NOD + "  - move: {left_shoulder_pitch: 0.0, right_shoulder_pitch: 0.0
 def node_of(run: subprocess.Popen[str], name: str) -> int:
     """The process of one node of a headless run; 0 where there is none."""
     for pid in children_of(run.pid):
-        words = Path(f"/proc/{pid}/cmdline").read_bytes().decode().split("\0")
+        words: list[str] = []
+        with contextlib.suppress(FileNotFoundError, ProcessLookupError):
+            words = Path(f"/proc/{pid}/cmdline").read_bytes().decode().split("\0")
         if f"ballbal_ros.nodes.{name}" in words:
             return pid
     return 0
