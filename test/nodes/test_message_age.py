@@ -30,7 +30,10 @@ def context(ros_domain_id: int) -> Iterator[Context]:
     made.try_shutdown()
 
 
-@pytest.mark.parametrize("kind", list(dict.fromkeys((QuickExecutor, SingleThreadedExecutor))), ids=lambda kind: kind.__name__)
+EXECUTORS = list(dict.fromkeys((QuickExecutor, SingleThreadedExecutor)))
+
+
+@pytest.mark.parametrize("kind", EXECUTORS, ids=lambda kind: kind.__name__)
 def test_a_kept_message_tells_when_it_was_sent(kind: type, context: Context) -> None:
     """What was sent before a node came is older than the node, what is sent afterwards is not; with every executor."""
     plans = publisher(Node("sender", context=context), "arm_plan")
