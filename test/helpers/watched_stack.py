@@ -17,6 +17,7 @@ from rcl_interfaces.msg import Log
 from rcl_interfaces.srv import GetParameters, SetParametersAtomically
 from rclpy.context import Context
 from rclpy.parameter import Parameter, parameter_value_to_python
+from rclpy.qos import DurabilityPolicy, QoSProfile
 from rclpy.signals import SignalHandlerOptions
 from std_srvs.srv import Trigger
 
@@ -67,7 +68,8 @@ class WatchedStack:
         rclpy.init(context=self._context, domain_id=self._domain, signal_handler_options=SignalHandlerOptions.NO)
         self._node = rclpy.create_node("test_end", context=self._context)
         self._spinner = process.executor(self._context)
-        self._node.create_subscription(Log, "/rosout", self._on_log, 100)
+        kept = QoSProfile(depth=1000, durability=DurabilityPolicy.TRANSIENT_LOCAL)
+        self._node.create_subscription(Log, "/rosout", self._on_log, kept)
         self._node.create_subscription(DiagnosticArray, "/diagnostics", self._on_diagnostics, 10)
         self._clients: dict[str, Any] = {}
         self._arm_plan, self._swung, self._at_end = publisher(self._node, "arm_plan"), time.monotonic(), True
@@ -89,7 +91,10 @@ class WatchedStack:
             timeline = Timeline.of(story, files().compensation)
             self.bus.send_story(story, timeline, files().description.joint_names)
             self.bus.wait_for_report()
-        self.wait("config_watch to begin", lambda: any("watching" in line for _, line in self.lines))
+        self.wait("config_watch to begin", self._watches)
+
+    def _watches(self) -> bool:
+        return self.diagnostics.get("/config_watch", {}).get("message") == "watching"
 
     def _on_log(self, message: Log) -> None:
         if message.name == "config_watch":
