@@ -113,6 +113,7 @@ class HandTurns:
         name = self._drive.names[index]
 
         def say(verdict: str, what: str, do: str = "") -> Finding:
+            """A finding on this actuator."""
             return Finding(_AREA, name, verdict, what, do)
 
         if bool(self._wraps[index]):

@@ -175,6 +175,7 @@ class Bus:
         """Configure and activate the balance, and wait until it balances."""
 
         def configured() -> bool:
+            """Whether balance has been configured by now."""
             done = self.change_state(Transition.TRANSITION_CONFIGURE)
             if not done:
                 # It may not have heard of everything yet: give it time.

@@ -131,6 +131,7 @@ def _push(line: Any, moves: SmallMoves, share: float, description: RobotDescript
     said = ""
 
     def done() -> bool:
+        """Say what is being done, where that is new, and whether all of it is done."""
         nonlocal said
         if moves.saying != said:
             said = moves.saying

@@ -88,6 +88,7 @@ def headless(
                 progress.reset(task, description=f"{story.name}: {kind}", completed=0)
 
                 def show(now: Any) -> None:
+                    """Put the run's progress on the screen."""
                     progress.update(task, completed=now.time, travel=now.travel, state=now.state)
 
                 run = HeadlessRun(setup, kind, seed)

@@ -84,6 +84,7 @@ class Processes:
         log = tempfile.TemporaryFile()  # noqa: SIM115 - open as long as the child lives
 
         def begin() -> subprocess.Popen[bytes]:
+            """Start the process, the first time or anew."""
             return subprocess.Popen(
                 words,
                 env=dict(environment),

@@ -87,6 +87,7 @@ class RobotEar(Ear):
         """Keep what is wrong with a message for the next :meth:`turn`: an executor would swallow or break on it."""
 
         def call(message: Any) -> None:
+            """Take a message in, and keep what is wrong with it."""
             try:
                 take(message, *more)
             except BallbalError as error:

@@ -50,6 +50,7 @@ class SimulatedWeighing:
         """Plan, move, and wait for the end of arms and plan."""
 
         def from_state(state: ArmState) -> ArmPath:
+            """The path from where the arms will be."""
             return path(state.position)
 
         wanted = Wanted(stamp=0.0, duration=path(self.arms()).duration, path=from_state)

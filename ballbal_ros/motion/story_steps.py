@@ -95,6 +95,7 @@ class Start:
 
 def _strict(kind: type[T]) -> Callable[[Any, Any], T]:
     def hook(value: Any, _: Any) -> T:
+        """The value, where it is of the kind to the letter; raises ValueError where it is not."""
         wanted: tuple[type, ...] = (int, float) if kind is float else (kind,)
         if isinstance(value, bool) != (kind is bool) or not isinstance(value, wanted):
             raise ValueError(f"{shown(value)} is no {'number' if kind is float else kind.__name__}")

@@ -57,6 +57,7 @@ class ArmProposals:
         waypoints = ArmWaypoints.of(message, self._description, "arm_plan")
 
         def path(state: ArmState) -> ArmPath:
+            """The path from where the arms will be, checked."""
             return waypoints.checked_path(state.position, state.rate, state.acceleration)
 
         ball, _ = self._beside.pop("ball_plan", (None, False))

@@ -206,6 +206,7 @@ def _answering(work: Callable[[], list[str]]) -> Callable[[Any, Any], Any]:
     """A service's callback: what the work says, or why it could not be done."""
 
     def answer(_: Any, response: Any) -> Any:
+        """Answer a call of the service."""
         try:
             response.message = "; ".join(work()) or "nothing changes"
             response.success = True

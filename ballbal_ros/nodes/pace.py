@@ -107,6 +107,7 @@ class Inputs:
         came[topic] = None
 
         def take(*message: Any) -> None:
+            """Note when a message came, and hand it on."""
             came[topic] = clock()
             callback(*message)
 

@@ -47,9 +47,11 @@ def print_runs(runs: RunSet, console: Console, learning: bool = False) -> None:
 
 def _cells(runs: list[RunResult]) -> list[str]:
     def short(value: float) -> str:
+        """Millimetres, with as many digits as tell something."""
         return f"{value:.2f}" if value < 100.0 else f"{value:.0f}"
 
     def travel(values: list[float]) -> str:
+        """The median, mm, and the worst where there are several."""
         text = short(median(values))
         return text if len(values) == 1 else f"{text} ({short(max(values))})"
 

@@ -132,6 +132,7 @@ def _with_defaults(text: str) -> str:
     names = "|".join(re.escape(name) for name in sorted(known, key=len, reverse=True))
 
     def told(match: re.Match[str]) -> str:
+        """A parameter's name with its default."""
         declared = known[match.group()]
         if not isinstance(declared.default, (int, float)) or isinstance(declared.default, bool):
             return f"`{declared.name}`"

@@ -105,6 +105,7 @@ def body_rates(
     zero, one = np.zeros_like(s_r), np.ones_like(s_r)
 
     def column(x: Array, y: Array, z: Array) -> Array:
+        """Vectors [..., 3] of their components."""
         return np.stack((x, y, z), axis=-1)
 
     e_x = column(one, zero, zero)

@@ -83,6 +83,7 @@ class UpperBodyTerms:
         """``(1 - share)`` of these terms and ``share`` [N] of the other ones: all of them are linear in the masses."""
 
         def mix(mine: Array, theirs: Array) -> Array:
+            """Between the values of both, by their shares."""
             weight = share.reshape(-1, *([1] * (mine.ndim - 1)))
             return np.asarray(mine + weight * (theirs - mine))
 

@@ -214,6 +214,7 @@ class SimulatedRobot:
 
     @support.setter
     def support(self, holds: bool) -> None:
+        """Have the stand take hold, or let go."""
         if holds and not self.support:
             self.world.hold(self.data)
         elif not holds:

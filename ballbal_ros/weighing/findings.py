@@ -86,6 +86,7 @@ def _findings(weighed: Weighed) -> Iterator[Finding]:
     slope = links.dynamic_by(weighed.own)
 
     def finding(name: str, unit: str, row: Array, scale: float = 1.0) -> Finding:
+        """What was found of one quantity, ``scale`` times ``row`` of the parameters."""
         gradient = scale * (row @ slope)
         error = float(np.sqrt(gradient @ covariance[:size, :size] @ gradient))
         values = scale * float(row @ before), scale * float(row @ after)
